@@ -1,0 +1,66 @@
+"""swarmpush: does a crowd of blind pushers really move the block along the channel?
+
+    scenario = swarmpush.load("rig.toml")
+    plan = swarmpush.plan(scenario)          # point world: laps, stability, forecast
+    run = swarmpush.simulate(scenario, seed=1)  # body world: contacts, friction, inertia, books
+    audit = swarmpush.audit(scenario)        # which assumptions hold, and what each costs
+
+Everything is imported on first use, so that `import swarmpush` is quick.
+"""
+
+from __future__ import annotations
+
+from importlib import import_module
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from swarmpush.auditing.audit import Audit, audit
+    from swarmpush.demos import demo
+    from swarmpush.dynamics.run import Run
+    from swarmpush.dynamics.world import simulate
+    from swarmpush.kinematics.planning import Plan, plan
+    from swarmpush.loading import ScenarioError, load, loads
+    from swarmpush.reporting.page import report
+    from swarmpush.scenario import Scenario
+
+__all__ = [
+    "Audit",
+    "Plan",
+    "Run",
+    "Scenario",
+    "ScenarioError",
+    "audit",
+    "demo",
+    "load",
+    "loads",
+    "plan",
+    "report",
+    "simulate",
+]
+
+_HOME = {
+    "Audit": "swarmpush.auditing.audit",
+    "Plan": "swarmpush.kinematics.planning",
+    "Run": "swarmpush.dynamics.run",
+    "Scenario": "swarmpush.scenario",
+    "ScenarioError": "swarmpush.loading",
+    "audit": "swarmpush.auditing.audit",
+    "demo": "swarmpush.demos",
+    "load": "swarmpush.loading",
+    "loads": "swarmpush.loading",
+    "plan": "swarmpush.kinematics.planning",
+    "report": "swarmpush.reporting.page",
+    "simulate": "swarmpush.dynamics.world",
+}
+
+
+def __getattr__(name: str) -> Any:
+    if name == "__version__":
+        from importlib.metadata import version
+
+        return version("swarmpush")
+    if name in _HOME:
+        value = getattr(import_module(_HOME[name]), name)
+        globals()[name] = value
+        return value
+    raise AttributeError(f"module 'swarmpush' has no attribute '{name}'")

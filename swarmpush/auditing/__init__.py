@@ -1,0 +1,1 @@
+"""The audit: point world against body world, assumption by assumption."""

@@ -1,0 +1,1 @@
+"""The body world: rigid bodies in contact, on pymunk."""

@@ -1,0 +1,1 @@
+"""The point world: exact runs, bumps and turns of a disc."""

@@ -1,0 +1,275 @@
+"""Which laps the geometry gives: closed bounce cycles through the block's rear face, and which starts reach them."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from swarmpush.draws import stream_keys
+from swarmpush.kinematics.bounce import (
+    FATE_WORDS,
+    Fate,
+    LapTrace,
+    next_hit,
+    settle,
+    settle_many,
+    trace_lap,
+)
+from swarmpush.kinematics.boundary import REAR_SURFACE, SURFACES, Boundary, corridor
+from swarmpush.program import MEMORY, PC, Contact, Program, Senses, compile_routine
+from swarmpush.scenario import Scenario
+from swarmpush.starts import draw_starts
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
+N_STARTS = 4000  # puts the 95 % interval of a share within 0.016
+BUDGET = 600  # bumps; a lap that contracts by 0.9 a round closes to one part in a million within 400
+MAX_LAP_BUMPS = 256
+IDEAL = Senses(0.0, 0.0, 0.0, 0.0)
+_SCAN_STEP = math.radians(0.25)
+_NEUTRAL = 1e-9  # a multiplier this close to 1 in size is 1: Newton's method leaves errors of 1e-12
+
+
+@dataclass(frozen=True)
+class Lap:
+    """One closed bounce cycle.
+
+    surfaces: names in order, from the rear face. hits: (n, 4) x, y in m, arriving and departing heading in rad.
+    n_rear: bumps on the rear face per lap. length_m, time_s: of one lap. multipliers: eigenvalues of the return
+    map on (position, heading) at the rear face, larger first; inside (-1, 1) the lap attracts, at 1 it is neutral.
+    rear_y_m, rear_heading_rad: arrival at the rear face. leg_bands_rad: for each leg, from the departure at
+    `hits`, the errors of heading (low, high) after which the next bump is still the lap's and the pusher falls
+    back to a lap of the same bumps. share: of all starts that end in this lap.
+    """
+
+    surfaces: tuple[str, ...]
+    hits: FloatArray
+    n_rear: int
+    length_m: float
+    time_s: float
+    multipliers: tuple[complex, ...]
+    rear_y_m: float
+    rear_heading_rad: float
+    leg_bands_rad: tuple[tuple[float, float], ...]
+    share: float
+
+    @property
+    def band_rad(self) -> tuple[float, float]:
+        """Headings on the leg to the rear face that keep the lap."""
+        low, high = self.leg_bands_rad[-1]
+        return self.rear_heading_rad + low, self.rear_heading_rad + high
+
+    @property
+    def is_heading_neutral(self) -> bool:
+        """Whether a heading error stays for ever, so that errors add up lap by lap."""
+        return any(abs(abs(m) - 1.0) < _NEUTRAL for m in self.multipliers)
+
+    @property
+    def strike_cosines(self) -> FloatArray:
+        """Cosine of the angle between heading and rear normal at each bump on the rear face of the lap."""
+        at_rear = [k for k, name in enumerate(self.surfaces) if name == SURFACES[REAR_SURFACE]]
+        # row 0 departs from the rear face; its arrival is the last row's, by closure
+        arriving = [self.rear_heading_rad if k == 0 else self.hits[k - 1, 2] for k in at_rear]
+        return np.cos(np.array(arriving))
+
+
+@dataclass(frozen=True)
+class Capture:
+    """What becomes of the starts: shares that add up to 1."""
+
+    captured: float
+    lost: dict[str, float]
+    undecided: float
+    n_starts: int
+
+
+def find_laps(s: Scenario, *, n_starts: int = N_STARTS, seed: int = 0) -> tuple[tuple[Lap, ...], Capture]:
+    """Find the laps that the scenario's starts fall into, without any error, the block standing still.
+
+    Arguments:
+        s: the scenario. n_starts: starts drawn from its start region. seed: of those draws.
+
+    Returns:
+        The laps, most frequent first, and what becomes of the starts.
+    """
+    boundary, program = corridor(s), compile_routine(s.routine)
+    many = s.replace(pushers={"count": n_starts}, start={"placed": None})
+    starts = np.array(draw_starts(s, seed)) if s.start.placed else draw_starts(many, seed, apart=False)
+    n = len(starts)
+    keys = stream_keys(seed, 1)[0]
+    fates, states = np.zeros((n, 3), dtype=np.int64), np.zeros((n, 2))
+    memories = np.zeros((n, MEMORY), dtype=np.int64)
+    settle_many(boundary, program, IDEAL, keys, starts, BUDGET, fates, states, memories)
+
+    tracer = _Tracer(s, boundary, program, keys)
+    laps: list[Lap] = []
+    locked = fates[:, 0] == Fate.LOCKED
+    signatures, first, counts = np.unique(fates[locked, 2], return_index=True, return_counts=True)
+    for k in np.argsort(-counts):
+        i = np.flatnonzero(locked)[first[k]]
+        lap = tracer.lap(states[i], memories[i], int(fates[i, 1]), int(signatures[k]), counts[k] / n)
+        if lap is not None:
+            laps.append(lap)
+    lost = {word: float(np.mean(fates[:, 0] == fate)) for fate, word in FATE_WORDS.items()}
+    capture = Capture(
+        captured=float(locked.mean()),
+        lost={word: share for word, share in lost.items() if share > 0},
+        undecided=float(np.mean(fates[:, 0] == Fate.UNDECIDED)),
+        n_starts=n,
+    )
+    return tuple(laps), capture
+
+
+class _Tracer:
+    """Laps of one rig: polishing, multipliers, bands."""
+
+    def __init__(self, s: Scenario, boundary: Boundary, program: Program, keys: NDArray[np.uint64]) -> None:
+        self._s, self._boundary, self._program, self._keys = s, boundary, program, keys
+
+    def trace(self, state: FloatArray, memory: IntArray, n_rear: int) -> tuple[LapTrace, FloatArray, IntArray]:
+        hits, surfaces = np.zeros((MAX_LAP_BUMPS, 4)), np.zeros(MAX_LAP_BUMPS, dtype=np.int64)
+        lap = trace_lap(
+            self._boundary, self._program, IDEAL, self._keys,
+            state[0], state[1], memory.copy(), n_rear, hits, surfaces,
+        )  # fmt: skip
+        return lap, hits[: lap.n_bumps], surfaces[: lap.n_bumps]
+
+    def lap(self, state: FloatArray, memory: IntArray, n_rear: int, signature: int, share: float) -> Lap | None:
+        """The lap near a state that was seen to repeat; None if it does not close after all."""
+        polished = self._polish(state, memory, n_rear)
+        if polished is None:
+            return None
+        if self._is_neutral(polished, memory, n_rear):
+            polished = self._centred(polished, memory, n_rear, signature)
+        trace, hits, surfaces = self.trace(polished, memory, n_rear)
+        rear_x = self._boundary.segments[REAR_SURFACE, 0]
+        corners = np.vstack([[rear_x, polished[0]], hits[:, :2]])
+        length = float(np.hypot(*np.diff(corners, axis=0).T).sum())
+        first = [
+            rear_x,
+            polished[0],
+            polished[1],
+            math.atan2(corners[1, 1] - corners[0, 1], corners[1, 0] - rear_x),
+        ]
+        rows = np.vstack([first, hits[:-1]])
+        rows[:, 2:] = np.remainder(rows[:, 2:] + math.pi, 2 * math.pi) - math.pi
+        return Lap(
+            surfaces=(SURFACES[REAR_SURFACE], *(SURFACES[k] for k in surfaces[:-1])),
+            hits=rows,
+            n_rear=n_rear,
+            length_m=length,
+            time_s=length / self._s.pushers.free_speed,
+            multipliers=_multipliers(trace),
+            rear_y_m=float(polished[0]),
+            rear_heading_rad=float(rows[0, 2]),
+            leg_bands_rad=tuple(self._leg_bands(polished, memory, n_rear, signature)),
+            share=float(share),
+        )
+
+    def _centred(self, state: FloatArray, memory: IntArray, n_rear: int, signature: int) -> FloatArray:
+        """Of a family of laps, one for each heading, the one in the middle of the band."""
+        *_, (low, high) = self._leg_bands(state, memory, n_rear, signature)
+        end, _ = self._resettle(state[0], state[1] + (low + high) / 2, memory, n_rear, signature)
+        polished = self._polish(end, memory, n_rear) if end is not None else None
+        return state if polished is None else polished
+
+    def _polish(self, state: FloatArray, memory: IntArray, n_rear: int) -> FloatArray | None:
+        """Newton's method on the return map; a neutral direction is left where it is (least-squares step)."""
+        state = state.copy()
+        for _ in range(20):
+            lap, _, _ = self.trace(state, memory, n_rear)
+            if lap.n_bumps == 0:
+                return None
+            residual = np.array([lap.y - state[0], math.remainder(lap.heading - state[1], 2 * math.pi)])
+            if abs(residual[0]) < 1e-13 * self._boundary.scale and abs(residual[1]) < 1e-13:
+                break
+            jacobian = np.array([[lap.yy, lap.yh], [lap.hy, lap.hh]]) - np.eye(2)
+            state -= np.linalg.lstsq(jacobian, residual, rcond=1e-9)[0]
+        lap, _, _ = self.trace(state, memory, n_rear)
+        closed = abs(lap.y - state[0]) < 1e-9 * self._boundary.scale
+        closed &= abs(math.remainder(lap.heading - state[1], 2 * math.pi)) < 1e-9
+        return state if lap.n_bumps and closed else None
+
+    def _is_neutral(self, state: FloatArray, memory: IntArray, n_rear: int) -> bool:
+        lap, _, _ = self.trace(state, memory, n_rear)
+        return any(abs(abs(m) - 1.0) < _NEUTRAL for m in _multipliers(lap))
+
+    def _resettle(
+        self, y: float, heading: float, memory: IntArray, n_rear: int, signature: int
+    ) -> tuple[FloatArray | None, IntArray]:
+        """Where a pusher ends up that arrives at the rear face otherwise; None if it is another lap."""
+        after = memory.copy()
+        rear = self._boundary.segments[REAR_SURFACE]
+        end = settle(
+            self._boundary, self._program, IDEAL, self._keys,
+            rear[0], y, heading, after, int(Contact.BLOCK), rear[7], 2 * BUDGET,
+        )  # fmt: skip
+        same = end.fate == Fate.LOCKED and end.signature == signature
+        return (np.array([end.y, end.heading]) if same else None), after
+
+    def _leg_bands(
+        self, state: FloatArray, memory: IntArray, n_rear: int, signature: int
+    ) -> Iterator[tuple[float, float]]:
+        """For each leg of the lap, the errors of heading that keep it."""
+        _, hits, surfaces = self.trace(state, memory, n_rear)
+        starts = np.vstack([[self._boundary.segments[REAR_SURFACE, 0], state[0]], hits[:-1, :2]])
+        for (x, y), (next_x, next_y), surface, k in zip(starts, hits[:, :2], surfaces, range(len(hits)), strict=True):
+            heading = math.atan2(next_y - y, next_x - x)
+            running = self._memory_on_leg(state, memory, n_rear, k)
+
+            def keeps(error: float, place=(x, y, heading), running=running, surface=surface) -> bool:  # type: ignore[no-untyped-def]
+                x, y, heading = place
+                new_heading = heading + error
+                hit = next_hit(self._boundary, 0.0, x, y, math.cos(new_heading), math.sin(new_heading))
+                if hit.surface != surface:
+                    return False
+                after = running.copy()
+                end = settle(
+                    self._boundary, self._program, IDEAL, self._keys,
+                    x, y, new_heading, after, int(Contact.NONE), 0.0, 2 * BUDGET,
+                )  # fmt: skip
+                if end.fate != Fate.LOCKED or end.signature != signature:
+                    return False
+                trace, _, _ = self.trace(np.array([end.y, end.heading]), after, n_rear)
+                return trace.n_bumps > 0 and abs(trace.yy) < 1.0
+
+            if keeps(0.0):
+                yield -_edge(lambda a, keeps=keeps: keeps(-a)), _edge(keeps)  # type: ignore[misc]
+            else:
+                yield 0.0, 0.0
+
+    def _memory_on_leg(self, state: FloatArray, memory: IntArray, n_rear: int, k: int) -> IntArray:
+        """The pusher's memory on leg k, the run still to be done."""
+        after = memory.copy()
+        trace_lap(
+            self._boundary, self._program, IDEAL, self._keys,
+            state[0], state[1], after, n_rear, np.zeros((k + 1, 4)), np.zeros(k + 1, dtype=np.int64),
+        )  # fmt: skip
+        after[PC] -= 1
+        return after
+
+
+def _edge(holds: Callable[[float], bool]) -> float:
+    """Largest angle up to which `holds` is true without a break, to 1e-7 rad."""
+    low = 0.0
+    while low < math.pi and holds(low + _SCAN_STEP):
+        low += _SCAN_STEP
+    high = low + _SCAN_STEP
+    while high - low > 1e-7:
+        middle = (low + high) / 2
+        if holds(middle):
+            low = middle
+        else:
+            high = middle
+    return low
+
+
+def _multipliers(lap: LapTrace) -> tuple[complex, ...]:
+    values = np.linalg.eigvals(np.array([[lap.yy, lap.yh], [lap.hy, lap.hh]]))
+    ordered = sorted(values.tolist(), key=abs, reverse=True)
+    return tuple(complex(v) for v in ordered)

@@ -1,0 +1,101 @@
+"""The point world's answer to a scenario, in one record."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+from swarmpush.kinematics.drift import laps_to_drift_out
+from swarmpush.kinematics.forecast import PushForce, TravelForecast, forecast, push_force
+from swarmpush.kinematics.laps import N_STARTS, Capture, Lap, find_laps
+from swarmpush.regimes import Regime, regimes
+from swarmpush.routine import Device
+from swarmpush.scenario import Scenario
+
+
+@dataclass(frozen=True)
+class Plan:
+    """What geometry alone predicts.
+
+    scenario: what was planned. laps: closed cycles, most frequent first. capture: what becomes of the starts.
+    force: thrust against floor friction. regime: dimensionless numbers. travel: the forecast for the block.
+    laps_to_drift_out: mean, per lap in `laps`. kit: hardware the routine needs.
+    """
+
+    scenario: Scenario
+    laps: tuple[Lap, ...]
+    capture: Capture
+    force: PushForce
+    regime: tuple[Regime, ...]
+    travel: TravelForecast
+    laps_to_drift_out: tuple[float, ...]
+    kit: tuple[Device, ...]
+
+    @property
+    def main_lap(self) -> Lap | None:
+        """The lap that most starts fall into; None when there is none."""
+        return self.laps[0] if self.laps else None
+
+    def to_dict(self) -> dict[str, Any]:
+        """The plan as plain values for JSON; infinite values are None."""
+        from swarmpush.output import plain
+
+        laps = [
+            {
+                "surfaces": lap.surfaces,
+                "hits": lap.n_rear,
+                "lap_length_m": lap.length_m,
+                "lap_time_s": lap.time_s,
+                "multipliers": [m.real if abs(m.imag) < 1e-12 else [m.real, m.imag] for m in lap.multipliers],
+                "rear_hit": {"y_m": lap.rear_y_m, "heading_rad": lap.rear_heading_rad},
+                "band": {"heading_rad": lap.band_rad},
+                "laps_to_drift_out": drift,
+                "share": lap.share,
+                "corners_m": lap.hits[:, :2],
+            }
+            for lap, drift in zip(self.laps, self.laps_to_drift_out, strict=True)
+        ]
+        return plain(
+            {
+                "laps": laps,
+                "capture": {
+                    "captured": self.capture.captured,
+                    "lost": self.capture.lost,
+                    "undecided": self.capture.undecided,
+                    "starts": self.capture.n_starts,
+                },
+                "force": self.force,
+                "regime": self.regime,
+                "forecast": self.travel,
+                "kit": self.kit,
+            }
+        )
+
+
+def plan(s: Scenario, *, n_starts: int = N_STARTS) -> Plan:
+    """Predict laps, their stability, the starts they catch, and what the block will do, from geometry alone.
+
+    Arguments:
+        s: the scenario.
+        n_starts: number of starts drawn from its start region for the shares.
+
+    Returns:
+        A `Plan`.
+
+    >>> import swarmpush
+    >>> p = swarmpush.plan(swarmpush.load(swarmpush.demo("service_passage")), n_starts=200)
+    >>> p.main_lap.surfaces
+    ('rear', 'top', 'bottom')
+    """
+    laps, capture = find_laps(s, n_starts=n_starts)
+    travel = forecast(s, laps, capture)
+    return Plan(
+        scenario=s,
+        laps=laps,
+        capture=capture,
+        force=push_force(s),
+        regime=regimes(s, laps, travel),
+        travel=travel,
+        laps_to_drift_out=tuple(laps_to_drift_out(s, lap) for lap in laps),
+        kit=s.routine.kit(),
+    )

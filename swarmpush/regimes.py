@@ -1,0 +1,112 @@
+"""Dimensionless numbers, and in words which assumptions of a geometric plan they put at risk.
+
+Everything here follows from the scenario and its laps; nothing is run.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator
+from dataclasses import dataclass
+
+from swarmpush.kinematics.drift import laps_to_drift_out
+from swarmpush.kinematics.forecast import TravelForecast, push_force
+from swarmpush.kinematics.laps import Lap
+from swarmpush.scenario import Scenario
+
+
+@dataclass(frozen=True)
+class Regime:
+    """One dimensionless number: name, formula, value, what it means here, and whether it puts the plan at risk."""
+
+    name: str
+    formula: str
+    value: float
+    meaning: str
+    is_at_risk: bool
+
+
+def regimes(s: Scenario, laps: tuple[Lap, ...], travel: TravelForecast) -> tuple[Regime, ...]:
+    """The numbers that apply to a scenario, in the order in which a plan usually breaks."""
+    found = [*_motion(s), *_force(s, travel), *_channel(s)]
+    if laps:
+        found += [*_turning(s, laps[0]), *_errors(s, laps[0])]
+    return tuple(found)
+
+
+def _motion(s: Scenario) -> Iterator[Regime]:
+    p = s.pushers
+    inertia = p.relaxation_time * p.free_speed / p.radius
+    if inertia < 0.02:
+        text, risk = "drag-dominated: an impact moves nothing, only held pushing does", True
+    elif inertia > 0.5:
+        text, risk = "inertial: a pusher needs several radii to gain speed after a bump", True
+    else:
+        text, risk = "speed is regained within a radius; impacts count", False
+    yield Regime("inertia", "m v / (drag r)", inertia, text, risk)
+    if s.fluid and s.fluid.viscosity and s.fluid.density:
+        reynolds = s.fluid.density * p.free_speed * 2 * p.radius / s.fluid.viscosity
+        text = "Stokes drag is a fair law" if reynolds < 0.1 else "Stokes drag is strained; expect more drag"
+        yield Regime("Reynolds number", "rho v d / eta", reynolds, text, reynolds >= 0.1)
+
+
+def _force(s: Scenario, travel: TravelForecast) -> Iterator[Regime]:
+    force = push_force(s)
+    if force.floor_friction_N > 0.0:
+        needed = force.pushers_to_move
+        if needed > s.pushers.count:
+            text = "the whole crew leaning together cannot move the block; only impacts can"
+        elif needed > 1.0:
+            text = f"{math.ceil(needed)} pushers must lean at the same time to move the block"
+        else:
+            text = "one leaning pusher moves the block: held pushing adds to the planned nudges"
+        yield Regime("floor hold", "mu m g / stall force", needed, text, needed > 1.0 or s.pushers.latency > 0)
+    if travel.nudge_m > 0.0:
+        slide = travel.nudge_m / s.pushers.radius
+        text = "a strike is almost nothing; transport needs many" if slide < 0.05 else "strikes move the block visibly"
+        yield Regime("slide per strike", "nudge / r", slide, text, False)
+
+
+def _channel(s: Scenario) -> Iterator[Regime]:
+    width = s.channel.width / (2 * s.pushers.radius)
+    text = "pushers can hardly pass each other" if width < 3 else "room to pass"
+    yield Regime("width", "channel width / pusher diameter", width, text, width < 3 and s.pushers.count > 1)
+    packing = s.pushers.count * math.pi * s.pushers.radius**2 / max(s.block.rear_at * s.channel.width, 1e-300)
+    text = "pushers meet often" if packing > 0.03 else "meetings are rare"
+    yield Regime("crowding", "crew area / area behind the block", packing, text, packing > 0.03)
+    friction = s.contacts.block_wall.friction
+    if friction > 0.0:
+        # a sticking drawer: an axial push at offset q jams a snug block when q >= l/(2 mu)
+        wedge = (s.block.width / 2) / (s.block.length / (2 * friction))
+        text = (
+            "a push near the edge of the face can jam the block between the walls (sticking drawer)"
+            if wedge >= 1.0
+            else f"no axial push on the face can jam it; an edge push loses up to {wedge:.0%} to the walls"
+        )
+        yield Regime("wedging", "(b/2) / (l / (2 mu))", wedge, text, wedge >= 1.0)
+    clearance = (s.channel.width - s.block.width) / s.block.length
+    diagonal = math.hypot(s.block.length, s.block.width)
+    if s.channel.width > diagonal:
+        text, risk = "the block can turn freely", True
+    elif clearance > 0.1:
+        text, risk = "the block can tilt by several degrees and wedge cornerwise", True
+    else:
+        text, risk = f"the block cannot yaw more than about {math.degrees(clearance):.2g} deg", False
+    yield Regime("clearance", "(w - b) / l", clearance, text, risk and s.block.yaw == "free")
+
+
+def _turning(s: Scenario, lap: Lap) -> Iterator[Regime]:
+    p = s.pushers
+    rotations = abs((lap.hits[:, 3] - lap.hits[:, 2] + math.pi) % (2 * math.pi) - math.pi)
+    lost = float(rotations.sum()) / p.turn_rate + len(rotations) * p.latency
+    share = lost / lap.time_s
+    text = "turns are as good as instant" if share < 0.05 else "a lap takes noticeably longer than its geometry"
+    yield Regime("turning", "(turn time + latency) / lap time", share, text, share >= 0.05)
+
+
+def _errors(s: Scenario, lap: Lap) -> Iterator[Regime]:
+    laps_kept = laps_to_drift_out(s, lap)
+    if math.isinf(laps_kept):
+        return
+    text = "the lap survives its errors" if laps_kept > 100 else "errors throw pushers out of the lap every so often"
+    yield Regime("drift", "1 / laps until drift-out", 1.0 / laps_kept, text, laps_kept <= 100)

@@ -1,0 +1,243 @@
+"""The scenario: one frozen description of channel, block, pushers, routine, errors, starts, goal and trial.
+
+Values are in SI units (m, s, kg, N, rad). `loading.py` reads scenarios from TOML files and words the errors.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import math
+from typing import Any, Literal
+
+from pydantic import BaseModel, ConfigDict, Field
+
+from swarmpush.quantities import quantity
+from swarmpush.routine import Routine
+
+Length = quantity("m")
+Time = quantity("s")
+Mass = quantity("kg")
+Inertia = quantity("kg*m^2")
+Speed = quantity("m/s")
+AngularSpeed = quantity("rad/s")
+Force = quantity("N")
+Impulse = quantity("N*s")
+Drag = quantity("N*s/m")
+TurnDrag = quantity("N*m*s")
+Angle = quantity("rad")
+HeadingDiffusion = quantity("rad/sqrt(s)")
+Rate = quantity("1/s")
+Ratio = quantity("1")
+Viscosity = quantity("Pa*s")
+Density = quantity("kg/m^3")
+
+GRAVITY = 9.81  # m/s2
+
+
+class _Table(BaseModel):
+    model_config = ConfigDict(frozen=True, extra="forbid", allow_inf_nan=True)
+
+
+class About(_Table):
+    """Who and what the scenario is."""
+
+    name: str = Field(min_length=1, max_length=120)
+    note: str = Field(default="", max_length=2000)
+
+
+class Channel(_Table):
+    """A straight corridor with closed ends: x runs along it from 0 to length, y across it from 0 to width."""
+
+    length: Length = Field(gt=0, le=1e3)
+    width: Length = Field(gt=0, le=1e3)
+
+
+class Block(_Table):
+    """The rectangular object to be moved in +x. Its rear face looks back to x = 0."""
+
+    length: Length = Field(gt=0, le=1e3, description="along the channel")
+    width: Length = Field(gt=0, le=1e3, description="across the channel")
+    mass: Mass = Field(gt=0, le=1e6)
+    yaw_inertia: Inertia | None = Field(default=None, gt=0, description="default: a uniform plate")
+    rear_at: Length = Field(ge=0, description="x of the rear face at the start")
+    offset: Length = Field(default=0.0, description="y of the centre at the start, from the middle of the channel")
+    yaw: Literal["free", "held"] = Field(default="free", description="held: a rail keeps the block from turning")
+
+    @property
+    def moment(self) -> float:
+        """Yaw inertia about the centre, kg m2; a uniform rectangle's m (l^2 + b^2)/12 unless given."""
+        return self.yaw_inertia or self.mass * (self.length**2 + self.width**2) / 12.0
+
+
+class Pushers(_Table):
+    """The crew: discs that drive themselves along their heading."""
+
+    count: int = Field(ge=1, le=5000)
+    radius: Length = Field(gt=0, le=1e2)
+    mass: Mass = Field(gt=0, le=1e4)
+    free_speed: Speed = Field(gt=0, le=1e3)
+    stall_force: Force = Field(gt=0, le=1e6, description="push at zero speed; falls linearly to 0 at the free speed")
+    sideways_drag: Ratio = Field(default=1.0, ge=1e-2, le=1e2, description="drag across the heading over drag along it")
+    turn_rate: AngularSpeed = Field(default=math.inf, gt=0, description="how fast it turns; inf: at once")
+    drive_while_turning: Ratio = Field(default=0.0, ge=0, le=1, description="share of the drive kept while turning")
+    bump_threshold: Impulse = Field(default=0.0, ge=0, description="least impulse that the bump sensor feels")
+    bumper_arc: Angle = Field(default=2 * math.pi, gt=0, le=2 * math.pi, description="arc that feels, centred ahead")
+    latency: Time = Field(default=0.0, ge=0, le=1e4, description="from the bump to the reaction; drives on meanwhile")
+    pass_through: bool = Field(
+        default=False, description="true: pushers do not touch each other (to see what crowding costs)"
+    )
+
+    @property
+    def drag(self) -> float:
+        """Drag along the heading, N s/m: stall force over free speed."""
+        return self.stall_force / self.free_speed
+
+    @property
+    def relaxation_time(self) -> float:
+        """Time in which a free pusher gains speed, s: mass over drag."""
+        return self.mass / self.drag
+
+
+class Floor(_Table):
+    """Dry floor under the block (Coulomb friction, uniform pressure)."""
+
+    static_friction: Ratio = Field(ge=0, le=10)
+    kinetic_friction: Ratio = Field(ge=0, le=10)
+    gravity: quantity("m/s^2") = Field(default=GRAVITY, ge=0, le=1e3)  # type: ignore[valid-type]
+
+
+class Fluid(_Table):
+    """Liquid round the block (Stokes drag). The pushers' own drag is stall force over free speed."""
+
+    block_drag: Drag = Field(gt=0, le=1e9, description="force per speed of the block in this channel")
+    block_yaw_drag: TurnDrag = Field(gt=0, le=1e9, description="torque per yaw rate of the block in this channel")
+    viscosity: Viscosity | None = Field(default=None, gt=0, description="only for the Reynolds number")
+    density: Density | None = Field(default=None, gt=0, description="only for the Reynolds number")
+
+
+class Pair(_Table):
+    """Restitution (Newton's law) and friction (Coulomb's law) between two surfaces."""
+
+    restitution: Ratio = Field(ge=0, le=1)
+    friction: Ratio = Field(ge=0, le=10)
+
+
+class Contacts(_Table):
+    """The pairs of surfaces that can meet."""
+
+    pusher_wall: Pair
+    pusher_block: Pair
+    pusher_pusher: Pair
+    block_wall: Pair
+
+
+class Errors(_Table):
+    """What is not ideal in the pushers. Everything left out is 0."""
+
+    turn_bias: Angle = Field(
+        default=0.0, ge=-math.pi, le=math.pi, description="added to every turn, counter-clockwise positive"
+    )
+    turn_sd: Angle = Field(default=0.0, ge=0, le=math.pi, description="standard deviation of a turn")
+    heading_diffusion: HeadingDiffusion = Field(default=0.0, ge=0, le=10, description="s.d. of the heading after 1 s")
+    heading_drift: AngularSpeed = Field(default=0.0, ge=-100, le=100, description="steady curving of the path")
+    bearing_step: Angle = Field(default=0.0, ge=0, le=math.pi, description="resolution of the bump's bearing; 0: exact")
+    bearing_sd: Angle = Field(default=0.0, ge=0, le=math.pi, description="standard deviation of the bump's bearing")
+    missed_bumps: Ratio = Field(default=0.0, ge=0, lt=1, description="share of bumps not felt")
+    false_bumps: Rate = Field(default=0.0, ge=0, le=1e3, description="bumps felt out of nothing, per second")
+    speed_spread: Ratio = Field(default=0.0, ge=0, le=0.3, description="s.d. of free speed from unit to unit, relative")
+    mass_spread: Ratio = Field(default=0.0, ge=0, le=0.3, description="s.d. of mass from unit to unit, relative")
+
+
+class FixedStart(_Table):
+    """Where one pusher starts."""
+
+    x: Length
+    y: Length
+    heading: Angle
+
+
+class Start(_Table):
+    """Where the pushers start: drawn from a region, or placed one by one."""
+
+    region: Literal["behind", "ahead", "anywhere"] = "behind"
+    heading: Angle | None = Field(default=None, description="mean heading; left out: any heading alike")
+    heading_spread: Angle = Field(
+        default=0.0, ge=0, le=math.pi, description="standard deviation about the mean heading"
+    )
+    placed: tuple[FixedStart, ...] | None = Field(default=None, max_length=5000)
+
+
+class Goal(_Table):
+    """When a run is a success."""
+
+    travel: Length = Field(gt=0, le=1e3, description="how far the block must move in +x")
+    time_limit: Time = Field(gt=0, le=1e7)
+
+
+class Forecast(_Table):
+    """How the point world turns strikes into block travel."""
+
+    law: Literal["auto", "impact", "lean", "given"] = Field(
+        default="auto",
+        description="impact: slide after one impact on the dry floor; lean: thrust while in touch; "
+        "given: a fixed nudge; auto: impact and lean added",
+    )
+    nudge: Length | None = Field(default=None, gt=0, description="travel per strike, for law = given")
+
+
+class Trial(_Table):
+    """How the scenario is tried out."""
+
+    replicates: int = Field(default=12, ge=2, le=100_000)
+    seed: int = Field(default=1, ge=0, le=2**62)
+    confidence: Ratio = Field(default=0.95, gt=0.5, lt=1)
+    tolerance: Ratio = Field(default=0.10, gt=0, le=1, description="relative band within which an assumption holds")
+    sample_every: Time | None = Field(
+        default=None, gt=0, description="interval of the recorded path; default: 1000 samples"
+    )
+
+
+class Numerics(_Table):
+    """Solver settings; everything has a default that follows from the scenario."""
+
+    step: Time | None = Field(default=None, gt=0)
+    iterations: int = Field(default=20, ge=1, le=1000)
+
+
+class Scenario(_Table):
+    """Everything about one rig. Frozen; changes are made with `replace`."""
+
+    format: Literal[1] = Field(description="version of this file format")
+    about: About
+    channel: Channel
+    block: Block
+    pushers: Pushers
+    floor: Floor | None = None
+    fluid: Fluid | None = None
+    contacts: Contacts
+    routine: Routine
+    errors: Errors = Errors()
+    start: Start = Start()
+    goal: Goal
+    forecast: Forecast = Forecast()
+    trial: Trial = Trial()
+    numerics: Numerics = Numerics()
+
+    def replace(self, **tables: dict[str, Any]) -> Scenario:
+        """A copy with some keys changed, e.g. `scenario.replace(pushers={"count": 1})`.
+
+        The values are SI numbers and are not checked again; use it for changes that keep a scenario valid.
+        """
+        changed = {name: getattr(self, name).model_copy(update=keys) for name, keys in tables.items()}
+        return self.model_copy(update=changed)
+
+    def digest(self) -> str:
+        """A hash of all values, the same on every platform; 16 hexadecimal digits."""
+        text = json.dumps(self.model_dump(mode="json"), sort_keys=True, ensure_ascii=True, default=str)
+        return hashlib.sha256(text.encode()).hexdigest()[:16]
+
+    @property
+    def block_front_at(self) -> float:
+        """x of the block's front face at the start, m."""
+        return self.block.rear_at + self.block.length
