@@ -120,7 +120,7 @@ def new_crew(headings: FloatArray) -> Crew:
     )  # fmt: skip
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
 def _carry_out(
     rig: Rig, crew: Crew, program: Program, senses: Senses, keys: NDArray[np.uint64], i: int, now: float
 ) -> None:
@@ -143,7 +143,7 @@ def _carry_out(
         return
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
 def drive(
     host: Host, rig: Rig, crew: Crew, program: Program, senses: Senses, keys: NDArray[np.uint64], step: int
 ) -> None:
@@ -194,7 +194,7 @@ def drive(
 _REST = 1e-9  # engine speed below which the floor's static friction holds; a held block has about 1e-17
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
 def set_floor(host: Host, rig: Rig) -> None:
     """Caps of the dry floor for this step, force and torque coupled on the elliptic limit surface.
 
@@ -218,7 +218,7 @@ def set_floor(host: Host, rig: Rig) -> None:
     host.floor_cap[0], host.floor_cap[1] = force, torque
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
 def feel(rig: Rig, crew: Crew, keys: NDArray[np.uint64], step: int) -> None:
     """After the contacts are read: which pushers have felt a bump."""
     now = (step + 1) * rig.dt

@@ -130,7 +130,7 @@ class Host(NamedTuple):
     floats_head: NDArray[np.int32]
 
 
-@njit(cache=True, nogil=True)
+@njit(cache=True, nogil=True, forceinline=True)
 def read_state(host: Host) -> None:
     """Fill `host.motion`, and `host.floor_load` with the impulses that the floor gave in the last step."""
     host.motion_head[0] = 0
@@ -140,7 +140,7 @@ def read_state(host: Host) -> None:
         host.floor_load[1] = _ask_float(host.get_impulse, host.floor_yaw)
 
 
-@njit(cache=True, nogil=True)
+@njit(cache=True, nogil=True, forceinline=True)
 def take_step(host: Host, dt: float) -> int:
     """Hand `host.orders` and `host.floor_cap` over, step, and fill the contact buffers; returns the number of pairs."""
     host.orders_head[0] = 0

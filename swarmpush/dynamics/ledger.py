@@ -141,7 +141,7 @@ def new_ledger(moving_ids: IntArray, wall_ids: IntArray, capacity: int) -> Ledge
     )
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
 def _entity(ledger: Ledger, body_id: int) -> int:
     low, high = 0, len(ledger.ids) - 1
     while low < high:
@@ -153,7 +153,7 @@ def _entity(ledger: Ledger, body_id: int) -> int:
     return ledger.entities[low] if ledger.ids[low] == body_id else -1
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
 def _slot(ledger: Ledger, owner: int, partner: int) -> int:
     """The open visit of owner and partner, or a fresh slot; -1 if the table is full."""
     free = -1
@@ -172,7 +172,7 @@ def _slot(ledger: Ledger, owner: int, partner: int) -> int:
     return free
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
 def close_visits(ledger: Ledger, step: int) -> None:
     """Move visits that have ended before `step` to the log."""
     for owner in range(len(ledger.n_open)):
@@ -190,7 +190,7 @@ def close_visits(ledger: Ledger, step: int) -> None:
                 ledger.n_open[owner] -= 1
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
 def _face(host: Host, nx: float, ny: float) -> int:
     """Side of the block that a pusher touches whose normal into the block is (nx, ny)."""
     c, s = math.cos(host.motion[2]), math.sin(host.motion[2])
@@ -200,7 +200,7 @@ def _face(host: Host, nx: float, ny: float) -> int:
     return _LOWER if by > 0.0 else _UPPER
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
 def _feel(rig: Rig, crew: Crew, i: int, kind: int, nx: float, ny: float, impulse: float, step: int) -> None:
     """Let pusher i's bumper take note of a contact whose normal out of the pusher is (nx, ny)."""
     facing = nx * crew.ux[i] + ny * crew.uy[i]
@@ -214,7 +214,7 @@ def _feel(rig: Rig, crew: Crew, i: int, kind: int, nx: float, ny: float, impulse
         crew.step_normal[i] = math.atan2(-ny, -nx)
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
 def enter_contacts(host: Host, rig: Rig, crew: Crew, ledger: Ledger, n_pairs: int, step: int) -> None:
     """Enter the contacts of this step: visits, bumpers, and the impulses on the block."""
     n = len(crew.heading)
@@ -307,7 +307,7 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ledger: Ledger, n_pairs: in
     totals[Total.STEP_LEANING] = leaning
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
 def balance_block(host: Host, rig: Rig, ledger: Ledger) -> None:
     """Close the books of the last step, the block's new state having been read.
 
@@ -349,7 +349,7 @@ def balance_block(host: Host, rig: Rig, ledger: Ledger) -> None:
                 totals[Total.JAMMED_STEPS] += 1.0
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
 def remember_block(host: Host, ledger: Ledger) -> None:
     """Keep the block's state for the next balance."""
     ledger.totals[Total.OLD_X], ledger.totals[Total.OLD_Y] = host.motion[0], host.motion[1]

@@ -71,7 +71,7 @@ class Task(NamedTuple):
     sample_steps: int
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
 def _before(host: Host, task: Task, step: int, final_step: int) -> int:
     """Books of the last step, sample, guards, then orders for this step; the state must have been read."""
     rig, crew, ledger = task.rig, task.crew, task.ledger
@@ -118,7 +118,7 @@ def _before(host: Host, task: Task, step: int, final_step: int) -> int:
     return ending
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
 def _after(host: Host, task: Task, n_pairs: int, step: int) -> bool:
     """Ledger and bumpers after the engine's step; True if the log must be fetched."""
     ledger = task.ledger
