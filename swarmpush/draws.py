@@ -15,8 +15,9 @@ import math
 from enum import IntEnum
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
+
+from swarmpush.compiled import compiled
 
 
 class Purpose(IntEnum):
@@ -52,7 +53,7 @@ def stream_keys(seed: int, n_pushers: int) -> NDArray[np.uint64]:
     return np.array(keys, dtype=np.uint64).reshape(n_pushers, len(Purpose))
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def uniform(key: np.uint64, index: int) -> float:
     """The `index`-th number of the stream `key`, uniform on the open interval (0, 1)."""
     z = key + np.uint64(index + 1) * np.uint64(0x9E3779B97F4A7C15)
@@ -62,7 +63,7 @@ def uniform(key: np.uint64, index: int) -> float:
     return (float(z >> np.uint64(12)) + 0.5) / 4503599627370496.0  # 2**52 cells, their midpoints
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def normal(key: np.uint64, index: int) -> float:
     """The `index`-th standard normal number of the stream `key`."""
     radius = math.sqrt(-2.0 * math.log(uniform(key, 2 * index)))

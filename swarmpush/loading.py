@@ -7,20 +7,23 @@ together. Each problem names the file, the key, the value and what is allowed.
 from __future__ import annotations
 
 import difflib
+import json
 import math
 import tomllib
 from collections.abc import Iterator
+from contextlib import suppress
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any, get_args
+from typing import Annotated, Any, NamedTuple, get_args
 
-from pydantic import BaseModel, ValidationError
+from pydantic import BaseModel, TypeAdapter, ValidationError
+from pydantic.fields import FieldInfo
 
-from swarmpush.quantities import for_people
+from swarmpush.quantities import Quantity, for_people
 from swarmpush.scenario import Scenario
 
 MAX_FILE_BYTES = 1_000_000  # a scenario is a few kilobytes; a larger file is something else
-MAX_PACKING = 0.5  # share of the start region that discs can fill by random placement without getting stuck
+MAX_PACKING = 0.4  # share of the start region that discs can fill by random placement without getting stuck
 
 
 @dataclass(frozen=True)
@@ -43,6 +46,9 @@ class ScenarioError(ValueError):
         count = "1 problem" if len(problems) == 1 else f"{len(problems)} problems"
         lines = [f"{source}: {count}", *(f"  {problem}" for problem in problems)]
         super().__init__("\n".join(lines))
+
+    def __reduce__(self) -> tuple[Any, ...]:
+        return type(self), (self.source, list(self.problems))  # so that it comes back whole from another process
 
 
 def load(path: str | Path) -> Scenario:
@@ -76,8 +82,8 @@ def from_tables(tables: dict[str, Any], source: str = "scenario") -> Scenario:
         scenario = Scenario.model_validate(tables)
     except ValidationError as error:
         problems = [_problem(tables, details) for details in error.errors(include_url=False) if not _is_echo(details)]
-        raise ScenarioError(source, problems + list(_problems_of_the_rest(tables, error))) from None
-    if problems := list(_misfits(scenario)):
+        raise ScenarioError(source, problems + list(_misfits_of_the_rest(tables))) from None
+    if problems := [problem for check in _CHECKS for problem in check(scenario)]:
         raise ScenarioError(source, problems)
     return scenario
 
@@ -87,12 +93,12 @@ def _read(path: Path) -> str:
         return ScenarioError(str(path), [Problem("", sentence)])
 
     try:
-        if path.is_dir():
-            raise refuse("this is a folder; name a scenario file (.toml)")
         with path.open("rb") as file:
             raw = file.read(MAX_FILE_BYTES + 1)
     except FileNotFoundError:
         raise refuse("no such file") from None
+    except IsADirectoryError:
+        raise refuse("this is a folder; name a scenario file (.toml)") from None
     except (OSError, ValueError) as error:  # ValueError: a name with a null character
         raise refuse(f"cannot be read ({getattr(error, 'strerror', None) or error})") from None
     if len(raw) > MAX_FILE_BYTES:
@@ -110,8 +116,8 @@ def _parse(text: str, source: str) -> Scenario:
         tables = tomllib.loads(text)
     except tomllib.TOMLDecodeError as error:
         raise ScenarioError(source, [Problem("", f"not valid TOML: {error}")]) from None
-    except (RecursionError, ValueError):  # nested too deeply; a number of thousands of digits
-        raise ScenarioError(source, [Problem("", "not valid TOML: nested too deeply or a number too long")]) from None
+    except (RecursionError, ValueError):  # ValueError: a number of thousands of digits
+        raise ScenarioError(source, [Problem("", "nested too deeply, or a number too long")]) from None
     return from_tables(tables, source)
 
 
@@ -120,153 +126,148 @@ def _parse(text: str, source: str) -> Scenario:
 
 def _is_echo(details: Any) -> bool:
     """A list that is too short only because its items were found wrong, which is said already."""
-    return details["type"] == "too_short" and len(details["input"]) > details["ctx"]["actual_length"]
+    return bool(details["type"] == "too_short" and len(details["input"]) > details["ctx"]["actual_length"])
 
 
 def _problem(tables: dict[str, Any], details: Any) -> Problem:
-    location = [part for part in details["loc"] if _is_in_file(part)]
-    key = _written(location)
+    place = _find(details["loc"])
+    key = _written(place.keys)
     context = details.get("ctx", {})
-    given = f"{_shown(details['input'])} given"
     match details["type"]:
         case "extra_forbidden":
-            return Problem(key, "unknown key" + _nearest(location, details["loc"]))
+            return Problem(key, "unknown key" + _nearest(place))
         case "missing":
-            return Problem(key, "missing" + _meaning(details["loc"]))
-        case "greater_than":
-            return Problem(key, f"{given}; must be more than {_limit(context['gt'])}")
-        case "greater_than_equal":
-            return Problem(key, f"{given}; must be at least {_limit(context['ge'])}")
-        case "less_than":
-            return Problem(key, f"{given}; must be less than {_limit(context['lt'])}")
-        case "less_than_equal":
-            return Problem(key, f"{given}; must be at most {_limit(context['le'])}")
-        case "literal_error":
-            return Problem(key, f"{given}; allowed: {context['expected'].replace(chr(39), chr(34))}")
+            meaning = place.field.description if place.field else None
+            return Problem(key, f"missing ({meaning})" if meaning else "missing")
         case "union_tag_invalid":
-            tag = details["ctx"]["discriminator"].strip("'")
-            return Problem(
-                f"{key}.{tag}",
-                f"{_shown(context['tag'])} given; allowed: {context['expected_tags'].replace(chr(39), chr(34))}",
-            )
+            allowed = context["expected_tags"].replace("'", '"')
+            tag = context["discriminator"].strip("'")
+            return Problem(f"{key}.{tag}", f"{_shown(context['tag'])} given; allowed: {allowed}")
         case "union_tag_not_found":
-            return Problem(key, f"the key {context['discriminator'].strip(chr(39))} is missing")
-        case "value_error":
+            return Problem(key, f"the key {context['discriminator']} is missing")
+        case "value_error" if isinstance(details["input"], dict):
             return Problem(key, str(context["error"]))
-        case "model_type" | "dict_type" | "model_attributes_type":
-            return Problem(key, f"{given}; expected a table [{key}]")
+    given = f"{_shown(_value_at(tables, place.keys))} given"
+    match details["type"]:
+        case "greater_than" | "greater_than_equal" | "less_than" | "less_than_equal" if place.field:
+            return Problem(key, f"{given}; must be {_bounds(place.field)}")
+        case "literal_error":
+            allowed = context["expected"].replace("'", '"')
+            return Problem(key, f"{given}; allowed: {allowed}")
+        case "value_error":
+            return Problem(key, f"{given}; {context['error']}")
+        case kind if kind in _KINDS:
+            return Problem(key, f"{given}; must be {_KINDS[kind]}")
         case _:
             return Problem(key, f"{given}; {details['msg'][0].lower()}{details['msg'][1:]}")
 
 
-_TAGS = {
-    "run", "turn", "depart", "mirror", "wander", "tally", "branch", "halt", "contact", "counter", "time",
-}  # fmt: skip
+_KINDS = {
+    "model_type": "a table",
+    "model_attributes_type": "a table",
+    "tuple_type": "a list",
+    "string_type": "text",
+    "int_type": "a whole number",
+    "bool_type": "true or false",
+}
 
 
-def _is_in_file(part: object) -> bool:
-    """Whether a part of a model error's location is something the user wrote, not a tag of a union."""
-    return not (isinstance(part, str) and part in _TAGS)
+class _Place(NamedTuple):
+    """Where an error is.
+
+    keys: the way to it as written in the file.
+    table: the model of the table that holds the last key, None where the model knows nothing.
+    field: the model's field of the last key, None for an unknown key.
+    """
+
+    keys: tuple[str | int, ...]
+    table: type[BaseModel] | None
+    field: FieldInfo | None
 
 
-def _written(location: list[Any]) -> str:
-    text = ""
+def _find(location: tuple[str | int, ...]) -> _Place:
+    """Follow a model error's location; where several models can stand, it holds a tag that is not in the file."""
+    keys: list[str | int] = []
+    models: list[type[BaseModel]] = [Scenario]
+    table: type[BaseModel] | None = None
+    field: FieldInfo | None = None
     for part in location:
-        text += f"[{part + 1}]" if isinstance(part, int) else f".{part}" if text else str(part)
+        if isinstance(part, str) and len(models) > 1:
+            models = [model for model in models if _is_tagged(model, part)]
+            continue
+        keys.append(part)
+        if isinstance(part, str):
+            table = models[0] if models else None
+            field = table.model_fields.get(part) if table else None
+            models = _models_in(field.annotation) if field else []
+    return _Place(tuple(keys), table, field)
+
+
+def _models_in(annotation: Any) -> list[type[BaseModel]]:
+    if isinstance(annotation, type) and issubclass(annotation, BaseModel):
+        return [annotation]
+    return [model for inner in get_args(annotation) for model in _models_in(inner)]
+
+
+def _is_tagged(model: type[BaseModel], tag: str) -> bool:
+    return any(get_args(field.annotation) == (tag,) for field in model.model_fields.values())
+
+
+def _written(keys: tuple[str | int, ...]) -> str:
+    text = ""
+    for key in keys:
+        if isinstance(key, int):
+            text += f"[{key + 1}]"
+        else:
+            text += ("." if text else "") + (key if key.isprintable() else _shown(key))
     return text
 
 
+def _value_at(tables: Any, keys: tuple[str | int, ...]) -> Any:
+    for key in keys:
+        tables = tables[key]
+    return tables
+
+
 def _shown(value: object) -> str:
-    text = f'"{value}"' if isinstance(value, str) else repr(value)
+    """A value as a person would write it in the file, shortened."""
     if isinstance(value, dict):
-        text = "a table"
-    elif isinstance(value, list | tuple):
-        text = "a list"
-    elif isinstance(value, bool):
-        text = str(value).lower()
+        return "a table"
+    if isinstance(value, list | tuple):
+        return "a list"
+    if isinstance(value, bool):
+        return str(value).lower()
+    if isinstance(value, int) and abs(value) > 10**50:
+        return "a huge number"  # which Python may even refuse to write
+    text = json.dumps(value, ensure_ascii=False) if isinstance(value, str) else str(value)
     return text if len(text) <= 60 else text[:57] + "..."
 
 
-def _limit(value: object) -> str:
-    return f"{value:.6g}" if isinstance(value, float) else str(value)
+_BOUNDS = {"gt": "more than", "ge": "at least", "lt": "less than", "le": "at most"}
 
 
-def _keys_at(location: tuple[Any, ...]) -> list[str]:
-    """The keys that the model knows at a place given by an error's location."""
-    model: Any = Scenario
-    for part in location:
-        if isinstance(part, int) or model is None:
-            continue
-        model = _model_below(model, part)
-    return list(model.model_fields) if model is not None else []
+def _bounds(field: FieldInfo) -> str:
+    """The range that a field allows, in words."""
+    unit = _unit_of(field)
+    return " and ".join(
+        f"{words} {for_people(getattr(bound, name), unit, 6)}"
+        for bound in field.metadata
+        for name, words in _BOUNDS.items()
+        if hasattr(bound, name)
+    )
 
 
-def _model_below(model: type[BaseModel], part: str) -> type[BaseModel] | None:
-    if part in _TAGS and part not in model.model_fields:
-        return _tagged_model(model, part)
-    field = model.model_fields.get(part)
-    return _first_model(field.annotation) if field else None
+def _unit_of(field: FieldInfo) -> str:
+    optional = [mark for option in get_args(field.annotation) for mark in getattr(option, "__metadata__", ())]
+    return next((mark.si_unit for mark in [*field.metadata, *optional] if isinstance(mark, Quantity)), "1")
 
 
-def _tagged_model(model: type[BaseModel], tag: str) -> type[BaseModel] | None:
-    from swarmpush import routine
-
-    by_tag: dict[str, type[BaseModel]] = {
-        "run": routine.Run, "turn": routine.Turn, "depart": routine.Depart, "mirror": routine.Mirror,
-        "wander": routine.Wander, "tally": routine.Tally, "halt": routine.Halt,
-        "contact": routine.BranchContact, "counter": routine.BranchCounter, "time": routine.BranchTime,
-        "branch": routine.BranchContact,
-    }  # fmt: skip
-    return by_tag.get(tag)
-
-
-def _first_model(annotation: Any) -> type[BaseModel] | None:
-    if isinstance(annotation, type) and issubclass(annotation, BaseModel):
-        return annotation
-    for inner in get_args(annotation):
-        if found := _first_model(inner):
-            return found
-    return None
-
-
-def _nearest(location: list[Any], full_location: tuple[Any, ...]) -> str:
-    known = _keys_at(full_location[:-1])
-    close = difflib.get_close_matches(str(location[-1]), known, n=1, cutoff=0.6)
+def _nearest(place: _Place) -> str:
+    known = list(place.table.model_fields) if place.table else []
+    close = difflib.get_close_matches(str(place.keys[-1]), known, n=1, cutoff=0.6)
     if close:
         return f"; did you mean '{close[0]}'?"
     return f"; known here: {', '.join(known)}" if known else ""
-
-
-def _meaning(full_location: tuple[Any, ...]) -> str:
-    parent: Any = Scenario
-    for part in full_location[:-1]:
-        parent = _model_below(parent, part) if isinstance(part, str) and parent is not None else parent
-    field = parent.model_fields.get(full_location[-1]) if parent is not None else None
-    return f" ({field.description})" if field is not None and field.description else ""
-
-
-def _problems_of_the_rest(tables: dict[str, Any], error: ValidationError) -> Iterator[Problem]:
-    """Problems of fit that can be seen although some keys are wrong: judge the file without those keys."""
-    import copy
-
-    pruned = copy.deepcopy(tables)
-    for details in error.errors(include_url=False):
-        if not _remove(pruned, [part for part in details["loc"] if _is_in_file(part)]):
-            return
-    try:
-        yield from _misfits(Scenario.model_validate(pruned))
-    except ValidationError:
-        return
-
-
-def _remove(tables: Any, location: list[Any]) -> bool:
-    try:
-        for part in location[:-1]:
-            tables = tables[part]
-        del tables[location[-1]]
-    except (KeyError, IndexError, TypeError):
-        return False
-    return True
 
 
 # ---- how the values fit together -----------------------------------------------------------------------------
@@ -276,36 +277,72 @@ def _metre(value: float) -> str:
     return for_people(value, "m", 4)
 
 
-def _misfits(s: Scenario) -> Iterator[Problem]:
-    """Values that are fine alone and impossible together."""
-    yield from _infinite_values(s)
+def _misfits_of_the_rest(tables: dict[str, Any]) -> Iterator[Problem]:
+    """What does not fit among those values that are fine alone, for a file in which others are wrong."""
+    rest = _salvage(Scenario, tables)
+    for check in _CHECKS:
+        with suppress(AttributeError):  # the check asks for a value that is not there
+            yield from check(rest)
+
+
+def _salvage(model: type[Any], table: dict[str, Any]) -> Any:
+    """The model with those values that are fine; a wrong or missing one is no attribute of it."""
+    values: dict[str, Any] = {}
+    for name, field in model.model_fields.items():
+        if name in table:
+            value_type: Any = Annotated[field.annotation, field]
+            try:
+                values[name] = TypeAdapter(value_type).validate_python(table[name])
+            except ValidationError:
+                inner = _models_in(field.annotation)
+                if inner and isinstance(table[name], dict):
+                    values[name] = _salvage(inner[0], table[name])
+        elif not field.is_required():
+            values[name] = field.get_default()
+    rest = model.model_construct()  # with a default also where the file has a wrong value
+    rest.__dict__.clear()
+    rest.__dict__.update(values)
+    return rest
+
+
+def _width_misfits(s: Scenario) -> Iterator[Problem]:
     diameter = 2 * s.pushers.radius
     if diameter >= s.channel.width:
         yield Problem(
             "pushers.radius",
             f"a pusher ({_metre(diameter)} across) does not fit the channel ({_metre(s.channel.width)} wide)",
         )
+
+
+def _block_width_misfits(s: Scenario) -> Iterator[Problem]:
     if s.block.width > s.channel.width:
         yield Problem(
             "block.width",
             f"the block ({_metre(s.block.width)}) is wider than the channel ({_metre(s.channel.width)})",
         )
     elif abs(s.block.offset) + s.block.width / 2 > s.channel.width / 2 * (1 + 1e-12):
+        most = (s.channel.width - s.block.width) / 2
         yield Problem(
             "block.offset",
-            f"{_metre(s.block.offset)} puts the block into a wall; at most {_metre((s.channel.width - s.block.width) / 2)} to either side",
+            f"{_metre(s.block.offset)} puts the block into a wall; at most {_metre(most)} to either side",
         )
-    if s.block_front_at > s.channel.length:
+
+
+def _block_length_misfits(s: Scenario) -> Iterator[Problem]:
+    front, end = s.block_front_at, s.channel.length
+    if front > end:
         yield Problem(
             "block.rear_at",
-            f"the block's front would stand at {_metre(s.block_front_at)}, beyond the channel's end at {_metre(s.channel.length)}",
+            f"the block's front would stand at {_metre(front)}, beyond the channel's end at {_metre(end)}",
         )
-    elif s.block_front_at + s.goal.travel > s.channel.length:
-        room = s.channel.length - s.block_front_at
+    elif front + s.goal.travel > end:
         yield Problem(
             "goal.travel",
-            f"{_metre(s.goal.travel)} is more than the {_metre(room)} between the block and the channel's end",
+            f"{_metre(s.goal.travel)} is more than the {_metre(end - front)} between the block and the channel's end",
         )
+
+
+def _resistance_misfits(s: Scenario) -> Iterator[Problem]:
     if s.floor is None and s.fluid is None:
         yield Problem("", "neither [floor] nor [fluid] given; say what resists the block")
     if s.floor is not None and s.floor.kinetic_friction > s.floor.static_friction:
@@ -313,37 +350,27 @@ def _misfits(s: Scenario) -> Iterator[Problem]:
             "floor.kinetic_friction",
             f"{s.floor.kinetic_friction:g} is more than static_friction ({s.floor.static_friction:g})",
         )
+
+
+def _forecast_misfits(s: Scenario) -> Iterator[Problem]:
     if (s.forecast.law == "given") != (s.forecast.nudge is not None):
         yield Problem("forecast.nudge", 'needed with law = "given", and only then')
-    if s.numerics.step is not None and s.numerics.step * s.pushers.free_speed > 0.5 * s.pushers.radius:
-        limit = 0.5 * s.pushers.radius / s.pushers.free_speed
+
+
+def _step_misfits(s: Scenario) -> Iterator[Problem]:
+    step, most = s.numerics.step, 0.5 * s.pushers.radius / s.pushers.free_speed
+    if step is not None and step > most:
         yield Problem(
             "numerics.step",
-            f"in {for_people(s.numerics.step, 's')} a pusher runs more than half its radius; at most {for_people(limit, 's')}",
+            f"in {for_people(step, 's')} a pusher runs more than half its radius; at most {for_people(most, 's')}",
         )
-    if diameter < s.channel.width:
-        yield from _start_misfits(s)
-
-
-def _infinite_values(s: Scenario) -> Iterator[Problem]:
-    """Only a turn rate may be infinite (it means: at once)."""
-
-    def walk(value: Any, key: str) -> Iterator[Problem]:
-        if isinstance(value, float) and not math.isfinite(value) and key != "pushers.turn_rate":
-            yield Problem(key, "must be finite")
-        elif isinstance(value, BaseModel):
-            for name in type(value).model_fields:
-                yield from walk(getattr(value, name), f"{key}.{name}" if key else name)
-        elif isinstance(value, tuple):
-            for k, item in enumerate(value):
-                yield from walk(item, f"{key}[{k + 1}]")
-
-    yield from walk(s, "")
 
 
 def _start_misfits(s: Scenario) -> Iterator[Problem]:
     from swarmpush.starts import room_for_starts
 
+    if 2 * s.pushers.radius >= s.channel.width:
+        return  # a start has no place to be right or wrong in
     if s.start.placed is not None:
         yield from _placed_misfits(s)
         return
@@ -373,7 +400,7 @@ def _placed_misfits(s: Scenario) -> Iterator[Problem]:
         if not (r <= p.x <= s.channel.length - r and r <= p.y <= s.channel.width - r):
             yield Problem(
                 key,
-                f"({p.x:g}, {p.y:g}) m puts the pusher into a wall; its centre must keep {for_people(r, 'm')} from every wall",
+                f"({p.x:g}, {p.y:g}) m puts the pusher into a wall; its centre must keep {_metre(r)} from every wall",
             )
             continue
         gap_x = max(s.block.rear_at - p.x, p.x - s.block_front_at, 0.0)
@@ -383,3 +410,14 @@ def _placed_misfits(s: Scenario) -> Iterator[Problem]:
         for j, q in enumerate(placed[:k]):
             if not s.pushers.pass_through and math.hypot(p.x - q.x, p.y - q.y) < 2 * r * (1 - 1e-9):
                 yield Problem(key, f"overlaps start.placed[{j + 1}]")
+
+
+_CHECKS = (
+    _width_misfits,
+    _block_width_misfits,
+    _block_length_misfits,
+    _resistance_misfits,
+    _forecast_misfits,
+    _step_misfits,
+    _start_misfits,
+)

@@ -7,15 +7,20 @@ import math
 import os
 import platform
 import tempfile
+from collections.abc import Iterator
+from contextlib import contextmanager
 from dataclasses import fields, is_dataclass
 from enum import Enum
 from importlib.metadata import version
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from swarmpush.scenario import Scenario
+
+if TYPE_CHECKING:
+    import pandas as pd
 
 
 class OutputError(Exception):
@@ -88,16 +93,39 @@ def free_folder(parent: Path, stem: str) -> Path:
     return folder
 
 
+@contextmanager
+def _written_whole(path: Path) -> Iterator[Path]:
+    """A temporary file beside `path` that takes its place once it is written; nothing half-written is left."""
+    part: Path | None = None
+    try:
+        handle, name = tempfile.mkstemp(dir=path.parent, suffix=".part")
+        os.close(handle)
+        part = Path(name)
+        yield part
+        part.chmod(0o644)
+        part.replace(path)
+    except OSError as error:
+        raise OutputError(f"{path} cannot be written ({error.strerror})") from None
+    finally:
+        if part is not None:
+            part.unlink(missing_ok=True)
+
+
 def write_text(path: Path, text: str) -> None:
-    """Write a file whole or not at all: under a temporary name first, then renamed.
+    """Write a file whole or not at all.
 
     Raises:
         OutputError: when the place cannot be written.
     """
-    try:
-        with tempfile.NamedTemporaryFile("w", encoding="utf-8", dir=path.parent, delete=False, suffix=".part") as file:
-            file.write(text)
-        os.chmod(file.name, 0o644)
-        os.replace(file.name, path)
-    except OSError as error:
-        raise OutputError(f"{path} cannot be written ({error.strerror})") from None
+    with _written_whole(path) as part:
+        part.write_text(text, encoding="utf-8")
+
+
+def write_table(path: Path, table: pd.DataFrame) -> None:
+    """Write a table as Parquet, whole or not at all.
+
+    Raises:
+        OutputError: when the place cannot be written.
+    """
+    with _written_whole(path) as part:
+        table.to_parquet(part, index=False)

@@ -12,10 +12,10 @@ from enum import IntEnum
 from typing import NamedTuple
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
 from swarmpush import routine as acts
+from swarmpush.compiled import compiled, inlined
 from swarmpush.draws import Purpose, normal, uniform
 
 FloatArray = NDArray[np.float64]
@@ -97,6 +97,9 @@ class Senses(NamedTuple):
     bearing_sd: float
 
 
+EXACT = Senses(0.0, 0.0, 0.0, 0.0)  # a pusher without faults
+
+
 def compile_routine(routine: acts.Routine) -> Program:
     """Compile a checked routine to the table both worlds execute."""
     counters = {name: k for k, name in enumerate(routine.counters())}
@@ -149,13 +152,13 @@ def scale_time(program: Program, unit_s: float) -> Program:
     return Program(program.ops, args)
 
 
-@njit(cache=True, nogil=True, inline="always")
+@inlined
 def wrap_angle(angle: float) -> float:
     """The same direction between -pi and pi."""
-    return angle - 2.0 * math.pi * np.floor(angle * (0.5 / math.pi) + 0.5)
+    return angle - 2.0 * math.pi * float(np.floor(angle * (0.5 / math.pi) + 0.5))
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def _sensed_normal(senses: Senses, keys: NDArray[np.uint64], index: int, heading: float, normal_angle: float) -> float:
     """Direction of the touched surface's inward normal as the pusher knows it."""
     bearing = wrap_angle(normal_angle - heading)
@@ -166,7 +169,7 @@ def _sensed_normal(senses: Senses, keys: NDArray[np.uint64], index: int, heading
     return heading + bearing
 
 
-@njit(cache=True, nogil=True, forceinline=True, error_model="numpy")
+@inlined
 def decide(
     program: Program,
     senses: Senses,

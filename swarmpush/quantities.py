@@ -8,18 +8,26 @@ from __future__ import annotations
 
 import math
 import re
+from dataclasses import dataclass
 from functools import cache
-from typing import TYPE_CHECKING, Annotated, Any
+from typing import TYPE_CHECKING, Any
 
-from pydantic import BeforeValidator, WithJsonSchema
+from pydantic import GetCoreSchemaHandler, GetJsonSchemaHandler
+from pydantic.json_schema import JsonSchemaValue
+from pydantic_core import CoreSchema, core_schema
 
 if TYPE_CHECKING:
+    from pint import Quantity as PintQuantity
     from pint import UnitRegistry
 
-_NUMBER_AND_UNIT = re.compile(r"\s*([+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d{1,3})?|[+-]?inf)\s*(\D.{0,39})\s*")
+# the number is an atomic group, so that "1e-3" is one number and never a 1 with the unit "e-3"
+_NUMBER = r"(?>[+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d{1,3})?|[+-]?inf)"
+_PLAIN_NUMBER = re.compile(rf"\s*{_NUMBER}\s*")
+_NUMBER_AND_UNIT = re.compile(rf"\s*({_NUMBER})\s*(\D.{{0,39}})\s*")
 _UNIT_TEXT = re.compile(r"[A-Za-zµμΩ°%/*·() ^.\-\d]+")
 _SQUARE_ROOT = re.compile(r"sqrt\(\s*([A-Za-z]+)\s*\)")
 _LONG_POWER = re.compile(r"\d{2,}")
+_LEAST_FACTOR = 1e-60  # far below the Planck mass in kilograms or any other unit that people use
 
 
 @cache
@@ -33,21 +41,38 @@ def _registry() -> UnitRegistry[Any]:
 @cache
 def _factor_to(unit_text: str, si_unit: str) -> float:
     """How many `si_unit` one `unit_text` is. Raises ValueError with a sentence when there is no such factor."""
-    from pint.errors import DimensionalityError, PintError
+    from pint.errors import DimensionalityError
 
+    wrong_kind = f"the unit {unit_text!r} does not measure what is asked for here ({_called(si_unit)})"
     text = unit_text.replace("·", "*").replace("^", "**").replace("°", "deg").replace("%", "percent")
     text = _SQUARE_ROOT.sub(r"\1**0.5", text)
     if not _UNIT_TEXT.fullmatch(text) or _LONG_POWER.search(text.replace("**0.5", "")):
-        raise ValueError(f"'{unit_text}' is not a unit")
+        raise ValueError(f"{unit_text!r} is not a unit")
     registry = _registry()
+    wanted = "dimensionless" if si_unit == "1" else si_unit.replace("sqrt(s)", "s**0.5")
     try:
-        unit = registry.parse_units(text)
-        return float(registry.Quantity(1.0, unit).to(si_unit.replace("sqrt(s)", "s**0.5")).magnitude)
+        given = registry.Quantity(1.0, registry.parse_units(text))
+        factor, offset = float(given.to(wanted).magnitude), float((0.0 * given).to(wanted).magnitude)
+        fits_angle = _has_angle(given) == _has_angle(registry.Quantity(1.0, wanted))
     except DimensionalityError:
-        raise ValueError(f"the unit '{unit_text}' does not measure what is asked for here ({si_unit})") from None
-    # pint's parser passes on whatever Python's tokenizer or arithmetic raises on odd text
-    except (PintError, AttributeError, TypeError, ValueError, SyntaxError, OverflowError, AssertionError):
-        raise ValueError(f"'{unit_text}' is not a known unit") from None
+        raise ValueError(wrong_kind) from None
+    except Exception:  # pint's parser passes on whatever Python's tokenizer and arithmetic raise on odd text
+        raise ValueError(f"{unit_text!r} is not a known unit") from None
+    # To pint an angle is a plain ratio, so that 1 Hz would pass for 1 rad/s and 5 % for an angle. Only a torque per
+    # turning speed may be written either way: N*m*s or N*m/(rad/s).
+    if not fits_angle and "N*m" not in si_unit:
+        raise ValueError(wrong_kind)
+    if offset != 0.0 or not _LEAST_FACTOR < factor < 1.0 / _LEAST_FACTOR:  # decibels, for one
+        raise ValueError(f"{unit_text!r} is no sensible multiple of {_called(si_unit)}")
+    return factor
+
+
+def _has_angle(quantity: PintQuantity[Any]) -> bool:
+    return any(name == "radian" for name, _ in quantity.to_root_units().unit_items())
+
+
+def _called(si_unit: str) -> str:
+    return "a plain ratio" if si_unit == "1" else si_unit
 
 
 def to_si(value: object, si_unit: str) -> float:
@@ -66,30 +91,32 @@ def to_si(value: object, si_unit: str) -> float:
     3.141593
     """
     if isinstance(value, bool):
-        raise ValueError(f"expected a number or a string with a unit ({si_unit}), not true or false")
+        raise ValueError(f"expected a number or a string with a unit ({_called(si_unit)}), not true or false")
     if isinstance(value, int | float):
-        number = float(value) if abs(value) < 1e300 else math.inf
-        return _finite_or_infinite(number)
+        try:
+            return _refuse_nan(float(value))
+        except OverflowError:  # a whole number beyond the range of a float
+            return math.inf if value > 0 else -math.inf
     if not isinstance(value, str):
-        raise ValueError(f"expected a number or a string with a unit ({si_unit})")
+        raise ValueError(f"expected a number or a string with a unit ({_called(si_unit)})")
     if len(value) > 80:
-        raise ValueError(f"expected a number or a short string with a unit ({si_unit})")
+        raise ValueError(f"expected a number or a short string with a unit ({_called(si_unit)})")
     match = _NUMBER_AND_UNIT.fullmatch(value)
     if match is None:
-        if si_unit == "1" and re.fullmatch(r"\s*[+-]?(\d+\.?\d*|\.\d+)\s*", value):
+        if si_unit == "1" and _PLAIN_NUMBER.fullmatch(value):
             return float(value)
-        raise ValueError(f"'{value}' is not a number with a unit; write for example \"{_example(si_unit)}\"")
+        raise ValueError(f'not a number with a unit; write for example "{_example(si_unit)}"')
     number_text, unit_text = match.groups()
     # dividing by a whole factor keeps "120 um" at 0.00012 exactly as a reader would write it
-    factor = _factor_to(unit_text.strip(), "dimensionless" if si_unit == "1" else si_unit)
+    factor = _factor_to(unit_text.strip(), si_unit)
     number = float(number_text)
     inverse = 1.0 / factor
     if factor < 1.0 and abs(inverse - round(inverse)) < 1e-9 * inverse:
-        return _finite_or_infinite(number / round(inverse))
-    return _finite_or_infinite(number * factor)
+        return _refuse_nan(number / round(inverse))
+    return _refuse_nan(number * factor)
 
 
-def _finite_or_infinite(number: float) -> float:
+def _refuse_nan(number: float) -> float:
     if math.isnan(number):
         raise ValueError("not a number (nan)")
     return number
@@ -102,18 +129,32 @@ def _example(si_unit: str) -> str:
     return _EXAMPLES.get(si_unit, f"1.5 {si_unit}")
 
 
-def quantity(si_unit: str) -> Any:
-    """The pydantic type of a physical quantity: a number in `si_unit`, or a string with any unit of its kind."""
-    return Annotated[
-        float,
-        BeforeValidator(lambda value: to_si(value, si_unit)),
-        WithJsonSchema(
-            {
-                "anyOf": [{"type": "number"}, {"type": "string"}],
-                "description": f'a number in {si_unit}, or a string with a unit, e.g. "{_example(si_unit)}"',
-            }
-        ),
-    ]
+@dataclass(frozen=True)
+class Quantity:
+    """Marks a number of a model as a physical quantity: `Annotated[float, Quantity("m")]`.
+
+    Such a field reads a number in `si_unit`, or a string with any unit of its kind, and holds the number in `si_unit`.
+    """
+
+    si_unit: str
+    may_be_infinite: bool = False
+
+    def __get_pydantic_core_schema__(self, source: Any, handler: GetCoreSchemaHandler) -> CoreSchema:
+        return core_schema.no_info_before_validator_function(self._read, handler(source))
+
+    def __get_pydantic_json_schema__(self, schema: CoreSchema, handler: GetJsonSchemaHandler) -> JsonSchemaValue:
+        return {
+            "anyOf": [
+                {"type": "number", "description": f"in {_called(self.si_unit)}"},
+                {"type": "string", "description": f'with a unit, e.g. "{_example(self.si_unit)}"'},
+            ]
+        }
+
+    def _read(self, value: object) -> float:
+        number = to_si(value, self.si_unit)
+        if math.isinf(number) and not self.may_be_infinite:
+            raise ValueError("must be finite")
+        return number
 
 
 _PREFIXES = (

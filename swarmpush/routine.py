@@ -11,12 +11,13 @@ from enum import StrEnum
 from graphlib import CycleError, TopologicalSorter
 from typing import Annotated, Literal, Self
 
-from pydantic import BaseModel, ConfigDict, Field, model_validator
+from pydantic import BaseModel, ConfigDict, Field, Strict, model_validator
 
-from swarmpush.quantities import quantity
+from swarmpush.quantities import Quantity
 
-Angle = quantity("rad")
-Duration = quantity("s")
+Angle = Annotated[float, Quantity("rad")]
+Duration = Annotated[float, Quantity("s")]
+Whole = Annotated[int, Strict()]
 
 MAX_COUNTERS = 8
 MAX_DEPARTURE = math.radians(89.0)  # a pusher that leaves flatter than this would still rub the surface
@@ -89,8 +90,8 @@ class Tally(_Table):
 
     act: Literal["tally"]
     counter: str = Field(min_length=1, max_length=40)
-    add: int = Field(default=0, ge=-1000, le=1000)
-    set: int | None = Field(default=None, ge=0, le=1000)
+    add: Whole = Field(default=0, ge=-1000, le=1000)
+    set: Whole | None = Field(default=None, ge=0, le=1000)
 
     @model_validator(mode="after")
     def _adds_or_sets(self) -> Self:
@@ -114,7 +115,7 @@ class BranchCounter(_Table):
     act: Literal["branch"]
     on: Literal["counter"]
     counter: str = Field(min_length=1, max_length=40)
-    at_least: int = Field(ge=-1000, le=1000)
+    at_least: Whole = Field(ge=-1000, le=1000)
     go: str
 
 
@@ -142,7 +143,7 @@ class Stage(_Table):
 
     name: str = Field(min_length=1, max_length=40)
     acts: tuple[Act, ...] = Field(min_length=1, max_length=64)
-    then: str | None = None
+    then: str | None = Field(default=None, min_length=1)
 
 
 class Routine(_Table):
@@ -171,9 +172,8 @@ class Routine(_Table):
             targets = [act.go for act in stage.acts if isinstance(act, _BRANCHES)]
             for target in [*targets, stage.then or stage.name]:
                 if target not in names:
-                    raise ValueError(
-                        f"stage '{stage.name}' leads to '{target}', which is not a stage: {', '.join(names)}"
-                    )
+                    known = ", ".join(map(repr, names))
+                    raise ValueError(f"stage {stage.name!r} leads to {target!r}, which is not a stage; stages: {known}")
         _demand_a_run_in_every_loop(self)
         return self
 
@@ -218,5 +218,5 @@ def _demand_a_run_in_every_loop(routine: Routine) -> None:
     try:
         TopologicalSorter(after).prepare()
     except CycleError as error:
-        stages = list(dict.fromkeys(place[0] for place in error.args[1]))
-        raise ValueError(f"stage {' -> '.join(stages)} can go round for ever without a run") from None
+        stages = dict.fromkeys(place[0] for place in error.args[1])
+        raise ValueError(f"stage {' -> '.join(map(repr, stages))} can go round for ever without a run") from None

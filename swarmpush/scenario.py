@@ -8,31 +8,41 @@ from __future__ import annotations
 import hashlib
 import json
 import math
-from typing import Any, Literal
+from typing import Annotated, Any, Literal
 
-from pydantic import BaseModel, ConfigDict, Field
+from pydantic import BaseModel, ConfigDict, Field, Strict
 
-from swarmpush.quantities import quantity
+from swarmpush.quantities import Quantity
 from swarmpush.routine import Routine
 
-Length = quantity("m")
-Time = quantity("s")
-Mass = quantity("kg")
-Inertia = quantity("kg*m^2")
-Speed = quantity("m/s")
-AngularSpeed = quantity("rad/s")
-Force = quantity("N")
-Impulse = quantity("N*s")
-Drag = quantity("N*s/m")
-TurnDrag = quantity("N*m*s")
-Angle = quantity("rad")
-HeadingDiffusion = quantity("rad/sqrt(s)")
-Rate = quantity("1/s")
-Ratio = quantity("1")
-Viscosity = quantity("Pa*s")
-Density = quantity("kg/m^3")
+Length = Annotated[float, Quantity("m")]
+Time = Annotated[float, Quantity("s")]
+Mass = Annotated[float, Quantity("kg")]
+Inertia = Annotated[float, Quantity("kg*m^2")]
+Speed = Annotated[float, Quantity("m/s")]
+AngularSpeed = Annotated[float, Quantity("rad/s")]
+TurnRate = Annotated[float, Quantity("rad/s", may_be_infinite=True)]
+Force = Annotated[float, Quantity("N")]
+Impulse = Annotated[float, Quantity("N*s")]
+Drag = Annotated[float, Quantity("N*s/m")]
+TurnDrag = Annotated[float, Quantity("N*m*s")]
+Angle = Annotated[float, Quantity("rad")]
+HeadingDiffusion = Annotated[float, Quantity("rad/sqrt(s)")]
+Rate = Annotated[float, Quantity("1/s")]
+Ratio = Annotated[float, Quantity("1")]
+Viscosity = Annotated[float, Quantity("Pa*s")]
+Density = Annotated[float, Quantity("kg/m^3")]
+Acceleration = Annotated[float, Quantity("m/s^2")]
+Whole = Annotated[int, Strict()]
+YesNo = Annotated[bool, Strict()]
 
 GRAVITY = 9.81  # m/s2
+
+# Below these nothing can be a body that drives itself, and the engine's numbers could run out of range.
+SMALLEST = 1e-9  # m
+LIGHTEST = 1e-24  # kg
+SLOWEST = 1e-12  # m/s
+WEAKEST = 1e-24  # N
 
 
 class _Table(BaseModel):
@@ -49,17 +59,17 @@ class About(_Table):
 class Channel(_Table):
     """A straight corridor with closed ends: x runs along it from 0 to length, y across it from 0 to width."""
 
-    length: Length = Field(gt=0, le=1e3)
-    width: Length = Field(gt=0, le=1e3)
+    length: Length = Field(ge=SMALLEST, le=1e3)
+    width: Length = Field(ge=SMALLEST, le=1e3)
 
 
 class Block(_Table):
     """The rectangular object to be moved in +x. Its rear face looks back to x = 0."""
 
-    length: Length = Field(gt=0, le=1e3, description="along the channel")
-    width: Length = Field(gt=0, le=1e3, description="across the channel")
-    mass: Mass = Field(gt=0, le=1e6)
-    yaw_inertia: Inertia | None = Field(default=None, gt=0, description="default: a uniform plate")
+    length: Length = Field(ge=SMALLEST, le=1e3, description="along the channel")
+    width: Length = Field(ge=SMALLEST, le=1e3, description="across the channel")
+    mass: Mass = Field(ge=LIGHTEST, le=1e6)
+    yaw_inertia: Inertia | None = Field(default=None, ge=1e-45, le=1e12, description="default: a uniform plate")
     rear_at: Length = Field(ge=0, description="x of the rear face at the start")
     offset: Length = Field(default=0.0, description="y of the centre at the start, from the middle of the channel")
     yaw: Literal["free", "held"] = Field(default="free", description="held: a rail keeps the block from turning")
@@ -73,18 +83,25 @@ class Block(_Table):
 class Pushers(_Table):
     """The crew: discs that drive themselves along their heading."""
 
-    count: int = Field(ge=1, le=5000)
-    radius: Length = Field(gt=0, le=1e2)
-    mass: Mass = Field(gt=0, le=1e4)
-    free_speed: Speed = Field(gt=0, le=1e3)
-    stall_force: Force = Field(gt=0, le=1e6, description="push at zero speed; falls linearly to 0 at the free speed")
+    count: Whole = Field(ge=1, le=5000)
+    radius: Length = Field(ge=SMALLEST, le=1e2)
+    mass: Mass = Field(ge=LIGHTEST, le=1e4)
+    free_speed: Speed = Field(ge=SLOWEST, le=1e3)
+    stall_force: Force = Field(
+        ge=WEAKEST, le=1e6, description="push at zero speed; falls linearly to 0 at the free speed"
+    )
     sideways_drag: Ratio = Field(default=1.0, ge=1e-2, le=1e2, description="drag across the heading over drag along it")
-    turn_rate: AngularSpeed = Field(default=math.inf, gt=0, description="how fast it turns; inf: at once")
+    turn_rate: TurnRate = Field(
+        default=math.inf,
+        gt=0,
+        description="how fast it turns; inf: at once",
+        json_schema_extra={"default": "inf rad/s"},  # JSON has no number for it
+    )
     drive_while_turning: Ratio = Field(default=0.0, ge=0, le=1, description="share of the drive kept while turning")
     bump_threshold: Impulse = Field(default=0.0, ge=0, description="least impulse that the bump sensor feels")
     bumper_arc: Angle = Field(default=2 * math.pi, gt=0, le=2 * math.pi, description="arc that feels, centred ahead")
     latency: Time = Field(default=0.0, ge=0, le=1e4, description="from the bump to the reaction; drives on meanwhile")
-    pass_through: bool = Field(
+    pass_through: YesNo = Field(
         default=False, description="true: pushers do not touch each other (to see what crowding costs)"
     )
 
@@ -104,7 +121,7 @@ class Floor(_Table):
 
     static_friction: Ratio = Field(ge=0, le=10)
     kinetic_friction: Ratio = Field(ge=0, le=10)
-    gravity: quantity("m/s^2") = Field(default=GRAVITY, ge=0, le=1e3)  # type: ignore[valid-type]
+    gravity: Acceleration = Field(default=GRAVITY, ge=0, le=1e3)
 
 
 class Fluid(_Table):
@@ -189,8 +206,8 @@ class Forecast(_Table):
 class Trial(_Table):
     """How the scenario is tried out."""
 
-    replicates: int = Field(default=12, ge=2, le=100_000)
-    seed: int = Field(default=1, ge=0, le=2**62)
+    replicates: Whole = Field(default=12, ge=2, le=100_000)
+    seed: Whole = Field(default=1, ge=0, le=2**62)
     confidence: Ratio = Field(default=0.95, gt=0.5, lt=1)
     tolerance: Ratio = Field(default=0.10, gt=0, le=1, description="relative band within which an assumption holds")
     sample_every: Time | None = Field(
@@ -202,7 +219,7 @@ class Numerics(_Table):
     """Solver settings; everything has a default that follows from the scenario."""
 
     step: Time | None = Field(default=None, gt=0)
-    iterations: int = Field(default=20, ge=1, le=1000)
+    iterations: Whole = Field(default=10, ge=1, le=1000)
 
 
 class Scenario(_Table):

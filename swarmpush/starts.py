@@ -8,9 +8,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from swarmpush.draws import Purpose, normal, stream_keys, uniform
-from swarmpush.scenario import Scenario
+from swarmpush.scenario import Scenario, Start
 
-MAX_TRIES = 100_000  # per pusher; at the densest packing the loader admits, some hundreds are needed
+MAX_TRIES = 1000  # per pusher; where the region is not full yet, some tens are needed
+MAX_ROUNDS = 200  # in a narrow region the first pushers can leave no place for the last one; then all are drawn anew
 
 
 def _x_ranges(s: Scenario) -> list[tuple[float, float]]:
@@ -39,28 +40,50 @@ def draw_starts(s: Scenario, seed: int, *, apart: bool = True) -> NDArray[np.flo
     Returns:
         starts: (count, 3) x in m, y in m, heading in rad.
 
+    Raises:
+        ScenarioError: when the crew finds no room in the start region.
+
     A pusher's start depends on its own random stream and on the pushers before it, so that a larger crew starts
-    as the smaller one did, with more added.
+    as the smaller one did, with more added; only a crew that would get stuck is drawn anew as a whole.
     """
     if s.start.placed is not None:
         return np.array([(p.x, p.y, p.heading) for p in s.start.placed])
     keys = stream_keys(seed, s.pushers.count)[:, Purpose.START]
+    for tries in range(MAX_ROUNDS):
+        centres = _draw_centres(s, keys, tries * MAX_TRIES, apart)
+        if centres is not None:
+            return np.column_stack([centres, [_draw_heading(s.start, key) for key in keys]])
+    raise _no_room(s)
+
+
+def _draw_centres(s: Scenario, keys: NDArray[np.uint64], first: int, apart: bool) -> NDArray[np.float64] | None:
+    """Centres drawn one by one, or None when one found no place; `first` is where in the streams to begin."""
     ranges = _x_ranges(s)
-    lengths = np.array([high - low for low, high in ranges])
-    bounds = np.concatenate([[0.0], np.cumsum(lengths)])
-    starts = np.empty((s.pushers.count, 3))
+    bounds = np.concatenate([[0.0], np.cumsum([high - low for low, high in ranges])])
+    r = s.pushers.radius
+    centres = np.empty((len(keys), 2))
     for i, key in enumerate(keys):
-        for attempt in range(MAX_TRIES):
+        for attempt in range(first, first + MAX_TRIES):
             along = uniform(key, 2 * attempt + 3) * bounds[-1]
             part = min(int(np.searchsorted(bounds, along, side="right")) - 1, len(ranges) - 1)
             x = ranges[part][0] + along - bounds[part]
-            y = s.pushers.radius + uniform(key, 2 * attempt + 4) * (s.channel.width - 2 * s.pushers.radius)
-            gaps = np.hypot(starts[:i, 0] - x, starts[:i, 1] - y)
-            if not apart or not (gaps < 2 * s.pushers.radius).any():
+            y = r + uniform(key, 2 * attempt + 4) * (s.channel.width - 2 * r)
+            if not apart or not (np.hypot(centres[:i, 0] - x, centres[:i, 1] - y) < 2 * r).any():
+                centres[i] = x, y
                 break
-        if s.start.heading is None:
-            heading = 2 * math.pi * uniform(key, 0)
         else:
-            heading = s.start.heading + s.start.heading_spread * normal(key, 0)
-        starts[i] = x, y, heading
-    return starts
+            return None
+    return centres
+
+
+def _draw_heading(start: Start, key: np.uint64) -> float:
+    if start.heading is None:
+        return 2 * math.pi * uniform(key, 0)
+    return start.heading + start.heading_spread * normal(key, 0)
+
+
+def _no_room(s: Scenario) -> Exception:
+    from swarmpush.loading import Problem, ScenarioError
+
+    sentence = f'{s.pushers.count} pushers find no room in the start region "{s.start.region}"; start with fewer'
+    return ScenarioError(s.about.name, [Problem("pushers.count", sentence)])

@@ -44,7 +44,9 @@ def build(s: Scenario, seed: int, steps: StepSettings) -> tuple[HostSpace, Task]
     drag = stall / speeds
     side_drag = drag * p.sideways_drag
     # a body's sideways drag is explicit, which is stable while its mass is at least side drag times the step
-    step_masses = [max(effective_mass(m, g, dt), g_side * dt) for m, g, g_side in zip(masses, drag, side_drag, strict=True)]
+    step_masses = [
+        max(effective_mass(m, g, dt), g_side * dt) for m, g, g_side in zip(masses, drag, side_drag, strict=True)
+    ]
 
     block_mass, block_moment = s.block.mass / u.mass, s.block.moment / u.inertia
     block_drag = s.fluid.block_drag / u.drag if s.fluid else 0.0
@@ -57,6 +59,7 @@ def build(s: Scenario, seed: int, steps: StepSettings) -> tuple[HostSpace, Task]
     half_length, half_width = s.block.length / u.length / 2, s.block.width / u.length / 2
     x = s.block.rear_at / u.length + half_length
     corners = [(0.0, 0.0), (length, 0.0), (length, width), (0.0, width)]
+    immovable = [math.inf] * len(corners)
     pair = {name: (q.restitution, q.friction) for name, q in s.contacts}
     space = HostSpace(
         Plate(x, width / 2 + s.block.offset / u.length, half_length, half_width, block_step_mass, step_moment),
@@ -89,6 +92,8 @@ def build(s: Scenario, seed: int, steps: StepSettings) -> tuple[HostSpace, Task]
         diffusion=e.heading_diffusion * math.sqrt(u.time),
         drift=e.heading_drift * u.time,
         noise_steps=steps.noise_steps,
+        inverse_mass=1.0 / np.array([block_mass, *masses, *immovable]),
+        inverse_step_mass=1.0 / np.array([block_step_mass, *step_masses, *immovable]),
         block_mass=block_mass,
         block_step_mass=block_step_mass,
         block_drag=block_drag,

@@ -7,9 +7,9 @@ from enum import IntEnum
 from typing import NamedTuple
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
+from swarmpush.compiled import inlined
 from swarmpush.draws import Purpose, normal, uniform
 from swarmpush.dynamics.host import MOTION, ORDERS, Host
 from swarmpush.program import MEMORY, Command, Program, Senses, decide
@@ -34,7 +34,11 @@ _WALL = 1
 
 
 class Rig(NamedTuple):
-    """Constants of a run, in engine units; arrays have one entry per pusher."""
+    """Constants of a run, in engine units; arrays have one entry per pusher.
+
+    inverse_mass, inverse_step_mass: (n_entities,) of block, pushers and walls (0), as they are and as the engine has
+    them (see `effective_mass`).
+    """
 
     dt: float
     stall: FloatArray
@@ -51,6 +55,8 @@ class Rig(NamedTuple):
     diffusion: float
     drift: float
     noise_steps: int
+    inverse_mass: FloatArray
+    inverse_step_mass: FloatArray
     block_mass: float
     block_step_mass: float
     block_drag: float
@@ -72,7 +78,7 @@ class Crew(NamedTuple):
 
     heading, ux, uy: direction of drive. mode: see `Mode`. until: end of the latency, or of deafness after a missed
     bump. to_turn: angle still to turn. pressed: impulse felt in the present touch. percept_kind, percept_normal:
-    the last bump felt. step_impulse, step_kind, step_normal, touched_at: what touched the bumper in this step.
+    the last bump felt. hardest, step_kind, step_normal: the hardest touch of this step. touched_at: step of the last.
     n_bumps: bumps felt or missed so far. next_false: time of the next false bump. n_false: how many there were.
     force_x, force_y: drive and drag of this step.
     """
@@ -86,7 +92,6 @@ class Crew(NamedTuple):
     pressed: FloatArray
     percept_kind: IntArray
     percept_normal: FloatArray
-    step_impulse: FloatArray
     step_kind: IntArray
     step_normal: FloatArray
     hardest: FloatArray
@@ -114,13 +119,13 @@ def new_crew(headings: FloatArray) -> Crew:
         heading=np.array(headings, dtype=np.float64), ux=np.cos(headings), uy=np.sin(headings),
         mode=whole(_TURN), until=np.full(n, -1.0), to_turn=zeros(), pressed=zeros(),
         percept_kind=whole(), percept_normal=np.array(headings) + math.pi,
-        step_impulse=zeros(), step_kind=whole(), step_normal=zeros(), hardest=zeros(), touched_at=whole(-9),
+        step_kind=whole(), step_normal=zeros(), hardest=zeros(), touched_at=whole(-9),
         n_bumps=whole(), next_false=np.full(n, -1.0), n_false=whole(), force_x=zeros(), force_y=zeros(),
         memory=np.zeros((n, MEMORY), dtype=np.int64), stage_since=np.zeros((n, 1)),
     )  # fmt: skip
 
 
-@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
+@inlined
 def _carry_out(
     rig: Rig, crew: Crew, program: Program, senses: Senses, keys: NDArray[np.uint64], i: int, now: float
 ) -> None:
@@ -143,7 +148,7 @@ def _carry_out(
         return
 
 
-@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
+@inlined
 def drive(
     host: Host, rig: Rig, crew: Crew, program: Program, senses: Senses, keys: NDArray[np.uint64], step: int
 ) -> None:
@@ -183,7 +188,6 @@ def drive(
         orders[place] = spin
         orders[place + 1] = crew.force_x[i]
         orders[place + 2] = crew.force_y[i]
-        crew.step_impulse[i] = 0.0
         crew.hardest[i] = -1.0
     orders[0] = motion[5]
     orders[1] = -rig.block_drag * motion[3]
@@ -194,7 +198,7 @@ def drive(
 _REST = 1e-9  # engine speed below which the floor's static friction holds; a held block has about 1e-17
 
 
-@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
+@inlined
 def set_floor(host: Host, rig: Rig) -> None:
     """Caps of the dry floor for this step, force and torque coupled on the elliptic limit surface.
 
@@ -218,7 +222,7 @@ def set_floor(host: Host, rig: Rig) -> None:
     host.floor_cap[0], host.floor_cap[1] = force, torque
 
 
-@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
+@inlined
 def feel(rig: Rig, crew: Crew, keys: NDArray[np.uint64], step: int) -> None:
     """After the contacts are read: which pushers have felt a bump."""
     now = (step + 1) * rig.dt
@@ -237,7 +241,7 @@ def feel(rig: Rig, crew: Crew, keys: NDArray[np.uint64], step: int) -> None:
         if crew.touched_at[i] != step:
             crew.pressed[i] = 0.0
             continue
-        crew.pressed[i] += crew.step_impulse[i]
+        crew.pressed[i] += crew.hardest[i]
         if crew.pressed[i] <= 0.0 or crew.pressed[i] < rig.bump_threshold or now < crew.until[i]:
             continue
         crew.n_bumps[i] += 1

@@ -1,8 +1,9 @@
 """The ledger: every contact of every step, gathered into visits; and the block's books. Compiled, engine units.
 
 A visit is one unbroken contact of a pusher with one partner (the block, a wall, another pusher), or of the block
-with a wall. Its normal impulse is split into impact and lean: in a step that begins with the partners approaching,
-whatever exceeds the drive's own push is impact; all else is lean.
+with a wall. Its normal impulse is split into impact and lean. In a step that begins with the partners approaching,
+what exceeds the drive's own push has stopped the masses that the engine steps with, which contain the drag of one
+step (`effective_mass`); the share that the bare masses have in it is impact. All else is lean.
 """
 
 from __future__ import annotations
@@ -12,9 +13,9 @@ from enum import IntEnum
 from typing import NamedTuple
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
+from swarmpush.compiled import inlined
 from swarmpush.dynamics.crew import Crew, Rig
 from swarmpush.dynamics.host import CONTACT_FLOATS, CONTACT_INTS, MOTION, Host
 
@@ -105,6 +106,7 @@ class Total(IntEnum):
 
 
 N_TOTALS = len(Total)
+_TOUCHES_WALL, _TOUCHES_PUSHER = 1, 2  # bits
 
 
 class Ledger(NamedTuple):
@@ -112,6 +114,8 @@ class Ledger(NamedTuple):
 
     ids, entities: sorted body ids and what they are (0 block, 1..n pushers, then walls). slot_partner, slot_data:
     open visits per owner (0 block, 1..n pushers). n_open: how many. log: finished visits; n_log[0]: how many.
+    on_block: (n_entities, 2) impulse of each on the block in the last step; summed up in this order, because the
+    engine lists contacts in an order that depends on addresses. touching: what each owner touched in the last step.
     """
 
     ids: IntArray
@@ -121,6 +125,8 @@ class Ledger(NamedTuple):
     slot_data: FloatArray
     log: FloatArray
     n_log: IntArray
+    on_block: FloatArray
+    touching: IntArray
     totals: FloatArray
 
 
@@ -137,11 +143,13 @@ def new_ledger(moving_ids: IntArray, wall_ids: IntArray, capacity: int) -> Ledge
         slot_data=np.zeros((n, SLOTS, N_COLUMNS)),
         log=np.zeros((capacity, N_COLUMNS)),
         n_log=np.zeros(1, dtype=np.int64),
+        on_block=np.zeros((len(ids), 2)),
+        touching=np.zeros(n, dtype=np.int64),
         totals=np.zeros(N_TOTALS),
     )
 
 
-@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
+@inlined
 def _entity(ledger: Ledger, body_id: int) -> int:
     low, high = 0, len(ledger.ids) - 1
     while low < high:
@@ -153,7 +161,7 @@ def _entity(ledger: Ledger, body_id: int) -> int:
     return ledger.entities[low] if ledger.ids[low] == body_id else -1
 
 
-@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
+@inlined
 def _slot(ledger: Ledger, owner: int, partner: int) -> int:
     """The open visit of owner and partner, or a fresh slot; -1 if the table is full."""
     free = -1
@@ -172,7 +180,7 @@ def _slot(ledger: Ledger, owner: int, partner: int) -> int:
     return free
 
 
-@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
+@inlined
 def close_visits(ledger: Ledger, step: int) -> None:
     """Move visits that have ended before `step` to the log."""
     for owner in range(len(ledger.n_open)):
@@ -190,7 +198,7 @@ def close_visits(ledger: Ledger, step: int) -> None:
                 ledger.n_open[owner] -= 1
 
 
-@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
+@inlined
 def _face(host: Host, nx: float, ny: float) -> int:
     """Side of the block that a pusher touches whose normal into the block is (nx, ny)."""
     c, s = math.cos(host.motion[2]), math.sin(host.motion[2])
@@ -200,26 +208,26 @@ def _face(host: Host, nx: float, ny: float) -> int:
     return _LOWER if by > 0.0 else _UPPER
 
 
-@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
+@inlined
 def _feel(rig: Rig, crew: Crew, i: int, kind: int, nx: float, ny: float, impulse: float, step: int) -> None:
     """Let pusher i's bumper take note of a contact whose normal out of the pusher is (nx, ny)."""
     facing = nx * crew.ux[i] + ny * crew.uy[i]
     if rig.half_arc < math.pi and facing < math.cos(rig.half_arc):
         return
     crew.touched_at[i] = step
-    crew.step_impulse[i] += impulse
     if impulse > crew.hardest[i]:
         crew.hardest[i] = impulse
         crew.step_kind[i] = kind
         crew.step_normal[i] = math.atan2(-ny, -nx)
 
 
-@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
+@inlined
 def enter_contacts(host: Host, rig: Rig, crew: Crew, ledger: Ledger, n_pairs: int, step: int) -> None:
     """Enter the contacts of this step: visits, bumpers, and the impulses on the block."""
     n = len(crew.heading)
     motion, totals, dt = host.motion, ledger.totals, rig.dt
-    totals[Total.STEP_X] = totals[Total.STEP_Y] = 0.0
+    ledger.on_block[:] = 0.0
+    ledger.touching[:] = 0
     totals[Total.WALL_BOTTOM] = totals[Total.WALL_TOP] = 0.0
     leaning = 0.0
     for p in range(n_pairs):
@@ -254,7 +262,8 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ledger: Ledger, n_pairs: in
             overlap = 2.0 - math.hypot(ox - x, oy - y)
             _feel(rig, crew, owner - 1, 3, nx, ny, push, step)
             _feel(rig, crew, partner - 1, 3, -nx, -ny, push, step)
-            totals[Total.AT_PUSHER] += 2.0
+            ledger.touching[owner] |= _TOUCHES_PUSHER
+            ledger.touching[partner] |= _TOUCHES_PUSHER
         elif partner == 0:
             cx, cy = x + nx - motion[0], y + ny - motion[1]
             rvx, rvy = rvx - motion[3] + motion[5] * cy, rvy - motion[4] - motion[5] * cx
@@ -265,20 +274,14 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ledger: Ledger, n_pairs: in
             outside = math.hypot(max(gap_x, 0.0), max(gap_y, 0.0))
             overlap = 1.0 - outside if outside > 0.0 else 1.0 - max(gap_x, gap_y)
             _feel(rig, crew, owner - 1, 2, nx, ny, push, step)
-            totals[Total.STEP_X] -= jx
-            totals[Total.STEP_Y] -= jy
-            totals[Total.PUSHERS_X] -= jx
-            totals[Total.PUSHERS_Y] -= jy
-            totals[Total.GROSS] += math.hypot(jx, jy)
+            ledger.on_block[owner, 0] -= jx
+            ledger.on_block[owner, 1] -= jy
         elif owner > 0:
             _feel(rig, crew, owner - 1, 1, nx, ny, push, step)
-            totals[Total.AT_WALL] += 1.0
+            ledger.touching[owner] |= _TOUCHES_WALL
         else:
-            totals[Total.STEP_X] += jx
-            totals[Total.STEP_Y] += jy
-            totals[Total.WALLS_X] += jx
-            totals[Total.WALLS_Y] += jy
-            totals[Total.GROSS] += math.hypot(jx, jy)
+            ledger.on_block[partner, 0] += jx
+            ledger.on_block[partner, 1] += jy
             if ny > 0.5:
                 totals[Total.WALL_TOP] = 1.0
             elif ny < -0.5:
@@ -293,7 +296,10 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ledger: Ledger, n_pairs: in
             visit[_HEAD] = crew.heading[owner - 1] if owner > 0 else motion[2]
         lean = push
         if approach > APPROACH:
-            lean = min(push, max(drive, 0.0))
+            mass = (rig.inverse_step_mass[owner] + rig.inverse_step_mass[partner]) / (
+                rig.inverse_mass[owner] + rig.inverse_mass[partner]
+            )
+            lean -= max(push - max(drive, 0.0), 0.0) * mass
         visit[_IMPACT] += push - lean
         visit[_LEAN] += lean
         visit[_TANGENT] += jy * nx - jx * ny
@@ -305,9 +311,35 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ledger: Ledger, n_pairs: in
         if partner == 0 and visit[_FACE] == _REAR and lean > rig.lean_force * dt:
             leaning += 1.0
     totals[Total.STEP_LEANING] = leaning
+    _add_up(ledger, n)
 
 
-@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
+@inlined
+def _add_up(ledger: Ledger, n: int) -> None:
+    """Sum up the impulses on the block, and who touches what."""
+    totals = ledger.totals
+    for owner in range(1, n + 1):
+        if ledger.touching[owner] & _TOUCHES_WALL:
+            totals[Total.AT_WALL] += 1.0
+        if ledger.touching[owner] & _TOUCHES_PUSHER:
+            totals[Total.AT_PUSHER] += 1.0
+    totals[Total.STEP_X] = totals[Total.STEP_Y] = 0.0
+    for entity in range(len(ledger.on_block)):
+        jx, jy = ledger.on_block[entity, 0], ledger.on_block[entity, 1]
+        if jx == 0.0 and jy == 0.0:
+            continue
+        totals[Total.STEP_X] += jx
+        totals[Total.STEP_Y] += jy
+        totals[Total.GROSS] += math.hypot(jx, jy)
+        if entity <= n:
+            totals[Total.PUSHERS_X] += jx
+            totals[Total.PUSHERS_Y] += jy
+        else:
+            totals[Total.WALLS_X] += jx
+            totals[Total.WALLS_Y] += jy
+
+
+@inlined
 def balance_block(host: Host, rig: Rig, ledger: Ledger) -> None:
     """Close the books of the last step, the block's new state having been read.
 
@@ -349,7 +381,7 @@ def balance_block(host: Host, rig: Rig, ledger: Ledger) -> None:
                 totals[Total.JAMMED_STEPS] += 1.0
 
 
-@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
+@inlined
 def remember_block(host: Host, ledger: Ledger) -> None:
     """Keep the block's state for the next balance."""
     ledger.totals[Total.OLD_X], ledger.totals[Total.OLD_Y] = host.motion[0], host.motion[1]

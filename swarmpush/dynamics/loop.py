@@ -11,9 +11,9 @@ from enum import IntEnum
 from typing import NamedTuple
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
+from swarmpush.compiled import compiled, inlined
 from swarmpush.dynamics.crew import Crew, Rig, drive, feel, set_floor
 from swarmpush.dynamics.host import MOTION, Host, HostSpace, read_state, take_step
 from swarmpush.dynamics.ledger import (
@@ -71,7 +71,7 @@ class Task(NamedTuple):
     sample_steps: int
 
 
-@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
+@inlined
 def _before(host: Host, task: Task, step: int, final_step: int) -> int:
     """Books of the last step, sample, guards, then orders for this step; the state must have been read."""
     rig, crew, ledger = task.rig, task.crew, task.ledger
@@ -118,7 +118,7 @@ def _before(host: Host, task: Task, step: int, final_step: int) -> int:
     return ending
 
 
-@njit(cache=True, nogil=True, error_model="numpy", forceinline=True)
+@inlined
 def _after(host: Host, task: Task, n_pairs: int, step: int) -> bool:
     """Ledger and bumpers after the engine's step; True if the log must be fetched."""
     ledger = task.ledger
@@ -128,7 +128,7 @@ def _after(host: Host, task: Task, n_pairs: int, step: int) -> bool:
     return ledger.n_log[0] + SLOTS * len(ledger.n_open) >= len(ledger.log)
 
 
-@njit(cache=True, nogil=True)
+@compiled
 def advance(host: Host, task: Task, first_step: int, n_steps: int, final_step: int) -> tuple[int, int]:
     """Up to `n_steps` steps. Returns the next step's number and why it came back (an `Ending`)."""
     for step in range(first_step, first_step + n_steps):

@@ -13,7 +13,7 @@ from swarmpush.scenario import Scenario
 
 TRAVEL_PER_STEP = 0.008  # radii: how far a pusher may run per step; the overlap of an impact is no deeper
 OVERDAMPED = 0.02  # relaxation time in units of radius / speed below which there is no coasting to resolve
-STEPS_PER_RELAXATION = 25  # the mass seen by an impact is then right within 2 %, see `effective_mass`
+STEPS_PER_RELAXATION = 20  # the mass seen by an impact is then right within 2.5 %, see `effective_mass`
 STEPS_PER_LATENCY = 8
 SLOP_TO_TRAVEL = 1.5  # allowed overlap over travel per step: an impact stays below it, so nothing is pushed apart
 TURN_PER_STEP = math.radians(5.0)

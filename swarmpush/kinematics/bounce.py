@@ -14,9 +14,9 @@ from enum import IntEnum
 from typing import NamedTuple
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
+from swarmpush.compiled import compiled
 from swarmpush.draws import Purpose, normal
 from swarmpush.kinematics.boundary import FRONT_SURFACE, REAR_SURFACE, Boundary
 from swarmpush.program import MEMORY, PC, Command, Op, Program, Senses, decide, wrap_angle
@@ -39,7 +39,7 @@ class Hit(NamedTuple):
     normal_angle: float
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@compiled
 def next_hit(boundary: Boundary, shift: float, x: float, y: float, ux: float, uy: float) -> Hit:
     """First surface met from (x, y) along the unit vector (ux, uy), the block moved by `shift` in x."""
     segments, arcs, moving = boundary.segments, boundary.arcs, boundary.moving
@@ -85,7 +85,7 @@ def next_hit(boundary: Boundary, shift: float, x: float, y: float, ux: float, uy
     return Hit(best, surface, normal_angle)
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@compiled
 def trace(
     boundary: Boundary,
     program: Program,
@@ -189,7 +189,7 @@ class Settled(NamedTuple):
     n_bumps: int
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@compiled
 def settle(
     boundary: Boundary,
     program: Program,
@@ -271,7 +271,7 @@ def settle(
     return Settled(fate, 0, 0, y, heading, budget)
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@compiled
 def settle_many(
     boundary: Boundary,
     program: Program,
@@ -327,7 +327,7 @@ class LapTrace(NamedTuple):
     hh: float
 
 
-@njit(cache=True, nogil=True, error_model="numpy")
+@compiled
 def trace_lap(
     boundary: Boundary,
     program: Program,

@@ -8,7 +8,10 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 
-from swarmpush.kinematics.laps import Capture, Lap
+import numpy as np
+
+from swarmpush.kinematics.laps import Lap
+from swarmpush.kinematics.strikes import Strikes
 from swarmpush.scenario import Scenario
 
 
@@ -25,13 +28,15 @@ class PushForce:
 class TravelForecast:
     """What the plan promises. Times are infinite and speeds 0 when nothing moves the block.
 
-    nudge_m: block travel per strike. strike_impulse_Ns: momentum passed by its impact. strikes_per_lap.
-    block_speed_m_s: of the whole crew. strikes_to_goal, time_to_goal_s.
+    nudge_m: block travel per strike. strike_impulse_Ns: momentum passed by its impact. strikes_per_lap: per
+    pusher in the main lap's time.
+    strike_rate_1_s, block_speed_m_s: of the whole crew. strikes_to_goal, time_to_goal_s.
     """
 
     nudge_m: float
     strike_impulse_Ns: float
     strikes_per_lap: float
+    strike_rate_1_s: float
     block_speed_m_s: float
     strikes_to_goal: float
     time_to_goal_s: float
@@ -105,27 +110,24 @@ def strike_nudge(s: Scenario, push_cosine: float) -> float:
     return nudge
 
 
-def forecast(s: Scenario, laps: tuple[Lap, ...], capture: Capture) -> TravelForecast:
-    """What the crew does to the block if every captured pusher laps undisturbed.
+def forecast(s: Scenario, laps: tuple[Lap, ...], strikes: Strikes) -> TravelForecast:
+    """What the crew does to the block if no pusher ever disturbs another and the block is where it was.
 
-    Strikes per second are the sum over laps of (crew size x share of starts in the lap x strikes per lap / lap
-    time); block speed is the sum of (strikes per second x nudge per strike).
+    Block speed is (crew size x strikes per second and pusher x mean nudge per strike).
     """
-    rate, speed, impulse, per_lap = 0.0, 0.0, 0.0, 0.0
-    for lap in laps:
-        cosines = lap.strike_cosines
-        lap_rate = s.pushers.count * lap.share / lap.time_s
-        rate += lap_rate * lap.n_rear
-        speed += lap_rate * sum(strike_nudge(s, c) for c in cosines)
-        impulse += lap_rate * sum(impact_impulse(s, s.pushers.free_speed * c) for c in cosines)
-        per_lap += lap.share * lap.n_rear
+    rate = s.pushers.count * strikes.rate_1_s
+    per_lap = strikes.rate_1_s * laps[0].time_s if laps else math.nan
     if rate == 0.0:
-        return TravelForecast(0.0, 0.0, 0.0, 0.0, math.inf, math.inf)
-    nudge = speed / rate
+        return TravelForecast(0.0, 0.0, per_lap, 0.0, 0.0, math.inf, math.inf)
+    cosines, counts = np.unique(strikes.cosines.round(6), return_counts=True)
+    nudge = float(np.average([strike_nudge(s, c) for c in cosines.tolist()], weights=counts))
+    impulse = float(np.average([impact_impulse(s, s.pushers.free_speed * c) for c in cosines.tolist()], weights=counts))
+    speed = rate * nudge
     return TravelForecast(
         nudge_m=nudge,
-        strike_impulse_Ns=impulse / rate,
-        strikes_per_lap=per_lap / sum(lap.share for lap in laps),
+        strike_impulse_Ns=impulse,
+        strikes_per_lap=per_lap,
+        strike_rate_1_s=rate,
         block_speed_m_s=speed,
         strikes_to_goal=s.goal.travel / nudge if nudge > 0.0 else math.inf,
         time_to_goal_s=s.goal.travel / speed if speed > 0.0 else math.inf,

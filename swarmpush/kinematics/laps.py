@@ -20,7 +20,8 @@ from swarmpush.kinematics.bounce import (
     trace_lap,
 )
 from swarmpush.kinematics.boundary import REAR_SURFACE, SURFACES, Boundary, corridor
-from swarmpush.program import MEMORY, PC, Contact, Program, Senses, compile_routine
+from swarmpush.program import EXACT, MEMORY, PC, Contact, Program, compile_routine
+from swarmpush.routine import Depart, Routine
 from swarmpush.scenario import Scenario
 from swarmpush.starts import draw_starts
 
@@ -30,7 +31,6 @@ IntArray = NDArray[np.int64]
 N_STARTS = 4000  # puts the 95 % interval of a share within 0.016
 BUDGET = 600  # bumps; a lap that contracts by 0.9 a round closes to one part in a million within 400
 MAX_LAP_BUMPS = 256
-IDEAL = Senses(0.0, 0.0, 0.0, 0.0)
 _SCAN_STEP = math.radians(0.25)
 _NEUTRAL = 1e-9  # a multiplier this close to 1 in size is 1: Newton's method leaves errors of 1e-12
 
@@ -91,20 +91,22 @@ class Capture:
 def find_laps(s: Scenario, *, n_starts: int = N_STARTS, seed: int = 0) -> tuple[tuple[Lap, ...], Capture]:
     """Find the laps that the scenario's starts fall into, without any error, the block standing still.
 
+    A departure with a spread is taken at its mean angle.
+
     Arguments:
         s: the scenario. n_starts: starts drawn from its start region. seed: of those draws.
 
     Returns:
         The laps, most frequent first, and what becomes of the starts.
     """
-    boundary, program = corridor(s), compile_routine(s.routine)
+    boundary, program = corridor(s), compile_routine(_without_spread(s.routine))
     many = s.replace(pushers={"count": n_starts}, start={"placed": None})
     starts = np.array(draw_starts(s, seed)) if s.start.placed else draw_starts(many, seed, apart=False)
     n = len(starts)
     keys = stream_keys(seed, 1)[0]
     fates, states = np.zeros((n, 3), dtype=np.int64), np.zeros((n, 2))
     memories = np.zeros((n, MEMORY), dtype=np.int64)
-    settle_many(boundary, program, IDEAL, keys, starts, BUDGET, fates, states, memories)
+    settle_many(boundary, program, EXACT, keys, starts, BUDGET, fates, states, memories)
 
     tracer = _Tracer(s, boundary, program, keys)
     laps: list[Lap] = []
@@ -125,6 +127,18 @@ def find_laps(s: Scenario, *, n_starts: int = N_STARTS, seed: int = 0) -> tuple[
     return tuple(laps), capture
 
 
+def _without_spread(routine: Routine) -> Routine:
+    stages = [
+        stage.model_copy(
+            update={
+                "acts": tuple(a.model_copy(update={"spread": 0.0}) if isinstance(a, Depart) else a for a in stage.acts)
+            }
+        )
+        for stage in routine.stages
+    ]
+    return routine.model_copy(update={"stages": tuple(stages)})
+
+
 class _Tracer:
     """Laps of one rig: polishing, multipliers, bands."""
 
@@ -134,7 +148,7 @@ class _Tracer:
     def trace(self, state: FloatArray, memory: IntArray, n_rear: int) -> tuple[LapTrace, FloatArray, IntArray]:
         hits, surfaces = np.zeros((MAX_LAP_BUMPS, 4)), np.zeros(MAX_LAP_BUMPS, dtype=np.int64)
         lap = trace_lap(
-            self._boundary, self._program, IDEAL, self._keys,
+            self._boundary, self._program, EXACT, self._keys,
             state[0], state[1], memory.copy(), n_rear, hits, surfaces,
         )  # fmt: skip
         return lap, hits[: lap.n_bumps], surfaces[: lap.n_bumps]
@@ -206,7 +220,7 @@ class _Tracer:
         after = memory.copy()
         rear = self._boundary.segments[REAR_SURFACE]
         end = settle(
-            self._boundary, self._program, IDEAL, self._keys,
+            self._boundary, self._program, EXACT, self._keys,
             rear[0], y, heading, after, int(Contact.BLOCK), rear[7], 2 * BUDGET,
         )  # fmt: skip
         same = end.fate == Fate.LOCKED and end.signature == signature
@@ -230,7 +244,7 @@ class _Tracer:
                     return False
                 after = running.copy()
                 end = settle(
-                    self._boundary, self._program, IDEAL, self._keys,
+                    self._boundary, self._program, EXACT, self._keys,
                     x, y, new_heading, after, int(Contact.NONE), 0.0, 2 * BUDGET,
                 )  # fmt: skip
                 if end.fate != Fate.LOCKED or end.signature != signature:
@@ -247,7 +261,7 @@ class _Tracer:
         """The pusher's memory on leg k, the run still to be done."""
         after = memory.copy()
         trace_lap(
-            self._boundary, self._program, IDEAL, self._keys,
+            self._boundary, self._program, EXACT, self._keys,
             state[0], state[1], after, n_rear, np.zeros((k + 1, 4)), np.zeros(k + 1, dtype=np.int64),
         )  # fmt: skip
         after[PC] -= 1

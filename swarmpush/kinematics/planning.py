@@ -8,6 +8,7 @@ from typing import Any
 from swarmpush.kinematics.drift import laps_to_drift_out
 from swarmpush.kinematics.forecast import PushForce, TravelForecast, forecast, push_force
 from swarmpush.kinematics.laps import N_STARTS, Capture, Lap, find_laps
+from swarmpush.kinematics.strikes import count_strikes
 from swarmpush.regimes import Regime, regimes
 from swarmpush.routine import Device
 from swarmpush.scenario import Scenario
@@ -88,7 +89,7 @@ def plan(s: Scenario, *, n_starts: int = N_STARTS) -> Plan:
     ('rear', 'top', 'bottom')
     """
     laps, capture = find_laps(s, n_starts=n_starts)
-    travel = forecast(s, laps, capture)
+    travel = forecast(s, laps, count_strikes(s))
     return Plan(
         scenario=s,
         laps=laps,

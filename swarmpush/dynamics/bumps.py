@@ -1,0 +1,97 @@
+"""From visits to bumps, strikes and laps: pure functions of the visit table.
+
+A pusher that rebounds a little and comes back at once makes several visits, yet bumps into the surface once.
+Consecutive visits of a pusher to one surface are therefore one bump; a bump on the rear face is a strike; and a lap
+is a run of bumps on the surfaces of a planned lap, from one strike to the strike that closes it.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+
+import numpy as np
+import pandas as pd
+
+from swarmpush.kinematics.boundary import REAR
+
+LAP_COLUMNS = {"pusher": np.int64, "t_start_s": np.float64, "t_end_s": np.float64, "n_strikes": np.int64}
+
+
+def find_bumps(visits: pd.DataFrame) -> pd.DataFrame:
+    """Gather visits into bumps.
+
+    Arguments:
+        visits: the table of a `Run`.
+
+    Returns:
+        One row per bump in order of pusher and time: pusher, surface ("pusher" for another pusher), t_on_s, t_off_s,
+        impact_Ns, lean_Ns (summed), approach_m_s and heading_rad (of the first touch).
+    """
+    touches = visits[visits["pusher"] >= 0]
+    between = touches[touches["partner"] == "pusher"]
+    # a visit between pushers is entered once, by the first; the second has bumped as well
+    seconds = between.assign(pusher=between["other_pusher"], heading_rad=np.nan)
+    both = pd.concat([touches, seconds], ignore_index=True) if len(seconds) else touches
+    both = both.sort_values(["pusher", "t_on_s"], kind="stable")
+    pusher, surface = both["pusher"].to_numpy(), both["surface"].to_numpy()
+    if not len(both):
+        starts = np.zeros(0, dtype=np.int64)
+    else:
+        is_new = np.ones(len(both), dtype=bool)
+        is_new[1:] = (pusher[1:] != pusher[:-1]) | (surface[1:] != surface[:-1])
+        starts = np.flatnonzero(is_new)
+
+    def total(column: str) -> np.ndarray:
+        return np.add.reduceat(both[column].to_numpy(), starts) if len(starts) else np.zeros(0)
+
+    ends = np.append(starts[1:], len(both)) - 1
+    first = both.iloc[starts]
+    return pd.DataFrame(
+        {
+            "pusher": first["pusher"].to_numpy(),
+            "surface": first["surface"].to_numpy(),
+            "t_on_s": first["t_on_s"].to_numpy(),
+            "t_off_s": both["t_off_s"].to_numpy()[ends],
+            "impact_Ns": total("impact_Ns"),
+            "lean_Ns": total("lean_Ns"),
+            "approach_m_s": first["approach_m_s"].to_numpy(),
+            "heading_rad": first["heading_rad"].to_numpy(),
+        }
+    )
+
+
+def find_completed_laps(bumps: pd.DataFrame, cycles: Iterable[tuple[str, ...]]) -> pd.DataFrame:
+    """The planned laps that pushers completed.
+
+    Arguments:
+        bumps: from `find_bumps`.
+        cycles: surfaces of each planned lap, from the rear face.
+
+    Returns:
+        One row per lap: pusher, t_start_s, t_end_s, n_strikes.
+    """
+    surface, pusher, t_on = (bumps[name].to_numpy() for name in ("surface", "pusher", "t_on_s"))
+    found: list[pd.DataFrame] = []
+    for cycle in dict.fromkeys(cycles):
+        length = len(cycle)
+        n = len(surface) - length
+        if n <= 0:
+            continue
+        is_lap = pusher[:n] == pusher[length:]
+        for k, name in enumerate((*cycle, REAR)):
+            is_lap &= surface[k : n + k] == name
+        at = np.flatnonzero(is_lap)
+        found.append(
+            pd.DataFrame(
+                {
+                    "pusher": pusher[at],
+                    "t_start_s": t_on[at],
+                    "t_end_s": t_on[at + length],
+                    "n_strikes": np.full(len(at), cycle.count(REAR)),
+                }
+            )
+        )
+    if not found:
+        return pd.DataFrame({name: pd.Series(dtype=kind) for name, kind in LAP_COLUMNS.items()})
+    laps = pd.concat(found, ignore_index=True)
+    return laps.sort_values(["pusher", "t_start_s"], kind="stable", ignore_index=True)

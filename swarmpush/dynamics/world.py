@@ -1,0 +1,132 @@
+"""The body world's entrance: a scenario and a seed go in, the record of a run comes out."""
+
+from __future__ import annotations
+
+import warnings
+from collections.abc import Callable
+from functools import cache
+
+import numpy as np
+from numpy.typing import NDArray
+
+from swarmpush.dynamics import tables
+from swarmpush.dynamics.build import build
+from swarmpush.dynamics.bumps import find_bumps, find_completed_laps
+from swarmpush.dynamics.host import HostSpace, host_disagreement
+from swarmpush.dynamics.ledger import Total
+from swarmpush.dynamics.loop import Ending, Task, advance, advance_plainly
+from swarmpush.dynamics.run import Run
+from swarmpush.dynamics.steps import StepSettings, choose_step, engine_units
+from swarmpush.kinematics.laps import find_laps
+from swarmpush.scenario import Scenario
+
+Progress = Callable[[float], None]
+
+CHUNK = 20_000  # steps between two reports of progress; some tenths of a second
+
+ENDINGS = {
+    Ending.GOAL: "goal",
+    Ending.TIME: "time",
+    Ending.ESCAPED: "a pusher left the channel",
+    Ending.OVERLAP: "bodies were pressed into each other",
+    Ending.NOT_A_NUMBER: "the motion ran away",
+}
+
+
+@cache
+def _stepper() -> Callable[[HostSpace, Task, int, int, int], tuple[int, int]]:
+    """The compiled loop, or the plain one if the compiled way to the engine does not do what pymunk itself does."""
+    if disagreement := host_disagreement():
+        warnings.warn(
+            f"the fast way to the engine disagrees with pymunk ({disagreement}); taking the slow one",
+            RuntimeWarning,
+            stacklevel=2,
+        )
+        return advance_plainly
+    return lambda space, task, first, n, final: advance(space.host, task, first, n, final)
+
+
+def simulate(
+    s: Scenario,
+    *,
+    seed: int | None = None,
+    steps: StepSettings | None = None,
+    cycles: tuple[tuple[str, ...], ...] | None = None,
+    progress: Progress | None = None,
+) -> Run:
+    """Run a scenario with rigid bodies, contact, friction and inertia until goal, time limit or break-off.
+
+    Arguments:
+        s: the scenario.
+        seed: of starts, errors and unit spreads; the scenario's own unless given.
+        steps: solver settings; chosen from the scenario unless given.
+        cycles: surfaces of the laps to recognise; those of the plan unless given.
+        progress: called now and then with the share of the time limit that is done, 0 to 1.
+
+    Returns:
+        A `Run`; the same scenario, seed and versions give the same tables, bit by bit.
+
+    >>> import swarmpush
+    >>> s = swarmpush.load(swarmpush.demo("service_passage")).replace(goal={"time_limit": 2.0})
+    >>> swarmpush.simulate(s, seed=7).ended
+    'time'
+    """
+    seed = s.trial.seed if seed is None else seed
+    steps = steps or choose_step(s)
+    if cycles is None:
+        cycles = tuple(lap.surfaces for lap in find_laps(s)[0])
+    space, task = build(s, seed, steps)
+    start_x = float(space.block.position.x)
+    final_step = max(1, round(s.goal.time_limit / steps.dt_s))
+    advance_some, log = _stepper(), []
+    step, ending = 0, Ending.NOT_YET
+    while ending == Ending.NOT_YET:
+        step, code = advance_some(space, task, step, CHUNK, final_step)
+        ending = Ending(code)
+        log.append(_fetch_log(task))
+        if progress:
+            progress(step / final_step)
+    log.append(tables.open_visits(task.ledger))
+    return _record(s, seed, steps, cycles, task, log, step, ENDINGS[ending], start_x)
+
+
+def _fetch_log(task: Task) -> NDArray[np.float64]:
+    rows = task.ledger.log[: task.ledger.n_log[0]].copy()
+    task.ledger.n_log[0] = 0
+    return rows
+
+
+def _record(
+    s: Scenario,
+    seed: int,
+    steps: StepSettings,
+    cycles: tuple[tuple[str, ...], ...],
+    task: Task,
+    log: list[NDArray[np.float64]],
+    n_steps: int,
+    ended: str,
+    start_x: float,
+) -> Run:
+    u, totals = engine_units(s), task.ledger.totals
+    interval_s, n_rows = steps.sample_steps * steps.dt_s, n_steps // steps.sample_steps + 1
+    visits = tables.visit_table(log, s.pushers.count, steps.dt_s / u.time, u)
+    block = tables.block_table(task.path, n_rows, interval_s, u)
+    covered = np.hypot(np.diff(block["x_m"]), np.diff(block["y_m"])).sum() / u.length
+    bumps = find_bumps(visits)
+    return Run(
+        scenario=s,
+        seed=seed,
+        steps=steps,
+        ended=ended,
+        duration_s=n_steps * steps.dt_s,
+        travel_m=float(totals[Total.OLD_X] - start_x) * u.length,
+        yaw_max_rad=float(totals[Total.YAW_MAX]),
+        overlap_max_m=float(totals[Total.OVERLAP_MAX]) * u.length,
+        books=tables.books(task, float(covered), u),
+        causes=tables.causes(task, n_steps),
+        visits=visits,
+        block=block,
+        pushers=tables.pusher_table(task.path, n_rows, interval_s, u),
+        bumps=bumps,
+        laps=find_completed_laps(bumps, cycles),
+    )

@@ -1,0 +1,53 @@
+"""How often the point world strikes the rear face, and how squarely: a pusher followed for the length of the trial."""
+
+from __future__ import annotations
+
+import math
+from typing import NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from swarmpush.draws import stream_keys
+from swarmpush.kinematics.bounce import trace
+from swarmpush.kinematics.boundary import REAR_SURFACE, corridor
+from swarmpush.program import EXACT, compile_routine
+from swarmpush.scenario import Scenario
+from swarmpush.starts import draw_starts
+
+N_FOLLOWED = 300  # pushers; with tens of strikes each, the rate's standard error is about one percent or less
+MAX_BUMPS = 4000  # per pusher; a longer trial is represented by its first part
+
+
+class Strikes(NamedTuple):
+    """Strikes of one pusher on a block that stands still.
+
+    rate_1_s: strikes per second. cosines: (n,) of the angle between heading and normal at each strike seen.
+    """
+
+    rate_1_s: float
+    cosines: NDArray[np.float64]
+
+
+def count_strikes(s: Scenario, *, seed: int = 0) -> Strikes:
+    """Follow pushers without any error from the scenario's starts, and count what they do to the rear face.
+
+    Randomness that belongs to the routine itself (a spread, a wander) is kept.
+    """
+    boundary, program = corridor(s), compile_routine(s.routine)
+    placed = s.start.placed is not None
+    starts = draw_starts(s if placed else s.replace(pushers={"count": N_FOLLOWED}), seed, apart=False)
+    speed, limit = s.pushers.free_speed, s.goal.time_limit
+    mean_run = math.pi * s.channel.width * s.channel.length / (2 * (s.channel.width + s.channel.length))
+    n_bumps = int(min(MAX_BUMPS, 100 + 10 * limit * speed / mean_run))
+    hits, surfaces = np.zeros((n_bumps, 5)), np.zeros(n_bumps, dtype=np.int64)
+    time, cosines = 0.0, []
+    for start, keys in zip(starts, stream_keys(seed, len(starts)), strict=True):
+        n = trace(boundary, program, EXACT, 0.0, speed, keys, start, 0.0, hits, surfaces)
+        times = np.cumsum(hits[:n, 4]) / speed
+        at_rear = (surfaces[:n] == REAR_SURFACE) & (times <= limit)
+        cosines.append(np.cos(hits[:n][at_rear, 2]))
+        # a pusher that halted spends the rest of the trial without a strike
+        time += limit if n < n_bumps else min(limit, float(times[-1]))
+    found = np.concatenate(cosines)
+    return Strikes(len(found) / time, found)
