@@ -23,6 +23,7 @@ from swarmpush.quantities import Quantity, for_people
 from swarmpush.scenario import Scenario
 
 MAX_FILE_BYTES = 1_000_000  # a scenario is a few kilobytes; a larger file is something else
+ROUNDING = 1e-9  # relative; by this much lengths may miss each other and still fit
 MAX_PACKING = 0.4  # share of the start region that discs can fill by random placement without getting stuck
 
 
@@ -320,7 +321,7 @@ def _block_width_misfits(s: Scenario) -> Iterator[Problem]:
             "block.width",
             f"the block ({_metre(s.block.width)}) is wider than the channel ({_metre(s.channel.width)})",
         )
-    elif abs(s.block.offset) + s.block.width / 2 > s.channel.width / 2 * (1 + 1e-12):
+    elif abs(s.block.offset) + s.block.width / 2 > s.channel.width / 2 * (1 + ROUNDING):
         most = (s.channel.width - s.block.width) / 2
         yield Problem(
             "block.offset",
@@ -330,12 +331,12 @@ def _block_width_misfits(s: Scenario) -> Iterator[Problem]:
 
 def _block_length_misfits(s: Scenario) -> Iterator[Problem]:
     front, end = s.block_front_at, s.channel.length
-    if front > end:
+    if front > end * (1 + ROUNDING):
         yield Problem(
             "block.rear_at",
             f"the block's front would stand at {_metre(front)}, beyond the channel's end at {_metre(end)}",
         )
-    elif front + s.goal.travel > end:
+    elif front + s.goal.travel > end * (1 + ROUNDING):
         yield Problem(
             "goal.travel",
             f"{_metre(s.goal.travel)} is more than the {_metre(end - front)} between the block and the channel's end",
@@ -397,7 +398,8 @@ def _placed_misfits(s: Scenario) -> Iterator[Problem]:
     middle = s.channel.width / 2 + s.block.offset
     for k, p in enumerate(placed):
         key = f"start.placed[{k + 1}]"
-        if not (r <= p.x <= s.channel.length - r and r <= p.y <= s.channel.width - r):
+        to_wall = min(p.x, s.channel.length - p.x, p.y, s.channel.width - p.y)
+        if to_wall < r * (1 - ROUNDING):
             yield Problem(
                 key,
                 f"({p.x:g}, {p.y:g}) m puts the pusher into a wall; its centre must keep {_metre(r)} from every wall",
@@ -405,10 +407,10 @@ def _placed_misfits(s: Scenario) -> Iterator[Problem]:
             continue
         gap_x = max(s.block.rear_at - p.x, p.x - s.block_front_at, 0.0)
         gap_y = max(abs(p.y - middle) - half_width, 0.0)
-        if math.hypot(gap_x, gap_y) < r * (1 - 1e-9):
+        if math.hypot(gap_x, gap_y) < r * (1 - ROUNDING):
             yield Problem(key, f"({p.x:g}, {p.y:g}) m puts the pusher into the block")
         for j, q in enumerate(placed[:k]):
-            if not s.pushers.pass_through and math.hypot(p.x - q.x, p.y - q.y) < 2 * r * (1 - 1e-9):
+            if not s.pushers.pass_through and math.hypot(p.x - q.x, p.y - q.y) < 2 * r * (1 - ROUNDING):
                 yield Problem(key, f"overlaps start.placed[{j + 1}]")
 
 

@@ -195,3 +195,15 @@ def for_people(value: float, si_unit: str, digits: int = 3) -> str:
         if abs(value) >= factor * 0.9995:
             return f"{value / factor:.{digits}g} {prefix}{si_unit}"
     return f"{value:.{digits}g} {si_unit}"
+
+
+def prefix_for(value: float) -> tuple[float, str]:
+    """The SI prefix in which a value of this size is easy to read, as factor and letter.
+
+    >>> prefix_for(0.00027)
+    (1e-06, 'µ')
+    """
+    for factor, prefix in _PREFIXES:
+        if abs(value) >= factor * 0.9995:
+            return factor, prefix
+    return (1.0, "") if value == 0.0 else _PREFIXES[-1]

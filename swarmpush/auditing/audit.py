@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import json
-import math
 import os
 from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor, as_completed
@@ -14,7 +13,7 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
-from swarmpush.auditing.ladder import ASSUMPTIONS, Rung, climb
+from swarmpush.auditing.ladder import Rung, climb
 from swarmpush.auditing.statistics import Estimate, Verdict, mean_interval, share_interval
 from swarmpush.auditing.verdicts import Finding, find_verdicts
 from swarmpush.dynamics.run import Run, load_run
@@ -263,8 +262,7 @@ def _ladder(planned: Plan, rungs: tuple[Rung, ...], by_rung: dict[Any, pd.DataFr
 
 def replicate_seeds(seed: int, n: int) -> list[int]:
     """Seeds of the replicates: the first ones stay the same when more are asked for."""
-    draws = [np.random.SeedSequence(seed, spawn_key=(k,)).generate_state(1, np.uint64)[0] for k in range(n)]
-    return [int(draw >> np.uint64(2)) for draw in draws]
+    return [int(np.random.SeedSequence(seed, spawn_key=(k,)).generate_state(1)[0]) for k in range(n)]
 
 
 def _cycles(planned: Plan) -> tuple[tuple[str, ...], ...]:

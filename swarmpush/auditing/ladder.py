@@ -24,7 +24,8 @@ class Assumption:
 
 
 def _turns_at_once(s: Scenario) -> Scenario:
-    return s.replace(pushers={"turn_rate": math.inf, "latency": 0.0, "bump_threshold": 0.0, "bumper_arc": 2 * math.pi})
+    # the latency stays: the forecast counts on the thrust during it
+    return s.replace(pushers={"turn_rate": math.inf, "bump_threshold": 0.0, "bumper_arc": 2 * math.pi})
 
 
 def _holds_yaw(s: Scenario) -> Scenario:

@@ -25,12 +25,13 @@ def find_bumps(visits: pd.DataFrame) -> pd.DataFrame:
 
     Returns:
         One row per bump in order of pusher and time: pusher, surface ("pusher" for another pusher), t_on_s, t_off_s,
-        impact_Ns, lean_Ns (summed), approach_m_s and heading_rad (of the first touch).
+        impact_Ns, lean_Ns (summed), x_m, y_m, approach_m_s and heading_rad (of the first touch; NaN for a pusher that
+        another one's visit is entered for).
     """
     touches = visits[visits["pusher"] >= 0]
     between = touches[touches["partner"] == "pusher"]
     # a visit between pushers is entered once, by the first; the second has bumped as well
-    seconds = between.assign(pusher=between["other_pusher"], heading_rad=np.nan)
+    seconds = between.assign(pusher=between["other_pusher"], x_m=np.nan, y_m=np.nan, heading_rad=np.nan)
     both = pd.concat([touches, seconds], ignore_index=True) if len(seconds) else touches
     both = both.sort_values(["pusher", "t_on_s"], kind="stable")
     pusher, surface = both["pusher"].to_numpy(), both["surface"].to_numpy()
@@ -54,6 +55,8 @@ def find_bumps(visits: pd.DataFrame) -> pd.DataFrame:
             "t_off_s": both["t_off_s"].to_numpy()[ends],
             "impact_Ns": total("impact_Ns"),
             "lean_Ns": total("lean_Ns"),
+            "x_m": first["x_m"].to_numpy(),
+            "y_m": first["y_m"].to_numpy(),
             "approach_m_s": first["approach_m_s"].to_numpy(),
             "heading_rad": first["heading_rad"].to_numpy(),
         }

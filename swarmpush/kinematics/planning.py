@@ -5,10 +5,13 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import Any
 
+import numpy as np
+from numpy.typing import NDArray
+
 from swarmpush.kinematics.drift import laps_to_drift_out
 from swarmpush.kinematics.forecast import PushForce, TravelForecast, forecast, push_force
 from swarmpush.kinematics.laps import N_STARTS, Capture, Lap, find_laps
-from swarmpush.kinematics.strikes import count_strikes
+from swarmpush.kinematics.strikes import count_strikes, point_path
 from swarmpush.regimes import Regime, regimes
 from swarmpush.routine import Device
 from swarmpush.scenario import Scenario
@@ -20,7 +23,7 @@ class Plan:
 
     scenario: what was planned. laps: closed cycles, most frequent first. capture: what becomes of the starts.
     force: thrust against floor friction. regime: dimensionless numbers. travel: the forecast for the block.
-    laps_to_drift_out: mean, per lap in `laps`. kit: hardware the routine needs.
+    laps_to_drift_out: mean, per lap in `laps`. kit: hardware the routine needs. path_m: see `point_path`.
     """
 
     scenario: Scenario
@@ -31,6 +34,7 @@ class Plan:
     travel: TravelForecast
     laps_to_drift_out: tuple[float, ...]
     kit: tuple[Device, ...]
+    path_m: NDArray[np.float64]
 
     @property
     def main_lap(self) -> Lap | None:
@@ -99,4 +103,5 @@ def plan(s: Scenario, *, n_starts: int = N_STARTS) -> Plan:
         travel=travel,
         laps_to_drift_out=tuple(laps_to_drift_out(s, lap) for lap in laps),
         kit=s.routine.kit(),
+        path_m=point_path(s),
     )

@@ -35,8 +35,7 @@ def count_strikes(s: Scenario, *, seed: int = 0) -> Strikes:
     Randomness that belongs to the routine itself (a spread, a wander) is kept.
     """
     boundary, program = corridor(s), compile_routine(s.routine)
-    placed = s.start.placed is not None
-    starts = draw_starts(s if placed else s.replace(pushers={"count": N_FOLLOWED}), seed, apart=False)
+    starts = _starts(s, N_FOLLOWED, seed)
     speed, limit = s.pushers.free_speed, s.goal.time_limit
     mean_run = math.pi * s.channel.width * s.channel.length / (2 * (s.channel.width + s.channel.length))
     n_bumps = int(min(MAX_BUMPS, 100 + 10 * limit * speed / mean_run))
@@ -51,3 +50,17 @@ def count_strikes(s: Scenario, *, seed: int = 0) -> Strikes:
         time += limit if n < n_bumps else min(limit, float(times[-1]))
     found = np.concatenate(cosines)
     return Strikes(len(found) / time, found)
+
+
+def point_path(s: Scenario, *, n_bumps: int = 40, seed: int = 0) -> NDArray[np.float64]:
+    """The path of the first pusher as an exact point: (n + 1, 2) x and y in m of its start and its bumps."""
+    hits, surfaces = np.zeros((n_bumps, 5)), np.zeros(n_bumps, dtype=np.int64)
+    start, keys = _starts(s, 1, seed)[0], stream_keys(seed, 1)[0]
+    program = compile_routine(s.routine)
+    n = trace(corridor(s), program, EXACT, 0.0, s.pushers.free_speed, keys, start, 0.0, hits, surfaces)
+    return np.vstack([start[:2], hits[:n, :2]])
+
+
+def _starts(s: Scenario, count: int, seed: int) -> NDArray[np.float64]:
+    many = s if s.start.placed is not None else s.replace(pushers={"count": count})
+    return draw_starts(many, seed, apart=False)

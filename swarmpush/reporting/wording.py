@@ -1,0 +1,62 @@
+"""Numbers as a person reads them, shared by the console and the page."""
+
+from __future__ import annotations
+
+import math
+
+from swarmpush.auditing.audit import RungResult
+from swarmpush.auditing.statistics import Estimate
+from swarmpush.auditing.verdicts import Finding
+from swarmpush.quantities import for_people
+
+_PLAIN_UNITS = {"1", "share of time", "share of runs"}
+
+CAUSES = {
+    "ahead_of_block": "pushers ahead of the block",
+    "touching_wall": "pushers in touch with a wall",
+    "touching_pusher": "pushers in touch with one another",
+    "turning": "pushers turning",
+    "halted": "pushers halted",
+    "leaning_too_weak_for_floor": "time in which those leaning could not overcome the floor",
+    "block_jammed_between_walls": "time in which both walls held the block against enough push",
+}
+
+
+def number(value: float, unit: str) -> str:
+    """A number with its unit; shares as percent."""
+    if not math.isfinite(value):
+        return "-" if math.isnan(value) else "no limit"
+    if unit.startswith("share"):
+        return f"{value:.0%}".replace("-0%", "0%")
+    return for_people(value, "1" if unit in _PLAIN_UNITS else unit)
+
+
+def interval(estimate: Estimate, unit: str) -> str:
+    """The confidence interval of an estimate."""
+    if not math.isfinite(estimate.low) or not math.isfinite(estimate.high):
+        return "-"
+    return f"{number(estimate.low, unit)} to {number(estimate.high, unit)}"
+
+
+def rung_row(rung: RungResult) -> dict[str, str]:
+    """A rung as text."""
+    is_geometry = rung.cost_m_s is None
+    return {
+        "name": "geometry alone" if is_geometry else f"+ {rung.adds}",
+        "speed": number(rung.block_speed_m_s.mean, "m/s"),
+        "cost": "" if rung.cost_m_s is None else number(rung.cost_m_s.mean, "m/s"),
+        "interval": "" if rung.cost_m_s is None else interval(rung.cost_m_s, "m/s"),
+        "arrived": "" if rung.arrival is None else f"{round(rung.arrival.mean * rung.arrival.n)} of {rung.arrival.n}",
+    }
+
+
+def finding_row(finding: Finding) -> dict[str, str]:
+    """A verdict as text."""
+    return {
+        "name": finding.assumption,
+        "statement": finding.statement,
+        "planned": number(finding.predicted, finding.unit),
+        "measured": number(finding.measured.mean, finding.unit),
+        "interval": interval(finding.measured, finding.unit),
+        "verdict": str(finding.verdict),
+    }
