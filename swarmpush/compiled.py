@@ -15,7 +15,7 @@ from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from functools import cache
 from pathlib import Path
-from typing import TypeVar
+from typing import TypeVar, cast
 
 from numba import config, njit
 
@@ -53,6 +53,11 @@ def code_folder() -> Path:
     return Path(tempfile.mkdtemp(prefix="swarmpush-"))
 
 
+def is_first_start() -> bool:
+    """Whether nothing has been compiled yet, so that the first use will take its time."""
+    return not any(Path(config.CACHE_DIR or code_folder()).rglob("*.nbc"))
+
+
 @contextmanager
 def own_cache() -> Iterator[None]:
     """Functions decorated inside keep their machine code in `code_folder`, unless the user named another place."""
@@ -67,10 +72,10 @@ def own_cache() -> Iterator[None]:
 def compiled(function: Function) -> Function:
     """Compile on first call, release Python's lock while running, and follow IEEE rules on division by zero."""
     with own_cache():
-        return njit(cache=True, nogil=True, error_model="numpy")(function)  # type: ignore[no-any-return]
+        return cast(Function, njit(cache=True, nogil=True, error_model="numpy")(function))
 
 
 def inlined(function: Function) -> Function:
     """The same for a part of a hot loop: its code goes into each caller, which spares the passing of many arrays."""
     with own_cache():
-        return njit(cache=True, nogil=True, error_model="numpy", forceinline=True)(function)  # type: ignore[no-any-return]
+        return cast(Function, njit(cache=True, nogil=True, error_model="numpy", forceinline=True)(function))

@@ -4,9 +4,11 @@ from __future__ import annotations
 
 from pathlib import Path
 
+DEMOS = ("service_passage", "vibration_duct", "gel_channel")
+
 
 def demo(name: str) -> Path:
-    """Path of a demo scenario: "service_passage", "vibration_duct" or "gel_channel".
+    """Path of a demo scenario, one of `DEMOS`.
 
     Raises:
         KeyError: when there is no such demo.

@@ -121,6 +121,16 @@ def write_text(path: Path, text: str) -> None:
         part.write_text(text, encoding="utf-8")
 
 
+def write_bytes(path: Path, data: bytes) -> None:
+    """Write a binary file whole or not at all.
+
+    Raises:
+        OutputError: when the place cannot be written.
+    """
+    with _written_whole(path) as part:
+        part.write_bytes(data)
+
+
 def write_table(path: Path, table: pd.DataFrame) -> None:
     """Write a table as Parquet, whole or not at all.
 

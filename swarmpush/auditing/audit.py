@@ -13,8 +13,9 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
+from swarmpush.auditing.journal import Journal
 from swarmpush.auditing.ladder import Rung, climb
-from swarmpush.auditing.statistics import Estimate, Verdict, mean_interval, share_interval
+from swarmpush.auditing.statistics import Estimate, mean_interval, share_interval
 from swarmpush.auditing.verdicts import Finding, find_verdicts
 from swarmpush.dynamics.run import Run, load_run
 from swarmpush.dynamics.steps import StepSettings, choose_step
@@ -105,7 +106,7 @@ class Audit:
 
     def to_dict(self) -> dict[str, Any]:
         """The audit as plain values for JSON; undefined values are None."""
-        return plain(
+        result: dict[str, Any] = plain(
             {
                 "answer": self.answer,
                 "arrival": {
@@ -130,6 +131,7 @@ class Audit:
                 "provenance": provenance(self.scenario),
             }
         )
+        return result
 
     def save(self, folder: Path) -> None:
         """Write replicates, the sample run and, last, audit.json.
@@ -160,7 +162,12 @@ def load_audit(folder: Path) -> Audit:
 
 
 def audit(
-    s: Scenario, *, replicates: int | None = None, workers: int | None = None, progress: Progress | None = None
+    s: Scenario,
+    *,
+    replicates: int | None = None,
+    workers: int | None = None,
+    journal: Path | None = None,
+    progress: Progress | None = None,
 ) -> Audit:
     """Hold the plan against rigid bodies: what survives, what fails, and what each assumption costs.
 
@@ -170,6 +177,8 @@ def audit(
         s: the scenario.
         replicates: independent runs per rung, at least 2; the scenario's own number unless given.
         workers: threads; one per processor unless given. The result does not depend on it.
+        journal: file for finished runs; if it is left from an interrupted audit of the same scenario, the runs in it
+            are not made again. Delete it when the result is safe.
         progress: called after each run with runs done, runs in all, and the rung's name.
 
     Returns:
@@ -177,6 +186,7 @@ def audit(
 
     Raises:
         ValueError: for fewer than two replicates.
+        OutputError: when the journal belongs to something else or cannot be written.
     """
     n = s.trial.replicates if replicates is None else replicates
     if n < 2:
@@ -192,18 +202,29 @@ def audit(
         steps = choose_step(rung.scenario)
         return simulate(rung.scenario, seed=seeds[k], steps=steps.halved() if rung is halved else steps, cycles=cycles)
 
-    rows: dict[tuple[str, int], dict[str, Any]] = {}
+    kept = Journal(journal, provenance(s)) if journal else None
+    rows = dict(kept.rows) if kept else {}
+    sample_task = (rungs[-1], 0)
+    # one run is needed in full; the longest runs come last in the ladder, and starting with them keeps all workers busy
+    waiting = [
+        sample_task,
+        *(task for task in reversed(tasks) if (task[0].key, task[1]) not in rows and task != sample_task),
+    ]
+    done = len(tasks) - len(waiting)
     sample: Run | None = None
     pool = ThreadPoolExecutor(workers or os.cpu_count())
     try:
-        # the longest runs come last in the ladder; starting with them keeps all workers busy to the end
-        futures = {pool.submit(run_one, rung, k): (rung, k) for rung, k in reversed(tasks)}
-        for done, future in enumerate(as_completed(list(futures)), start=1):
+        futures = {pool.submit(run_one, rung, k): (rung, k) for rung, k in waiting}
+        for future in as_completed(list(futures)):
             rung, k = futures.pop(future)
             run = future.result()
-            rows[rung.key, k] = {"rung": rung.key, "replicate": k, "seed": seeds[k], **run.summary()}
-            if rung is rungs[-1] and k == 0:
+            row = {"rung": rung.key, "replicate": k, "seed": seeds[k], **run.summary()}
+            if (rung, k) == sample_task:
                 sample = run
+            if kept and (rung.key, k) not in rows:
+                kept.add(row)
+            rows[rung.key, k] = row
+            done += 1
             if progress:
                 progress(done, len(tasks), rung.adds)
     finally:
@@ -267,8 +288,3 @@ def replicate_seeds(seed: int, n: int) -> list[int]:
 
 def _cycles(planned: Plan) -> tuple[tuple[str, ...], ...]:
     return tuple(lap.surfaces for lap in planned.laps)
-
-
-def unmet(result: Audit, demanded: list[str]) -> list[Finding]:
-    """The demanded verdicts that are not `holds`."""
-    return [f for f in result.verdicts if f.assumption in demanded and f.verdict is not Verdict.HOLDS]

@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 import pandas as pd
 
+from swarmpush.auditing import claims
 from swarmpush.auditing.statistics import Estimate, Verdict, judge, mean_interval, share_interval
 from swarmpush.kinematics.planning import Plan
 
@@ -51,25 +52,25 @@ def find_verdicts(plan: Plan, runs: pd.DataFrame) -> tuple[Finding, ...]:
 
     if lap is not None:
         statement = "a lap takes its length over the free speed"
-        claim("lap time", statement, "s", lap.time_s, mean_of("lap_time_s"))
+        claim(claims.LAP_TIME, statement, "s", lap.time_s, mean_of("lap_time_s"))
         statement = "a pusher that its lap has caught stays in it"
-        claim("lock", statement, "share of time", plan.capture.captured, mean_of("lock_share"))
+        claim(claims.LOCK, statement, "share of time", plan.capture.captured, mean_of("lock_share"))
         per_lap = mean_of("strike_rate_1_s", lap.time_s)
-        claim("strikes per lap", "every pusher strikes in every lap time", "1", travel.strikes_per_lap, per_lap)
+        claim(claims.STRIKES_PER_LAP, "every pusher strikes in every lap time", "1", travel.strikes_per_lap, per_lap)
     else:
         statement = "the crew strikes as often as undisturbed points would"
-        claim("strike rate", statement, "1/s", travel.strike_rate_1_s, mean_of("strike_rate_1_s", s.pushers.count))
-    claim("nudge per strike", f"a strike moves the block by {_law(plan)}", "m", travel.nudge_m, mean_of("nudge_m"))
+        claim(claims.STRIKE_RATE, statement, "1/s", travel.strike_rate_1_s, mean_of("strike_rate_1_s", s.pushers.count))
+    claim(claims.NUDGE, f"a strike moves the block by {_law(plan)}", "m", travel.nudge_m, mean_of("nudge_m"))
     statement = "an impact passes on (1 + e) v m M/(m + M)"
-    claim("momentum per strike", statement, "N s", travel.strike_impulse_Ns, mean_of("impact_Ns"))
+    claim(claims.MOMENTUM, statement, "N s", travel.strike_impulse_Ns, mean_of("impact_Ns"))
     statement = "strikes add up to the block's speed"
-    claim("block speed", statement, "m/s", travel.block_speed_m_s, mean_of("block_speed_m_s"))
+    claim(claims.BLOCK_SPEED, statement, "m/s", travel.block_speed_m_s, mean_of("block_speed_m_s"))
 
     share = share_interval(int(runs["has_arrived"].sum()), len(runs), confidence)
     arrives = float(travel.time_to_goal_s <= s.goal.time_limit)
     band = (1.0 - tolerance, 1.0) if arrives else (0.0, tolerance)
     statement = "the block arrives in time" if arrives else "the block does not arrive in time"
-    findings.append(Finding("arrival", statement, "share of runs", arrives, share, tolerance, judge(share, band)))
+    findings.append(Finding(claims.ARRIVAL, statement, "share of runs", arrives, share, tolerance, judge(share, band)))
     return tuple(findings)
 
 

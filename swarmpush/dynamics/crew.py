@@ -159,7 +159,7 @@ def drive(
     for i in range(len(crew.heading)):
         spin, thrust = 0.0, rig.stall[i]
         mode = crew.mode[i]
-        if mode == _REACT and now >= crew.until[i] - 1e-9 or mode == _TURN and crew.to_turn[i] == 0.0:
+        if (mode == _REACT and now >= crew.until[i] - 1e-9) or (mode == _TURN and crew.to_turn[i] == 0.0):
             _carry_out(rig, crew, program, senses, keys, i, now)
             mode = crew.mode[i]
         if mode == _TURN:

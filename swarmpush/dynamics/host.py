@@ -49,7 +49,7 @@ _PAIR_FIELDS = (
 )
 
 
-@intrinsic  # type: ignore[untyped-decorator]
+@intrinsic
 def _call_with_float(typingctx: Any, function: Any, pointer: Any, number: Any) -> Any:
     """function(pointer, number) for a C function at an address: cpSpaceStep, cpConstraintSetMaxForce."""
 
@@ -61,7 +61,7 @@ def _call_with_float(typingctx: Any, function: Any, pointer: Any, number: Any) -
     return types.void(types.intp, types.intp, types.float64), codegen
 
 
-@intrinsic  # type: ignore[untyped-decorator]
+@intrinsic
 def _call_each(typingctx: Any, function: Any, space: Any, visitor: Any, data: Any) -> Any:
     """function(space, visitor, data) for a C function at an address: cpSpaceEachBody, cpSpaceEachCachedArbiter."""
 
@@ -73,7 +73,7 @@ def _call_each(typingctx: Any, function: Any, space: Any, visitor: Any, data: An
     return types.void(types.intp, types.intp, types.intp, types.intp), codegen
 
 
-@intrinsic  # type: ignore[untyped-decorator]
+@intrinsic
 def _ask_float(typingctx: Any, function: Any, pointer: Any) -> Any:
     """function(pointer) -> number for a C function at an address: cpConstraintGetImpulse."""
 
@@ -159,7 +159,7 @@ def take_step(host: Host, dt: float) -> int:
     host.ints_head[0] = 0
     host.floats_head[0] = 0
     _call_each(host.each_pair, host.space, host.get_pair, host.pair_data)
-    return host.ints_head[0] // CONTACT_INTS
+    return int(host.ints_head[0]) // CONTACT_INTS
 
 
 class Disc(NamedTuple):

@@ -125,7 +125,7 @@ def _after(host: Host, task: Task, n_pairs: int, step: int) -> bool:
     enter_contacts(host, task.rig, task.crew, ledger, n_pairs, step)
     feel(task.rig, task.crew, task.keys, step)
     close_visits(ledger, step)
-    return ledger.n_log[0] + SLOTS * len(ledger.n_open) >= len(ledger.log)
+    return bool(ledger.n_log[0] + SLOTS * len(ledger.n_open) >= len(ledger.log))
 
 
 @compiled

@@ -125,7 +125,7 @@ class Run:
     def to_dict(self, files: dict[str, str] | None = None) -> dict[str, Any]:
         """The run as plain values for JSON; undefined values are None."""
         strikes = self.strikes
-        return plain(
+        summary: dict[str, Any] = plain(
             {
                 "block": {"travel_m": self.travel_m, "speed_m_s": self.speed_m_s, "yaw_max_rad": self.yaw_max_rad},
                 "visits": len(self.visits),
@@ -145,6 +145,7 @@ class Run:
                 "provenance": provenance(self.scenario, seed=self.seed),
             }
         )
+        return summary
 
     def save(self, folder: Path) -> dict[str, str]:
         """Write the tables as Parquet and the summary, last, as run.json; returns the files' names.
@@ -171,7 +172,7 @@ def load_run(folder: Path, cycles: tuple[tuple[str, ...], ...] = ()) -> Run:
     bumps = find_bumps(visits)
     numerics = dict(text["numerics"])
     overlap = numerics.pop("overlap_max_m")
-    books = {key: tuple(value) if isinstance(value, list) else value for key, value in text["books"].items()}
+    books: dict[str, Any] = {k: tuple(v) if isinstance(v, list) else v for k, v in text["books"].items()}
     return Run(
         scenario=Scenario.model_validate(text["scenario"]),
         seed=text["provenance"]["seed"],

@@ -26,13 +26,13 @@ def open_visits(ledger: Ledger) -> FloatArray:
     rows = [
         _row(ledger, owner, slot)
         for owner, partners in enumerate(ledger.slot_partner)
-        for slot in np.flatnonzero(partners >= 0)
+        for slot in np.flatnonzero(partners >= 0).tolist()
     ]
-    return np.array(rows).reshape(-1, len(Column))
+    return np.array(rows, dtype=np.float64).reshape(-1, len(Column))
 
 
 def _row(ledger: Ledger, owner: int, slot: int) -> FloatArray:
-    row = ledger.slot_data[owner, slot].copy()
+    row: FloatArray = ledger.slot_data[owner, slot].copy()
     row[Column.OWNER], row[Column.PARTNER] = owner, ledger.slot_partner[owner, slot]
     return row
 

@@ -75,7 +75,7 @@ class Lap:
         at_rear = [k for k, name in enumerate(self.surfaces) if name == SURFACES[REAR_SURFACE]]
         # row 0 departs from the rear face; its arrival is the last row's, by closure
         arriving = [self.rear_heading_rad if k == 0 else self.hits[k - 1, 2] for k in at_rear]
-        return np.cos(np.array(arriving))
+        return np.cos(np.array(arriving, dtype=np.float64))
 
 
 @dataclass(frozen=True)

@@ -60,7 +60,7 @@ class Plan:
             }
             for lap, drift in zip(self.laps, self.laps_to_drift_out, strict=True)
         ]
-        return plain(
+        answer: dict[str, Any] = plain(
             {
                 "laps": laps,
                 "capture": {
@@ -75,6 +75,7 @@ class Plan:
                 "kit": self.kit,
             }
         )
+        return answer
 
 
 def plan(s: Scenario, *, n_starts: int = N_STARTS) -> Plan:

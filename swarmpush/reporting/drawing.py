@@ -5,6 +5,7 @@ from __future__ import annotations
 import io
 import math
 from collections.abc import Callable
+from itertools import pairwise
 from typing import Any
 
 import matplotlib
@@ -23,7 +24,7 @@ from swarmpush.kinematics.planning import Plan
 from swarmpush.quantities import prefix_for
 
 PLANNED, MEASURED, QUIET, GOOD, BAD = "#b3261e", "#1f4e79", "#9aa5b1", "#2e7d32", "#b3261e"
-STYLE = {
+STYLE: dict[Any, Any] = {
     "font.family": "DejaVu Sans",
     "font.size": 9,
     "axes.spines.top": False,
@@ -69,7 +70,7 @@ def lap_over_runs(plan: Plan, run: Run) -> Figure:
     if (lap := plan.main_lap) is not None:
         corners = np.vstack([lap.hits[:, :2], lap.hits[:1, :2]]) / scale
         axes.plot(*corners.T, color=PLANNED, lw=2.2, zorder=5, label="planned lap")
-        for start, end in zip(corners[:-1], corners[1:], strict=True):
+        for start, end in pairwise(corners):
             middle = 0.5 * (start + end)
             axes.annotate(
                 "",
@@ -103,8 +104,8 @@ def _draw_rig(axes: Axes, plan: Plan, scale: float, *, has_ends: bool) -> tuple[
     lap = plan.main_lap
     back = float(lap.hits[:, 0].min()) / scale if lap is not None else rear - 3 * width
     radius = s.pushers.radius / scale
-    place = lap.hits[0, :2] / scale if lap is not None else (rear - radius, width / 2)
-    axes.add_patch(Circle(place, radius, facecolor="white", edgecolor=MEASURED, lw=1.2, zorder=4))
+    x, y = (lap.hits[0, :2] / scale).tolist() if lap is not None else (rear - radius, width / 2)
+    axes.add_patch(Circle((x, y), radius, facecolor="white", edgecolor=MEASURED, lw=1.2, zorder=4))
     reach = max(min(back - 2 * radius, rear - 2 * width), rear - 6 * width, -0.1 * width if has_ends else -math.inf)
     return reach, min(front + 0.5 * width, length + 0.1 * width)
 
@@ -183,7 +184,15 @@ def block_path(run: Run, planned_speed_m_s: float | None = None, ends: Any = Non
         axes.plot([0.0, last], [0.0, planned_speed_m_s * last / scale], color=PLANNED, lw=1.8, label="planned")
     axes.plot(run.block["t_s"], travel, color=MEASURED, lw=1.4, label=f"run with seed {run.seed}")
     if ends is not None:
-        axes.plot(ends["duration_s"], ends["travel_m"] / scale, "o", ms=3.5, color=MEASURED, mfc="white", label="end of each run")
+        axes.plot(
+            ends["duration_s"],
+            ends["travel_m"] / scale,
+            "o",
+            ms=3.5,
+            color=MEASURED,
+            mfc="white",
+            label="end of each run",
+        )
     axes.set_xlim(0.0, s.goal.time_limit * 1.02)
     axes.set_xlabel("time, s")
     axes.set_ylabel(f"block travel, {prefix}m")

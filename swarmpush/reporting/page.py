@@ -88,7 +88,13 @@ def _run_content(run: Run, planned: Plan, ends: Any = None) -> dict[str, Any]:
         ],
         "causes": [(CAUSES[name], f"{share:.1%}") for name, share in run.causes.items()],
         "regimes": [
-            {"name": r.name, "formula": r.formula, "value": f"{r.value:.3g}", "meaning": r.meaning, "is_at_risk": r.is_at_risk}
+            {
+                "name": r.name,
+                "formula": r.formula,
+                "value": f"{r.value:.3g}",
+                "meaning": r.meaning,
+                "is_at_risk": r.is_at_risk,
+            }
             for r in planned.regime
         ],
         "provenance": _provenance(run),
@@ -129,8 +135,8 @@ def _lap_words(planned: Plan, run: Run) -> str:
     size = max(abs(m) for m in lap.multipliers)
     pull = "it attracts" if size < 1.0 - 1e-9 else "it is neutral: errors add up lap by lap"
     return (
-        f"Planned: {' - '.join(lap.surfaces)}, {for_people(lap.time_s, 's')} a lap, largest multiplier {size:.3g} ({pull}), "
-        f"reached by {lap.share:.0%} of the starts. In the run shown {laps}"
+        f"Planned: {' - '.join(lap.surfaces)}, {for_people(lap.time_s, 's')} a lap, largest multiplier {size:.3g} "
+        f"({pull}), reached by {lap.share:.0%} of the starts. In the run shown {laps}"
     )
 
 

@@ -6,7 +6,14 @@ import copy
 import math
 from typing import Any
 
+import numpy as np
+from numpy.typing import NDArray
+
+from swarmpush.draws import stream_keys
+from swarmpush.kinematics.bounce import trace
+from swarmpush.kinematics.boundary import SURFACES, corridor
 from swarmpush.loading import from_tables
+from swarmpush.program import Senses, compile_routine
 from swarmpush.scenario import GRAVITY, Scenario
 
 G = GRAVITY
@@ -44,11 +51,68 @@ def placed(*starts: tuple[float, float, float]) -> dict[str, Any]:
     return {"placed": [{"x": x, "y": y, "heading": heading} for x, y, heading in starts]}
 
 
-def at_face(s: Scenario, offset: float = 0.0) -> tuple[float, float, float]:
-    """A start in touch with the rear face, `offset` from the middle of the channel, heading along it."""
-    return s.block.rear_at - s.pushers.radius, s.channel.width / 2 + offset, 0.0
+def dry(friction: float) -> dict[str, Any]:
+    """A dry floor whose static and kinetic friction are the same."""
+    return {"static_friction": friction, "kinetic_friction": friction}
+
+
+def pair(restitution: float, friction: float = 0.0) -> dict[str, float]:
+    """A pair of surfaces."""
+    return {"restitution": restitution, "friction": friction}
+
+
+def one_stage(*acts: dict[str, Any]) -> dict[str, Any]:
+    """A routine of one stage that runs to the next bump and then does these acts."""
+    return {"stages": [{"name": "lap", "acts": [{"act": "run"}, *acts]}]}
 
 
 def turning(degrees: float) -> dict[str, Any]:
     """The routine that turns by the same angle at every bump."""
-    return {"stages": [{"name": "turn", "acts": [{"act": "run"}, {"act": "turn", "angle": math.radians(degrees)}]}]}
+    return one_stage({"act": "turn", "angle": math.radians(degrees)})
+
+
+# ---- the point world in a corridor whose face closes it from wall to wall ----------------------------------------
+
+RADIUS = 0.02  # m, of the pusher; its centre has a corridor of width 1 m, and distances are counted from there
+FACE_AT = 50.0  # m: where the pusher's centre meets the face
+
+
+def closed_corridor(routine: dict[str, Any], *, face_at: float = FACE_AT, **tables: dict[str, Any]) -> Scenario:
+    """A corridor 1 m wide for the pusher's centre, which meets the face at x = `face_at`."""
+    width = 1.0 + 2 * RADIUS
+    return rig(
+        channel={"length": 999.0, "width": width},
+        block={"width": width, "rear_at": face_at + RADIUS},
+        routine=routine,
+        **tables,
+    )
+
+
+EXACT = Senses(0.0, 0.0, 0.0, 0.0)
+
+
+def follow(
+    s: Scenario,
+    start: tuple[float, float, float],
+    n_bumps: int,
+    *,
+    seed: int = 0,
+    senses: Senses = EXACT,
+    nudge: float = 0.0,
+) -> tuple[NDArray[np.float64], list[str]]:
+    """One pusher from bump to bump; `start` is x from the face (negative), y from the lower wall, heading.
+
+    Returns:
+        hits: (n, 5) x from where the face was at the start, y from the lower wall, arriving and departing heading,
+            run length. names: of the surfaces.
+    """
+    boundary = corridor(s)
+    rear = SURFACES.index("rear")
+    origin = np.array([boundary.segments[rear, 0], s.pushers.radius])
+    hits, surfaces = np.zeros((n_bumps, 5)), np.zeros(n_bumps, dtype=np.int64)
+    n = trace(
+        boundary, compile_routine(s.routine), senses, 0.0, s.pushers.free_speed, stream_keys(seed, 1)[0],
+        np.array([origin[0] + start[0], origin[1] + start[1], start[2]]), nudge, hits, surfaces,
+    )  # fmt: skip
+    hits[:n, :2] -= origin
+    return hits[:n], [SURFACES[k] for k in surfaces[:n]]

@@ -1,0 +1,250 @@
+"""The command line. It only calls the public interface, words the results, and maps errors to exit codes.
+
+Exit codes: 0 done, 2 bad input, 3 a demanded verdict is not met, 130 interrupted. Heavy packages are imported inside
+the commands, so that help comes at once.
+"""
+
+from __future__ import annotations
+
+import sys
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated, Any
+
+import typer
+
+if TYPE_CHECKING:
+    from swarmpush.auditing.audit import Audit
+    from swarmpush.scenario import Scenario
+
+BAD_INPUT, NOT_MET, INTERRUPTED = 2, 3, 130
+RESULTS = Path("results")  # where an audit goes that is not told where
+JOURNAL = "unfinished.jsonl"
+
+app = typer.Typer(
+    help="Does a crowd of blind pushers really move the block along the channel? Say so before parts are made.",
+    epilog="Predictions of a model, no safety proof. Local rules and qualified staff decide what may be run.",
+    no_args_is_help=True,
+    add_completion=False,
+    pretty_exceptions_enable=False,
+    rich_markup_mode=None,
+)
+
+ScenarioArgument = Annotated[
+    str, typer.Argument(metavar="SCENARIO", help="a scenario file (.toml), or the name of a demo scenario")
+]
+AsJson = Annotated[bool, typer.Option("--json", help="print the result as JSON and nothing else")]
+OutFolder = Annotated[Path | None, typer.Option("--out", metavar="FOLDER", help="folder for the results")]
+Force = Annotated[bool, typer.Option("--force", help="write into a folder that already holds results")]
+Seed = Annotated[int | None, typer.Option("--seed", min=0, max=2**62, help="another seed than the scenario's")]
+
+
+class _Refusal(Exception):
+    """Bad input that no library function has refused yet."""
+
+
+@app.command(short_help="laps and block speed from geometry alone")
+def plan(scenario: ScenarioArgument, as_json: AsJson = False, out: OutFolder = None, force: Force = False) -> None:
+    """Predict laps, their stability and the block's speed from geometry alone."""
+    import swarmpush
+    from swarmpush.output import claim_folder, to_json, write_bytes, write_text
+
+    s = _load(scenario)
+    folder = claim_folder(out, force=force) if out else None
+    with _preparing(as_json):
+        planned = swarmpush.plan(s)
+    if folder:
+        from swarmpush.reporting.drawing import as_png, plan_picture
+
+        write_bytes(folder / "plan.png", as_png(plan_picture, planned))
+        write_text(folder / "plan.json", to_json(planned.to_dict()))
+    if as_json:
+        print(to_json(planned.to_dict()))
+        return
+    from swarmpush.reporting import console
+
+    console.show_plan(planned)
+    if folder:
+        console.say_where(folder / "plan.json", folder / "plan.png")
+
+
+@app.command(short_help="one run with rigid bodies, books balanced")
+def run(
+    scenario: ScenarioArgument,
+    seed: Seed = None,
+    as_json: AsJson = False,
+    out: OutFolder = None,
+    force: Force = False,
+) -> None:
+    """Run the scenario once with rigid bodies, and balance the books."""
+    import swarmpush
+    from swarmpush.output import claim_folder, to_json
+
+    s = _load(scenario)
+    folder = claim_folder(out, force=force) if out else None
+    with _preparing(as_json) as bar:
+        result = swarmpush.simulate(s, seed=seed, progress=lambda share: bar(share, 1.0, "running"))
+    files = result.save(folder) if folder else None
+    if folder:
+        swarmpush.report(result, folder / "report.html")
+    if as_json:
+        print(to_json(result.to_dict(files)))
+        return
+    from swarmpush.reporting import console
+
+    console.show_run(result)
+    if folder:
+        console.say_where(folder / "run.json", folder / "report.html")
+
+
+@app.command(short_help="the plan against rigid bodies: what holds, what it costs")
+def audit(
+    scenario: ScenarioArgument,
+    replicates: Annotated[
+        int | None, typer.Option(min=2, max=100_000, help="independent runs per rung; default: the scenario's")
+    ] = None,
+    workers: Annotated[int | None, typer.Option(min=1, max=1024, help="threads; default: one per processor")] = None,
+    seed: Seed = None,
+    require: Annotated[
+        list[str] | None,
+        typer.Option(metavar="CLAIM", help="exit with 3 unless this claim holds, e.g. arrival; may be repeated"),
+    ] = None,
+    as_json: AsJson = False,
+    out: OutFolder = None,
+    force: Force = False,
+) -> None:
+    """Hold the plan against rigid bodies: does the block arrive, which assumptions fail, what does each cost?"""
+    import swarmpush
+    from swarmpush.output import claim_folder, free_folder, to_json
+
+    demanded = _claims(require or [])
+    s = _load(scenario)
+    if seed is not None:
+        s = s.replace(trial={"seed": seed})
+    folder = out or free_folder(RESULTS, f"{_stem(scenario)}-audit")
+    claim_folder(folder, force=force or (folder / JOURNAL).exists())
+    journal = folder / JOURNAL
+    try:
+        with _preparing(as_json) as bar:
+            result = swarmpush.audit(s, replicates=replicates, workers=workers, journal=journal, progress=bar)
+    except KeyboardInterrupt:
+        print(f"interrupted; go on with --out {folder}", file=sys.stderr)
+        raise typer.Exit(INTERRUPTED) from None
+    result.save(folder)
+    swarmpush.report(result, folder / "report.html")
+    journal.unlink(missing_ok=True)
+    if as_json:
+        print(to_json(result.to_dict()))
+    else:
+        from swarmpush.reporting import console
+
+        console.show_audit(result)
+        console.say_where(folder / "report.html")
+    _demand(result, demanded)
+
+
+@app.command(short_help="JSON Schema of scenario files, for editors")
+def schema(
+    as_json: AsJson = False,
+    out: Annotated[Path | None, typer.Option(metavar="FILE", help="write to this file instead of the screen")] = None,
+    force: Annotated[bool, typer.Option("--force", help="replace the file if it is there")] = False,
+) -> None:
+    """Print the JSON Schema of scenario files, with which editors complete and check them."""
+    from swarmpush.output import to_json, write_text
+    from swarmpush.scenario import Scenario
+
+    text = to_json({"$schema": "https://json-schema.org/draft/2020-12/schema"} | Scenario.model_json_schema())
+    if out is None:
+        print(text)
+        return
+    _refuse_existing(out, force)
+    write_text(out, text)
+    print(to_json({"schema": out}) if as_json else f"schema: {out}")
+
+
+@app.command(short_help="make the HTML report of saved results again")
+def report(
+    folder: Annotated[Path, typer.Argument(metavar="FOLDER", help="results of an audit or a run")],
+    as_json: AsJson = False,
+    out: Annotated[
+        Path | None, typer.Option(metavar="FILE", help="HTML file to write; default: report.html in the folder")
+    ] = None,
+    force: Annotated[bool, typer.Option("--force", help="replace the file if it is there")] = False,
+) -> None:
+    """Make the HTML report of saved results again."""
+    import swarmpush
+    from swarmpush.output import to_json
+    from swarmpush.reporting.page import load_result
+
+    path = out or folder / "report.html"
+    _refuse_existing(path, force)
+    try:
+        with _preparing(as_json):
+            result = load_result(folder)
+    except ValueError as error:
+        raise _Refusal(str(error)) from None
+    swarmpush.report(result, path)
+    print(to_json({"report": path}) if as_json else f"report: {path}")
+
+
+def main() -> None:
+    """Run the command line; every foreseeable error is one message and an exit code."""
+    try:
+        app(prog_name="swarmpush")
+    except Exception as error:
+        from swarmpush.loading import ScenarioError
+        from swarmpush.output import OutputError
+
+        if not isinstance(error, _Refusal | ScenarioError | OutputError):
+            raise
+        print(error, file=sys.stderr)
+        sys.exit(BAD_INPUT)
+
+
+def _load(name: str) -> Scenario:
+    """The scenario of a file, or the demo of that name if there is no such file."""
+    import swarmpush
+    from swarmpush.demos import DEMOS
+
+    if name in DEMOS and not Path(name).exists():
+        return swarmpush.load(swarmpush.demo(name))
+    return swarmpush.load(name)
+
+
+def _stem(name: str) -> str:
+    return Path(name).stem or "scenario"
+
+
+def _refuse_existing(path: Path, force: bool) -> None:
+    if path.exists() and not force:
+        raise _Refusal(f"{path} is there already; name another file with --out, or add --force")
+
+
+def _claims(names: list[str]) -> list[str]:
+    from swarmpush.auditing.claims import CLAIMS
+
+    wanted = [name.replace("-", " ").strip().lower() for name in names]
+    for name in wanted:
+        if name not in CLAIMS:
+            raise _Refusal(f"--require {name}: no such claim; there are {', '.join(CLAIMS)}")
+    return wanted
+
+
+def _demand(result: Audit, demanded: list[str]) -> None:
+    verdicts = {finding.assumption: str(finding.verdict) for finding in result.verdicts}
+    unmet = [name for name in demanded if verdicts.get(name) != "holds"]
+    for name in unmet:
+        print(f"required: {name}, but it {_said(verdicts.get(name))}", file=sys.stderr)
+    if unmet:
+        raise typer.Exit(NOT_MET)
+
+
+def _said(verdict: str | None) -> str:
+    if verdict is None:
+        return "cannot be judged here, as geometry gives no lap"
+    return {"undecided": "is undecided", "strained": "is strained"}.get(verdict, verdict)
+
+
+def _preparing(is_quiet: bool) -> Any:
+    from swarmpush.reporting.progress import progress_bar
+
+    return progress_bar(is_quiet=is_quiet)
