@@ -59,8 +59,8 @@ class About(_Table):
 class Channel(_Table):
     """A straight corridor with closed ends: x runs along it from 0 to length, y across it from 0 to width."""
 
-    length: Length = Field(ge=SMALLEST, le=1e3)
-    width: Length = Field(ge=SMALLEST, le=1e3)
+    length: Length = Field(ge=SMALLEST, le=1e3, description="between the ends")
+    width: Length = Field(ge=SMALLEST, le=1e3, description="between the side walls")
 
 
 class Block(_Table):
@@ -83,7 +83,7 @@ class Block(_Table):
 class Pushers(_Table):
     """The crew: discs that drive themselves along their heading."""
 
-    count: Whole = Field(ge=1, le=5000)
+    count: Whole = Field(ge=1, le=5000, description="size of the crew")
     radius: Length = Field(ge=SMALLEST, le=1e2)
     mass: Mass = Field(ge=LIGHTEST, le=1e4)
     free_speed: Speed = Field(ge=SLOWEST, le=1e3)
@@ -119,8 +119,8 @@ class Pushers(_Table):
 class Floor(_Table):
     """Dry floor under the block (Coulomb friction, uniform pressure)."""
 
-    static_friction: Ratio = Field(ge=0, le=10)
-    kinetic_friction: Ratio = Field(ge=0, le=10)
+    static_friction: Ratio = Field(ge=0, le=10, description="coefficient that must be overcome to set the block going")
+    kinetic_friction: Ratio = Field(ge=0, le=10, description="coefficient while it slides; not above the static one")
     gravity: Acceleration = Field(default=GRAVITY, ge=0, le=1e3)
 
 
@@ -177,12 +177,14 @@ class FixedStart(_Table):
 class Start(_Table):
     """Where the pushers start: drawn from a region, or placed one by one."""
 
-    region: Literal["behind", "ahead", "anywhere"] = "behind"
+    region: Literal["behind", "ahead", "anywhere"] = Field(
+        default="behind", description="behind or ahead of the block, or either, evenly spread"
+    )
     heading: Angle | None = Field(default=None, description="mean heading; left out: any heading alike")
     heading_spread: Angle = Field(
         default=0.0, ge=0, le=math.pi, description="standard deviation about the mean heading"
     )
-    placed: tuple[FixedStart, ...] | None = Field(default=None, max_length=5000)
+    placed: tuple[FixedStart, ...] | None = Field(default=None, max_length=5000, description="one start per pusher")
 
 
 class Goal(_Table):
@@ -206,9 +208,9 @@ class Forecast(_Table):
 class Trial(_Table):
     """How the scenario is tried out."""
 
-    replicates: Whole = Field(default=12, ge=2, le=100_000)
-    seed: Whole = Field(default=1, ge=0, le=2**62)
-    confidence: Ratio = Field(default=0.95, gt=0.5, lt=1)
+    replicates: Whole = Field(default=12, ge=2, le=100_000, description="independent runs per rung of the ladder")
+    seed: Whole = Field(default=1, ge=0, le=2**62, description="of all random draws")
+    confidence: Ratio = Field(default=0.95, gt=0.5, lt=1, description="of every interval")
     tolerance: Ratio = Field(default=0.10, gt=0, le=1, description="relative band within which an assumption holds")
     sample_every: Time | None = Field(
         default=None, gt=0, description="interval of the recorded path; default: 1000 samples"
@@ -218,8 +220,8 @@ class Trial(_Table):
 class Numerics(_Table):
     """Solver settings; everything has a default that follows from the scenario."""
 
-    step: Time | None = Field(default=None, gt=0)
-    iterations: Whole = Field(default=10, ge=1, le=1000)
+    step: Time | None = Field(default=None, gt=0, description="time step; default: from the shortest thing to resolve")
+    iterations: Whole = Field(default=10, ge=1, le=1000, description="of the contact solver per step")
 
 
 class Scenario(_Table):
@@ -249,9 +251,16 @@ class Scenario(_Table):
         changed = {name: getattr(self, name).model_copy(update=keys) for name, keys in tables.items()}
         return self.model_copy(update=changed)
 
+    def to_tables(self) -> dict[str, Any]:
+        """All values as nested tables that JSON can hold and from which `from_tables` makes the same scenario."""
+        tables = self.model_dump(mode="json", exclude_none=True)
+        if math.isinf(self.pushers.turn_rate):
+            tables["pushers"]["turn_rate"] = "inf rad/s"
+        return tables
+
     def digest(self) -> str:
         """A hash of all values, the same on every platform; 16 hexadecimal digits."""
-        text = json.dumps(self.model_dump(mode="json"), sort_keys=True, ensure_ascii=True, default=str)
+        text = json.dumps(self.to_tables(), sort_keys=True)
         return hashlib.sha256(text.encode()).hexdigest()[:16]
 
     @property

@@ -40,7 +40,7 @@ def build(s: Scenario, seed: int, steps: StepSettings) -> tuple[HostSpace, Task]
     keys = stream_keys(seed, n)
     speeds, masses = unit_spreads(s, keys)
     starts = draw_starts(s, seed)
-    stall = np.full(n, p.stall_force / u.force)
+    stall = p.stall_force / u.force
     drag = stall / speeds
     side_drag = drag * p.sideways_drag
     # a body's sideways drag is explicit, which is stable while its mass is at least side drag times the step
@@ -79,8 +79,6 @@ def build(s: Scenario, seed: int, steps: StepSettings) -> tuple[HostSpace, Task]
     rig = Rig(
         dt=dt,
         stall=stall,
-        drag=drag,
-        side_drag=side_drag,
         drive_while_turning=p.drive_while_turning,
         turn_rate=p.turn_rate * u.time,
         bump_threshold=p.bump_threshold / u.impulse,
@@ -107,12 +105,12 @@ def build(s: Scenario, seed: int, steps: StepSettings) -> tuple[HostSpace, Task]
         channel_length=length,
         channel_width=width,
         goal_x=x + s.goal.travel / u.length,
-        lean_force=LEAN_SHARE * stall[0],
+        lean_force=LEAN_SHARE * stall,
     )
     n_samples = round(s.goal.time_limit / steps.dt_s) // steps.sample_steps + 1
     task = Task(
         rig=rig,
-        crew=new_crew(starts[:, 2]),
+        crew=new_crew(starts[:, 2], drag, side_drag),
         program=scale_time(compile_routine(s.routine), u.time),
         senses=Senses(e.turn_bias, e.turn_sd, e.bearing_step, e.bearing_sd),
         keys=keys,

@@ -34,16 +34,14 @@ _WALL = 1
 
 
 class Rig(NamedTuple):
-    """Constants of a run, in engine units; arrays have one entry per pusher.
+    """Constants of a run, in engine units.
 
     inverse_mass, inverse_step_mass: (n_entities,) of block, pushers and walls (0), as they are and as the engine has
-    them (see `effective_mass`).
+    them (see `effective_mass`). stall: of every pusher; what else differs from unit to unit is in `PUSHER_STATE`.
     """
 
     dt: float
-    stall: FloatArray
-    drag: FloatArray
-    side_drag: FloatArray
+    stall: float
     drive_while_turning: float
     turn_rate: float
     bump_threshold: float
@@ -73,56 +71,55 @@ class Rig(NamedTuple):
     lean_force: float
 
 
-class Crew(NamedTuple):
-    """State of the pushers, changed in place; one row each.
+# One record per pusher: compiled code reaches records much faster than one array per field.
+PUSHER_STATE = np.dtype(
+    [
+        ("drag", "f8"),  # along the heading, and
+        ("side_drag", "f8"),  # across it
+        ("heading", "f8"),  # direction of drive, and
+        ("ux", "f8"),  # its unit vector
+        ("uy", "f8"),
+        ("mode", "i8"),  # see `Mode`
+        ("until", "f8"),  # end of the latency, or of deafness after a missed bump
+        ("to_turn", "f8"),  # angle still to turn
+        ("pressed", "f8"),  # impulse felt in the present touch
+        ("percept_kind", "i8"),  # partner of the last bump felt, and
+        ("percept_normal", "f8"),  # direction of its normal
+        ("hardest", "f8"),  # hardest touch of the bumper in this step, its partner and its normal
+        ("step_kind", "i8"),
+        ("step_normal", "f8"),
+        ("touched_at", "i8"),  # last step in which the bumper was touched
+        ("n_bumps", "i8"),  # bumps felt or missed so far
+        ("next_false", "f8"),  # time of the next false bump, and
+        ("n_false", "i8"),  # how many there were
+        ("force_x", "f8"),  # drive and drag in this step
+        ("force_y", "f8"),
+    ]
+)
 
-    heading, ux, uy: direction of drive. mode: see `Mode`. until: end of the latency, or of deafness after a missed
-    bump. to_turn: angle still to turn. pressed: impulse felt in the present touch. percept_kind, percept_normal:
-    the last bump felt. hardest, step_kind, step_normal: the hardest touch of this step. touched_at: step of the last.
-    n_bumps: bumps felt or missed so far. next_false: time of the next false bump. n_false: how many there were.
-    force_x, force_y: drive and drag of this step.
+
+class Crew(NamedTuple):
+    """State of the pushers, changed in place.
+
+    pushers: (n,) records of `PUSHER_STATE`. memory: (n, MEMORY) and stage_since: (n, 1), see `program.decide`.
     """
 
-    heading: FloatArray
-    ux: FloatArray
-    uy: FloatArray
-    mode: IntArray
-    until: FloatArray
-    to_turn: FloatArray
-    pressed: FloatArray
-    percept_kind: IntArray
-    percept_normal: FloatArray
-    step_kind: IntArray
-    step_normal: FloatArray
-    hardest: FloatArray
-    touched_at: IntArray
-    n_bumps: IntArray
-    next_false: FloatArray
-    n_false: IntArray
-    force_x: FloatArray
-    force_y: FloatArray
+    pushers: NDArray[np.void]
     memory: IntArray
     stage_since: FloatArray
 
 
-def new_crew(headings: FloatArray) -> Crew:
-    """A crew at the start of its routine."""
+def new_crew(headings: FloatArray, drag: FloatArray, side_drag: FloatArray) -> Crew:
+    """A crew at the start of its routine; one heading and drag per pusher."""
     n = len(headings)
-
-    def zeros() -> FloatArray:
-        return np.zeros(n)
-
-    def whole(value: int = 0) -> IntArray:
-        return np.full(n, value, dtype=np.int64)
-
-    return Crew(
-        heading=np.array(headings, dtype=np.float64), ux=np.cos(headings), uy=np.sin(headings),
-        mode=whole(_TURN), until=np.full(n, -1.0), to_turn=zeros(), pressed=zeros(),
-        percept_kind=whole(), percept_normal=np.array(headings) + math.pi,
-        step_kind=whole(), step_normal=zeros(), hardest=zeros(), touched_at=whole(-9),
-        n_bumps=whole(), next_false=np.full(n, -1.0), n_false=whole(), force_x=zeros(), force_y=zeros(),
-        memory=np.zeros((n, MEMORY), dtype=np.int64), stage_since=np.zeros((n, 1)),
-    )  # fmt: skip
+    pushers = np.zeros(n, dtype=PUSHER_STATE)
+    pushers["drag"], pushers["side_drag"] = drag, side_drag
+    pushers["heading"], pushers["ux"], pushers["uy"] = headings, np.cos(headings), np.sin(headings)
+    pushers["mode"] = _TURN  # by nothing: the routine decides in the first step
+    pushers["percept_normal"] = headings + math.pi
+    pushers["until"] = pushers["next_false"] = -1.0
+    pushers["touched_at"] = -9
+    return Crew(pushers, np.zeros((n, MEMORY), dtype=np.int64), np.zeros((n, 1)))
 
 
 @inlined
@@ -130,21 +127,22 @@ def _carry_out(
     rig: Rig, crew: Crew, program: Program, senses: Senses, keys: NDArray[np.uint64], i: int, now: float
 ) -> None:
     """Let the routine decide until the pusher runs, turns for some time, or halts."""
+    p = crew.pushers[i]
     while True:
         command, rotation = decide(
             program, senses, keys[i], crew.memory[i], crew.stage_since[i], now,
-            crew.heading[i], crew.percept_kind[i], crew.percept_normal[i],
+            p.heading, p.percept_kind, p.percept_normal,
         )  # fmt: skip
         if command == _ROTATE:
             if rig.turn_rate < np.inf:
-                crew.mode[i], crew.to_turn[i] = _TURN, rotation
+                p.mode, p.to_turn = _TURN, rotation
                 return
-            crew.heading[i] += rotation
+            p.heading += rotation
             continue
-        crew.mode[i] = _STOP if command == _HALT else _RUN
-        crew.pressed[i] = 0.0
-        crew.until[i] = -1.0
-        crew.ux[i], crew.uy[i] = math.cos(crew.heading[i]), math.sin(crew.heading[i])
+        p.mode = _STOP if command == _HALT else _RUN
+        p.pressed = 0.0
+        p.until = -1.0
+        p.ux, p.uy = math.cos(p.heading), math.sin(p.heading)
         return
 
 
@@ -155,40 +153,38 @@ def drive(
     """Before the engine's step: reactions, turning and heading noise; then the forces on pushers and block."""
     now = step * rig.dt
     noisy = rig.diffusion > 0.0 and step % rig.noise_steps == 0
-    motion, orders = host.motion, host.orders
-    for i in range(len(crew.heading)):
-        spin, thrust = 0.0, rig.stall[i]
-        mode = crew.mode[i]
-        if (mode == _REACT and now >= crew.until[i] - 1e-9) or (mode == _TURN and crew.to_turn[i] == 0.0):
+    motion, orders, pushers = host.motion, host.orders, crew.pushers
+    for i in range(len(pushers)):
+        p = pushers[i]
+        spin, thrust = 0.0, rig.stall
+        if (p.mode == _REACT and now >= p.until - 1e-9) or (p.mode == _TURN and p.to_turn == 0.0):
             _carry_out(rig, crew, program, senses, keys, i, now)
-            mode = crew.mode[i]
-        if mode == _TURN:
+        if p.mode == _TURN:
             most = rig.turn_rate * rig.dt
-            angle = min(max(crew.to_turn[i], -most), most)
-            crew.to_turn[i] -= angle
-            crew.heading[i] += angle
-            crew.ux[i], crew.uy[i] = math.cos(crew.heading[i]), math.sin(crew.heading[i])
+            angle = min(max(p.to_turn, -most), most)
+            p.to_turn -= angle
+            p.heading += angle
+            p.ux, p.uy = math.cos(p.heading), math.sin(p.heading)
             spin = angle / rig.dt
             thrust *= rig.drive_while_turning
-        elif mode == _STOP:
+        elif p.mode == _STOP:
             thrust = 0.0
         elif noisy or rig.drift != 0.0:
             if noisy:
                 spread = rig.diffusion * math.sqrt(rig.noise_steps * rig.dt)
-                crew.heading[i] += spread * normal(keys[i, _HEADING], step // rig.noise_steps)
-            crew.heading[i] += rig.drift * rig.dt
-            crew.ux[i], crew.uy[i] = math.cos(crew.heading[i]), math.sin(crew.heading[i])
-        ux, uy = crew.ux[i], crew.uy[i]
+                p.heading += spread * normal(keys[i, _HEADING], step // rig.noise_steps)
+            p.heading += rig.drift * rig.dt
+            p.ux, p.uy = math.cos(p.heading), math.sin(p.heading)
         vx, vy = motion[MOTION * (i + 1) + 3], motion[MOTION * (i + 1) + 4]
-        along = thrust - rig.drag[i] * (vx * ux + vy * uy)
-        across = -rig.side_drag[i] * (vy * ux - vx * uy)
-        crew.force_x[i] = along * ux - across * uy
-        crew.force_y[i] = along * uy + across * ux
+        along = thrust - p.drag * (vx * p.ux + vy * p.uy)
+        across = -p.side_drag * (vy * p.ux - vx * p.uy)
+        p.force_x = along * p.ux - across * p.uy
+        p.force_y = along * p.uy + across * p.ux
         place = ORDERS * (i + 1)
         orders[place] = spin
-        orders[place + 1] = crew.force_x[i]
-        orders[place + 2] = crew.force_y[i]
-        crew.hardest[i] = -1.0
+        orders[place + 1] = p.force_x
+        orders[place + 2] = p.force_y
+        p.hardest = -1.0
     orders[0] = motion[5]
     orders[1] = -rig.block_drag * motion[3]
     orders[2] = -rig.block_drag * motion[4]
@@ -226,27 +222,28 @@ def set_floor(host: Host, rig: Rig) -> None:
 def feel(rig: Rig, crew: Crew, keys: NDArray[np.uint64], step: int) -> None:
     """After the contacts are read: which pushers have felt a bump."""
     now = (step + 1) * rig.dt
-    for i in range(len(crew.heading)):
-        if crew.mode[i] != _RUN:
+    for i in range(len(crew.pushers)):
+        p = crew.pushers[i]
+        if p.mode != _RUN:
             continue
         if rig.false_bumps > 0.0:
-            if crew.next_false[i] < 0.0:
-                crew.next_false[i] = now - math.log(uniform(keys[i, _FALSE], crew.n_false[i])) / rig.false_bumps
-                crew.n_false[i] += 1
-            if now >= crew.next_false[i]:
-                crew.next_false[i] = -1.0
-                crew.mode[i], crew.until[i] = _REACT, now + rig.latency
-                crew.percept_kind[i], crew.percept_normal[i] = _WALL, crew.heading[i] + math.pi
+            if p.next_false < 0.0:
+                p.next_false = now - math.log(uniform(keys[i, _FALSE], p.n_false)) / rig.false_bumps
+                p.n_false += 1
+            if now >= p.next_false:
+                p.next_false = -1.0
+                p.mode, p.until = _REACT, now + rig.latency
+                p.percept_kind, p.percept_normal = _WALL, p.heading + math.pi
                 continue
-        if crew.touched_at[i] != step:
-            crew.pressed[i] = 0.0
+        if p.touched_at != step:
+            p.pressed = 0.0
             continue
-        crew.pressed[i] += crew.hardest[i]
-        if crew.pressed[i] <= 0.0 or crew.pressed[i] < rig.bump_threshold or now < crew.until[i]:
+        p.pressed += p.hardest
+        if p.pressed <= 0.0 or p.pressed < rig.bump_threshold or now < p.until:
             continue
-        crew.n_bumps[i] += 1
-        if rig.missed_bumps > 0.0 and uniform(keys[i, _MISSED], crew.n_bumps[i]) < rig.missed_bumps:
-            crew.until[i] = now + rig.retry
+        p.n_bumps += 1
+        if rig.missed_bumps > 0.0 and uniform(keys[i, _MISSED], p.n_bumps) < rig.missed_bumps:
+            p.until = now + rig.retry
             continue
-        crew.mode[i], crew.until[i] = _REACT, now + rig.latency
-        crew.percept_kind[i], crew.percept_normal[i] = crew.step_kind[i], crew.step_normal[i]
+        p.mode, p.until = _REACT, now + rig.latency
+        p.percept_kind, p.percept_normal = p.step_kind, p.step_normal

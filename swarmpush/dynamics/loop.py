@@ -19,7 +19,6 @@ from swarmpush.dynamics.host import MOTION, Host, HostSpace, read_state, take_st
 from swarmpush.dynamics.ledger import (
     SLOTS,
     Ledger,
-    Total,
     balance_block,
     close_visits,
     enter_contacts,
@@ -75,11 +74,11 @@ class Task(NamedTuple):
 def _before(host: Host, task: Task, step: int, final_step: int) -> int:
     """Books of the last step, sample, guards, then orders for this step; the state must have been read."""
     rig, crew, ledger = task.rig, task.crew, task.ledger
-    motion, totals = host.motion, ledger.totals
+    motion, totals = host.motion, ledger.totals[0]
     if step > 0:
         balance_block(host, rig, ledger)
     remember_block(host, ledger)
-    n = len(crew.heading)
+    pushers, n = crew.pushers, len(crew.pushers)
     ahead_of = motion[0] + rig.half_length
     ending = _NOT_YET
     for i in range(n):
@@ -87,30 +86,30 @@ def _before(host: Host, task: Task, step: int, final_step: int) -> int:
         if not (x > 0.0 and x < rig.channel_length and y > 0.0 and y < rig.channel_width):
             ending = _ESCAPED if math.isfinite(x + y) else _NOT_A_NUMBER
         if x > ahead_of:
-            totals[Total.AHEAD] += 1.0
-        if crew.mode[i] == 2:
-            totals[Total.TURNING] += 1.0
-        elif crew.mode[i] == 3:
-            totals[Total.STOPPED] += 1.0
+            totals.ahead += 1.0
+        if pushers[i].mode == 2:
+            totals.turning += 1.0
+        elif pushers[i].mode == 3:
+            totals.stopped += 1.0
     if not math.isfinite(motion[0] + motion[1] + motion[2]):
         ending = _NOT_A_NUMBER
-    elif totals[Total.OVERLAP_MAX] > MAX_OVERLAP:
+    elif totals.overlap_max > MAX_OVERLAP:
         ending = _OVERLAP
     elif ending == _NOT_YET and motion[0] >= rig.goal_x:
         ending = _GOAL
     elif ending == _NOT_YET and step >= final_step:
         ending = _TIME
     if step % task.sample_steps == 0:
-        row = step // task.sample_steps
+        row, block_rows, pusher_rows = step // task.sample_steps, task.path.block, task.path.pushers
         for c in range(4):
-            task.path.block[row, c] = motion[c]
-        task.path.block[row, 4] = totals[Total.SAMPLE_LEANING] / task.sample_steps
-        totals[Total.SAMPLE_LEANING] = 0.0
+            block_rows[row, c] = motion[c]
+        block_rows[row, 4] = totals.sample_leaning / task.sample_steps
+        totals.sample_leaning = 0.0
         for i in range(n):
-            task.path.pushers[row, i, 0] = motion[MOTION * (i + 1)]
-            task.path.pushers[row, i, 1] = motion[MOTION * (i + 1) + 1]
-            task.path.pushers[row, i, 2] = crew.heading[i]
-            task.path.pushers[row, i, 3] = crew.mode[i]
+            pusher_rows[row, i, 0] = motion[MOTION * (i + 1)]
+            pusher_rows[row, i, 1] = motion[MOTION * (i + 1) + 1]
+            pusher_rows[row, i, 2] = pushers[i].heading
+            pusher_rows[row, i, 3] = pushers[i].mode
     if ending == _NOT_YET:
         drive(host, rig, crew, task.program, task.senses, task.keys, step)
         if rig.has_floor:

@@ -12,6 +12,7 @@ import pandas as pd
 from swarmpush.dynamics.bumps import find_bumps, find_completed_laps
 from swarmpush.dynamics.steps import StepSettings
 from swarmpush.kinematics.boundary import REAR
+from swarmpush.loading import from_tables
 from swarmpush.output import plain, provenance, to_json, write_table, write_text
 from swarmpush.scenario import Scenario
 
@@ -156,7 +157,7 @@ class Run:
         files = {name: f"{name}.parquet" for name in TABLES}
         for name, file in files.items():
             write_table(folder / file, getattr(self, name))
-        summary = self.to_dict(files) | {"scenario": self.scenario.model_dump(mode="json")}
+        summary = self.to_dict(files) | {"scenario": self.scenario.to_tables()}
         write_text(folder / "run.json", to_json(summary))
         return files
 
@@ -174,7 +175,7 @@ def load_run(folder: Path, cycles: tuple[tuple[str, ...], ...] = ()) -> Run:
     overlap = numerics.pop("overlap_max_m")
     books: dict[str, Any] = {k: tuple(v) if isinstance(v, list) else v for k, v in text["books"].items()}
     return Run(
-        scenario=Scenario.model_validate(text["scenario"]),
+        scenario=from_tables(text["scenario"], str(folder / "run.json")),
         seed=text["provenance"]["seed"],
         steps=StepSettings(**numerics),
         ended=text["ended"],

@@ -13,7 +13,6 @@ from swarmpush.dynamics import tables
 from swarmpush.dynamics.build import build
 from swarmpush.dynamics.bumps import find_bumps, find_completed_laps
 from swarmpush.dynamics.host import HostSpace, host_disagreement
-from swarmpush.dynamics.ledger import Total
 from swarmpush.dynamics.loop import Ending, Task, advance, advance_plainly
 from swarmpush.dynamics.run import Run
 from swarmpush.dynamics.steps import StepSettings, choose_step, engine_units
@@ -90,7 +89,7 @@ def simulate(
     return _record(s, seed, steps, cycles, task, log, step, ENDINGS[ending], start_x)
 
 
-def _fetch_log(task: Task) -> NDArray[np.float64]:
+def _fetch_log(task: Task) -> NDArray[np.void]:
     rows = task.ledger.log[: task.ledger.n_log[0]].copy()
     task.ledger.n_log[0] = 0
     return rows
@@ -102,12 +101,12 @@ def _record(
     steps: StepSettings,
     cycles: tuple[tuple[str, ...], ...],
     task: Task,
-    log: list[NDArray[np.float64]],
+    log: list[NDArray[np.void]],
     n_steps: int,
     ended: str,
     start_x: float,
 ) -> Run:
-    u, totals = engine_units(s), task.ledger.totals
+    u, totals = engine_units(s), task.ledger.totals[0]
     interval_s, n_rows = steps.sample_steps * steps.dt_s, n_steps // steps.sample_steps + 1
     visits = tables.visit_table(log, s.pushers.count, steps.dt_s / u.time, u)
     block = tables.block_table(task.path, n_rows, interval_s, u)
@@ -119,9 +118,9 @@ def _record(
         steps=steps,
         ended=ended,
         duration_s=n_steps * steps.dt_s,
-        travel_m=float(totals[Total.OLD_X] - start_x) * u.length,
-        yaw_max_rad=float(totals[Total.YAW_MAX]),
-        overlap_max_m=float(totals[Total.OVERLAP_MAX]) * u.length,
+        travel_m=float(totals["old_x"] - start_x) * u.length,
+        yaw_max_rad=float(totals["yaw_max"]),
+        overlap_max_m=float(totals["overlap_max"]) * u.length,
         books=tables.books(task, float(covered), u),
         causes=tables.causes(task, n_steps),
         visits=visits,
