@@ -180,7 +180,7 @@ def for_people(value: float, si_unit: str, digits: int = 3) -> str:
     if math.isinf(value):
         return "never" if si_unit == "s" else ("unlimited" if value > 0 else "minus infinity")
     if si_unit == "rad":
-        return f"{round(math.degrees(value), 4):.{digits}g} deg"
+        return f"{math.degrees(value):.{digits}g} deg"
     if si_unit == "1":
         return f"{value:.{digits}g}"
     if value == 0.0:

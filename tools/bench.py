@@ -22,7 +22,7 @@ What the columns of the body case hold:
   books and records no path, so it does less than ours. Its world is the same one, though its course is its own.
 The crew thickens at the block as time goes on, so each round compares the same stretch of model time.
 
-Only processes of this run count: use it on a quiet machine. It says how busy the machine was before.
+Use it on a quiet machine; it says how busy the machine was before.
 """
 
 from __future__ import annotations
@@ -46,7 +46,7 @@ from importlib.metadata import version
 from pathlib import Path
 from typing import Any
 
-from _environment import PROJECT, VENV, SetupError, prepare, run, say
+from _environment import PROJECT, PYTHON, VENV, SetupError, prepare, say
 
 CREWS = (16, 64, 256)
 WARM_UP, STEPS, ROUNDS = 2000, 2000, 7  # steps before the clock runs; steps per round
@@ -59,7 +59,7 @@ COLUMNS = "date commit machine load python packages case unit ours bare by_hand 
 
 @dataclass(frozen=True)
 class Result:
-    """One case: medians over rounds, or the best round where it says so; `row` as the CSV's columns have it."""
+    """One case: its row of the CSV file and its lines on the screen."""
 
     row: dict[str, Any]
     lines: list[str] = field(default_factory=list)
@@ -96,7 +96,7 @@ def main(arguments: list[str]) -> int:
 def _again_inside(arguments: list[str]) -> int:
     try:
         prepare()
-        return run([str(Path(__file__).resolve()), *arguments])
+        return subprocess.run([str(PYTHON), __file__, *arguments]).returncode
     except SetupError as error:
         print(error, file=sys.stderr)
         return 1

@@ -82,7 +82,7 @@ def judge(measured: Estimate, band: Sequence[float]) -> Verdict:
     would tell; else strained.
     """
     low, high = band
-    if not math.isfinite(measured.mean) or not math.isfinite(measured.high - measured.low):
+    if not math.isfinite(measured.mean) or not math.isfinite(measured.high - measured.low) or math.isnan(low + high):
         return Verdict.UNDECIDED
     if low <= measured.low and measured.high <= high:
         return Verdict.HOLDS

@@ -18,7 +18,7 @@ from swarmpush.program import Senses, compile_routine, scale_time
 from swarmpush.scenario import Scenario
 from swarmpush.starts import draw_starts
 
-MISSED_BUMP_RETRY = 1.0  # s: a pusher that goes on pressing feels a missed bump this much later
+MISSED_BUMP_RETRY = 4.0  # radius / free speed: a pusher that goes on pressing feels a missed bump this much later
 LEAN_SHARE = 0.1  # of the stall force: pressing harder than this on the rear face counts as leaning
 
 
@@ -84,7 +84,7 @@ def build(s: Scenario, seed: int, steps: StepSettings) -> tuple[HostSpace, Task]
         bump_threshold=p.bump_threshold / u.impulse,
         half_arc=p.bumper_arc / 2,
         latency=p.latency / u.time,
-        retry=MISSED_BUMP_RETRY / u.time,
+        retry=MISSED_BUMP_RETRY,
         missed_bumps=e.missed_bumps,
         false_bumps=e.false_bumps * u.time,
         diffusion=e.heading_diffusion * math.sqrt(u.time),
@@ -102,6 +102,7 @@ def build(s: Scenario, seed: int, steps: StepSettings) -> tuple[HostSpace, Task]
         floor_static=s.floor.static_friction * weight if s.floor else 0.0,
         floor_kinetic=s.floor.kinetic_friction * weight if s.floor else 0.0,
         floor_arm=friction_arm(2 * half_length, 2 * half_width),
+        yaw_is_held=s.block.yaw == "held",
         channel_length=length,
         channel_width=width,
         goal_x=x + s.goal.travel / u.length,

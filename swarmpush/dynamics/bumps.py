@@ -45,7 +45,7 @@ def find_bumps(visits: pd.DataFrame) -> pd.DataFrame:
     def total(column: str) -> np.ndarray:
         return np.add.reduceat(both[column].to_numpy(), starts) if len(starts) else np.zeros(0)
 
-    ends = np.append(starts[1:], len(both)) - 1
+    ends = np.append(starts[1:], len(both))[: len(starts)] - 1  # none at all when nobody bumped into anything
     first = both.iloc[starts]
     return pd.DataFrame(
         {
@@ -75,7 +75,7 @@ def find_completed_laps(bumps: pd.DataFrame, cycles: Iterable[tuple[str, ...]]) 
     """
     surface, pusher, t_on = (bumps[name].to_numpy() for name in ("surface", "pusher", "t_on_s"))
     found: list[pd.DataFrame] = []
-    for cycle in dict.fromkeys(cycles):
+    for cycle in dict.fromkeys(_as_bumped(cycle) for cycle in cycles):
         length = len(cycle)
         n = len(surface) - length
         if n <= 0:
@@ -96,5 +96,25 @@ def find_completed_laps(bumps: pd.DataFrame, cycles: Iterable[tuple[str, ...]]) 
         )
     if not found:
         return pd.DataFrame({name: pd.Series(dtype=kind) for name, kind in LAP_COLUMNS.items()})
-    laps = pd.concat(found, ignore_index=True)
-    return laps.sort_values(["pusher", "t_start_s"], kind="stable", ignore_index=True)
+    laps = pd.concat(found).sort_values(["pusher", "t_start_s", "t_end_s"], kind="stable")
+    return _one_after_another(laps)
+
+
+def _one_after_another(laps: pd.DataFrame) -> pd.DataFrame:
+    """The laps that begin after the pusher's last one has ended, so that no time counts twice."""
+    is_kept, last, free_from = [], -1, 0.0
+    for pusher, start, end in zip(laps["pusher"], laps["t_start_s"], laps["t_end_s"], strict=True):
+        is_kept.append(pusher != last or start >= free_from)
+        if is_kept[-1]:
+            last, free_from = pusher, end
+    return laps[np.array(is_kept, dtype=bool)].reset_index(drop=True)
+
+
+def _as_bumped(cycle: tuple[str, ...]) -> tuple[str, ...]:
+    """A planned lap as `find_bumps` would see it: bumps repeated at once taken as one, and gone round once only."""
+    # of alike neighbours the last is kept; the end of the lap meets its beginning
+    merged = tuple(name for k, name in enumerate(cycle) if name != cycle[(k + 1) % len(cycle)]) or cycle[:1]
+    for n in range(1, len(merged) + 1):
+        if len(merged) % n == 0 and merged == merged[:n] * (len(merged) // n):
+            return merged[:n]
+    return merged

@@ -65,6 +65,7 @@ class Rig(NamedTuple):
     floor_static: float
     floor_kinetic: float
     floor_arm: float
+    yaw_is_held: bool
     channel_length: float
     channel_width: float
     goal_x: float
@@ -211,7 +212,8 @@ def set_floor(host: Host, rig: Rig) -> None:
     else:
         cap = rig.floor_static
         force, torque = cap, cap * rig.floor_arm
-        pull, twist = host.floor_load[0], host.floor_load[1]
+        pull = host.floor_load[0]
+        twist = 0.0 if rig.yaw_is_held else host.floor_load[1]  # a joint on a body that cannot turn gives no number
         load = math.hypot(pull / (cap * rig.dt), twist / (cap * rig.floor_arm * rig.dt)) if cap > 0.0 else 0.0
         if load > 1.0:
             force, torque = pull / (rig.dt * load), twist / (rig.dt * load)

@@ -154,7 +154,7 @@ class Fate(IntEnum):
     NEVER_REACHES_REAR = 2
     LEAVES_REAR_FOR_GOOD = 3
     AHEAD_OF_BLOCK = 4
-    STUCK_IN_CORNER = 5
+    STUCK = 5
     HALTED = 6
 
 
@@ -162,13 +162,14 @@ FATE_WORDS = {
     Fate.NEVER_REACHES_REAR: "never reaches the rear face",
     Fate.LEAVES_REAR_FOR_GOOD: "loses the rear face and bounces between walls",
     Fate.AHEAD_OF_BLOCK: "ends ahead of the block",
-    Fate.STUCK_IN_CORNER: "stuck in a corner",
+    Fate.STUCK: "stuck in a corner or against a surface",
     Fate.HALTED: "its routine halts",
 }
 
-_LOCKED, _UNDECIDED, _NEVER, _LEAVES, _AHEAD, _CORNER, _HALTED = (int(fate) for fate in Fate)
+_LOCKED, _UNDECIDED, _NEVER, _LEAVES, _AHEAD, _STUCK, _HALTED = (int(fate) for fate in Fate)
 
 MAX_PERIOD = 8  # longest lap looked for, in bumps on the rear face
+SHORTEST_LAP = 1e-3  # of the scale; what repeats within less is on its way into a corner, or bumps on the spot
 _LOCK_TOLERANCE = 1e-6  # of the scale, and in rad: a lap that returns this closely is closed; contraction does the rest
 _HASH = 1_000_003
 
@@ -216,6 +217,8 @@ def settle(
     ring_signature = np.zeros(2 * MAX_PERIOD, dtype=np.int64)
     ring_y = np.zeros(2 * MAX_PERIOD)
     ring_heading = np.zeros(2 * MAX_PERIOD)
+    ring_way = np.zeros(2 * MAX_PERIOD)
+    way, shortest = 0.0, SHORTEST_LAP * boundary.scale
     n_rear, last_rear, n_short = 0, -1, 0
     signature = 0
     front_x = boundary.segments[_FRONT, 0]
@@ -236,11 +239,13 @@ def settle(
         y += hit.run * uy
         contact, normal_angle = boundary.kinds[hit.surface], hit.normal_angle
         signature = (signature * _HASH + hit.surface * 64 + memory[PC]) & 0x3FFFFFFFFFFFFF
-        if 2 * k > budget and hit.run < 1e-9 * boundary.scale:
+        way += hit.run
+        if 2 * k > budget and hit.run < _BEHIND_TOLERANCE * boundary.scale:
             n_short += 1
         if hit.surface == _REAR:
             place = n_rear % (2 * MAX_PERIOD)
             ring_signature[place], ring_y[place], ring_heading[place] = signature, y, heading
+            ring_way[place] = way
             n_rear += 1
             last_rear = k
             signature = 0
@@ -248,7 +253,7 @@ def settle(
                 before = (place - period) % (2 * MAX_PERIOD)
                 gap = abs(y - ring_y[before])
                 gap = max(gap, boundary.scale * abs(wrap_angle(heading - ring_heading[before])))
-                if gap >= 100.0 * tolerance:
+                if gap >= 100.0 * tolerance or way - ring_way[before] < shortest:
                     continue
                 alike, total = True, 0
                 for j in range(period):
@@ -261,7 +266,7 @@ def settle(
                     break  # about to close; an alternating lap passes the test at twice its period first
     fate = _UNDECIDED
     if 4 * n_short > budget:
-        fate = _CORNER
+        fate = _STUCK
     elif x >= front_x:
         fate = _AHEAD
     elif n_rear == 0:

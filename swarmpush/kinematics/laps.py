@@ -21,7 +21,7 @@ from swarmpush.kinematics.bounce import (
 )
 from swarmpush.kinematics.boundary import REAR_SURFACE, SURFACES, Boundary, corridor
 from swarmpush.program import EXACT, MEMORY, PC, Contact, Program, compile_routine
-from swarmpush.routine import Depart, Routine
+from swarmpush.routine import Depart, Routine, Wander
 from swarmpush.scenario import Scenario
 from swarmpush.starts import draw_starts
 
@@ -91,7 +91,8 @@ class Capture:
 def find_laps(s: Scenario, *, n_starts: int = N_STARTS, seed: int = 0) -> tuple[tuple[Lap, ...], Capture]:
     """Find the laps that the scenario's starts fall into, without any error, the block standing still.
 
-    A departure with a spread is taken at its mean angle.
+    A departure with a spread is taken at its mean angle. A routine that draws sides or directions by chance has no
+    laps, whatever it may happen to repeat.
 
     Arguments:
         s: the scenario. n_starts: starts drawn from its start region. seed: of those draws.
@@ -108,6 +109,8 @@ def find_laps(s: Scenario, *, n_starts: int = N_STARTS, seed: int = 0) -> tuple[
     memories = np.zeros((n, MEMORY), dtype=np.int64)
     settle_many(boundary, program, EXACT, keys, starts, BUDGET, fates, states, memories)
 
+    if _goes_by_chance(s.routine):
+        fates[fates[:, 0] == Fate.LOCKED, 0] = Fate.UNDECIDED
     tracer = _Tracer(s, boundary, program, keys)
     laps: list[Lap] = []
     locked = fates[:, 0] == Fate.LOCKED
@@ -125,6 +128,11 @@ def find_laps(s: Scenario, *, n_starts: int = N_STARTS, seed: int = 0) -> tuple[
         n_starts=n,
     )
     return tuple(laps), capture
+
+
+def _goes_by_chance(routine: Routine) -> bool:
+    acts = [act for stage in routine.stages for act in stage.acts]
+    return any(isinstance(act, Wander) or (isinstance(act, Depart) and act.side == "either") for act in acts)
 
 
 def _without_spread(routine: Routine) -> Routine:

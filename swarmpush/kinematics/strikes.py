@@ -16,6 +16,7 @@ from swarmpush.scenario import Scenario
 from swarmpush.starts import draw_starts
 
 N_FOLLOWED = 300  # pushers; with tens of strikes each, the rate's standard error is about one percent or less
+AT_ONCE = 1e-9  # of the channel's width: a run shorter than this is rounding
 MAX_BUMPS = 4000  # per pusher; a longer trial is represented by its first part
 
 
@@ -44,10 +45,16 @@ def count_strikes(s: Scenario, *, seed: int = 0) -> Strikes:
     for start, keys in zip(starts, stream_keys(seed, len(starts)), strict=True):
         n = trace(boundary, program, EXACT, 0.0, speed, keys, start, 0.0, hits, surfaces)
         times = np.cumsum(hits[:n, 4]) / speed
-        at_rear = (surfaces[:n] == REAR_SURFACE) & (times <= limit)
+        on_the_spot = hits[:n, 4] < AT_ONCE * boundary.scale
+        is_rear = surfaces[:n] == REAR_SURFACE
+        # a pusher that turns and still points into the face bumps again at once, which is no strike of its own
+        again = on_the_spot & is_rear & np.roll(is_rear, 1)
+        again[:1] = False
+        at_rear = is_rear & ~again & (times <= limit)
         cosines.append(np.cos(hits[:n][at_rear, 2]))
-        # a pusher that halted spends the rest of the trial without a strike
-        time += limit if n < n_bumps else min(limit, float(times[-1]))
+        # a pusher that has halted or got stuck spends the rest of the trial without a strike
+        is_over = n < n_bumps or on_the_spot[n // 2 :].all()
+        time += limit if is_over else min(limit, float(times[-1]))
     found = np.concatenate(cosines)
     return Strikes(len(found) / time, found)
 

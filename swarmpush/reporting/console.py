@@ -13,7 +13,7 @@ from swarmpush.cautions import CAUTIONS
 from swarmpush.dynamics.run import Run
 from swarmpush.kinematics.planning import Plan
 from swarmpush.quantities import for_people
-from swarmpush.reporting.wording import CAUSES, finding_row, number, rung_row
+from swarmpush.reporting.wording import CAUSES, finding_row, interval, number, rung_row
 
 _COLOURS = {"holds": "green", "strained": "yellow", "fails": "red", "undecided": "bright_black"}
 _console = Console(highlight=False)
@@ -51,7 +51,7 @@ def show_plan(plan: Plan) -> None:
     if plan.laps:
         table = _table("lap", "starts", "time", "multipliers", "heading band", "kept for", right=("starts", "time"))
         for lap, drift in zip(plan.laps, plan.laps_to_drift_out, strict=True):
-            low, high = lap.band_rad
+            low, high = (round(end, 6) for end in lap.band_rad)  # the search for the ends stops at 1e-7 rad
             multipliers = ", ".join(f"{m.real:.3f}" if abs(m.imag) < 1e-12 else f"{m:.3f}" for m in lap.multipliers)
             table.add_row(
                 " - ".join(lap.surfaces),
@@ -124,8 +124,8 @@ def show_audit(audit: Audit) -> None:
     change = numerics.change_m_s
     _console.print(
         f"\nbooks balanced to {numerics.residual_rel:.0e} of all contact impulse; step "
-        f"{for_people(numerics.steps.dt_s, 's')}, half of it changes the speed by {for_people(change.mean, 'm/s')} "
-        f"({for_people(change.low, 'm/s')} to {for_people(change.high, 'm/s')}, chance included)"
+        f"{for_people(numerics.steps.dt_s, 's')}, half of it changes the speed by {number(change.mean, 'm/s')} "
+        f"({interval(change, 'm/s')}, chance included)"
     )
     _caution()
 

@@ -15,7 +15,7 @@ from swarmpush.output import provenance, write_text
 from swarmpush.quantities import for_people
 from swarmpush.reporting import drawing
 from swarmpush.reporting.drawing import as_svg
-from swarmpush.reporting.wording import CAUSES, finding_row, rung_row
+from swarmpush.reporting.wording import CAUSES, finding_row, interval, number, rung_row
 
 
 def report(result: Audit | Run, path: str | Path) -> Path:
@@ -112,8 +112,7 @@ def _audit_content(audit: Audit) -> dict[str, Any]:
         1,
         (
             "half the step changes the speed by",
-            f"{for_people(change.mean, 'm/s')} ({for_people(change.low, 'm/s')} to {for_people(change.high, 'm/s')}, "
-            f"{change.n} pairs; chance included)",
+            f"{number(change.mean, 'm/s')} ({interval(change, 'm/s')}, {change.n} pairs; chance included)",
         ),
     )
     return content | {

@@ -7,9 +7,7 @@ import math
 from swarmpush.auditing.audit import RungResult
 from swarmpush.auditing.statistics import Estimate
 from swarmpush.auditing.verdicts import Finding
-from swarmpush.quantities import for_people
-
-_PLAIN_UNITS = {"1", "share of time", "share of runs"}
+from swarmpush.quantities import for_people, prefix_for
 
 CAUSES = {
     "ahead_of_block": "pushers ahead of the block",
@@ -28,14 +26,22 @@ def number(value: float, unit: str) -> str:
         return "-" if math.isnan(value) else "no limit"
     if unit.startswith("share"):
         return f"{value:.0%}".replace("-0%", "0%")
-    return for_people(value, "1" if unit in _PLAIN_UNITS else unit)
+    if unit.startswith("1"):
+        return f"{value:.3g} {unit if unit != '1' else ''}".rstrip()
+    return for_people(value, unit)
 
 
 def interval(estimate: Estimate, unit: str) -> str:
-    """The confidence interval of an estimate."""
-    if not math.isfinite(estimate.low) or not math.isfinite(estimate.high):
+    """The confidence interval of an estimate, both ends with the same prefix."""
+    low, high = estimate.low, estimate.high
+    if not math.isfinite(low) or not math.isfinite(high):
         return "-"
-    return f"{number(estimate.low, unit)} to {number(estimate.high, unit)}"
+    if unit.startswith("share"):
+        return f"{number(low, unit)} to {number(high, unit)}"
+    factor, prefix = prefix_for(max(abs(low), abs(high)))
+    if unit.startswith("1"):  # a ratio or a rate, which take no prefix
+        factor, prefix = 1.0, ""
+    return f"{low / factor:.3g} to {high / factor:.3g} {prefix}{unit if unit != '1' else ''}".rstrip()
 
 
 def rung_row(rung: RungResult) -> dict[str, str]:

@@ -13,7 +13,7 @@ from swarmpush.draws import stream_keys
 from swarmpush.kinematics.bounce import trace
 from swarmpush.kinematics.boundary import SURFACES, corridor
 from swarmpush.loading import from_tables
-from swarmpush.program import Senses, compile_routine
+from swarmpush.program import EXACT, Senses, compile_routine
 from swarmpush.scenario import GRAVITY, Scenario
 
 G = GRAVITY
@@ -86,9 +86,6 @@ def closed_corridor(routine: dict[str, Any], *, face_at: float = FACE_AT, **tabl
         routine=routine,
         **tables,
     )
-
-
-EXACT = Senses(0.0, 0.0, 0.0, 0.0)
 
 
 def follow(
