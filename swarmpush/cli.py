@@ -6,6 +6,8 @@ the commands, so that help comes at once.
 
 from __future__ import annotations
 
+import io
+import os
 import sys
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
@@ -14,6 +16,7 @@ import typer
 
 if TYPE_CHECKING:
     from swarmpush.auditing.audit import Audit
+    from swarmpush.auditing.verdicts import Finding
     from swarmpush.scenario import Scenario
 
 BAD_INPUT, NOT_MET, INTERRUPTED = 2, 3, 130
@@ -27,6 +30,7 @@ app = typer.Typer(
     add_completion=False,
     pretty_exceptions_enable=False,
     rich_markup_mode=None,
+    context_settings={"help_option_names": ["-h", "--help"]},
 )
 
 ScenarioArgument = Annotated[
@@ -40,6 +44,23 @@ Seed = Annotated[int | None, typer.Option("--seed", min=0, max=2**62, help="anot
 
 class _Refusal(Exception):
     """Bad input that no library function has refused yet."""
+
+
+def _show_version(is_asked: bool) -> None:
+    if is_asked:
+        import swarmpush
+
+        print(f"swarmpush {swarmpush.__version__}")
+        raise typer.Exit
+
+
+@app.callback()
+def _common(
+    version: Annotated[
+        bool, typer.Option("--version", callback=_show_version, is_eager=True, help="print the version and end")
+    ] = False,
+) -> None:
+    pass
 
 
 @app.command(short_help="laps and block speed from geometry alone")
@@ -58,7 +79,7 @@ def plan(scenario: ScenarioArgument, as_json: AsJson = False, out: OutFolder = N
         write_bytes(folder / "plan.png", as_png(plan_picture, planned))
         write_text(folder / "plan.json", to_json(planned.to_dict()))
     if as_json:
-        print(to_json(planned.to_dict()))
+        _print_json(planned.to_dict())
         return
     from swarmpush.reporting import console
 
@@ -77,7 +98,7 @@ def run(
 ) -> None:
     """Run the scenario once with rigid bodies, and balance the books."""
     import swarmpush
-    from swarmpush.output import claim_folder, to_json
+    from swarmpush.output import claim_folder
 
     s = _load(scenario)
     folder = claim_folder(out, force=force) if out else None
@@ -87,7 +108,7 @@ def run(
     if folder:
         swarmpush.report(result, folder / "report.html")
     if as_json:
-        print(to_json(result.to_dict(files)))
+        _print_json(result.to_dict(files))
         return
     from swarmpush.reporting import console
 
@@ -109,12 +130,15 @@ def audit(
         typer.Option(metavar="CLAIM", help="exit with 3 unless this claim holds, e.g. arrival; may be repeated"),
     ] = None,
     as_json: AsJson = False,
-    out: OutFolder = None,
+    out: Annotated[
+        Path | None,
+        typer.Option(metavar="FOLDER", help="folder for the results; default: a new one, results/NAME-audit"),
+    ] = None,
     force: Force = False,
 ) -> None:
     """Hold the plan against rigid bodies: does the block arrive, which assumptions fail, what does each cost?"""
     import swarmpush
-    from swarmpush.output import claim_folder, free_folder, to_json
+    from swarmpush.output import claim_folder, free_folder
 
     demanded = _claims(require or [])
     s = _load(scenario)
@@ -129,11 +153,11 @@ def audit(
     except KeyboardInterrupt:
         print(f"interrupted; go on with --out {folder}", file=sys.stderr)
         raise typer.Exit(INTERRUPTED) from None
-    result.save(folder)
+    files = result.save(folder) | {"folder": str(folder), "report": "report.html"}
     swarmpush.report(result, folder / "report.html")
     journal.unlink(missing_ok=True)
     if as_json:
-        print(to_json(result.to_dict()))
+        _print_json(result.to_dict(files))
     else:
         from swarmpush.reporting import console
 
@@ -152,13 +176,14 @@ def schema(
     from swarmpush.output import to_json, write_text
     from swarmpush.scenario import Scenario
 
-    text = to_json({"$schema": "https://json-schema.org/draft/2020-12/schema"} | Scenario.model_json_schema())
+    tables = {"$schema": "https://json-schema.org/draft/2020-12/schema"} | Scenario.model_json_schema()
+    text = to_json(tables, is_ascii=True)
     if out is None:
         print(text)
         return
     _refuse_existing(out, force)
     write_text(out, text)
-    print(to_json({"schema": out}) if as_json else f"schema: {out}")
+    _print_place("schema", out, as_json)
 
 
 @app.command(short_help="make the HTML report of saved results again")
@@ -172,7 +197,6 @@ def report(
 ) -> None:
     """Make the HTML report of saved results again."""
     import swarmpush
-    from swarmpush.output import to_json
     from swarmpush.reporting.page import load_result
 
     path = out or folder / "report.html"
@@ -183,21 +207,50 @@ def report(
     except ValueError as error:
         raise _Refusal(str(error)) from None
     swarmpush.report(result, path)
-    print(to_json({"report": path}) if as_json else f"report: {path}")
+    _print_place("report", path, as_json)
 
 
 def main() -> None:
     """Run the command line; every foreseeable error is one message and an exit code."""
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):
+            stream.reconfigure(errors="replace")  # a terminal that knows no Greek letters still gets its tables
     try:
-        app(prog_name="swarmpush")
+        try:
+            app(prog_name="swarmpush")
+        finally:
+            sys.stdout.flush()
+    except BrokenPipeError:  # the reader, such as head, has seen enough
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        sys.exit(1)
+    except OSError as error:
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        _fail(f"cannot write the output ({error.strerror})")
     except Exception as error:
         from swarmpush.loading import ScenarioError
         from swarmpush.output import OutputError
 
         if not isinstance(error, _Refusal | ScenarioError | OutputError):
             raise
-        print(error, file=sys.stderr)
-        sys.exit(BAD_INPUT)
+        _fail(str(error))
+
+
+def _fail(message: str) -> None:
+    print(message, file=sys.stderr)
+    sys.exit(BAD_INPUT)
+
+
+def _print_json(value: Any) -> None:
+    from swarmpush.output import to_json
+
+    print(to_json(value, is_ascii=True))
+
+
+def _print_place(what: str, path: Path, as_json: bool) -> None:
+    if as_json:
+        _print_json({what: path})
+    else:
+        print(f"{what}: {path}")
 
 
 def _load(name: str) -> Scenario:
@@ -205,9 +258,12 @@ def _load(name: str) -> Scenario:
     import swarmpush
     from swarmpush.demos import DEMOS
 
-    if name in DEMOS and not Path(name).exists():
-        return swarmpush.load(swarmpush.demo(name))
-    return swarmpush.load(name)
+    path = Path(name)
+    if not path.suffix and not path.exists():
+        if path.name.replace("-", "_") not in DEMOS:
+            raise _Refusal(f"{name}: no such file; the demo scenarios are {', '.join(DEMOS)}")
+        path = swarmpush.demo(path.name.replace("-", "_"))
+    return swarmpush.load(path)
 
 
 def _stem(name: str) -> str:
@@ -230,18 +286,31 @@ def _claims(names: list[str]) -> list[str]:
 
 
 def _demand(result: Audit, demanded: list[str]) -> None:
-    verdicts = {finding.assumption: str(finding.verdict) for finding in result.verdicts}
-    unmet = [name for name in demanded if verdicts.get(name) != "holds"]
-    for name in unmet:
-        print(f"required: {name}, but it {_said(verdicts.get(name))}", file=sys.stderr)
-    if unmet:
+    """Exit with 3 unless every demanded claim holds; to demand arrival is to demand that the block does arrive."""
+    findings = {finding.assumption: finding for finding in result.verdicts}
+    unmet = {name: _shortfall(findings.get(name)) for name in demanded}
+    for name, reason in unmet.items():
+        if reason:
+            print(f"required: {name}, but {reason}", file=sys.stderr)
+    if any(unmet.values()):
         raise typer.Exit(NOT_MET)
 
 
-def _said(verdict: str | None) -> str:
-    if verdict is None:
-        return "cannot be judged here, as geometry gives no lap"
-    return {"undecided": "is undecided", "strained": "is strained"}.get(verdict, verdict)
+def _shortfall(finding: Finding | None) -> str:
+    """Why a demanded claim is not met; empty if it is."""
+    from swarmpush.auditing.claims import ARRIVAL
+    from swarmpush.auditing.statistics import Verdict, runs_to_show
+
+    if finding is None:
+        return "geometry gives no lap here to judge"
+    if finding.assumption == ARRIVAL and finding.predicted == 0.0:
+        return "the plan itself says that the block does not arrive in time"
+    if finding.verdict is Verdict.HOLDS:
+        return ""
+    if finding.assumption == ARRIVAL and finding.measured.mean == 1.0:
+        needed = runs_to_show(1.0 - finding.tolerance, finding.confidence)
+        return f"{finding.measured.n} runs cannot show it; {needed} replicates could"
+    return {Verdict.FAILS: "it fails", Verdict.STRAINED: "it is strained"}.get(finding.verdict, "it is undecided")
 
 
 def _preparing(is_quiet: bool) -> Any:

@@ -50,9 +50,9 @@ def plain(value: Any) -> Any:
     return value
 
 
-def to_json(value: Any) -> str:
-    """JSON text of a result, readable and the same for the same values."""
-    return json.dumps(plain(value), indent=2, ensure_ascii=False, allow_nan=False)
+def to_json(value: Any, *, is_ascii: bool = False) -> str:
+    """JSON text of a result, readable and the same for the same values; in ASCII for streams of unknown encoding."""
+    return json.dumps(plain(value), indent=2, ensure_ascii=is_ascii, allow_nan=False)
 
 
 def provenance(s: Scenario, *, seed: int | None = None) -> dict[str, Any]:
@@ -105,7 +105,8 @@ def _written_whole(path: Path) -> Iterator[Path]:
         part.chmod(0o644)
         part.replace(path)
     except OSError as error:
-        raise OutputError(f"{path} cannot be written ({error.strerror})") from None
+        remedy = "" if path.parent.is_dir() else "; make its folder first"
+        raise OutputError(f"{path} cannot be written ({error.strerror}){remedy}") from None
     finally:
         if part is not None:
             part.unlink(missing_ok=True)

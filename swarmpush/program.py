@@ -1,8 +1,7 @@
 """The compiled routine and its interpreter, the one that both worlds run.
 
-A routine becomes two small arrays: `ops` (operation and integer arguments) and `args` (float arguments). The
-interpreter `decide` is called only at decision moments (start, bump, end of a turn). It carries out acts until
-one of them needs the world: run on, turn by an angle, or stop.
+A routine becomes a small table of instructions. The interpreter `decide` is called only at decision moments (start,
+bump, end of a turn). It carries out acts until one of them needs the world: run on, turn by an angle, or stop.
 """
 
 from __future__ import annotations
@@ -60,8 +59,8 @@ _SIDE = {"left": 1, "right": -1, "onward": 0, "either": 2}
 _KIND = {"wall": Contact.WALL, "block": Contact.BLOCK, "pusher": Contact.PUSHER}
 
 # plain integers, which the compiler bakes into the machine code
-_RUN, _TURN, _DEPART, _MIRROR, _WANDER, _ADD, _SET, _IF_CONTACT, _IF_COUNTER, _IF_TIME, _JUMP = (
-    int(op) for op in list(Op)[:11]
+_RUN, _TURN, _DEPART, _MIRROR, _WANDER, _ADD, _SET, _IF_CONTACT, _IF_COUNTER, _IF_TIME, _JUMP, _HALT = (
+    int(op) for op in Op
 )
 _COMMAND_RUN, _COMMAND_ROTATE, _COMMAND_STOP = (int(c) for c in Command)
 _ONWARD, _EITHER = 0, 2
@@ -73,15 +72,12 @@ PC, N_ROTATIONS, FIRST_COUNTER = 0, 1, 2
 MEMORY = FIRST_COUNTER + acts.MAX_COUNTERS
 
 
-class Program(NamedTuple):
-    """A compiled routine.
-
-    ops: (n_ops, 3) int64: operation, then up to two integer arguments (side, counter, stage to go to, ...).
-    args: (n_ops, 2) float64: up to two float arguments (angle in rad, spread in rad, time).
-    """
-
-    ops: IntArray
-    args: FloatArray
+# One instruction. go: where to jump; number: a counter, a side, a kind of contact; amount: what to add or set a
+# counter to, or whether a jump enters another stage; value, spread: angle in rad, time, limit.
+INSTRUCTION = np.dtype(
+    [("op", "i8"), ("go", "i8"), ("number", "i8"), ("amount", "i8"), ("value", "f8"), ("spread", "f8")]
+)
+Program = NDArray[np.void]  # (n,) records of INSTRUCTION: a compiled routine
 
 
 class Senses(NamedTuple):
@@ -103,53 +99,61 @@ EXACT = Senses(0.0, 0.0, 0.0, 0.0)  # a pusher without faults
 def compile_routine(routine: acts.Routine) -> Program:
     """Compile a checked routine to the table both worlds execute."""
     counters = {name: k for k, name in enumerate(routine.counters())}
-    rows: list[list[int | str]] = []
-    numbers: list[list[float]] = []
-    first_op: dict[str, int] = {}
+    stages = [_instructions(stage, counters) for stage in routine.stages]
+    begins = dict(zip((stage.name for stage in routine.stages), np.cumsum([0, *map(len, stages)]), strict=False))
+    rows = [
+        (i.op, begins[i.go] if i.go else 0, i.number, i.amount, i.value, i.spread) for stage in stages for i in stage
+    ]
+    return np.array(rows, dtype=INSTRUCTION)
 
-    def emit(op: Op, *integers: int | str, floats: tuple[float, ...] = ()) -> None:
-        rows.append([int(op), *integers, *([0] * (2 - len(integers)))])
-        numbers.append([*floats, *([0.0] * (2 - len(floats)))])
 
-    for stage in routine.stages:
-        first_op[stage.name] = len(rows)
-        for act in stage.acts:
-            match act:
-                case acts.Run():
-                    emit(Op.RUN)
-                case acts.Turn():
-                    emit(Op.TURN, floats=(act.angle,))
-                case acts.Depart():
-                    emit(Op.DEPART, _SIDE[act.side], floats=(act.angle, act.spread))
-                case acts.Mirror():
-                    emit(Op.MIRROR)
-                case acts.Wander():
-                    emit(Op.WANDER, int(act.law == "cosine"))
-                case acts.Tally():
-                    if act.set is not None:
-                        emit(Op.SET, counters[act.counter], act.set)
-                    else:
-                        emit(Op.ADD, counters[act.counter], act.add)
-                case acts.BranchContact():
-                    emit(Op.IF_CONTACT, act.go, int(_KIND[act.kind]))
-                case acts.BranchCounter():
-                    emit(Op.IF_COUNTER, act.go, counters[act.counter], floats=(float(act.at_least),))
-                case acts.BranchTime():
-                    emit(Op.IF_TIME, act.go, floats=(act.after,))
-                case acts.Halt():
-                    emit(Op.HALT)
-        following = stage.then or stage.name
-        emit(Op.JUMP, following, int(following != stage.name))  # going round does not restart the stage's clock
+class _Instruction(NamedTuple):
+    op: Op
+    go: str = ""  # name of a stage
+    number: int = 0
+    amount: int = 0
+    value: float = 0.0
+    spread: float = 0.0
 
-    ops = np.array([[first_op[v] if isinstance(v, str) else v for v in row] for row in rows], dtype=np.int64)
-    return Program(ops, np.array(numbers, dtype=np.float64))
+
+def _instructions(stage: acts.Stage, counters: dict[str, int]) -> list[_Instruction]:
+    """A stage's acts, and the way on after the last one; going round in a stage does not restart its clock."""
+    following = stage.then or stage.name
+    way_on = _Instruction(Op.JUMP, go=following, amount=int(following != stage.name))
+    return [*(_instruction(act, counters) for act in stage.acts), way_on]
+
+
+def _instruction(act: acts.Act, counters: dict[str, int]) -> _Instruction:
+    match act:
+        case acts.Turn():
+            return _Instruction(Op.TURN, value=act.angle)
+        case acts.Depart():
+            return _Instruction(Op.DEPART, number=_SIDE[act.side], value=act.angle, spread=act.spread)
+        case acts.Mirror():
+            return _Instruction(Op.MIRROR)
+        case acts.Wander():
+            return _Instruction(Op.WANDER, number=int(act.law == "cosine"))
+        case acts.Tally():
+            if act.set is None:
+                return _Instruction(Op.ADD, number=counters[act.counter], amount=act.add)
+            return _Instruction(Op.SET, number=counters[act.counter], amount=act.set)
+        case acts.BranchContact():
+            return _Instruction(Op.IF_CONTACT, go=act.go, number=int(_KIND[act.kind]))
+        case acts.BranchCounter():
+            return _Instruction(Op.IF_COUNTER, go=act.go, number=counters[act.counter], value=float(act.at_least))
+        case acts.BranchTime():
+            return _Instruction(Op.IF_TIME, go=act.go, value=act.after)
+        case acts.Halt():
+            return _Instruction(Op.HALT)
+        case acts.Run():
+            return _Instruction(Op.RUN)
 
 
 def scale_time(program: Program, unit_s: float) -> Program:
     """The same program with its times in units of `unit_s` seconds."""
-    args = program.args.copy()
-    args[program.ops[:, 0] == Op.IF_TIME, 0] /= unit_s
-    return Program(program.ops, args)
+    scaled = program.copy()
+    scaled["value"][program["op"] == Op.IF_TIME] /= unit_s
+    return scaled
 
 
 @inlined
@@ -195,12 +199,12 @@ def decide(
         command: see `Command`.
         rotation: angle to rotate by, with its error, in rad; 0 unless the command is ROTATE.
     """
-    ops, args = program.ops, program.args
     following = memory[PC]
     while True:
         pc = following
         following = pc + 1
-        op, first, second = ops[pc, 0], ops[pc, 1], ops[pc, 2]
+        step = program[pc]
+        op = step.op
         if op == _RUN:
             memory[PC] = following
             return _COMMAND_RUN, 0.0
@@ -208,27 +212,27 @@ def decide(
             index = memory[N_ROTATIONS]
             memory[N_ROTATIONS] = index + 1
             if op == _TURN:
-                rotation = args[pc, 0]
+                rotation = step.value
             else:
                 surface = _sensed_normal(senses, keys, index, heading, normal_angle)
                 incoming = wrap_angle(heading - surface)  # more than a quarter turn from the normal
                 if op == _DEPART:
-                    angle = args[pc, 0]
-                    if args[pc, 1] > 0.0:
-                        angle += args[pc, 1] * normal(keys[_DEPART_STREAM], index)
+                    angle = step.value
+                    if step.spread > 0.0:
+                        angle += step.spread * normal(keys[_DEPART_STREAM], index)
                     angle = min(max(angle, -_MAX_DEPARTURE), _MAX_DEPARTURE)
-                    if first == _ONWARD:
+                    if step.number == _ONWARD:
                         side = 1.0 if incoming >= 0.0 else -1.0
-                    elif first == _EITHER:
+                    elif step.number == _EITHER:
                         side = 1.0 if uniform(keys[_DEPART_STREAM], -1 - index) < 0.5 else -1.0
                     else:
-                        side = float(first)
+                        side = float(step.number)
                     target = surface + side * angle
                 elif op == _MIRROR:
                     target = surface + math.pi - incoming
                 else:
                     u = 2.0 * uniform(keys[_DEPART_STREAM], -1 - index) - 1.0
-                    target = surface + (math.asin(u) if first == 1 else 0.5 * math.pi * u)
+                    target = surface + (math.asin(u) if step.number == 1 else 0.5 * math.pi * u)
                 rotation = wrap_angle(target - heading)
             rotation += senses.turn_bias
             if senses.turn_sd > 0.0:
@@ -236,25 +240,20 @@ def decide(
             memory[PC] = following
             return _COMMAND_ROTATE, rotation
         if op == _ADD:
-            memory[FIRST_COUNTER + first] += second
+            memory[FIRST_COUNTER + step.number] += step.amount
         elif op == _SET:
-            memory[FIRST_COUNTER + first] = second
+            memory[FIRST_COUNTER + step.number] = step.amount
         elif op == _JUMP:
-            following = first
-            if second == 1:
+            following = step.go
+            if step.amount == 1:
                 stage_since[0] = now
-        elif op == _IF_CONTACT:
-            if contact == second:
-                following = first
-                stage_since[0] = now
-        elif op == _IF_COUNTER:
-            if memory[FIRST_COUNTER + second] >= args[pc, 0]:
-                following = first
-                stage_since[0] = now
-        elif op == _IF_TIME:
-            if now - stage_since[0] >= args[pc, 0]:
-                following = first
-                stage_since[0] = now
-        else:
+        elif (
+            (op == _IF_CONTACT and contact == step.number)
+            or (op == _IF_COUNTER and memory[FIRST_COUNTER + step.number] >= step.value)
+            or (op == _IF_TIME and now - stage_since[0] >= step.value)
+        ):
+            following = step.go
+            stage_since[0] = now
+        elif op == _HALT:
             memory[PC] = pc  # halted pushers stay at the halt
             return _COMMAND_STOP, 0.0

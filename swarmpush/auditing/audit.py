@@ -21,7 +21,7 @@ from swarmpush.dynamics.run import Run, load_run
 from swarmpush.dynamics.steps import StepSettings, choose_step
 from swarmpush.dynamics.world import simulate
 from swarmpush.kinematics.planning import Plan, plan
-from swarmpush.output import plain, provenance, to_json, write_table, write_text
+from swarmpush.output import claim_folder, plain, provenance, to_json, write_table, write_text
 from swarmpush.quantities import for_people
 from swarmpush.scenario import Scenario
 
@@ -104,7 +104,7 @@ class Audit:
             text += f", and what costs most is {worst.adds} ({for_people(cost.mean, 'm/s')})"
         return text + "."
 
-    def to_dict(self) -> dict[str, Any]:
+    def to_dict(self, files: dict[str, str] | None = None) -> dict[str, Any]:
         """The audit as plain values for JSON; undefined values are None."""
         result: dict[str, Any] = plain(
             {
@@ -128,21 +128,24 @@ class Audit:
                 "verdicts": self.verdicts,
                 "numerics": self.numerics,
                 "plan": self.plan.to_dict(),
+                "files": files or {},
                 "provenance": provenance(self.scenario),
             }
         )
         return result
 
-    def save(self, folder: Path) -> None:
-        """Write replicates, the sample run and, last, audit.json.
+    def save(self, folder: Path) -> dict[str, str]:
+        """Write replicates, the sample run and, last, audit.json; returns the files' names.
 
         Raises:
             OutputError: when something cannot be written.
         """
-        write_table(folder / "replicates.parquet", self.replicates)
-        (folder / "sample").mkdir(exist_ok=True)
+        files = {"replicates": "replicates.parquet", "sample": "sample/run.json", "audit": "audit.json"}
+        write_table(folder / files["replicates"], self.replicates)
+        claim_folder(folder / "sample", force=True)
         self.sample.save(folder / "sample")
-        write_text(folder / "audit.json", to_json(self.to_dict()))
+        write_text(folder / files["audit"], to_json(self.to_dict(files)))
+        return files
 
 
 def load_audit(folder: Path) -> Audit:
@@ -152,13 +155,15 @@ def load_audit(folder: Path) -> Audit:
         ValueError: when the folder does not hold a whole audit.
     """
     try:
-        json.loads((folder / "audit.json").read_text(encoding="utf-8"))  # written last: a whole audit
+        json.loads((folder / "audit.json").read_text(encoding="utf-8"))["answer"]  # written last: a whole audit
         replicates = pd.read_parquet(folder / "replicates.parquet")
-        sample = load_run(folder / "sample")
-    except (OSError, KeyError, ValueError) as error:
-        raise ValueError(f"{folder} does not hold a whole audit ({error}); make one with 'swarmpush audit'") from None
-    planned = plan(sample.scenario)
-    return conclude(planned, replicates, load_run(folder / "sample", _cycles(planned)))
+        planned = plan(load_run(folder / "sample").scenario)
+        return conclude(planned, replicates, load_run(folder / "sample", _cycles(planned)))
+    except OSError as error:
+        reason = f"{Path(error.filename).name if error.filename else 'a file'}: {error.strerror or 'unreadable'}"
+    except (KeyError, ValueError, TypeError):
+        reason = "a file is damaged"
+    raise ValueError(f"{folder} does not hold a whole audit ({reason}); make one with 'swarmpush audit'")
 
 
 def audit(

@@ -6,9 +6,11 @@ import json
 from pathlib import Path
 from typing import Any
 
-from swarmpush.output import OutputError
+from swarmpush.output import OutputError, write_text
 
 Row = dict[str, Any]
+
+_MEASURE = "block_speed_m_s"  # every row has it
 
 
 class Journal:
@@ -26,28 +28,27 @@ class Journal:
         self._path = path
         self.rows: dict[tuple[str, int], Row] = {}
         try:
-            lines = path.read_text(encoding="utf-8").splitlines() if path.exists() else []
-            entries = [json.loads(line) for line in lines if line.endswith("}")]  # the last line may be cut off
-            if entries and entries[0] != subject:
-                raise OutputError(
-                    f"{path} is left from an interrupted audit of another scenario or with other versions; delete it, "
-                    "or name another folder with --out"
-                )
-            self.rows = {(row["rung"], row["replicate"]): row for row in entries[1:]}
-            if not entries:
-                path.write_text(json.dumps(subject) + "\n", encoding="utf-8")
-            elif not path.read_bytes().endswith(b"\n"):
-                self._append("\n")
+            text = path.read_text(encoding="utf-8") if path.exists() else ""
+            whole, _, _ = text.rpartition("\n")  # the last line may be cut off
+            entries = [json.loads(line) for line in whole.splitlines()]
+            self.rows = {(row["rung"], row["replicate"]): row for row in entries[1:] if row[_MEASURE] is not None}
         except OSError as error:
             raise OutputError(f"{path} cannot be used ({error.strerror})") from None
         except (ValueError, KeyError, TypeError):
             raise OutputError(f"{path} is damaged; delete it and start again") from None
+        header = json.dumps(subject)
+        if entries[:1] != [subject] and not header.startswith(text):
+            raise OutputError(
+                f"{path} is left from an interrupted audit of another scenario or with other versions; delete it, or "
+                "name another folder with --out"
+            )
+        write_text(path, "\n".join([whole if entries else header, ""]))
 
     def add(self, row: Row) -> None:
         """Write a finished run down."""
         self.rows[row["rung"], row["replicate"]] = row
-        self._append(json.dumps(row) + "\n")
-
-    def _append(self, text: str) -> None:
-        with self._path.open("a", encoding="utf-8") as file:
-            file.write(text)
+        try:
+            with self._path.open("a", encoding="utf-8") as file:
+                file.write(json.dumps(row) + "\n")
+        except OSError as error:
+            raise OutputError(f"{self._path} cannot be written ({error.strerror})") from None

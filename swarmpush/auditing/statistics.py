@@ -75,6 +75,16 @@ def share_interval(n_successes: int, n: int, confidence: float) -> Estimate:
     return Estimate(share, low, high, n)
 
 
+def runs_to_show(share: float, confidence: float) -> int:
+    """Least number of runs, all of them successes, whose score interval lies above `share`: n/(n + z^2) >= share.
+
+    >>> runs_to_show(0.9, 0.95)
+    35
+    """
+    z = float(stats.norm.ppf(0.5 + confidence / 2.0))
+    return math.ceil(z * z * share / (1.0 - share))
+
+
 def judge(measured: Estimate, band: Sequence[float]) -> Verdict:
     """Equivalence verdict: where the confidence interval lies against the band of acceptable values.
 

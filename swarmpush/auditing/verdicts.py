@@ -16,7 +16,8 @@ class Finding:
     """One claim of the plan and its verdict.
 
     assumption: short name. statement: the claim in words. unit: of the numbers. predicted: by the point world.
-    measured: over the runs of the scenario as given. tolerance: relative. verdict: see `judge`.
+    measured: over the runs of the scenario as given, with its interval at `confidence`. tolerance: relative. verdict:
+    see `judge`.
     """
 
     assumption: str
@@ -24,6 +25,7 @@ class Finding:
     unit: str
     predicted: float
     measured: Estimate
+    confidence: float
     tolerance: float
     verdict: Verdict
 
@@ -45,7 +47,7 @@ def find_verdicts(plan: Plan, runs: pd.DataFrame) -> tuple[Finding, ...]:
 
     def claim(assumption: str, statement: str, unit: str, predicted: float, measured: Estimate) -> None:
         verdict = judge(measured, _within(predicted, tolerance))
-        findings.append(Finding(assumption, statement, unit, predicted, measured, tolerance, verdict))
+        findings.append(Finding(assumption, statement, unit, predicted, measured, confidence, tolerance, verdict))
 
     def mean_of(column: str, factor: float = 1.0) -> Estimate:
         return mean_interval(runs[column] * factor, confidence)
@@ -68,9 +70,10 @@ def find_verdicts(plan: Plan, runs: pd.DataFrame) -> tuple[Finding, ...]:
 
     share = share_interval(int(runs["has_arrived"].sum()), len(runs), confidence)
     arrives = float(travel.time_to_goal_s <= s.goal.time_limit)
-    band = (1.0 - tolerance, 1.0) if arrives else (0.0, tolerance)
     statement = "the block arrives in time" if arrives else "the block does not arrive in time"
-    findings.append(Finding(claims.ARRIVAL, statement, "share of runs", arrives, share, tolerance, judge(share, band)))
+    verdict = judge(share, (1.0 - tolerance, 1.0) if arrives else (0.0, tolerance))
+    unit = "share of runs"
+    findings.append(Finding(claims.ARRIVAL, statement, unit, arrives, share, confidence, tolerance, verdict))
     return tuple(findings)
 
 

@@ -51,8 +51,8 @@ class Run:
 
     visits: one row per visit, in order of time: pusher (from 0; -1 for the block against a wall), partner ("block",
         "wall", "pusher"), surface, other_pusher (-1 unless partner is "pusher"), t_on_s, t_off_s, x_m, y_m and
-        heading_rad at the first touch, approach_m_s, impact_Ns, lean_Ns, tangential_Ns (on the pusher, counter-clockwise
-        about the partner positive), block_dx_m within the visit,
+        heading_rad at the first touch, approach_m_s, impact_Ns, lean_Ns, tangential_Ns (on the pusher, to the left as
+        it faces its partner), block_dx_m within the visit,
         overlap_m.
     block: path of the block: t_s, x_m, y_m, yaw_rad, vx_m_s, n_leaning (mean since the last row).
     pushers: path of the pushers: t_s, pusher, x_m, y_m, heading_rad, mode.

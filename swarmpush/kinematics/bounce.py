@@ -16,7 +16,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from swarmpush.compiled import compiled
+from swarmpush.compiled import compiled, inlined
 from swarmpush.draws import Purpose, normal
 from swarmpush.kinematics.boundary import FRONT_SURFACE, REAR_SURFACE, Boundary
 from swarmpush.program import MEMORY, PC, Command, Op, Program, Senses, decide, wrap_angle
@@ -39,7 +39,7 @@ class Hit(NamedTuple):
     normal_angle: float
 
 
-@compiled
+@inlined
 def next_hit(boundary: Boundary, shift: float, x: float, y: float, ux: float, uy: float) -> Hit:
     """First surface met from (x, y) along the unit vector (ux, uy), the block moved by `shift` in x."""
     segments, arcs, moving = boundary.segments, boundary.arcs, boundary.moving
@@ -371,7 +371,7 @@ def trace_lap(
             if command != _ROTATE:
                 break
             heading += rotation
-            op = program.ops[memory[PC] - 1, 0]
+            op = program[memory[PC] - 1].op
             for j in range(2):
                 if op == _MIRROR:
                     dh[j] = 2.0 * dn[j] - dh[j]

@@ -43,7 +43,7 @@ class Plan:
 
     def to_dict(self) -> dict[str, Any]:
         """The plan as plain values for JSON; infinite values are None."""
-        from swarmpush.output import plain
+        from swarmpush.output import plain, provenance
 
         laps = [
             {
@@ -73,6 +73,7 @@ class Plan:
                 "regime": self.regime,
                 "forecast": self.travel,
                 "kit": self.kit,
+                "provenance": provenance(self.scenario),
             }
         )
         return answer

@@ -22,7 +22,7 @@ _console = Console(highlight=False)
 def _table(*columns: str, right: tuple[str, ...] = ()) -> Table:
     table = Table(box=None, padding=(0, 2, 0, 0), header_style="bold")
     for name in columns:
-        table.add_column(name, justify="right" if name in right else "left", overflow="fold")
+        table.add_column(name, justify="right" if name in right else "left", no_wrap=name in right)
     return table
 
 
@@ -32,8 +32,8 @@ def _head(name: str, answer: str) -> None:
 
 
 def _plain(text: str) -> str:
-    """Text with its square brackets kept, which otherwise would be styles."""
-    return text.replace("[", "\\[")
+    """Text with its square brackets kept, which otherwise would be styles, and without control characters."""
+    return "".join(c for c in text if c.isprintable()).replace("[", "\\[")
 
 
 def show_plan(plan: Plan) -> None:
@@ -137,5 +137,6 @@ def say_where(*paths: Path) -> None:
 
 
 def _caution() -> None:
-    _console.print(f"\n[bright_black]{CAUTIONS[0]}[/]")
-    _console.print(f"[bright_black]{CAUTIONS[1]}[/]")
+    _console.print()
+    for caution in CAUTIONS:
+        _console.print(f"[bright_black]{caution}[/]")

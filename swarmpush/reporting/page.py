@@ -54,8 +54,8 @@ def load_result(folder: Path) -> Audit | Run:
         try:
             cycles = tuple(lap.surfaces for lap in plan(load_run(folder).scenario).laps)
             return load_run(folder, cycles)
-        except (OSError, KeyError, ValueError, TypeError) as error:
-            raise ValueError(f"{folder} does not hold a whole run ({error}); make one with 'swarmpush run'") from None
+        except (OSError, KeyError, ValueError, TypeError):
+            raise ValueError(f"{folder} does not hold a whole run; make one with 'swarmpush run'") from None
     return load_audit(folder)
 
 

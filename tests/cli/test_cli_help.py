@@ -26,7 +26,7 @@ def test_help_of_a_command(command: str) -> None:
     outcome = call(command, "--help")
     assert (outcome.code, outcome.err) == (DONE, "")
     assert outcome.out.startswith(f"Usage: swarmpush {command} ")
-    for option in ("--json", "--out", "--force", "--help"):
+    for option in ("--json", "--out", "--force", "-h, --help"):
         assert f"\n  {option} " in outcome.out
 
 

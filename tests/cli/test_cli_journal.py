@@ -53,7 +53,8 @@ def test_an_interrupted_audit_goes_on(tmp_path: Path) -> None:
     assert contents(stopped).keys() == {JOURNAL}
     n_finished = (stopped / JOURNAL).read_text().count("\n") - 1
 
-    assert call("audit", scenario, "--json", "--out", stopped) == call("audit", scenario, "--json", "--out", through)
+    resumed, direct = (call("audit", scenario, "--json", "--out", folder).json() for folder in (stopped, through))
+    assert resumed | {"files": None} == direct | {"files": None}
     pd.testing.assert_frame_equal(table(stopped), table(through), check_exact=True)
     assert n_finished < len(table(through))
     assert contents(stopped).keys() == contents(through).keys()

@@ -265,9 +265,9 @@ def test_times_can_be_scaled() -> None:
     late = {"act": "branch", "on": "time", "after": "10 s", "go": "a"}
     program = compile_routine(routine(stage("a", RUN, late)))
     scaled = scale_time(program, 2.0)
-    assert program.args[1, 0] == 10.0
-    assert scaled.args[1, 0] == 5.0
-    assert (scaled.ops == program.ops).all()
+    assert program["value"][1] == 10.0
+    assert scaled["value"][1] == 5.0
+    assert (scaled["op"] == program["op"]).all()
 
 
 def test_halts_for_good() -> None:
