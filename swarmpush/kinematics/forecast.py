@@ -6,9 +6,11 @@ Each law is a closed form for one strike on a block at rest; the forecast adds s
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from swarmpush.kinematics.laps import Lap
 from swarmpush.kinematics.strikes import Strikes
@@ -30,7 +32,8 @@ class TravelForecast:
 
     nudge_m: block travel per strike. strike_impulse_Ns: momentum passed by its impact. strikes_per_lap: per
     pusher in the main lap's time.
-    strike_rate_1_s, block_speed_m_s: of the whole crew. strikes_to_goal, time_to_goal_s.
+    strike_rate_1_s, block_speed_m_s: of the whole crew; the speed counts strikes on the front backwards.
+    strikes_to_goal, time_to_goal_s.
     """
 
     nudge_m: float
@@ -113,22 +116,27 @@ def strike_nudge(s: Scenario, push_cosine: float) -> float:
 def forecast(s: Scenario, laps: tuple[Lap, ...], strikes: Strikes) -> TravelForecast:
     """What the crew does to the block if no pusher ever disturbs another and the block is where it was.
 
-    Block speed is (crew size x strikes per second and pusher x mean nudge per strike).
+    Block speed is crew size x (strikes per second x mean nudge, on the rear face minus on the front).
     """
     rate = s.pushers.count * strikes.rate_1_s
     per_lap = strikes.rate_1_s * laps[0].time_s if laps else math.nan
-    if rate == 0.0:
-        return TravelForecast(0.0, 0.0, per_lap, 0.0, 0.0, math.inf, math.inf)
-    cosines, counts = np.unique(strikes.cosines.round(6), return_counts=True)
-    nudge = float(np.average([strike_nudge(s, c) for c in cosines.tolist()], weights=counts))
-    impulse = float(np.average([impact_impulse(s, s.pushers.free_speed * c) for c in cosines.tolist()], weights=counts))
-    speed = rate * nudge
+    nudge = _mean(strikes.cosines, lambda c: strike_nudge(s, c))
+    back_nudge = _mean(strikes.back_cosines, lambda c: strike_nudge(s, c))
+    back_rate = s.pushers.count * strikes.back_rate_1_s
+    # without friction a nudge never ends, and no strikes at all must not meet it as 0 x infinity
+    speed = (rate * nudge if rate else 0.0) - (back_rate * back_nudge if back_rate else 0.0)
     return TravelForecast(
         nudge_m=nudge,
-        strike_impulse_Ns=impulse,
+        strike_impulse_Ns=_mean(strikes.cosines, lambda c: impact_impulse(s, s.pushers.free_speed * c)),
         strikes_per_lap=per_lap,
         strike_rate_1_s=rate,
         block_speed_m_s=speed,
-        strikes_to_goal=s.goal.travel / nudge if nudge > 0.0 else math.inf,
+        strikes_to_goal=rate * s.goal.travel / speed if speed > 0.0 else math.inf,
         time_to_goal_s=s.goal.travel / speed if speed > 0.0 else math.inf,
     )
+
+
+def _mean(cosines: NDArray[np.float64], law: Callable[[float], float]) -> float:
+    """Mean of a law over strikes; 0 when there are none."""
+    values, counts = np.unique(cosines.round(6), return_counts=True)
+    return float(np.average([law(c) for c in values.tolist()], weights=counts)) if len(values) else 0.0

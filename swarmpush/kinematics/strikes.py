@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from swarmpush.draws import stream_keys
 from swarmpush.kinematics.bounce import trace
-from swarmpush.kinematics.boundary import REAR_SURFACE, corridor
+from swarmpush.kinematics.boundary import FRONT_SURFACE, REAR_SURFACE, corridor
 from swarmpush.program import EXACT, compile_routine
 from swarmpush.scenario import Scenario
 from swarmpush.starts import draw_starts
@@ -21,17 +21,20 @@ MAX_BUMPS = 4000  # per pusher; a longer trial is represented by its first part
 
 
 class Strikes(NamedTuple):
-    """Strikes of one pusher on a block that stands still.
+    """Strikes of one pusher on a block that stands still: on the rear face, and backwards on the front.
 
-    rate_1_s: strikes per second. cosines: (n,) of the angle between heading and normal at each strike seen.
+    rate_1_s, back_rate_1_s: strikes per second. cosines, back_cosines: of the angle between heading and normal at each
+    strike seen.
     """
 
     rate_1_s: float
     cosines: NDArray[np.float64]
+    back_rate_1_s: float
+    back_cosines: NDArray[np.float64]
 
 
 def count_strikes(s: Scenario, *, seed: int = 0) -> Strikes:
-    """Follow pushers without any error from the scenario's starts, and count what they do to the rear face.
+    """Follow pushers without any error from the scenario's starts, and count what they do to the block's ends.
 
     Randomness that belongs to the routine itself (a spread, a wander) is kept.
     """
@@ -41,22 +44,23 @@ def count_strikes(s: Scenario, *, seed: int = 0) -> Strikes:
     mean_run = math.pi * s.channel.width * s.channel.length / (2 * (s.channel.width + s.channel.length))
     n_bumps = int(min(MAX_BUMPS, 100 + 10 * limit * speed / mean_run))
     hits, surfaces = np.zeros((n_bumps, 5)), np.zeros(n_bumps, dtype=np.int64)
-    time, cosines = 0.0, []
+    time = 0.0
+    cosines: dict[int, list[NDArray[np.float64]]] = {REAR_SURFACE: [], FRONT_SURFACE: []}
     for start, keys in zip(starts, stream_keys(seed, len(starts)), strict=True):
         n = trace(boundary, program, EXACT, 0.0, speed, keys, start, 0.0, hits, surfaces)
         times = np.cumsum(hits[:n, 4]) / speed
         on_the_spot = hits[:n, 4] < AT_ONCE * boundary.scale
-        is_rear = surfaces[:n] == REAR_SURFACE
         # a pusher that turns and still points into the face bumps again at once, which is no strike of its own
-        again = on_the_spot & is_rear & np.roll(is_rear, 1)
+        again = on_the_spot & (surfaces[:n] == np.roll(surfaces[:n], 1))
         again[:1] = False
-        at_rear = is_rear & ~again & (times <= limit)
-        cosines.append(np.cos(hits[:n][at_rear, 2]))
+        for surface, found in cosines.items():
+            is_strike = (surfaces[:n] == surface) & ~again & (times <= limit)
+            found.append(np.abs(np.cos(hits[:n][is_strike, 2])))
         # a pusher that has halted or got stuck spends the rest of the trial without a strike
         is_over = n < n_bumps or on_the_spot[n // 2 :].all()
         time += limit if is_over else min(limit, float(times[-1]))
-    found = np.concatenate(cosines)
-    return Strikes(len(found) / time, found)
+    rear, front = (np.concatenate(found) for found in cosines.values())
+    return Strikes(len(rear) / time, rear, len(front) / time, front)
 
 
 def point_path(s: Scenario, *, n_bumps: int = 40, seed: int = 0) -> NDArray[np.float64]:

@@ -45,8 +45,11 @@ def show_plan(plan: Plan) -> None:
             f"{for_people(travel.time_to_goal_s, 's')} (limit {for_people(s.goal.time_limit, 's')}), by "
             f"{travel.strikes_to_goal:.0f} strikes of {for_people(travel.nudge_m, 'm')}."
         )
+    elif travel.block_speed_m_s < 0.0:
+        back = for_people(-travel.block_speed_m_s, "m/s")
+        text = f"Geometry promises no arrival: strikes on the front drive the block back at {back}."
     else:
-        text = "Geometry promises nothing: no strike moves the block."
+        text = "Geometry promises no arrival: no strike moves the block."
     _head(s.about.name, text)
     if plan.laps:
         table = _table("lap", "starts", "time", "multipliers", "heading band", "kept for", right=("starts", "time"))
@@ -63,7 +66,7 @@ def show_plan(plan: Plan) -> None:
             )
         _console.print(table)
     shares = {"caught by a lap": capture.captured, **capture.lost, "no closed lap within the budget": capture.undecided}
-    _console.print("\nstarts: " + ", ".join(f"{share:.0%} {what}" for what, share in shares.items() if share > 0))
+    _console.print("\nstarts: " + ", ".join(f"{share:.0%} {what}" for what, share in shares.items() if share >= 0.005))
     force = plan.force
     if force.floor_friction_N > 0:
         _console.print(

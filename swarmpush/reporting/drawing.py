@@ -106,7 +106,7 @@ def _draw_rig(axes: Axes, plan: Plan, scale: float, *, has_ends: bool) -> tuple[
     radius = s.pushers.radius / scale
     x, y = (lap.hits[0, :2] / scale).tolist() if lap is not None else (rear - radius, width / 2)
     axes.add_patch(Circle((x, y), radius, facecolor="white", edgecolor=MEASURED, lw=1.2, zorder=4))
-    reach = max(min(back - 2 * radius, rear - 2 * width), rear - 6 * width, -0.1 * width if has_ends else -math.inf)
+    reach = max(min(back - 2 * radius, rear - 2 * width), rear - 6 * width, -0.1 * width if has_ends else -0.5 * width)
     return reach, min(front + 0.5 * width, length + 0.1 * width)
 
 
@@ -196,7 +196,7 @@ def block_path(run: Run, planned_speed_m_s: float | None = None, ends: Any = Non
     axes.set_xlim(0.0, s.goal.time_limit * 1.02)
     axes.set_xlabel("time, s")
     axes.set_ylabel(f"block travel, {prefix}m")
-    axes.legend(frameon=False, fontsize=8, loc="lower right")
+    axes.legend(frameon=False, fontsize=8, loc="best")
     return figure
 
 
