@@ -123,8 +123,10 @@ def forecast(s: Scenario, laps: tuple[Lap, ...], strikes: Strikes) -> TravelFore
     nudge = _mean(strikes.cosines, lambda c: strike_nudge(s, c))
     back_nudge = _mean(strikes.back_cosines, lambda c: strike_nudge(s, c))
     back_rate = s.pushers.count * strikes.back_rate_1_s
-    # without friction a nudge never ends, and no strikes at all must not meet it as 0 x infinity
-    speed = (rate * nudge if rate else 0.0) - (back_rate * back_nudge if back_rate else 0.0)
+    if math.isinf(nudge + back_nudge):  # without friction a nudge never ends, and the more frequent strikes win
+        speed = math.copysign(math.inf, rate - back_rate) if rate != back_rate else 0.0
+    else:
+        speed = rate * nudge - back_rate * back_nudge
     return TravelForecast(
         nudge_m=nudge,
         strike_impulse_Ns=_mean(strikes.cosines, lambda c: impact_impulse(s, s.pushers.free_speed * c)),
