@@ -19,7 +19,8 @@ if TYPE_CHECKING:
     from swarmpush.dynamics.run import Run
     from swarmpush.dynamics.world import simulate
     from swarmpush.kinematics.planning import Plan, plan
-    from swarmpush.loading import ScenarioError, load, loads
+    from swarmpush.loading import load, loads
+    from swarmpush.problems import ScenarioError
     from swarmpush.reporting.page import report
     from swarmpush.scenario import Scenario
 
@@ -43,7 +44,7 @@ _HOME = {
     "Plan": "swarmpush.kinematics.planning",
     "Run": "swarmpush.dynamics.run",
     "Scenario": "swarmpush.scenario",
-    "ScenarioError": "swarmpush.loading",
+    "ScenarioError": "swarmpush.problems",
     "audit": "swarmpush.auditing.audit",
     "demo": "swarmpush.demos",
     "load": "swarmpush.loading",

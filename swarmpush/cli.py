@@ -227,8 +227,8 @@ def main() -> None:
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         _fail(f"cannot write the output ({error.strerror})")
     except Exception as error:
-        from swarmpush.loading import ScenarioError
         from swarmpush.output import OutputError
+        from swarmpush.problems import ScenarioError
 
         if not isinstance(error, _Refusal | ScenarioError | OutputError):
             raise

@@ -12,44 +12,19 @@ import math
 import tomllib
 from collections.abc import Iterator
 from contextlib import suppress
-from dataclasses import dataclass
 from pathlib import Path
 from typing import Annotated, Any, NamedTuple, get_args
 
 from pydantic import BaseModel, TypeAdapter, ValidationError
 from pydantic.fields import FieldInfo
 
+from swarmpush.problems import Problem, ScenarioError
 from swarmpush.quantities import Quantity, for_people
 from swarmpush.scenario import Scenario
 
 MAX_FILE_BYTES = 1_000_000  # a scenario is a few kilobytes; a larger file is something else
 ROUNDING = 1e-9  # relative; by this much lengths may miss each other and still fit
 MAX_PACKING = 0.4  # share of the start region that discs can fill by random placement without getting stuck
-
-
-@dataclass(frozen=True)
-class Problem:
-    """One thing wrong: the key's path ("" for the whole file) and a sentence with the remedy."""
-
-    key: str
-    sentence: str
-
-    def __str__(self) -> str:
-        return f"{self.key}: {self.sentence}" if self.key else self.sentence
-
-
-class ScenarioError(ValueError):
-    """A scenario cannot be used. `problems` lists every reason; the message is readable as it stands."""
-
-    def __init__(self, source: str, problems: list[Problem]) -> None:
-        self.source = source
-        self.problems = tuple(problems)
-        count = "1 problem" if len(problems) == 1 else f"{len(problems)} problems"
-        lines = [f"{source}: {count}", *(f"  {problem}" for problem in problems)]
-        super().__init__("\n".join(lines))
-
-    def __reduce__(self) -> tuple[Any, ...]:
-        return type(self), (self.source, list(self.problems))  # so that it comes back whole from another process
 
 
 def load(path: str | Path) -> Scenario:

@@ -83,7 +83,7 @@ def _draw_heading(start: Start, key: np.uint64) -> float:
 
 
 def _no_room(s: Scenario) -> Exception:
-    from swarmpush.loading import Problem, ScenarioError
+    from swarmpush.problems import Problem, ScenarioError
 
     sentence = f'{s.pushers.count} pushers find no room in the start region "{s.start.region}"; start with fewer'
     return ScenarioError(s.about.name, [Problem("pushers.count", sentence)])

@@ -11,8 +11,8 @@ from numpy.typing import NDArray
 from swarmpush.kinematics.drift import laps_to_drift_out
 from swarmpush.kinematics.forecast import PushForce, TravelForecast, forecast, push_force
 from swarmpush.kinematics.laps import N_STARTS, Capture, Lap, find_laps
+from swarmpush.kinematics.regimes import Regime, regimes
 from swarmpush.kinematics.strikes import count_strikes, point_path
-from swarmpush.regimes import Regime, regimes
 from swarmpush.routine import Device
 from swarmpush.scenario import Scenario
 

@@ -15,7 +15,8 @@ import jsonschema
 import pytest
 
 from swarmpush.demos import demo
-from swarmpush.loading import MAX_FILE_BYTES, ScenarioError, from_tables, load, loads
+from swarmpush.loading import MAX_FILE_BYTES, from_tables, load, loads
+from swarmpush.problems import ScenarioError
 from swarmpush.scenario import Scenario
 
 DEMO = demo("service_passage")
