@@ -18,6 +18,7 @@ from typing import Annotated, Any, NamedTuple, get_args
 from pydantic import BaseModel, TypeAdapter, ValidationError
 from pydantic.fields import FieldInfo
 
+from swarmpush.geometry import block_corners, channel_corners, free_region, is_plain, post_corners
 from swarmpush.problems import Problem, ScenarioError
 from swarmpush.quantities import Quantity, for_people
 from swarmpush.scenario import Scenario
@@ -281,6 +282,73 @@ def _salvage(model: type[Any], table: dict[str, Any]) -> Any:
     return rest
 
 
+def _outline_misfits(s: Scenario) -> Iterator[Problem]:
+    """Outlines that are no polygons, do not fit one another, or shut pushers in."""
+    if is_plain(s):
+        return
+    from shapely import Polygon
+    from shapely.validation import explain_validity
+
+    posts = {f"channel.posts[{k + 1}]": Polygon(corners) for k, corners in enumerate(post_corners(s))}
+    channel, block = Polygon(channel_corners(s)), Polygon(block_corners(s))
+    outlines = {"channel.outline": channel, "block.outline": block, **posts}
+    crossing = {key: polygon for key, polygon in outlines.items() if not polygon.is_valid or polygon.area == 0.0}
+    for key, polygon in crossing.items():
+        yield Problem(key, f"its sides cross or touch ({explain_validity(polygon)})")
+    if crossing:
+        return
+    yield from _extent_misfits(s)
+    if s.block.outline is not None and block.area < block.convex_hull.area * (1 - ROUNDING):
+        yield Problem("block.outline", "the block must be convex")
+    for key, post in posts.items():
+        if not channel.covers(post):
+            yield Problem(key, "reaches out of the channel")
+        if post.intersects(block):
+            yield Problem(key, "stands in the block")
+    slack = ROUNDING * s.channel.width
+    if not channel.buffer(slack).covers(block):
+        yield Problem("block", "the block does not lie within the channel at its start")
+        return
+    yield from _region_misfits(s)
+
+
+def _extent_misfits(s: Scenario) -> Iterator[Problem]:
+    """An outline must fill the length and width that stand beside it."""
+    half = s.block.width / 2
+    for table, outline, low, high in (
+        ("channel", s.channel.outline, (0.0, 0.0), (s.channel.length, s.channel.width)),
+        ("block", s.block.outline, (0.0, -half), (s.block.length, half)),
+    ):
+        if outline is None:
+            continue
+        for axis, name in enumerate("xy"):
+            values = [corner[axis] for corner in outline]
+            slack = ROUNDING * (high[axis] - low[axis])
+            if abs(min(values) - low[axis]) > slack or abs(max(values) - high[axis]) > slack:
+                yield Problem(
+                    f"{table}.outline",
+                    f"reaches in {name} from {min(values):g} to {max(values):g} m; with {table}."
+                    f"{('length', 'width')[axis]} as given it must reach from {low[axis]:g} to {high[axis]:g} m",
+                )
+
+
+def _region_misfits(s: Scenario) -> Iterator[Problem]:
+    """Every part of the region open to a pusher's centre must touch the block's surroundings."""
+    from shapely import Polygon
+
+    region = free_region(s)
+    reach = Polygon(block_corners(s)).buffer(1.001 * s.pushers.radius)
+    for part in getattr(region, "geoms", [region]):
+        if part.is_empty:
+            yield Problem("pushers.radius", "no pusher fits the channel anywhere")
+        elif not part.intersects(reach):
+            x, y = part.representative_point().coords[0]
+            yield Problem(
+                "channel",
+                f"a pusher near ({x:.3g}, {y:.3g}) m cannot get to the block; widen the gap or close the pocket",
+            )
+
+
 def _width_misfits(s: Scenario) -> Iterator[Problem]:
     diameter = 2 * s.pushers.radius
     if diameter >= s.channel.width:
@@ -345,7 +413,7 @@ def _step_misfits(s: Scenario) -> Iterator[Problem]:
 def _start_misfits(s: Scenario) -> Iterator[Problem]:
     from swarmpush.starts import room_for_starts
 
-    if 2 * s.pushers.radius >= s.channel.width:
+    if 2 * s.pushers.radius >= s.channel.width or any(_outline_misfits(s)):
         return  # a start has no place to be right or wrong in
     if s.start.placed is not None:
         yield from _placed_misfits(s)
@@ -389,7 +457,20 @@ def _placed_misfits(s: Scenario) -> Iterator[Problem]:
                 yield Problem(key, f"overlaps start.placed[{j + 1}]")
 
 
+def _face_misfits(s: Scenario) -> Iterator[Problem]:
+    from swarmpush.kinematics.boundary import surface_names
+
+    if not s.routine.faces() or any(_outline_misfits(s)):
+        return
+    names = surface_names(s)
+    for face in s.routine.faces():
+        if face not in names:
+            yield Problem("routine", f"looks for the face '{face}'; there are {', '.join(names)}")
+
+
 _CHECKS = (
+    _outline_misfits,
+    _face_misfits,
     _width_misfits,
     _block_width_misfits,
     _block_length_misfits,

@@ -7,6 +7,7 @@ bump, end of a turn). It carries out acts until one of them needs the world: run
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from enum import IntEnum
 from typing import NamedTuple
 
@@ -36,14 +37,25 @@ class Op(IntEnum):
     IF_TIME = 9
     JUMP = 10
     HALT = 11
+    ADVANCE = 12
+    SLIDE = 13
+    GAUGE = 14
+    SIGHT = 15
+    DECLARE = 16
+    IF_RANGE = 17
+    IF_SIGHT = 18
 
 
 class Command(IntEnum):
     """What the interpreter asks the world to do."""
 
-    RUN = 0
-    ROTATE = 1
+    RUN = 0  # straight until a bump
+    ROTATE = 1  # by `value`
     STOP = 2
+    ADVANCE = 3  # straight for `value` metres, or until a bump
+    SLIDE = 4  # along the surface for `value` metres, or, where that is negative, for -`value` seconds
+    GAUGE = 5  # write the clear run ahead, at most `value`, to notes[RANGE]
+    SIGHT = 6  # write whether face `number` is seen within +-`value` to memory[SEEN]
 
 
 class Contact(IntEnum):
@@ -56,24 +68,31 @@ class Contact(IntEnum):
 
 
 _SIDE = {"left": 1, "right": -1, "onward": 0, "either": 2}
-_KIND = {"wall": Contact.WALL, "block": Contact.BLOCK, "pusher": Contact.PUSHER}
+_KIND = {"none": Contact.NONE, "wall": Contact.WALL, "block": Contact.BLOCK, "pusher": Contact.PUSHER}
 
 # plain integers, which the compiler bakes into the machine code
 _RUN, _TURN, _DEPART, _MIRROR, _WANDER, _ADD, _SET, _IF_CONTACT, _IF_COUNTER, _IF_TIME, _JUMP, _HALT = (
-    int(op) for op in Op
+    int(op) for op in list(Op)[:12]
 )
-_COMMAND_RUN, _COMMAND_ROTATE, _COMMAND_STOP = (int(c) for c in Command)
+_ADVANCE, _SLIDE, _GAUGE, _SIGHT, _DECLARE, _IF_RANGE, _IF_SIGHT = (int(op) for op in list(Op)[12:])
+_COMMAND_RUN, _COMMAND_ROTATE, _COMMAND_STOP, _COMMAND_ADVANCE, _COMMAND_SLIDE, _COMMAND_GAUGE, _COMMAND_SIGHT = (
+    int(c) for c in Command
+)
 _ONWARD, _EITHER = 0, 2
 _TURN_STREAM, _DEPART_STREAM, _BEARING_STREAM = int(Purpose.TURN), int(Purpose.DEPART), int(Purpose.BEARING)
 _MAX_DEPARTURE = acts.MAX_DEPARTURE
 
-# a pusher's memory: next operation, number of rotations so far, then the counters
-PC, N_ROTATIONS, FIRST_COUNTER = 0, 1, 2
+# a pusher's memory: next operation, number of rotations so far, whether the last look saw its face, whether it holds
+# itself for lost, then the counters; and its notes: time at which the stage was entered, last range gauged, steps of
+# the reading
+PC, N_ROTATIONS, SEEN, DECLARED, FIRST_COUNTER = 0, 1, 2, 3, 4
+STAGE_SINCE, RANGE, RESOLUTION = 0, 1, 2
+NOTES = 3
 MEMORY = FIRST_COUNTER + acts.MAX_COUNTERS
 
 
-# One instruction. go: where to jump; number: a counter, a side, a kind of contact; amount: what to add or set a
-# counter to, or whether a jump enters another stage; value, spread: angle in rad, time, limit.
+# One instruction. go: where to jump; number: a counter, a side, a kind of contact, a face; amount: what to add or set a
+# counter to, or whether a jump enters another stage; value, spread: angle in rad, time, length, limit, resolution.
 INSTRUCTION = np.dtype(
     [("op", "i8"), ("go", "i8"), ("number", "i8"), ("amount", "i8"), ("value", "f8"), ("spread", "f8")]
 )
@@ -96,10 +115,14 @@ class Senses(NamedTuple):
 EXACT = Senses(0.0, 0.0, 0.0, 0.0)  # a pusher without faults
 
 
-def compile_routine(routine: acts.Routine) -> Program:
-    """Compile a checked routine to the table both worlds execute."""
+def compile_routine(routine: acts.Routine, surfaces: Sequence[str] = ()) -> Program:
+    """Compile a checked routine to the table both worlds execute.
+
+    Arguments:
+        routine: the routine. surfaces: names of the world's surfaces by number, for the faces it looks for.
+    """
     counters = {name: k for k, name in enumerate(routine.counters())}
-    stages = [_instructions(stage, counters) for stage in routine.stages]
+    stages = [_instructions(stage, counters, surfaces) for stage in routine.stages]
     begins = dict(zip((stage.name for stage in routine.stages), np.cumsum([0, *map(len, stages)]), strict=False))
     rows = [
         (i.op, begins[i.go] if i.go else 0, i.number, i.amount, i.value, i.spread) for stage in stages for i in stage
@@ -116,14 +139,14 @@ class _Instruction(NamedTuple):
     spread: float = 0.0
 
 
-def _instructions(stage: acts.Stage, counters: dict[str, int]) -> list[_Instruction]:
+def _instructions(stage: acts.Stage, counters: dict[str, int], surfaces: Sequence[str]) -> list[_Instruction]:
     """A stage's acts, and the way on after the last one; going round in a stage does not restart its clock."""
     following = stage.then or stage.name
     way_on = _Instruction(Op.JUMP, go=following, amount=int(following != stage.name))
-    return [*(_instruction(act, counters) for act in stage.acts), way_on]
+    return [*(_instruction(act, counters, surfaces) for act in stage.acts), way_on]
 
 
-def _instruction(act: acts.Act, counters: dict[str, int]) -> _Instruction:
+def _instruction(act: acts.Act, counters: dict[str, int], surfaces: Sequence[str]) -> _Instruction:
     match act:
         case acts.Turn():
             return _Instruction(Op.TURN, value=act.angle)
@@ -143,6 +166,20 @@ def _instruction(act: acts.Act, counters: dict[str, int]) -> _Instruction:
             return _Instruction(Op.IF_COUNTER, go=act.go, number=counters[act.counter], value=float(act.at_least))
         case acts.BranchTime():
             return _Instruction(Op.IF_TIME, go=act.go, value=act.after)
+        case acts.BranchRange():
+            return _Instruction(Op.IF_RANGE, go=act.go, value=act.below)
+        case acts.BranchSight():
+            return _Instruction(Op.IF_SIGHT, go=act.go, number=int(act.seen))
+        case acts.Advance():
+            return _Instruction(Op.ADVANCE, value=act.distance)
+        case acts.Slide():
+            return _Instruction(Op.SLIDE, value=act.length if act.length is not None else -(act.time or 0.0))
+        case acts.Gauge():
+            return _Instruction(Op.GAUGE, value=act.maximum, spread=act.resolution)
+        case acts.Sight():
+            return _Instruction(Op.SIGHT, value=act.half_angle, number=surfaces.index(act.face))
+        case acts.Declare():
+            return _Instruction(Op.DECLARE)
         case acts.Halt():
             return _Instruction(Op.HALT)
         case acts.Run():
@@ -150,7 +187,7 @@ def _instruction(act: acts.Act, counters: dict[str, int]) -> _Instruction:
 
 
 def scale_time(program: Program, unit_s: float) -> Program:
-    """The same program with its times in units of `unit_s` seconds."""
+    """The same program with its times in units of `unit_s` seconds; lengths stay in metres."""
     scaled = program.copy()
     scaled["value"][program["op"] == Op.IF_TIME] /= unit_s
     return scaled
@@ -179,25 +216,24 @@ def decide(
     senses: Senses,
     keys: NDArray[np.uint64],
     memory: IntArray,
-    stage_since: FloatArray,
+    notes: FloatArray,
     now: float,
     heading: float,
     contact: int,
     normal_angle: float,
-) -> tuple[int, float]:
+) -> tuple[int, float, int]:
     """Carry out acts until one needs the world.
 
     Arguments:
         program, senses: the compiled routine; the pusher's faults.
         keys: (n_purposes,) the pusher's random streams.
         memory: (MEMORY,) int64, the pusher's memory, changed in place.
-        stage_since: (1,) time at which the present stage was entered, changed in place.
+        notes: (NOTES,) float64, what else it knows, changed in place.
         now, heading: present time and heading.
         contact, normal_angle: kind of the last bump and the true direction of the surface's inward normal.
 
     Returns:
-        command: see `Command`.
-        rotation: angle to rotate by, with its error, in rad; 0 unless the command is ROTATE.
+        command, value, number: see `Command`. A rotation contains its error.
     """
     following = memory[PC]
     while True:
@@ -207,7 +243,7 @@ def decide(
         op = step.op
         if op == _RUN:
             memory[PC] = following
-            return _COMMAND_RUN, 0.0
+            return _COMMAND_RUN, 0.0, 0
         if op <= _WANDER:
             index = memory[N_ROTATIONS]
             memory[N_ROTATIONS] = index + 1
@@ -238,7 +274,7 @@ def decide(
             if senses.turn_sd > 0.0:
                 rotation += senses.turn_sd * normal(keys[_TURN_STREAM], index)
             memory[PC] = following
-            return _COMMAND_ROTATE, rotation
+            return _COMMAND_ROTATE, rotation, 0
         if op == _ADD:
             memory[FIRST_COUNTER + step.number] += step.amount
         elif op == _SET:
@@ -246,14 +282,28 @@ def decide(
         elif op == _JUMP:
             following = step.go
             if step.amount == 1:
-                stage_since[0] = now
+                notes[STAGE_SINCE] = now
         elif (
             (op == _IF_CONTACT and contact == step.number)
             or (op == _IF_COUNTER and memory[FIRST_COUNTER + step.number] >= step.value)
-            or (op == _IF_TIME and now - stage_since[0] >= step.value)
+            or (op == _IF_TIME and now - notes[STAGE_SINCE] >= step.value)
+            or (op == _IF_RANGE and notes[RANGE] < step.value)
+            or (op == _IF_SIGHT and memory[SEEN] == step.number)
         ):
             following = step.go
-            stage_since[0] = now
+            notes[STAGE_SINCE] = now
+        elif op == _DECLARE:
+            memory[DECLARED] = 1
+        elif op >= _ADVANCE and op <= _SIGHT:
+            memory[PC] = following
+            if op == _ADVANCE:
+                return _COMMAND_ADVANCE, step.value, 0
+            if op == _SLIDE:
+                return _COMMAND_SLIDE, step.value, 0
+            if op == _GAUGE:
+                notes[RESOLUTION] = step.spread
+                return _COMMAND_GAUGE, step.value, 0
+            return _COMMAND_SIGHT, step.value, step.number
         elif op == _HALT:
             memory[PC] = pc  # halted pushers stay at the halt
-            return _COMMAND_STOP, 0.0
+            return _COMMAND_STOP, 0.0, 0

@@ -17,7 +17,9 @@ from swarmpush.quantities import Quantity
 
 Angle = Annotated[float, Quantity("rad")]
 Duration = Annotated[float, Quantity("s")]
+Distance = Annotated[float, Quantity("m")]
 Whole = Annotated[int, Strict()]
+YesNo = Annotated[bool, Strict()]
 
 MAX_COUNTERS = 8
 MAX_DEPARTURE = math.radians(89.0)  # a pusher that leaves flatter than this would still rub the surface
@@ -32,6 +34,9 @@ class Device(StrEnum):
     BEARING = "bearing of the bump"
     BLOCK_TOLD = "telling the block from a wall"
     PUSHER_TOLD = "telling a pusher from a wall"
+    DISTANCE = "distance run"
+    RANGE = "range ahead"
+    SIGHT = "sight of a marked face"
     COUNTER = "counter"
     CLOCK = "clock"
     RANDOM = "random number source"
@@ -47,6 +52,30 @@ class Run(_Table):
     """Run straight until a bump is felt."""
 
     act: Literal["run"]
+
+
+class Advance(_Table):
+    """Run straight for a distance, or until a bump that comes sooner."""
+
+    act: Literal["advance"]
+    distance: Distance = Field(gt=0, le=1e3)
+
+
+class Slide(_Table):
+    """Slide along the touched surface, onward, for a length or a time, or until something else is met.
+
+    The heading stays; the speed along the surface is the part of the free speed that points along it.
+    """
+
+    act: Literal["slide"]
+    length: Distance | None = Field(default=None, gt=0, le=1e3)
+    time: Duration | None = Field(default=None, gt=0, le=1e6)
+
+    @model_validator(mode="after")
+    def _has_one_measure(self) -> Self:
+        if (self.length is None) == (self.time is None):
+            raise ValueError("give either length or time")
+        return self
 
 
 class Turn(_Table):
@@ -85,6 +114,30 @@ class Wander(_Table):
     )
 
 
+class Gauge(_Table):
+    """Measure how far it could run along its heading before it touches something."""
+
+    act: Literal["gauge"]
+    maximum: Distance = Field(gt=0, le=1e3, description="a longer range reads as this")
+    resolution: Distance = Field(default=0.0, ge=0, le=1e3, description="steps of the reading; 0: exact")
+
+
+class Sight(_Table):
+    """Look for a marked face along the heading; anything between that would stop the pusher hides it."""
+
+    act: Literal["sight"]
+    face: str = Field(
+        min_length=1, max_length=40, description="rear, front, near end, far end, ...: a name that plan prints"
+    )
+    half_angle: Angle = Field(default=0.0, ge=0, le=math.pi, description="of the cone looked into; 0: straight ahead")
+
+
+class Declare(_Table):
+    """Note that the pusher holds itself for lost: that it will not strike the rear face again."""
+
+    act: Literal["declare"]
+
+
 class Tally(_Table):
     """Add to a counter, or set it."""
 
@@ -105,7 +158,7 @@ class BranchContact(_Table):
 
     act: Literal["branch"]
     on: Literal["contact"]
-    kind: Literal["wall", "block", "pusher"]
+    kind: Literal["wall", "block", "pusher", "none"] = Field(description="none: the last advance ended in the open")
     go: str
 
 
@@ -128,14 +181,35 @@ class BranchTime(_Table):
     go: str
 
 
+class BranchRange(_Table):
+    """Go to a stage if the last gauged range was shorter than this."""
+
+    act: Literal["branch"]
+    on: Literal["range"]
+    below: Distance = Field(gt=0, le=1e3)
+    go: str
+
+
+class BranchSight(_Table):
+    """Go to a stage if the last look saw its face, or did not."""
+
+    act: Literal["branch"]
+    on: Literal["sight"]
+    seen: YesNo = True
+    go: str
+
+
 class Halt(_Table):
     """Stop for good."""
 
     act: Literal["halt"]
 
 
-Branch = Annotated[BranchContact | BranchCounter | BranchTime, Field(discriminator="on")]
-Act = Annotated[Run | Turn | Depart | Mirror | Wander | Tally | Branch | Halt, Field(discriminator="act")]
+Branch = Annotated[BranchContact | BranchCounter | BranchTime | BranchRange | BranchSight, Field(discriminator="on")]
+Act = Annotated[
+    Run | Advance | Slide | Turn | Depart | Mirror | Wander | Gauge | Sight | Declare | Tally | Branch | Halt,
+    Field(discriminator="act"),
+]
 
 
 class Stage(_Table):
@@ -155,6 +229,11 @@ class Routine(_Table):
         """Names of the counters in order of first use."""
         acts = [act for stage in self.stages for act in stage.acts]
         return tuple(dict.fromkeys(a.counter for a in acts if isinstance(a, Tally | BranchCounter)))
+
+    def faces(self) -> tuple[str, ...]:
+        """Names of the faces that the routine looks for, in order of first use."""
+        acts = [act for stage in self.stages for act in stage.acts]
+        return tuple(dict.fromkeys(act.face for act in acts if isinstance(act, Sight)))
 
     def kit(self) -> tuple[Device, ...]:
         """The hardware a pusher needs to carry out this routine, in the order of `Device`."""
@@ -178,13 +257,24 @@ class Routine(_Table):
         return self
 
 
-_BRANCHES = (BranchContact, BranchCounter, BranchTime)
+_BRANCHES = (BranchContact, BranchCounter, BranchTime, BranchRange, BranchSight)
+MOVES = (Run, Advance, Slide)
 
 
 def _devices(act: Act) -> tuple[Device, ...]:
     match act:
         case Run():
             return (Device.DRIVE, Device.BUMP)
+        case Advance():
+            return (Device.DRIVE, Device.BUMP, Device.DISTANCE)
+        case Slide(time=None):
+            return (Device.DRIVE, Device.DISTANCE)
+        case Slide():
+            return (Device.DRIVE, Device.CLOCK)
+        case Gauge() | BranchRange():
+            return (Device.RANGE,)
+        case Sight() | BranchSight():
+            return (Device.SIGHT,)
         case Turn():
             return (Device.STEERING,)
         case Depart(side="either"):
@@ -209,7 +299,7 @@ def _demand_a_run_in_every_loop(routine: Routine) -> None:
     after: dict[tuple[str, int], set[tuple[str, int]]] = {}
     for stage in routine.stages:
         for k, act in enumerate(stage.acts):
-            if isinstance(act, Run | Halt):
+            if isinstance(act, (*MOVES, Halt)):
                 continue
             following = (stage.name, k + 1) if k + 1 < len(stage.acts) else (stage.then or stage.name, 0)
             after[stage.name, k] = {following}
@@ -219,4 +309,6 @@ def _demand_a_run_in_every_loop(routine: Routine) -> None:
         TopologicalSorter(after).prepare()
     except CycleError as error:
         stages = dict.fromkeys(place[0] for place in error.args[1])
-        raise ValueError(f"stage {' -> '.join(map(repr, stages))} can go round for ever without a run") from None
+        raise ValueError(
+            f"stage {' -> '.join(map(repr, stages))} can go round for ever without a run, advance or slide"
+        ) from None

@@ -56,18 +56,30 @@ class About(_Table):
     note: str = Field(default="", max_length=2000)
 
 
-class Channel(_Table):
-    """A straight corridor with closed ends: x runs along it from 0 to length, y across it from 0 to width."""
+Point = tuple[Length, Length]
+Outline = Annotated[tuple[Point, ...], Field(min_length=3, max_length=200)]
 
-    length: Length = Field(ge=SMALLEST, le=1e3, description="between the ends")
-    width: Length = Field(ge=SMALLEST, le=1e3, description="between the side walls")
+
+class Channel(_Table):
+    """Straight walls: a corridor with closed ends, x along it from 0 to length and y across from 0 to width, or any
+    outline."""
+
+    length: Length = Field(ge=SMALLEST, le=1e3, description="between the ends; with an outline, its extent in x")
+    width: Length = Field(ge=SMALLEST, le=1e3, description="between the side walls; with an outline, its extent in y")
+    outline: Outline | None = Field(default=None, description="corners x, y in order; left out: the rectangle")
+    posts: tuple[Outline, ...] = Field(default=(), max_length=50, description="fixed obstacles, each a list of corners")
 
 
 class Block(_Table):
-    """The rectangular object to be moved in +x. Its rear face looks back to x = 0."""
+    """The convex object to be moved in +x. Its rear face looks back to x = 0."""
 
     length: Length = Field(ge=SMALLEST, le=1e3, description="along the channel")
     width: Length = Field(ge=SMALLEST, le=1e3, description="across the channel")
+    outline: Outline | None = Field(
+        default=None,
+        description="corners of a convex block in order, x from its rearmost edge, y from the middle of its width; "
+        "left out: the rectangle",
+    )
     mass: Mass = Field(ge=LIGHTEST, le=1e6)
     yaw_inertia: Inertia | None = Field(default=None, ge=1e-45, le=1e12, description="default: a uniform plate")
     rear_at: Length = Field(ge=0, description="x of the rear face at the start")

@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 
 import numpy as np
 from numpy.typing import NDArray
 
 from swarmpush.draws import Purpose, normal, stream_keys, uniform
+from swarmpush.geometry import free_region, is_plain
 from swarmpush.scenario import Scenario, Start
 
 MAX_TRIES = 1000  # per pusher; where the region is not full yet, some tens are needed
@@ -26,6 +28,11 @@ def _x_ranges(s: Scenario) -> list[tuple[float, float]]:
 def room_for_starts(s: Scenario) -> float:
     """Area open to the pushers' discs in the start region, m2."""
     r = s.pushers.radius
+    if not is_plain(s):
+        from shapely import box, union_all
+
+        stretches = union_all([box(low, 0.0, high, s.channel.width) for low, high in _x_ranges(s)])
+        return float(free_region(s).intersection(stretches).buffer(r).area)
     return sum((high - low + 2 * r) * s.channel.width for low, high in _x_ranges(s))
 
 
@@ -60,7 +67,7 @@ def _draw_centres(s: Scenario, keys: NDArray[np.uint64], first: int, apart: bool
     """Centres drawn one by one, or None when one found no place; `first` is where in the streams to begin."""
     ranges = _x_ranges(s)
     bounds = np.concatenate([[0.0], np.cumsum([high - low for low, high in ranges])])
-    r = s.pushers.radius
+    r, is_free = s.pushers.radius, _free_test(s)
     centres = np.empty((len(keys), 2))
     for i, key in enumerate(keys):
         for attempt in range(first, first + MAX_TRIES):
@@ -68,12 +75,23 @@ def _draw_centres(s: Scenario, keys: NDArray[np.uint64], first: int, apart: bool
             part = min(int(np.searchsorted(bounds, along, side="right")) - 1, len(ranges) - 1)
             x = ranges[part][0] + along - bounds[part]
             y = r + uniform(key, 2 * attempt + 4) * (s.channel.width - 2 * r)
-            if not apart or not (np.hypot(centres[:i, 0] - x, centres[:i, 1] - y) < 2 * r).any():
+            if is_free(x, y) and not (apart and (np.hypot(centres[:i, 0] - x, centres[:i, 1] - y) < 2 * r).any()):
                 centres[i] = x, y
                 break
         else:
             return None
     return centres
+
+
+def _free_test(s: Scenario) -> Callable[[float, float], bool]:
+    """Whether a centre is clear of walls, posts and block; in a plain corridor the ranges of x and y see to that."""
+    if is_plain(s):
+        return lambda x, y: True
+    from shapely import contains_xy, prepare
+
+    region = free_region(s)
+    prepare(region)
+    return lambda x, y: bool(contains_xy(region, x, y))
 
 
 def _draw_heading(start: Start, key: np.uint64) -> float:

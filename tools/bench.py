@@ -190,7 +190,7 @@ def point_case(rounds: int = 25) -> Iterator[Result]:
     import swarmpush
     from swarmpush.draws import stream_keys
     from swarmpush.kinematics.bounce import settle_many
-    from swarmpush.kinematics.boundary import corridor
+    from swarmpush.kinematics.boundary import boundary_of
     from swarmpush.kinematics.laps import BUDGET, N_STARTS
     from swarmpush.program import EXACT, MEMORY, compile_routine
     from swarmpush.starts import draw_starts
@@ -198,12 +198,12 @@ def point_case(rounds: int = 25) -> Iterator[Result]:
     s = swarmpush.load(swarmpush.demo("service_passage"))
     starts = draw_starts(s.replace(pushers={"count": N_STARTS}), 0, apart=False)
     fates, states = np.zeros((N_STARTS, 3), dtype=np.int64), np.zeros((N_STARTS, 2))
-    rig = corridor(s), compile_routine(s.routine), EXACT, stream_keys(0, 1)[0]
+    rig = boundary_of(s), compile_routine(s.routine), EXACT, stream_keys(0, 1)[0]
     rates = []
     for _ in range(rounds + 1):
         memories = np.zeros((N_STARTS, MEMORY), dtype=np.int64)
         start = time.perf_counter()
-        n_bumps = settle_many(*rig, starts, BUDGET, fates, states, memories)
+        n_bumps = settle_many(*rig, s.pushers.free_speed, starts, BUDGET, fates, states, memories)
         rates.append(n_bumps / (time.perf_counter() - start))
     rates = rates[1:]  # the first one compiles
     best, middle = max(rates), statistics.median(rates)

@@ -13,6 +13,7 @@ import numpy as np
 import pandas as pd
 
 from swarmpush.kinematics.boundary import REAR
+from swarmpush.kinematics.laps import IN_THE_OPEN
 
 LAP_COLUMNS = {"pusher": np.int64, "t_start_s": np.float64, "t_end_s": np.float64, "n_strikes": np.int64}
 
@@ -112,6 +113,7 @@ def _one_after_another(laps: pd.DataFrame) -> pd.DataFrame:
 
 def _as_bumped(cycle: tuple[str, ...]) -> tuple[str, ...]:
     """A planned lap as `find_bumps` would see it: bumps repeated at once taken as one, and gone round once only."""
+    cycle = tuple(name for name in cycle if name != IN_THE_OPEN)
     # of alike neighbours the last is kept; the end of the lap meets its beginning
     merged = tuple(name for k, name in enumerate(cycle) if name != cycle[(k + 1) % len(cycle)]) or cycle[:1]
     for n in range(1, len(merged) + 1):

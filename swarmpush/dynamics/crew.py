@@ -9,10 +9,10 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from swarmpush.compiled import inlined
+from swarmpush.compiled import borrowed, inlined
 from swarmpush.draws import Purpose, normal, uniform
 from swarmpush.dynamics.host import MOTION, ORDERS, Host
-from swarmpush.program import MEMORY, Command, Program, Senses, decide
+from swarmpush.program import MEMORY, NOTES, Command, Program, Senses, decide
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -102,12 +102,12 @@ PUSHER_STATE = np.dtype(
 class Crew(NamedTuple):
     """State of the pushers, changed in place.
 
-    pushers: (n,) records of `PUSHER_STATE`. memory: (n, MEMORY) and stage_since: (n, 1), see `program.decide`.
+    pushers: (n,) records of `PUSHER_STATE`. memory: (n, MEMORY) and notes: (n, NOTES), see `program.decide`.
     """
 
     pushers: NDArray[np.void]
     memory: IntArray
-    stage_since: FloatArray
+    notes: FloatArray
 
 
 def new_crew(headings: FloatArray, drag: FloatArray, side_drag: FloatArray) -> Crew:
@@ -120,7 +120,7 @@ def new_crew(headings: FloatArray, drag: FloatArray, side_drag: FloatArray) -> C
     pushers["percept_normal"] = headings + math.pi
     pushers["until"] = pushers["next_false"] = -1.0
     pushers["touched_at"] = -9
-    return Crew(pushers, np.zeros((n, MEMORY), dtype=np.int64), np.zeros((n, 1)))
+    return Crew(pushers, np.zeros((n, MEMORY), dtype=np.int64), np.zeros((n, NOTES)))
 
 
 @inlined
@@ -130,8 +130,8 @@ def _carry_out(
     """Let the routine decide until the pusher runs, turns for some time, or halts."""
     p = crew.pushers[i]
     while True:
-        command, rotation = decide(
-            program, senses, keys[i], crew.memory[i], crew.stage_since[i], now,
+        command, rotation, _ = decide(
+            program, senses, keys[i], crew.memory[i], crew.notes[i], now,
             p.heading, p.percept_kind, p.percept_normal,
         )  # fmt: skip
         if command == _ROTATE:
@@ -154,7 +154,7 @@ def drive(
     """Before the engine's step: reactions, turning and heading noise; then the forces on pushers and block."""
     now = step * rig.dt
     noisy = rig.diffusion > 0.0 and step % rig.noise_steps == 0
-    motion, orders, pushers = host.motion, host.orders, crew.pushers
+    motion, orders, pushers = borrowed(host.motion), borrowed(host.orders), borrowed(crew.pushers)
     for i in range(len(pushers)):
         p = pushers[i]
         spin, thrust = 0.0, rig.stall
@@ -203,7 +203,8 @@ def set_floor(host: Host, rig: Rig) -> None:
     F : T c^-2 = v : w with c = T_max/F_max while sliding. At rest the loads of the last step are brought back on to
     the ellipse if they left it.
     """
-    vx, vy, spin = host.motion[3], host.motion[4], host.motion[5]
+    motion, floor_cap, floor_load = borrowed(host.motion), borrowed(host.floor_cap), borrowed(host.floor_load)
+    vx, vy, spin = motion[3], motion[4], motion[5]
     slide, swivel = math.hypot(vx, vy), rig.floor_arm * abs(spin)
     total = math.hypot(slide, swivel)
     if total > _REST:
@@ -212,20 +213,21 @@ def set_floor(host: Host, rig: Rig) -> None:
     else:
         cap = rig.floor_static
         force, torque = cap, cap * rig.floor_arm
-        pull = host.floor_load[0]
-        twist = 0.0 if rig.yaw_is_held else host.floor_load[1]  # a joint on a body that cannot turn gives no number
+        pull = floor_load[0]
+        twist = 0.0 if rig.yaw_is_held else floor_load[1]  # a joint on a body that cannot turn gives no number
         load = math.hypot(pull / (cap * rig.dt), twist / (cap * rig.floor_arm * rig.dt)) if cap > 0.0 else 0.0
         if load > 1.0:
             force, torque = pull / (rig.dt * load), twist / (rig.dt * load)
-    host.floor_cap[0], host.floor_cap[1] = force, torque
+    floor_cap[0], floor_cap[1] = force, torque
 
 
 @inlined
 def feel(rig: Rig, crew: Crew, keys: NDArray[np.uint64], step: int) -> None:
     """After the contacts are read: which pushers have felt a bump."""
     now = (step + 1) * rig.dt
-    for i in range(len(crew.pushers)):
-        p = crew.pushers[i]
+    pushers = borrowed(crew.pushers)
+    for i in range(len(pushers)):
+        p = pushers[i]
         if p.mode != _RUN:
             continue
         if rig.false_bumps > 0.0:

@@ -15,7 +15,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from swarmpush.compiled import inlined
+from swarmpush.compiled import borrowed, inlined
 from swarmpush.dynamics.crew import Crew, Rig
 from swarmpush.dynamics.host import CONTACT_FLOATS, CONTACT_INTS, MOTION, Host
 
@@ -159,15 +159,21 @@ def _slot(slots: NDArray[np.void], n_open: IntArray, owner: int, partner: int) -
 @inlined
 def close_visits(ledger: Ledger, step: int) -> None:
     """Move visits that have ended before `step` to the log."""
-    for owner in range(len(ledger.n_open)):
-        if ledger.n_open[owner] == 0:
+    slots, n_open, log, n_log = (
+        borrowed(ledger.slots),
+        borrowed(ledger.n_open),
+        borrowed(ledger.log),
+        borrowed(ledger.n_log),
+    )
+    for owner in range(len(n_open)):
+        if n_open[owner] == 0:
             continue
         for k in range(SLOTS):
-            visit = ledger.slots[owner, k]
+            visit = slots[owner, k]
             if visit.partner >= 0 and visit.last_step < step - GAP_STEPS:
-                ledger.log[ledger.n_log[0]] = visit
-                ledger.n_log[0] += 1
-                ledger.n_open[owner] -= 1
+                log[n_log[0]] = visit
+                n_log[0] += 1
+                n_open[owner] -= 1
                 visit.partner = -1
 
 
@@ -198,12 +204,11 @@ def _feel(
 def enter_contacts(host: Host, rig: Rig, crew: Crew, ledger: Ledger, n_pairs: int, step: int) -> None:
     """Enter the contacts of this step: visits, bumpers, and the impulses on the block."""
     n = len(crew.pushers)
-    motion, totals, dt = host.motion, ledger.totals[0], rig.dt
-    # reached once and not in every turn of the loop: each reach into a tuple of arrays counts references
-    numbers, whole, pushers = host.contact_floats, host.contact_ints, crew.pushers
-    ids, entities, slots, n_open = ledger.ids, ledger.entities, ledger.slots, ledger.n_open
-    on_block, touching = ledger.on_block, ledger.touching
-    inverse_mass, inverse_step_mass = rig.inverse_mass, rig.inverse_step_mass
+    motion, totals, dt = borrowed(host.motion), borrowed(ledger.totals)[0], rig.dt
+    numbers, whole, pushers = borrowed(host.contact_floats), borrowed(host.contact_ints), borrowed(crew.pushers)
+    ids, entities, slots = borrowed(ledger.ids), borrowed(ledger.entities), borrowed(ledger.slots)
+    n_open, on_block, touching = borrowed(ledger.n_open), borrowed(ledger.on_block), borrowed(ledger.touching)
+    inverse_mass, inverse_step_mass = borrowed(rig.inverse_mass), borrowed(rig.inverse_step_mass)
     totals.wall_bottom = totals.wall_top = 0.0
     leaning = 0.0
     for p in range(n_pairs):
@@ -294,7 +299,7 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ledger: Ledger, n_pairs: in
 @inlined
 def _add_up(ledger: Ledger, n: int) -> None:
     """Sum up the impulses on the block and who touches what, and clear them for the next step."""
-    totals, on_block, touching = ledger.totals[0], ledger.on_block, ledger.touching
+    totals, on_block, touching = borrowed(ledger.totals)[0], borrowed(ledger.on_block), borrowed(ledger.touching)
     for owner in range(1, n + 1):
         if touching[owner] != 0:
             if touching[owner] & _TOUCHES_WALL:
@@ -327,7 +332,7 @@ def balance_block(host: Host, rig: Rig, ledger: Ledger) -> None:
     -(M' - M) dv - g v dt, and what is then left of M dv after the contacts' impulses must come from the floor: zero
     without one, else as large as the floor's joint says by itself.
     """
-    totals, motion, dt = ledger.totals[0], host.motion, rig.dt
+    totals, motion, dt = borrowed(ledger.totals)[0], borrowed(host.motion), rig.dt
     old_vx, old_vy = totals.old_vx, totals.old_vy
     dvx, dvy = motion[3] - old_vx, motion[4] - old_vy
     extra = rig.block_step_mass - rig.block_mass
@@ -362,6 +367,6 @@ def balance_block(host: Host, rig: Rig, ledger: Ledger) -> None:
 @inlined
 def remember_block(host: Host, ledger: Ledger) -> None:
     """Keep the block's state for the next balance."""
-    totals = ledger.totals[0]
-    totals.old_x, totals.old_y = host.motion[0], host.motion[1]
-    totals.old_vx, totals.old_vy = host.motion[3], host.motion[4]
+    totals, motion = borrowed(ledger.totals)[0], borrowed(host.motion)
+    totals.old_x, totals.old_y = motion[0], motion[1]
+    totals.old_vx, totals.old_vy = motion[3], motion[4]

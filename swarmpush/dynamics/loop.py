@@ -13,7 +13,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from swarmpush.compiled import compiled, inlined
+from swarmpush.compiled import borrowed, compiled, inlined
 from swarmpush.dynamics.crew import Crew, Rig, drive, feel, set_floor
 from swarmpush.dynamics.host import MOTION, Host, HostSpace, read_state, take_step
 from swarmpush.dynamics.ledger import (
@@ -74,11 +74,11 @@ class Task(NamedTuple):
 def _before(host: Host, task: Task, step: int, final_step: int) -> int:
     """Books of the last step, sample, guards, then orders for this step; the state must have been read."""
     rig, crew, ledger = task.rig, task.crew, task.ledger
-    motion, totals = host.motion, ledger.totals[0]
+    motion, totals = borrowed(host.motion), borrowed(ledger.totals)[0]
     if step > 0:
         balance_block(host, rig, ledger)
     remember_block(host, ledger)
-    pushers, n = crew.pushers, len(crew.pushers)
+    pushers, n = borrowed(crew.pushers), len(crew.pushers)
     ahead_of = motion[0] + rig.half_length
     ending = _NOT_YET
     for i in range(n):
@@ -100,7 +100,7 @@ def _before(host: Host, task: Task, step: int, final_step: int) -> int:
     elif ending == _NOT_YET and step >= final_step:
         ending = _TIME
     if step % task.sample_steps == 0:
-        row, block_rows, pusher_rows = step // task.sample_steps, task.path.block, task.path.pushers
+        row, block_rows, pusher_rows = step // task.sample_steps, borrowed(task.path.block), borrowed(task.path.pushers)
         for c in range(4):
             block_rows[row, c] = motion[c]
         block_rows[row, 4] = totals.sample_leaning / task.sample_steps

@@ -16,7 +16,10 @@ from swarmpush.dynamics.host import HostSpace, host_disagreement
 from swarmpush.dynamics.loop import Ending, Task, advance, advance_plainly
 from swarmpush.dynamics.run import Run
 from swarmpush.dynamics.steps import StepSettings, choose_step, engine_units
+from swarmpush.geometry import is_plain
 from swarmpush.kinematics.laps import find_laps
+from swarmpush.problems import Problem, ScenarioError
+from swarmpush.routine import Advance, Gauge, Sight, Slide
 from swarmpush.scenario import Scenario
 
 Progress = Callable[[float], None]
@@ -62,6 +65,9 @@ def simulate(
         cycles: surfaces of the laps to recognise; those of the plan unless given.
         progress: called now and then with the share of the time limit that is done, 0 to 1.
 
+    Raises:
+        ScenarioError: for outlines, posts and acts that only the point world knows.
+
     Returns:
         A `Run`; the same scenario, seed and versions give the same tables, bit by bit.
 
@@ -70,6 +76,7 @@ def simulate(
     >>> swarmpush.simulate(s, seed=7).ended
     'time'
     """
+    _demand_what_it_knows(s)
     seed = s.trial.seed if seed is None else seed
     steps = steps or choose_step(s)
     if cycles is None:
@@ -87,6 +94,19 @@ def simulate(
             progress(step / final_step)
     log.append(tables.open_visits(task.ledger))
     return _record(s, seed, steps, cycles, task, log, step, ENDINGS[ending], start_x)
+
+
+def _demand_what_it_knows(s: Scenario) -> None:
+    """The body world knows straight corridors, rectangular blocks, and routines of runs and turns."""
+    acts = {type(act) for stage in s.routine.stages for act in stage.acts}
+    unknown = sorted(act.__name__.lower() for act in acts & {Advance, Slide, Gauge, Sight})
+    problems = [Problem("routine", f"the body world does not know the act '{name}' yet; use plan") for name in unknown]
+    if not is_plain(s):
+        problems.append(
+            Problem("channel", "the body world knows plain corridors and rectangular blocks only; use plan")
+        )
+    if problems:
+        raise ScenarioError(s.about.name, problems)
 
 
 def _fetch_log(task: Task) -> NDArray[np.void]:

@@ -16,73 +16,16 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from swarmpush.compiled import compiled, inlined
+from swarmpush.compiled import borrowed, compiled
 from swarmpush.draws import Purpose, normal
-from swarmpush.kinematics.boundary import FRONT_SURFACE, REAR_SURFACE, Boundary
-from swarmpush.program import MEMORY, PC, Command, Op, Program, Senses, decide, wrap_angle
+from swarmpush.kinematics.boundary import Boundary
+from swarmpush.kinematics.legs import BEHIND_TOLERANCE, SLIDE, STOP, next_leg
+from swarmpush.program import NOTES, PC, Program, Senses, wrap_angle
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
-_ROTATE, _STOP = int(Command.ROTATE), int(Command.STOP)
 _HEADING_STREAM = int(Purpose.HEADING)
-_REAR, _FRONT = REAR_SURFACE, FRONT_SURFACE
-_END_TOLERANCE = 1e-12  # of the scale: closes the seam between a segment and the arc at its end
-_BEHIND_TOLERANCE = 1e-9  # of the scale: a pusher further behind a surface than rounding explains is not stopped by it
-
-
-class Hit(NamedTuple):
-    """The next bump: run length, surface number (-1: none), direction of the inward normal there."""
-
-    run: float
-    surface: int
-    normal_angle: float
-
-
-@inlined
-def next_hit(boundary: Boundary, shift: float, x: float, y: float, ux: float, uy: float) -> Hit:
-    """First surface met from (x, y) along the unit vector (ux, uy), the block moved by `shift` in x."""
-    segments, arcs, moving = boundary.segments, boundary.arcs, boundary.moving
-    slack = _END_TOLERANCE * boundary.scale
-    behind = -_BEHIND_TOLERANCE * boundary.scale
-    best, surface, normal_angle = np.inf, -1, 0.0
-    n = len(segments)
-    for k in range(n):
-        nx, ny = segments[k, 5], segments[k, 6]
-        approach = -(ux * nx + uy * ny)
-        if approach <= 0.0:
-            continue
-        px = x - segments[k, 0] - shift * moving[k]
-        py = y - segments[k, 1]
-        distance = px * nx + py * ny
-        if distance < behind or distance >= best * approach:
-            continue
-        run = max(distance / approach, 0.0)
-        along = (px + run * ux) * segments[k, 2] + (py + run * uy) * segments[k, 3]
-        if -slack <= along <= segments[k, 4] + slack:
-            best, surface, normal_angle = run, k, segments[k, 7]
-    corner = -1
-    for k in range(len(arcs)):
-        qx = x - arcs[k, 0] - shift * moving[n + k]
-        qy = y - arcs[k, 1]
-        approach = -(qx * ux + qy * uy)
-        radius = arcs[k, 2]
-        if approach <= 0.0 or approach - radius >= best:
-            continue
-        outside = qx * qx + qy * qy - radius * radius
-        discriminant = approach * approach - outside
-        if discriminant < 0.0:
-            continue
-        # the smaller root, written so that nothing cancels for a start close to the circle
-        run = max(outside / (approach + math.sqrt(discriminant)), 0.0)
-        if run < best:
-            best, corner = run, k
-    if corner >= 0:
-        surface = n + corner
-        hx = x - arcs[corner, 0] - shift * moving[surface] + best * ux
-        hy = y - arcs[corner, 1] + best * uy
-        normal_angle = math.atan2(hy, hx)
-    return Hit(best, surface, normal_angle)
 
 
 @compiled
@@ -97,52 +40,76 @@ def trace(
     nudge: float,
     hits: FloatArray,
     surfaces: IntArray,
+    memory: IntArray,
+    notes: FloatArray,
 ) -> int:
-    """Follow one pusher from bump to bump and write each bump down.
+    """Follow one pusher from leg to leg and write each leg's end down.
 
     Arguments:
         boundary, program, senses: the region, the compiled routine, the pusher's faults.
-        diffusion: s.d. of the heading after 1 s of running, rad/sqrt(s); applied at the end of each run.
+        diffusion: s.d. of the heading after 1 s of running, rad/sqrt(s); applied at the end of each leg.
         speed: m/s.
         keys: (n_purposes,) random streams.
         start: (3,) x, y in m and heading in rad.
         nudge: how far the block gives way at each bump on its rear face, m.
-        hits: (n, 5) filled with x, y, arriving heading, departing heading, run length.
-        surfaces: (n,) filled with surface numbers.
+        hits: (n, 6) filled with x, y, arriving heading, departing heading, length and duration of the leg.
+        surfaces: (n,) filled with surface numbers; -1 for a leg that ended without a bump.
+        memory, notes: (MEMORY,), (NOTES,) what the pusher remembers, changed in place.
 
     Returns:
-        Number of bumps written: less than n when the pusher halts or no surface is met.
+        Number of legs written: less than n when the pusher halts or no surface is met.
     """
-    memory = np.zeros(MEMORY, dtype=np.int64)
-    clock = np.zeros(1)
+    segments, arcs, moving = borrowed(boundary.segments), borrowed(boundary.arcs), borrowed(boundary.moving)
+    kinds, program, keys = borrowed(boundary.kinds), borrowed(program), borrowed(keys)
+    memory, notes = borrowed(memory), borrowed(notes)
     x, y, heading = start[0], start[1], start[2]
     now, shift = 0.0, 0.0
     contact, normal_angle = 0, heading + math.pi
     for k in range(len(surfaces)):
-        while True:
-            command, rotation = decide(program, senses, keys, memory, clock, now, heading, contact, normal_angle)
-            if command != _ROTATE:
-                break
-            heading += rotation
+        leg = next_leg(
+            segments,
+            arcs,
+            moving,
+            boundary.scale,
+            shift,
+            speed,
+            program,
+            senses,
+            keys,
+            memory,
+            notes,
+            now,
+            x,
+            y,
+            heading,
+            contact,
+            normal_angle,
+        )
+        heading = leg.heading
         if k > 0:
             hits[k - 1, 3] = heading
-        if command == _STOP:
+        if leg.command == STOP:
             return k
-        ux, uy = math.cos(heading), math.sin(heading)
-        hit = next_hit(boundary, shift, x, y, ux, uy)
-        if hit.surface < 0:
-            return k
-        x += hit.run * ux
-        y += hit.run * uy
-        now += hit.run / speed
+        x += leg.run * leg.ux
+        y += leg.run * leg.uy
+        now += leg.time
         if diffusion > 0.0:
-            heading += diffusion * math.sqrt(hit.run / speed) * normal(keys[_HEADING_STREAM], k)
-        contact = boundary.kinds[hit.surface]
-        normal_angle = hit.normal_angle
-        hits[k, 0], hits[k, 1], hits[k, 2], hits[k, 3], hits[k, 4] = x, y, heading, heading, hit.run
-        surfaces[k] = hit.surface
-        if hit.surface == REAR_SURFACE:
-            shift += nudge
+            heading += diffusion * math.sqrt(leg.time) * normal(keys[_HEADING_STREAM], k)
+        hits[k, 0], hits[k, 1], hits[k, 2], hits[k, 3], hits[k, 4], hits[k, 5] = (
+            x,
+            y,
+            heading,
+            heading,
+            leg.run,
+            leg.time,
+        )
+        surfaces[k] = leg.surface
+        if leg.surface >= 0:
+            contact, normal_angle = kinds[leg.surface], leg.normal_angle
+            if leg.surface == boundary.rear:
+                shift += nudge
+        elif leg.command != SLIDE:
+            contact = 0
     return len(surfaces)
 
 
@@ -178,14 +145,14 @@ class Settled(NamedTuple):
     """Where a start ended up.
 
     fate: see `Fate`. period: bumps on the rear face per lap (0 unless locked). signature: a number that stands
-    for the sequence of surfaces and acts of the lap. y, heading: of the last arrival at the rear face.
-    n_bumps: bumps followed.
+    for the sequence of surfaces and acts of the lap. along, heading: of the last arrival at the rear face, `along`
+    measured from the beginning of its segment. n_bumps: legs followed.
     """
 
     fate: int
     period: int
     signature: int
-    y: float
+    along: float
     heading: float
     n_bumps: int
 
@@ -196,62 +163,85 @@ def settle(
     program: Program,
     senses: Senses,
     keys: NDArray[np.uint64],
+    speed: float,
     x: float,
     y: float,
     heading: float,
     memory: IntArray,
+    notes: FloatArray,
     contact: int,
     normal_angle: float,
     budget: int,
 ) -> Settled:
-    """Follow a pusher until it repeats a lap, halts, or the budget of bumps is spent; the block stands still.
+    """Follow a pusher until it repeats a lap, halts, or the budget of legs is spent; the block stands still.
 
     Arguments:
-        x, y, heading: present state (m, rad).
-        memory: (MEMORY,) the pusher's memory, changed in place; on a lock it is that at the last arrival at the
-            rear face.
+        speed: m/s. x, y, heading: present state (m, rad).
+        memory, notes: (MEMORY,), (NOTES,) what the pusher remembers, changed in place; on a lock it is that at the last
+            arrival at the rear face.
         contact, normal_angle: the bump that the routine is to react to first (0: none).
-        budget: largest number of bumps.
+        budget: largest number of legs.
     """
-    clock = np.zeros(1)
     ring_signature = np.zeros(2 * MAX_PERIOD, dtype=np.int64)
-    ring_y = np.zeros(2 * MAX_PERIOD)
+    ring_along = np.zeros(2 * MAX_PERIOD)
     ring_heading = np.zeros(2 * MAX_PERIOD)
     ring_way = np.zeros(2 * MAX_PERIOD)
-    way, shortest = 0.0, SHORTEST_LAP * boundary.scale
+    now, way, shortest = 0.0, 0.0, SHORTEST_LAP * boundary.scale
     n_rear, last_rear, n_short = 0, -1, 0
-    signature = 0
-    front_x = boundary.segments[_FRONT, 0]
+    signature, along = 0, 0.0
+    segments, arcs, moving = borrowed(boundary.segments), borrowed(boundary.arcs), borrowed(boundary.moving)
+    kinds, program, keys = borrowed(boundary.kinds), borrowed(program), borrowed(keys)
+    memory, notes = borrowed(memory), borrowed(notes)
+    rear = boundary.rear
+    rear_x, rear_y, rear_tx, rear_ty = segments[rear, 0], segments[rear, 1], segments[rear, 2], segments[rear, 3]
     tolerance = _LOCK_TOLERANCE * boundary.scale
     for k in range(budget):
-        while True:
-            command, rotation = decide(program, senses, keys, memory, clock, float(k), heading, contact, normal_angle)
-            if command != _ROTATE:
-                break
-            heading += rotation
-        if command == _STOP:
-            return Settled(_HALTED, 0, 0, y, heading, k)
-        ux, uy = math.cos(heading), math.sin(heading)
-        hit = next_hit(boundary, 0.0, x, y, ux, uy)
-        if hit.surface < 0:
-            return Settled(_UNDECIDED, 0, 0, y, heading, k)
-        x += hit.run * ux
-        y += hit.run * uy
-        contact, normal_angle = boundary.kinds[hit.surface], hit.normal_angle
-        signature = (signature * _HASH + hit.surface * 64 + memory[PC]) & 0x3FFFFFFFFFFFFF
-        way += hit.run
-        if 2 * k > budget and hit.run < _BEHIND_TOLERANCE * boundary.scale:
+        leg = next_leg(
+            segments,
+            arcs,
+            moving,
+            boundary.scale,
+            0.0,
+            speed,
+            program,
+            senses,
+            keys,
+            memory,
+            notes,
+            now,
+            x,
+            y,
+            heading,
+            contact,
+            normal_angle,
+        )
+        heading = leg.heading
+        if leg.command == STOP:
+            # what halts has stopped for good; a run into nothing can only be a hole in the boundary
+            return Settled(_HALTED if leg.run == 0.0 else _UNDECIDED, 0, 0, along, heading, k)
+        x += leg.run * leg.ux
+        y += leg.run * leg.uy
+        now += leg.time
+        way += leg.run
+        signature = (signature * _HASH + (leg.surface + 1) * 64 + memory[PC]) & 0x3FFFFFFFFFFFFF
+        if 2 * k > budget and leg.run < BEHIND_TOLERANCE * boundary.scale:
             n_short += 1
-        if hit.surface == _REAR:
+        if leg.surface < 0:
+            if leg.command != SLIDE:
+                contact = 0
+            continue
+        contact, normal_angle = kinds[leg.surface], leg.normal_angle
+        if leg.surface == rear:
+            along = (x - rear_x) * rear_tx + (y - rear_y) * rear_ty
             place = n_rear % (2 * MAX_PERIOD)
-            ring_signature[place], ring_y[place], ring_heading[place] = signature, y, heading
+            ring_signature[place], ring_along[place], ring_heading[place] = signature, along, heading
             ring_way[place] = way
             n_rear += 1
             last_rear = k
             signature = 0
             for period in range(1, min(MAX_PERIOD, n_rear // 2) + 1):
                 before = (place - period) % (2 * MAX_PERIOD)
-                gap = abs(y - ring_y[before])
+                gap = abs(along - ring_along[before])
                 gap = max(gap, boundary.scale * abs(wrap_angle(heading - ring_heading[before])))
                 if gap >= 100.0 * tolerance or way - ring_way[before] < shortest:
                     continue
@@ -261,19 +251,19 @@ def settle(
                     alike &= mine == ring_signature[(place - j - period) % (2 * MAX_PERIOD)]
                     total = (total + mine * mine) & 0x3FFFFFFFFFFFFF  # the same wherever in the lap one starts
                 if alike and gap < tolerance:
-                    return Settled(_LOCKED, period, total, y, heading, k + 1)
+                    return Settled(_LOCKED, period, total, along, heading, k + 1)
                 if alike:
                     break  # about to close; an alternating lap passes the test at twice its period first
     fate = _UNDECIDED
     if 4 * n_short > budget:
         fate = _STUCK
-    elif x >= front_x:
+    elif x >= boundary.ahead_x:
         fate = _AHEAD
     elif n_rear == 0:
         fate = _NEVER
     elif 2 * last_rear < budget:
         fate = _LEAVES
-    return Settled(fate, 0, 0, y, heading, budget)
+    return Settled(fate, 0, 0, along, heading, budget)
 
 
 @compiled
@@ -282,6 +272,7 @@ def settle_many(
     program: Program,
     senses: Senses,
     keys: NDArray[np.uint64],
+    speed: float,
     starts: FloatArray,
     budget: int,
     fates: IntArray,
@@ -294,42 +285,42 @@ def settle_many(
         keys: (n_purposes,) the streams of the first start; start i uses them shifted by i.
         starts: (n, 3) x, y in m, heading in rad.
         fates: (n, 3) filled with fate, period, signature.
-        states: (n, 2) filled with y and heading of the last arrival at the rear face.
+        states: (n, 2) filled with place along the rear face and heading of the last arrival there.
         memories: (n, MEMORY) filled with the pushers' memories.
 
     Returns:
         Total number of bumps followed.
     """
-    total = 0
+    total, notes = 0, np.zeros(NOTES)
     for i in range(len(starts)):
         heading = starts[i, 2]
+        notes[:] = 0.0
         end = settle(
-            boundary, program, senses, keys + np.uint64(i) * np.uint64(0xD1342543DE82EF95),
-            starts[i, 0], starts[i, 1], heading, memories[i], 0, heading + math.pi, budget,
+            boundary, program, senses, keys + np.uint64(i) * np.uint64(0xD1342543DE82EF95), speed,
+            starts[i, 0], starts[i, 1], heading, memories[i], notes, 0, heading + math.pi, budget,
         )  # fmt: skip
         fates[i, 0], fates[i, 1], fates[i, 2] = end.fate, end.period, end.signature
-        states[i, 0], states[i, 1] = end.y, end.heading
+        states[i, 0], states[i, 1] = end.along, end.heading
         total += end.n_bumps
     return total
 
 
-_TURN, _MIRROR = int(Op.TURN), int(Op.MIRROR)
-
-
 class LapTrace(NamedTuple):
-    """One lap, bump by bump, with the derivative of its return map.
+    """One lap, leg by leg, with the derivative of its return map.
 
-    n_bumps: bumps in the lap (0: the lap broke). y, heading: of the arrival at the rear face that ends it.
-    yy, yh, hy, hh: derivatives of the final (y, heading) with respect to the first.
+    n_bumps: legs in the lap (0: the lap broke). along, heading: of the arrival at the rear face that ends it.
+    aa, ah, ha, hh: derivatives of the final (along, heading) with respect to the first. length, time: of the lap.
     """
 
     n_bumps: int
-    y: float
+    along: float
     heading: float
-    yy: float
-    yh: float
-    hy: float
+    aa: float
+    ah: float
+    ha: float
     hh: float
+    length: float
+    time: float
 
 
 @compiled
@@ -338,69 +329,105 @@ def trace_lap(
     program: Program,
     senses: Senses,
     keys: NDArray[np.uint64],
-    y: float,
+    speed: float,
+    along: float,
     heading: float,
     memory: IntArray,
+    notes: FloatArray,
     period: int,
     hits: FloatArray,
     surfaces: IntArray,
 ) -> LapTrace:
     """From one arrival at the rear face to the `period`-th next, with the analytic Jacobian.
 
-    The derivative is carried along as two displacement vectors (one per initial perturbation). Over a run of
-    length L along u the displacement p of the bump is p + L dh u' + dL u with u' = u turned by 90 deg and dL such
-    that p stays on the surface; on an arc the normal turns by (t . p)/r. A turn keeps dh, a departure referred to
-    the surface replaces it by the normal's, a mirror gives 2 dn - dh. (Derived here; on flat sides it reduces to
-    the slope -cos a/cos b per leg.)
+    The derivative is carried along as two displacement vectors (one per initial perturbation). Over a leg of
+    length L along u, whose direction changes by da, the displacement p of its end is p + L da u' + dL u with u' = u
+    turned by 90 deg. dL is such that p stays on the surface that is met; it is 0 for a leg of given length, and
+    L dc/c for a slide of given time, c being the cosine between heading and surface. On an arc the normal turns by
+    (t . p)/r. A turn keeps the heading's perturbation, a departure referred to the surface replaces it by the normal's,
+    a mirror gives 2 dn - dh. (Derived here; on flat sides it reduces to the slope -cos a/cos b per leg.)
 
     Arguments:
-        y, heading: arrival at the rear face (m, rad). memory: (MEMORY,) at that moment, changed in place.
-        hits: (n, 4) filled with x, y, arriving and departing heading of each bump, the last row being the arrival
-            that closes the lap. surfaces: (n,) filled with surface numbers.
+        speed: m/s. along, heading: arrival at the rear face (m from the beginning of its segment, rad).
+        memory, notes: (MEMORY,), (NOTES,) at that moment, changed in place.
+        hits: (n, 4) filled with x, y, arriving and departing heading of each leg's end, the last row being the arrival
+            that closes the lap. surfaces: (n,) filled with surface numbers, -1 where a leg ended without a bump.
     """
-    n_segments = len(boundary.segments)
-    x = boundary.segments[_REAR, 0]
-    clock = np.zeros(1)
-    contact, normal_angle = boundary.kinds[_REAR], boundary.segments[_REAR, 7]
-    px, py = np.zeros(2), np.array([1.0, 0.0])  # displacement of the bump
+    segments, arcs, moving = borrowed(boundary.segments), borrowed(boundary.arcs), borrowed(boundary.moving)
+    kinds, program, keys = borrowed(boundary.kinds), borrowed(program), borrowed(keys)
+    memory, notes = borrowed(memory), borrowed(notes)
+    rear = boundary.rear
+    n_segments = len(segments)
+    rear_x, rear_y, rear_tx, rear_ty = segments[rear, 0], segments[rear, 1], segments[rear, 2], segments[rear, 3]
+    x, y = rear_x + along * rear_tx, rear_y + along * rear_ty
+    contact, normal_angle = kinds[rear], segments[rear, 7]
+    px, py = np.array([rear_tx, 0.0]), np.array([rear_ty, 0.0])  # displacement of the leg's end
     dh, dn = np.array([0.0, 1.0]), np.zeros(2)  # perturbation of the heading, of the surface's normal
-    n_rear, broken = 0, LapTrace(0, y, heading, 0.0, 0.0, 0.0, 0.0)
+    n_rear, now, way = 0, 0.0, 0.0
+    broken = LapTrace(0, along, heading, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0)
     for k in range(len(surfaces)):
-        while True:
-            command, rotation = decide(program, senses, keys, memory, clock, float(k), heading, contact, normal_angle)
-            if command != _ROTATE:
-                break
-            heading += rotation
-            op = program[memory[PC] - 1].op
-            for j in range(2):
-                if op == _MIRROR:
-                    dh[j] = 2.0 * dn[j] - dh[j]
-                elif op != _TURN:
-                    dh[j] = dn[j]
+        leg = next_leg(
+            segments,
+            arcs,
+            moving,
+            boundary.scale,
+            0.0,
+            speed,
+            program,
+            senses,
+            keys,
+            memory,
+            notes,
+            now,
+            x,
+            y,
+            heading,
+            contact,
+            normal_angle,
+        )
+        heading, ux, uy = leg.heading, leg.ux, leg.uy
         if k > 0:
             hits[k - 1, 3] = heading
-        if command == _STOP:
+        if leg.command == STOP:
             return broken
-        ux, uy = math.cos(heading), math.sin(heading)
-        hit = next_hit(boundary, 0.0, x, y, ux, uy)
-        if hit.surface < 0:
-            return broken
-        x += hit.run * ux
-        y += hit.run * uy
-        contact, normal_angle = boundary.kinds[hit.surface], hit.normal_angle
-        nx, ny = math.cos(normal_angle), math.sin(normal_angle)
+        x += leg.run * ux
+        y += leg.run * uy
+        now += leg.time
+        way += leg.run
+        slides = leg.command == SLIDE
+        met = leg.surface >= 0
+        nx, ny = math.cos(leg.normal_angle), math.sin(leg.normal_angle)
+        cosine = math.cos(heading) * ux + math.sin(heading) * uy
+        sine = math.sin(heading) * ux - math.cos(heading) * uy
         for j in range(2):
-            qx = px[j] - hit.run * dh[j] * uy
-            qy = py[j] + hit.run * dh[j] * ux
-            stretch = -(nx * qx + ny * qy) / (nx * ux + ny * uy)
+            dh[j] = leg.by_heading * dh[j] + leg.by_normal * dn[j]
+            da = dn[j] if slides else dh[j]
+            qx = px[j] - leg.run * da * uy
+            qy = py[j] + leg.run * da * ux
+            stretch = 0.0
+            if met:
+                stretch = -(nx * qx + ny * qy) / (nx * ux + ny * uy)
+            elif slides and program[memory[PC] - 1].value < 0.0 and cosine > 0.0:
+                stretch = -leg.run * (sine / cosine) * (dh[j] - dn[j])
             px[j], py[j] = qx + stretch * ux, qy + stretch * uy
-            dn[j] = 0.0
-            if hit.surface >= n_segments:
-                dn[j] = (nx * py[j] - ny * px[j]) / boundary.arcs[hit.surface - n_segments, 2]
+            if met:
+                dn[j] = 0.0
+                if leg.surface >= n_segments:
+                    dn[j] = (nx * py[j] - ny * px[j]) / arcs[leg.surface - n_segments, 2]
         hits[k, 0], hits[k, 1], hits[k, 2], hits[k, 3] = x, y, heading, heading
-        surfaces[k] = hit.surface
-        if hit.surface == _REAR:
+        surfaces[k] = leg.surface
+        if not met:
+            if not slides:
+                contact = 0
+            continue
+        contact, normal_angle = kinds[leg.surface], leg.normal_angle
+        if leg.surface == rear:
             n_rear += 1
             if n_rear == period:
-                return LapTrace(k + 1, y, heading, py[0], py[1], dh[0], dh[1])
+                along = (x - rear_x) * rear_tx + (y - rear_y) * rear_ty
+                return LapTrace(
+                    k + 1, along, heading,
+                    px[0] * rear_tx + py[0] * rear_ty, px[1] * rear_tx + py[1] * rear_ty, dh[0], dh[1],
+                    way, now,
+                )  # fmt: skip
     return broken

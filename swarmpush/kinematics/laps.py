@@ -10,17 +10,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from swarmpush.draws import stream_keys
-from swarmpush.kinematics.bounce import (
-    FATE_WORDS,
-    Fate,
-    LapTrace,
-    next_hit,
-    settle,
-    settle_many,
-    trace_lap,
-)
-from swarmpush.kinematics.boundary import REAR_SURFACE, SURFACES, Boundary, corridor
-from swarmpush.program import EXACT, MEMORY, PC, Contact, Program, compile_routine
+from swarmpush.kinematics.bounce import FATE_WORDS, Fate, LapTrace, settle, settle_many, trace_lap
+from swarmpush.kinematics.boundary import REAR, Boundary, boundary_of, surface_names
+from swarmpush.kinematics.legs import next_hit
+from swarmpush.program import EXACT, MEMORY, NOTES, PC, Contact, Program, compile_routine
 from swarmpush.routine import Depart, Routine, Wander
 from swarmpush.scenario import Scenario
 from swarmpush.starts import draw_starts
@@ -31,6 +24,7 @@ IntArray = NDArray[np.int64]
 N_STARTS = 4000  # puts the 95 % interval of a share within 0.016
 BUDGET = 600  # bumps; a lap that contracts by 0.9 a round closes to one part in a million within 400
 MAX_LAP_BUMPS = 256
+IN_THE_OPEN = "in the open"  # where a leg of given length ends
 _SCAN_STEP = math.radians(0.25)
 _NEUTRAL = 1e-9  # a multiplier this close to 1 in size is 1: Newton's method leaves errors of 1e-12
 
@@ -72,7 +66,7 @@ class Lap:
     @property
     def strike_cosines(self) -> FloatArray:
         """Cosine of the angle between heading and rear normal at each bump on the rear face of the lap."""
-        at_rear = [k for k, name in enumerate(self.surfaces) if name == SURFACES[REAR_SURFACE]]
+        at_rear = [k for k, name in enumerate(self.surfaces) if name == REAR]
         # row 0 departs from the rear face; its arrival is the last row's, by closure
         arriving = [self.rear_heading_rad if k == 0 else self.hits[k - 1, 2] for k in at_rear]
         return np.cos(np.array(arriving, dtype=np.float64))
@@ -100,18 +94,19 @@ def find_laps(s: Scenario, *, n_starts: int = N_STARTS, seed: int = 0) -> tuple[
     Returns:
         The laps, most frequent first, and what becomes of the starts.
     """
-    boundary, program = corridor(s), compile_routine(_without_spread(s.routine))
+    boundary, names = boundary_of(s), surface_names(s)
+    program = compile_routine(_without_spread(s.routine), names)
     many = s.replace(pushers={"count": n_starts}, start={"placed": None})
     starts = np.array(draw_starts(s, seed)) if s.start.placed else draw_starts(many, seed, apart=False)
     n = len(starts)
     keys = stream_keys(seed, 1)[0]
     fates, states = np.zeros((n, 3), dtype=np.int64), np.zeros((n, 2))
     memories = np.zeros((n, MEMORY), dtype=np.int64)
-    settle_many(boundary, program, EXACT, keys, starts, BUDGET, fates, states, memories)
+    settle_many(boundary, program, EXACT, keys, s.pushers.free_speed, starts, BUDGET, fates, states, memories)
 
     if _goes_by_chance(s.routine):
         fates[fates[:, 0] == Fate.LOCKED, 0] = Fate.UNDECIDED
-    tracer = _Tracer(s, boundary, program, keys)
+    tracer = _Tracer(boundary, names, program, keys, s.pushers.free_speed)
     laps: list[Lap] = []
     locked = fates[:, 0] == Fate.LOCKED
     signatures, first, counts = np.unique(fates[locked, 2], return_index=True, return_counts=True)
@@ -150,14 +145,17 @@ def _without_spread(routine: Routine) -> Routine:
 class _Tracer:
     """Laps of one rig: polishing, multipliers, bands."""
 
-    def __init__(self, s: Scenario, boundary: Boundary, program: Program, keys: NDArray[np.uint64]) -> None:
-        self._s, self._boundary, self._program, self._keys = s, boundary, program, keys
+    def __init__(
+        self, boundary: Boundary, names: tuple[str, ...], program: Program, keys: NDArray[np.uint64], speed: float
+    ) -> None:
+        self._boundary, self._names, self._program, self._keys, self._speed = boundary, names, program, keys, speed
+        self._rear = boundary.segments[boundary.rear]
 
     def trace(self, state: FloatArray, memory: IntArray, n_rear: int) -> tuple[LapTrace, FloatArray, IntArray]:
         hits, surfaces = np.zeros((MAX_LAP_BUMPS, 4)), np.zeros(MAX_LAP_BUMPS, dtype=np.int64)
         lap = trace_lap(
-            self._boundary, self._program, EXACT, self._keys,
-            state[0], state[1], memory.copy(), n_rear, hits, surfaces,
+            self._boundary, self._program, EXACT, self._keys, self._speed,
+            state[0], state[1], memory.copy(), np.zeros(NOTES), n_rear, hits, surfaces,
         )  # fmt: skip
         return lap, hits[: lap.n_bumps], surfaces[: lap.n_bumps]
 
@@ -169,29 +167,26 @@ class _Tracer:
         if self._is_neutral(polished, memory, n_rear):
             polished = self._centred(polished, memory, n_rear, signature)
         trace, hits, surfaces = self.trace(polished, memory, n_rear)
-        rear_x = self._boundary.segments[REAR_SURFACE, 0]
-        corners = np.vstack([[rear_x, polished[0]], hits[:, :2]])
-        length = float(np.hypot(*np.diff(corners, axis=0).T).sum())
-        first = [
-            rear_x,
-            polished[0],
-            polished[1],
-            math.atan2(corners[1, 1] - corners[0, 1], corners[1, 0] - rear_x),
-        ]
+        x, y = self._place(polished[0])
+        first = [x, y, polished[1], math.atan2(hits[0, 1] - y, hits[0, 0] - x)]
         rows = np.vstack([first, hits[:-1]])
         rows[:, 2:] = np.remainder(rows[:, 2:] + math.pi, 2 * math.pi) - math.pi
         return Lap(
-            surfaces=(SURFACES[REAR_SURFACE], *(SURFACES[k] for k in surfaces[:-1])),
+            surfaces=(REAR, *(self._names[k] if k >= 0 else IN_THE_OPEN for k in surfaces[:-1])),
             hits=rows,
             n_rear=n_rear,
-            length_m=length,
-            time_s=length / self._s.pushers.free_speed,
+            length_m=trace.length,
+            time_s=trace.time,
             multipliers=_multipliers(trace),
-            rear_y_m=float(polished[0]),
+            rear_y_m=float(y),
             rear_heading_rad=float(rows[0, 2]),
             leg_bands_rad=tuple(self._leg_bands(polished, memory, n_rear, signature)),
             share=float(share),
         )
+
+    def _place(self, along: float) -> tuple[float, float]:
+        """The point of the rear face's surface at a length from its beginning."""
+        return float(self._rear[0] + along * self._rear[2]), float(self._rear[1] + along * self._rear[3])
 
     def _centred(self, state: FloatArray, memory: IntArray, n_rear: int, signature: int) -> FloatArray:
         """Of a family of laps, one for each heading, the one in the middle of the band."""
@@ -207,13 +202,13 @@ class _Tracer:
             lap, _, _ = self.trace(state, memory, n_rear)
             if lap.n_bumps == 0:
                 return None
-            residual = np.array([lap.y - state[0], math.remainder(lap.heading - state[1], 2 * math.pi)])
+            residual = np.array([lap.along - state[0], math.remainder(lap.heading - state[1], 2 * math.pi)])
             if abs(residual[0]) < 1e-13 * self._boundary.scale and abs(residual[1]) < 1e-13:
                 break
-            jacobian = np.array([[lap.yy, lap.yh], [lap.hy, lap.hh]]) - np.eye(2)
+            jacobian = np.array([[lap.aa, lap.ah], [lap.ha, lap.hh]]) - np.eye(2)
             state -= np.linalg.lstsq(jacobian, residual, rcond=1e-9)[0]
         lap, _, _ = self.trace(state, memory, n_rear)
-        closed = abs(lap.y - state[0]) < 1e-9 * self._boundary.scale
+        closed = abs(lap.along - state[0]) < 1e-9 * self._boundary.scale
         closed &= abs(math.remainder(lap.heading - state[1], 2 * math.pi)) < 1e-9
         return state if lap.n_bumps and closed else None
 
@@ -222,24 +217,24 @@ class _Tracer:
         return any(abs(abs(m) - 1.0) < _NEUTRAL for m in _multipliers(lap))
 
     def _resettle(
-        self, y: float, heading: float, memory: IntArray, n_rear: int, signature: int
+        self, along: float, heading: float, memory: IntArray, n_rear: int, signature: int
     ) -> tuple[FloatArray | None, IntArray]:
         """Where a pusher ends up that arrives at the rear face otherwise; None if it is another lap."""
         after = memory.copy()
-        rear = self._boundary.segments[REAR_SURFACE]
+        x, y = self._place(along)
         end = settle(
-            self._boundary, self._program, EXACT, self._keys,
-            rear[0], y, heading, after, int(Contact.BLOCK), rear[7], 2 * BUDGET,
+            self._boundary, self._program, EXACT, self._keys, self._speed,
+            x, y, heading, after, np.zeros(NOTES), int(Contact.BLOCK), self._rear[7], 2 * BUDGET,
         )  # fmt: skip
         same = end.fate == Fate.LOCKED and end.signature == signature
-        return (np.array([end.y, end.heading]) if same else None), after
+        return (np.array([end.along, end.heading]) if same else None), after
 
     def _leg_bands(
         self, state: FloatArray, memory: IntArray, n_rear: int, signature: int
     ) -> Iterator[tuple[float, float]]:
         """For each leg of the lap, the errors of heading that keep it."""
         _, hits, surfaces = self.trace(state, memory, n_rear)
-        starts = np.vstack([[self._boundary.segments[REAR_SURFACE, 0], state[0]], hits[:-1, :2]])
+        starts = np.vstack([self._place(state[0]), hits[:-1, :2]])
         for (x, y), (next_x, next_y), surface, k in zip(starts, hits[:, :2], surfaces, range(len(hits)), strict=True):
             heading = math.atan2(next_y - y, next_x - x)
             running = self._memory_on_leg(state, memory, n_rear, k)
@@ -252,13 +247,13 @@ class _Tracer:
                     return False
                 after = running.copy()
                 end = settle(
-                    self._boundary, self._program, EXACT, self._keys,
-                    x, y, new_heading, after, int(Contact.NONE), 0.0, 2 * BUDGET,
+                    self._boundary, self._program, EXACT, self._keys, self._speed,
+                    x, y, new_heading, after, np.zeros(NOTES), int(Contact.NONE), 0.0, 2 * BUDGET,
                 )  # fmt: skip
                 if end.fate != Fate.LOCKED or end.signature != signature:
                     return False
-                trace, _, _ = self.trace(np.array([end.y, end.heading]), after, n_rear)
-                return trace.n_bumps > 0 and abs(trace.yy) < 1.0
+                trace, _, _ = self.trace(np.array([end.along, end.heading]), after, n_rear)
+                return trace.n_bumps > 0 and abs(trace.aa) < 1.0
 
             if keeps(0.0):
                 yield -_edge(lambda a, keeps=keeps: keeps(-a)), _edge(keeps)  # type: ignore[misc]
@@ -269,8 +264,8 @@ class _Tracer:
         """The pusher's memory on leg k, the run still to be done."""
         after = memory.copy()
         trace_lap(
-            self._boundary, self._program, EXACT, self._keys,
-            state[0], state[1], after, n_rear, np.zeros((k + 1, 4)), np.zeros(k + 1, dtype=np.int64),
+            self._boundary, self._program, EXACT, self._keys, self._speed,
+            state[0], state[1], after, np.zeros(NOTES), n_rear, np.zeros((k + 1, 4)), np.zeros(k + 1, dtype=np.int64),
         )  # fmt: skip
         after[PC] -= 1
         return after
@@ -292,6 +287,6 @@ def _edge(holds: Callable[[float], bool]) -> float:
 
 
 def _multipliers(lap: LapTrace) -> tuple[complex, ...]:
-    values = np.linalg.eigvals(np.array([[lap.yy, lap.yh], [lap.hy, lap.hh]]))
+    values = np.linalg.eigvals(np.array([[lap.aa, lap.ah], [lap.ha, lap.hh]]))
     ordered = sorted(values.tolist(), key=abs, reverse=True)
     return tuple(complex(v) for v in ordered)

@@ -10,8 +10,8 @@ from numpy.typing import NDArray
 
 from swarmpush.draws import stream_keys
 from swarmpush.kinematics.bounce import trace
-from swarmpush.kinematics.boundary import FRONT_SURFACE, REAR_SURFACE, corridor
-from swarmpush.program import EXACT, compile_routine
+from swarmpush.kinematics.boundary import boundary_of, surface_names
+from swarmpush.program import EXACT, MEMORY, NOTES, compile_routine
 from swarmpush.scenario import Scenario
 from swarmpush.starts import draw_starts
 
@@ -38,24 +38,25 @@ def count_strikes(s: Scenario, *, seed: int = 0) -> Strikes:
 
     Randomness that belongs to the routine itself (a spread, a wander) is kept.
     """
-    boundary, program = corridor(s), compile_routine(s.routine)
+    boundary, program = boundary_of(s), compile_routine(s.routine, surface_names(s))
     starts = _starts(s, N_FOLLOWED, seed)
     speed, limit = s.pushers.free_speed, s.goal.time_limit
     mean_run = math.pi * s.channel.width * s.channel.length / (2 * (s.channel.width + s.channel.length))
     n_bumps = int(min(MAX_BUMPS, 100 + 10 * limit * speed / mean_run))
-    hits, surfaces = np.zeros((n_bumps, 5)), np.zeros(n_bumps, dtype=np.int64)
+    hits, surfaces = np.zeros((n_bumps, 6)), np.zeros(n_bumps, dtype=np.int64)
     time = 0.0
-    cosines: dict[int, list[NDArray[np.float64]]] = {REAR_SURFACE: [], FRONT_SURFACE: []}
+    cosines: dict[int, list[NDArray[np.float64]]] = {boundary.rear: [], boundary.front: []}
     for start, keys in zip(starts, stream_keys(seed, len(starts)), strict=True):
-        n = trace(boundary, program, EXACT, 0.0, speed, keys, start, 0.0, hits, surfaces)
-        times = np.cumsum(hits[:n, 4]) / speed
+        memory = np.zeros(MEMORY, dtype=np.int64)
+        n = trace(boundary, program, EXACT, 0.0, speed, keys, start, 0.0, hits, surfaces, memory, np.zeros(NOTES))
+        times = np.cumsum(hits[:n, 5])
         on_the_spot = hits[:n, 4] < AT_ONCE * boundary.scale
         # a pusher that turns and still points into the face bumps again at once, which is no strike of its own
         again = on_the_spot & (surfaces[:n] == np.roll(surfaces[:n], 1))
         again[:1] = False
         for surface, found in cosines.items():
             is_strike = (surfaces[:n] == surface) & ~again & (times <= limit)
-            found.append(np.abs(np.cos(hits[:n][is_strike, 2])))
+            found.append(np.abs(np.cos(hits[:n][is_strike, 2] - boundary.segments[surface, 7])))
         # a pusher that has halted or got stuck spends the rest of the trial without a strike
         is_over = n < n_bumps or on_the_spot[n // 2 :].all()
         time += limit if is_over else min(limit, float(times[-1]))
@@ -65,10 +66,23 @@ def count_strikes(s: Scenario, *, seed: int = 0) -> Strikes:
 
 def point_path(s: Scenario, *, n_bumps: int = 40, seed: int = 0) -> NDArray[np.float64]:
     """The path of the first pusher as an exact point: (n + 1, 2) x and y in m of its start and its bumps."""
-    hits, surfaces = np.zeros((n_bumps, 5)), np.zeros(n_bumps, dtype=np.int64)
+    hits, surfaces = np.zeros((n_bumps, 6)), np.zeros(n_bumps, dtype=np.int64)
     start, keys = _starts(s, 1, seed)[0], stream_keys(seed, 1)[0]
-    program = compile_routine(s.routine)
-    n = trace(corridor(s), program, EXACT, 0.0, s.pushers.free_speed, keys, start, 0.0, hits, surfaces)
+    program, memory = compile_routine(s.routine, surface_names(s)), np.zeros(MEMORY, dtype=np.int64)
+    n = trace(
+        boundary_of(s),
+        program,
+        EXACT,
+        0.0,
+        s.pushers.free_speed,
+        keys,
+        start,
+        0.0,
+        hits,
+        surfaces,
+        memory,
+        np.zeros(NOTES),
+    )
     return np.vstack([start[:2], hits[:n, :2]])
 
 

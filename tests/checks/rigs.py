@@ -11,9 +11,9 @@ from numpy.typing import NDArray
 
 from swarmpush.draws import stream_keys
 from swarmpush.kinematics.bounce import trace
-from swarmpush.kinematics.boundary import SURFACES, corridor
+from swarmpush.kinematics.boundary import SURFACES, boundary_of
 from swarmpush.loading import from_tables
-from swarmpush.program import EXACT, Senses, compile_routine
+from swarmpush.program import EXACT, MEMORY, NOTES, Senses, compile_routine
 from swarmpush.scenario import GRAVITY, Scenario
 
 G = GRAVITY
@@ -100,16 +100,17 @@ def follow(
     """One pusher from bump to bump; `start` is x from the face (negative), y from the lower wall, heading.
 
     Returns:
-        hits: (n, 5) x from where the face was at the start, y from the lower wall, arriving and departing heading,
-            run length. names: of the surfaces.
+        hits: (n, 6) x from where the face was at the start, y from the lower wall, arriving and departing heading,
+            run length and time. names: of the surfaces.
     """
-    boundary = corridor(s)
+    boundary = boundary_of(s)
     rear = SURFACES.index("rear")
     origin = np.array([boundary.segments[rear, 0], s.pushers.radius])
-    hits, surfaces = np.zeros((n_bumps, 5)), np.zeros(n_bumps, dtype=np.int64)
+    hits, surfaces = np.zeros((n_bumps, 6)), np.zeros(n_bumps, dtype=np.int64)
     n = trace(
         boundary, compile_routine(s.routine), senses, 0.0, s.pushers.free_speed, stream_keys(seed, 1)[0],
         np.array([origin[0] + start[0], origin[1] + start[1], start[2]]), nudge, hits, surfaces,
+        np.zeros(MEMORY, dtype=np.int64), np.zeros(NOTES),
     )  # fmt: skip
     hits[:n, :2] -= origin
     return hits[:n], [SURFACES[k] for k in surfaces[:n]]

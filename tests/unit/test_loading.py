@@ -304,7 +304,7 @@ ACTS = "routine.stages[1].acts"
 @pytest.mark.parametrize(
     ("position", "act", "key", "sentence"),
     [
-        (0, {"act": "runn"}, "[1].act", '"runn" given; allowed: "run", "turn", "depart", "mirror", "wander", "tally"'),
+        (0, {"act": "runn"}, "[1].act", '"runn" given; allowed: "run", "advance", "slide", "turn", "depart", "mirror"'),
         (0, {}, "[1]", "the key 'act' is missing"),
         (0, {"act": "run", "fast": 1}, "[1].fast", "unknown key; known here: act"),
         (1, {"act": "branch", "on": "mood"}, "[2].on", '"mood" given; allowed: "contact", "counter", "time"'),

@@ -12,13 +12,14 @@ from scipy.integrate import solve_ivp
 
 from swarmpush.demos import demo
 from swarmpush.draws import stream_keys
-from swarmpush.kinematics.bounce import Hit, next_hit, trace, trace_lap
-from swarmpush.kinematics.boundary import SURFACES, Boundary, corridor
+from swarmpush.kinematics.bounce import trace, trace_lap
+from swarmpush.kinematics.boundary import SURFACES, Boundary, boundary_of
 from swarmpush.kinematics.forecast import impact_nudge, lean_speed, push_force, strike_nudge
+from swarmpush.kinematics.legs import Hit, next_hit
 from swarmpush.kinematics.planning import plan
 from swarmpush.kinematics.strikes import count_strikes
 from swarmpush.loading import load
-from swarmpush.program import EXACT, MEMORY, Contact, compile_routine
+from swarmpush.program import EXACT, MEMORY, NOTES, Contact, compile_routine
 from swarmpush.routine import Routine
 from swarmpush.scenario import Floor, Fluid, Scenario, Start
 
@@ -45,7 +46,7 @@ def hall(acts: Routine | None = None, *starts: tuple[float, float, float], **tab
 def hit(s: Scenario, x: float, y: float, degrees: float, shift: float = 0.0) -> tuple[str | None, float, float]:
     """Surface, run length and normal (deg) of the next bump."""
     a = math.radians(degrees)
-    found: Hit = next_hit(corridor(s), shift, x, y, math.cos(a), math.sin(a))
+    found: Hit = next_hit(boundary_of(s), shift, x, y, math.cos(a), math.sin(a))
     return (SURFACES[found.surface] if found.surface >= 0 else None), found.run, math.degrees(found.normal_angle)
 
 
@@ -137,10 +138,11 @@ def test_a_ray_never_leaves_the_region() -> None:
 def follow(s: Scenario, n: int, *, diffusion: float = 0.0, seed: int = 0) -> tuple[NDArray[np.float64], list[str]]:
     assert s.start.placed is not None
     start = s.start.placed[0]
-    hits, surfaces = np.zeros((n, 5)), np.zeros(n, dtype=np.int64)
+    hits, surfaces = np.zeros((n, 6)), np.zeros(n, dtype=np.int64)
     done = trace(
-        corridor(s), compile_routine(s.routine), EXACT, diffusion, s.pushers.free_speed, stream_keys(seed, 1)[0],
+        boundary_of(s), compile_routine(s.routine), EXACT, diffusion, s.pushers.free_speed, stream_keys(seed, 1)[0],
         np.array([start.x, start.y, start.heading]), 0.0, hits, surfaces,
+        np.zeros(MEMORY, dtype=np.int64), np.zeros(NOTES),
     )  # fmt: skip
     return hits[:done], [SURFACES[k] for k in surfaces[:done]]
 
@@ -255,7 +257,7 @@ def test_lap_closes() -> None:
             total = 0.0
             for k in range(n):
                 x, y, _, heading = lap.hits[k]
-                found = next_hit(corridor(s), 0.0, x, y, math.cos(heading), math.sin(heading))
+                found = next_hit(boundary_of(s), 0.0, x, y, math.cos(heading), math.sin(heading))
                 after = lap.hits[(k + 1) % n]
                 assert SURFACES[found.surface] == lap.surfaces[(k + 1) % n]
                 size = s.channel.width
@@ -274,7 +276,7 @@ def test_band_edges() -> None:
     low, high = lap.band_rad
     assert low < lap.rear_heading_rad < high
     for heading, stays in ((low + 1e-5, True), (high - 1e-5, True), (low - 1e-5, False), (high + 1e-5, False)):
-        found = next_hit(corridor(s), 0.0, x, y, math.cos(heading), math.sin(heading))
+        found = next_hit(boundary_of(s), 0.0, x, y, math.cos(heading), math.sin(heading))
         assert (SURFACES[found.surface] == "rear") == stays
 
 
@@ -298,7 +300,7 @@ ROUTINES = {
 def test_jacobian_of_the_return_map(name: str) -> None:
     """The analytic derivative of the return to the rear face agrees with finite differences, corners included."""
     s = hall(routine(*ROUTINES[name]))
-    boundary, program = corridor(s), compile_routine(s.routine)
+    boundary, program = boundary_of(s), compile_routine(s.routine)
     rng = np.random.default_rng(2)
     n_checked, with_corner = 0, 0
     for _ in range(400):
@@ -334,18 +336,19 @@ def _return(
     """The next arrival at the rear face after one at (y, heading), the surfaces on the way, and the derivative."""
     surfaces = np.zeros(60, dtype=np.int64)
     lap = trace_lap(
-        boundary, program, EXACT, stream_keys(0, 1)[0], y, heading, np.array([1] + [0] * (MEMORY - 1)), 1,
+        boundary, program, EXACT, stream_keys(0, 1)[0], 1.0, y - boundary.segments[boundary.rear, 1], heading,
+        np.array([1] + [0] * (MEMORY - 1)), np.zeros(NOTES), 1,
         np.zeros((60, 4)), surfaces,
     )  # fmt: skip
     if lap.n_bumps < 2:  # none, or at once again
         return None
     way = tuple(SURFACES[k] for k in surfaces[: lap.n_bumps])
-    return np.array([lap.y, lap.heading]), way, np.array([[lap.yy, lap.yh], [lap.hy, lap.hh]])
+    return np.array([lap.along, lap.heading]), way, np.array([[lap.aa, lap.ah], [lap.ha, lap.hh]])
 
 
 def test_block_is_told_from_walls() -> None:
     """Faces and corners of the block count as the block, the ends and sides of the hall as walls."""
-    kinds = corridor(hall()).kinds
+    kinds = boundary_of(hall()).kinds
     assert (kinds[:4] == Contact.WALL).all()
     assert (kinds[4:] == Contact.BLOCK).all()
     assert len(kinds) == len(SURFACES)

@@ -10,7 +10,7 @@ import pytest
 from pydantic import ValidationError
 
 from swarmpush.draws import stream_keys
-from swarmpush.program import MEMORY, Command, Contact, Program, Senses, compile_routine, decide, scale_time
+from swarmpush.program import MEMORY, NOTES, Command, Contact, Program, Senses, compile_routine, decide, scale_time
 from swarmpush.routine import MAX_COUNTERS, Device, Routine
 
 ROUNDING = 1e-12  # rad; a few additions of angles
@@ -39,13 +39,13 @@ class Pusher:
         self.senses = senses
         self.keys = stream_keys(seed, 1)[0]
         self.memory = np.zeros(MEMORY, dtype=np.int64)
-        self.stage_since = np.zeros(1)
+        self.notes = np.zeros(NOTES)
 
     def decide(
         self, *, contact: Contact = Contact.NONE, heading: float = 0.0, normal: float = 0.0, now: float = 0.0
     ) -> tuple[Command, float]:
-        command, rotation = decide(
-            self.program, self.senses, self.keys, self.memory, self.stage_since, now, heading, int(contact), normal
+        command, rotation, _ = decide(
+            self.program, self.senses, self.keys, self.memory, self.notes, now, heading, int(contact), normal
         )
         return Command(command), rotation
 
@@ -121,9 +121,12 @@ def test_kit() -> None:
             {"act": "tally", "counter": "n", "add": 1},
             {"act": "branch", "on": "time", "after": 1, "go": "a"},
             {"act": "wander"},
+            {"act": "advance", "distance": 1},
+            {"act": "gauge", "maximum": 1},
+            {"act": "sight", "face": "rear"},
         )
     )
-    assert set(rich.kit()) == set(Device)
+    assert rich.kit() == tuple(Device)
 
 
 @pytest.mark.parametrize(
