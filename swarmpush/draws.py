@@ -32,6 +32,8 @@ class Purpose(IntEnum):
     FALSE_BUMP = 6
     UNIT_SPEED = 7
     UNIT_MASS = 8
+    RANGE = 9
+    SIGHT = 10
 
 
 def stream_keys(seed: int, n_pushers: int) -> NDArray[np.uint64]:

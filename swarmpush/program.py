@@ -80,12 +80,13 @@ _COMMAND_RUN, _COMMAND_ROTATE, _COMMAND_STOP, _COMMAND_ADVANCE, _COMMAND_SLIDE, 
 )
 _ONWARD, _EITHER = 0, 2
 _TURN_STREAM, _DEPART_STREAM, _BEARING_STREAM = int(Purpose.TURN), int(Purpose.DEPART), int(Purpose.BEARING)
+_RANGE_STREAM, _SIGHT_STREAM = int(Purpose.RANGE), int(Purpose.SIGHT)
 _MAX_DEPARTURE = acts.MAX_DEPARTURE
 
-# a pusher's memory: next operation, number of rotations so far, whether the last look saw its face, whether it holds
-# itself for lost, then the counters; and its notes: time at which the stage was entered, last range gauged, steps of
-# the reading
-PC, N_ROTATIONS, SEEN, DECLARED, FIRST_COUNTER = 0, 1, 2, 3, 4
+# a pusher's memory: next operation, number of rotations and of looks so far, whether the last look saw its face,
+# whether it holds itself for lost, then the counters; and its notes: time at which the stage was entered, last range
+# gauged, steps of the reading
+PC, N_ROTATIONS, N_LOOKS, SEEN, DECLARED, FIRST_COUNTER = 0, 1, 2, 3, 4, 5
 STAGE_SINCE, RANGE, RESOLUTION = 0, 1, 2
 NOTES = 3
 MEMORY = FIRST_COUNTER + acts.MAX_COUNTERS
@@ -104,12 +105,15 @@ class Senses(NamedTuple):
 
     turn_bias, turn_sd: added to every turn, counter-clockwise positive, and its standard deviation.
     bearing_step, bearing_sd: resolution of the bump's bearing (0: exact), and its standard deviation.
+    range_sd, missed_sights: standard deviation of a gauged range, share of sights missed.
     """
 
     turn_bias: float
     turn_sd: float
     bearing_step: float
     bearing_sd: float
+    range_sd: float = 0.0
+    missed_sights: float = 0.0
 
 
 EXACT = Senses(0.0, 0.0, 0.0, 0.0)  # a pusher without faults
@@ -186,10 +190,13 @@ def _instruction(act: acts.Act, counters: dict[str, int], surfaces: Sequence[str
             return _Instruction(Op.RUN)
 
 
-def scale_time(program: Program, unit_s: float) -> Program:
-    """The same program with its times in units of `unit_s` seconds; lengths stay in metres."""
-    scaled = program.copy()
-    scaled["value"][program["op"] == Op.IF_TIME] /= unit_s
+def in_units(program: Program, length: float, time: float) -> Program:
+    """The same program with lengths and times in units of `length` metres and `time` seconds."""
+    scaled, op = program.copy(), program["op"]
+    is_length = np.isin(op, [Op.ADVANCE, Op.GAUGE, Op.IF_RANGE]) | ((op == Op.SLIDE) & (program["value"] >= 0.0))
+    scaled["value"][is_length] /= length
+    scaled["spread"][op == Op.GAUGE] /= length
+    scaled["value"][(op == Op.IF_TIME) | ((op == Op.SLIDE) & (program["value"] < 0.0))] /= time
     return scaled
 
 
@@ -307,3 +314,26 @@ def decide(
         elif op == _HALT:
             memory[PC] = pc  # halted pushers stay at the halt
             return _COMMAND_STOP, 0.0, 0
+
+
+@compiled
+def note_range(
+    senses: Senses, keys: NDArray[np.uint64], memory: IntArray, notes: FloatArray, run: float, most: float
+) -> None:
+    """Let the pusher read a range: the clear run with its error, at most `most`, in steps."""
+    reading = run
+    if senses.range_sd > 0.0:
+        reading += senses.range_sd * normal(keys[_RANGE_STREAM], memory[N_LOOKS])
+        memory[N_LOOKS] += 1
+    reading = min(max(reading, 0.0), most)
+    step = notes[RESOLUTION]
+    notes[RANGE] = step * np.floor(reading / step + 0.5) if step > 0.0 else reading
+
+
+@compiled
+def note_sight(senses: Senses, keys: NDArray[np.uint64], memory: IntArray, is_there: bool) -> None:
+    """Let the pusher look: what is there can be missed."""
+    if is_there and senses.missed_sights > 0.0:
+        is_there = uniform(keys[_SIGHT_STREAM], memory[N_LOOKS]) >= senses.missed_sights
+        memory[N_LOOKS] += 1
+    memory[SEEN] = 1 if is_there else 0

@@ -172,6 +172,8 @@ class Errors(_Table):
     heading_drift: AngularSpeed = Field(default=0.0, ge=-100, le=100, description="steady curving of the path")
     bearing_step: Angle = Field(default=0.0, ge=0, le=math.pi, description="resolution of the bump's bearing; 0: exact")
     bearing_sd: Angle = Field(default=0.0, ge=0, le=math.pi, description="standard deviation of the bump's bearing")
+    range_sd: Length = Field(default=0.0, ge=0, le=1e3, description="standard deviation of a gauged range")
+    missed_sights: Ratio = Field(default=0.0, ge=0, lt=1, description="share of looks that miss what is there")
     missed_bumps: Ratio = Field(default=0.0, ge=0, lt=1, description="share of bumps not felt")
     false_bumps: Rate = Field(default=0.0, ge=0, le=1e3, description="bumps felt out of nothing, per second")
     speed_spread: Ratio = Field(default=0.0, ge=0, le=0.3, description="s.d. of free speed from unit to unit, relative")

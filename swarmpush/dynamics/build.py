@@ -12,9 +12,12 @@ from swarmpush.dynamics.crew import Rig, new_crew
 from swarmpush.dynamics.host import BLOCK, PUSHER, WALL, Disc, HostSpace, Plate
 from swarmpush.dynamics.ledger import SLOTS, new_ledger
 from swarmpush.dynamics.loop import Path, Task
-from swarmpush.dynamics.patch import friction_arm
+from swarmpush.dynamics.patch import about, centre, friction_arm, gyration_squared
+from swarmpush.dynamics.ranging import surroundings
 from swarmpush.dynamics.steps import StepSettings, effective_mass, engine_units
-from swarmpush.program import Senses, compile_routine, scale_time
+from swarmpush.geometry import Corner, Corners, block_corners, channel_corners, outward_normal, post_corners
+from swarmpush.kinematics.boundary import surface_names
+from swarmpush.program import Senses, compile_routine, in_units
 from swarmpush.scenario import Scenario
 from swarmpush.starts import draw_starts
 
@@ -30,6 +33,16 @@ def unit_spreads(s: Scenario, keys: NDArray[np.uint64]) -> tuple[NDArray[np.floa
         return np.array([1.0 + spread * z for z in deviates])
 
     return draw(s.errors.speed_spread, Purpose.UNIT_SPEED), draw(s.errors.mass_spread, Purpose.UNIT_MASS)
+
+
+def scaled(corners: Corners, unit: float) -> Corners:
+    """Corners measured in `unit`."""
+    return tuple((x / unit, y / unit) for x, y in corners)
+
+
+def sides_of(corners: Corners) -> list[tuple[Corner, Corner]]:
+    """Sides of a polygon, each from its first corner to its second."""
+    return list(zip(corners, corners[1:] + corners[:1], strict=True))
 
 
 def build(s: Scenario, seed: int, steps: StepSettings) -> tuple[HostSpace, Task]:
@@ -48,23 +61,25 @@ def build(s: Scenario, seed: int, steps: StepSettings) -> tuple[HostSpace, Task]
         max(effective_mass(m, g, dt), g_side * dt) for m, g, g_side in zip(masses, drag, side_drag, strict=True)
     ]
 
-    block_mass, block_moment = s.block.mass / u.mass, s.block.moment / u.inertia
+    outline = block_corners(s)
+    at = centre(outline)
+    corners = scaled(about(outline, at), u.length)
+    block_mass = s.block.mass / u.mass
+    block_moment = s.block.yaw_inertia / u.inertia if s.block.yaw_inertia else block_mass * gyration_squared(corners)
     block_drag = s.fluid.block_drag / u.drag if s.fluid else 0.0
     yaw_drag = s.fluid.block_yaw_drag / u.turn_drag if s.fluid else 0.0
     block_step_mass = effective_mass(block_mass, block_drag, dt)
     step_moment = effective_mass(block_moment, yaw_drag, dt) if s.block.yaw == "free" else math.inf
     weight = s.block.mass * s.floor.gravity / u.force if s.floor else 0.0
 
-    length, width = s.channel.length / u.length, s.channel.width / u.length
-    half_length, half_width = s.block.length / u.length / 2, s.block.width / u.length / 2
-    x = s.block.rear_at / u.length + half_length
-    corners = [(0.0, 0.0), (length, 0.0), (length, width), (0.0, width)]
-    immovable = [math.inf] * len(corners)
+    x, y = at[0] / u.length, at[1] / u.length
+    walls = [side for fixed in (channel_corners(s), *post_corners(s)) for side in sides_of(scaled(fixed, u.length))]
+    immovable = [math.inf] * len(walls)
     pair = {name: (q.restitution, q.friction) for name, q in s.contacts}
     space = HostSpace(
-        Plate(x, width / 2 + s.block.offset / u.length, half_length, half_width, block_step_mass, step_moment),
+        Plate(x, y, corners, block_step_mass, step_moment),
         [Disc(a / u.length, b / u.length, 1.0, m) for (a, b, _), m in zip(starts, step_masses, strict=True)],
-        [(corners[k], corners[(k + 1) % 4]) for k in range(4)],
+        walls,
         {
             (PUSHER, WALL): pair["pusher_wall"],
             (PUSHER, BLOCK): pair["pusher_block"],
@@ -96,15 +111,16 @@ def build(s: Scenario, seed: int, steps: StepSettings) -> tuple[HostSpace, Task]
         block_step_mass=block_step_mass,
         block_drag=block_drag,
         block_yaw_drag=yaw_drag,
-        half_length=half_length,
-        half_width=half_width,
+        front_reach=max(a for a, _ in corners),
+        corners=np.array(corners),
+        sides=np.array([outward_normal(corners, k) for k in range(len(corners))]),
         has_floor=s.floor is not None,
         floor_static=s.floor.static_friction * weight if s.floor else 0.0,
         floor_kinetic=s.floor.kinetic_friction * weight if s.floor else 0.0,
-        floor_arm=friction_arm(2 * half_length, 2 * half_width),
+        floor_arm=friction_arm(corners),
         yaw_is_held=s.block.yaw == "held",
-        channel_length=length,
-        channel_width=width,
+        channel_length=s.channel.length / u.length,
+        channel_width=s.channel.width / u.length,
         goal_x=x + s.goal.travel / u.length,
         lean_force=LEAN_SHARE * stall,
     )
@@ -112,8 +128,9 @@ def build(s: Scenario, seed: int, steps: StepSettings) -> tuple[HostSpace, Task]
     task = Task(
         rig=rig,
         crew=new_crew(starts[:, 2], drag, side_drag),
-        program=scale_time(compile_routine(s.routine), u.time),
-        senses=Senses(e.turn_bias, e.turn_sd, e.bearing_step, e.bearing_sd),
+        program=in_units(compile_routine(s.routine, surface_names(s)), u.length, u.time),
+        senses=Senses(e.turn_bias, e.turn_sd, e.bearing_step, e.bearing_sd, e.range_sd / u.length, e.missed_sights),
+        around=surroundings(s, u.length, (x, y)),
         keys=keys,
         ledger=new_ledger(space.moving_ids(), space.wall_ids(), max(4096, 4 * SLOTS * (n + 1))),
         path=Path(np.zeros((n_samples, 5)), np.zeros((n_samples, n, 4))),

@@ -4,15 +4,16 @@ from __future__ import annotations
 
 import math
 from enum import IntEnum
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
-from swarmpush.compiled import borrowed, inlined
+from swarmpush.compiled import borrowed, compiled, inlined
 from swarmpush.draws import Purpose, normal, uniform
 from swarmpush.dynamics.host import MOTION, ORDERS, Host
-from swarmpush.program import MEMORY, NOTES, Command, Program, Senses, decide
+from swarmpush.dynamics.ranging import Surroundings, clear_run, sees
+from swarmpush.program import MEMORY, NOTES, Command, Program, Senses, decide, note_range, note_sight
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -25,10 +26,13 @@ class Mode(IntEnum):
     REACT = 1  # has felt a bump and drives on until the latency is over
     TURN = 2
     STOP = 3
+    SLIDE = 4  # presses on along the surface it has touched
 
 
-_RUN, _REACT, _TURN, _STOP = (int(mode) for mode in Mode)
-_ROTATE, _HALT = int(Command.ROTATE), int(Command.STOP)
+_RUN, _REACT, _TURN, _STOP, _SLIDE = (int(mode) for mode in Mode)
+_ROTATE, _HALT, _TO_ADVANCE, _TO_SLIDE, _TO_GAUGE, _TO_LOOK = (
+    int(c) for c in (Command.ROTATE, Command.STOP, Command.ADVANCE, Command.SLIDE, Command.GAUGE, Command.SIGHT)
+)
 _HEADING, _MISSED, _FALSE = int(Purpose.HEADING), int(Purpose.MISSED_BUMP), int(Purpose.FALSE_BUMP)
 _WALL = 1
 
@@ -37,7 +41,8 @@ class Rig(NamedTuple):
     """Constants of a run, in engine units.
 
     inverse_mass, inverse_step_mass: (n_entities,) of block, pushers and walls (0), as they are and as the engine has
-    them (see `effective_mass`). stall: of every pusher; what else differs from unit to unit is in `PUSHER_STATE`.
+    them (see `effective_mass`). corners: (m, 2) of the block, and sides: (m, 2) outward normals, in its own frame, the
+    rear face first. stall: of every pusher; what else differs from unit to unit is in `PUSHER_STATE`.
     """
 
     dt: float
@@ -59,8 +64,9 @@ class Rig(NamedTuple):
     block_step_mass: float
     block_drag: float
     block_yaw_drag: float
-    half_length: float
-    half_width: float
+    front_reach: float
+    corners: FloatArray
+    sides: FloatArray
     has_floor: bool
     floor_static: float
     floor_kinetic: float
@@ -83,6 +89,8 @@ PUSHER_STATE = np.dtype(
         ("mode", "i8"),  # see `Mode`
         ("until", "f8"),  # end of the latency, or of deafness after a missed bump
         ("to_turn", "f8"),  # angle still to turn
+        ("to_go", "f8"),  # way along the heading, or along the surface, after which the leg ends by itself, and
+        ("leg_ends", "f8"),  # time at which it does
         ("pressed", "f8"),  # impulse felt in the present touch
         ("percept_kind", "i8"),  # partner of the last bump felt, and
         ("percept_normal", "f8"),  # direction of its normal
@@ -119,28 +127,52 @@ def new_crew(headings: FloatArray, drag: FloatArray, side_drag: FloatArray) -> C
     pushers["mode"] = _TURN  # by nothing: the routine decides in the first step
     pushers["percept_normal"] = headings + math.pi
     pushers["until"] = pushers["next_false"] = -1.0
+    pushers["to_go"] = pushers["leg_ends"] = np.inf
     pushers["touched_at"] = -9
     return Crew(pushers, np.zeros((n, MEMORY), dtype=np.int64), np.zeros((n, NOTES)))
 
 
-@inlined
+@compiled
 def _carry_out(
-    rig: Rig, crew: Crew, program: Program, senses: Senses, keys: NDArray[np.uint64], i: int, now: float
+    host: Host,
+    rig: Rig,
+    crew: Crew,
+    program: Program,
+    senses: Senses,
+    keys: NDArray[np.uint64],
+    around: Surroundings,
+    i: int,
+    now: float,
 ) -> None:
-    """Let the routine decide until the pusher runs, turns for some time, or halts."""
-    p = crew.pushers[i]
+    """Let the routine decide until the pusher moves, turns for some time, or halts."""
+    p, memory, notes = crew.pushers[i], crew.memory[i], crew.notes[i]
     while True:
-        command, rotation, _ = decide(
-            program, senses, keys[i], crew.memory[i], crew.notes[i], now,
-            p.heading, p.percept_kind, p.percept_normal,
-        )  # fmt: skip
+        command, value, number = decide(
+            program, senses, keys[i], memory, notes, now, p.heading, p.percept_kind, p.percept_normal
+        )
         if command == _ROTATE:
             if rig.turn_rate < np.inf:
-                p.mode, p.to_turn = _TURN, rotation
+                p.mode, p.to_turn = _TURN, value
                 return
-            p.heading += rotation
+            p.heading += value
             continue
-        p.mode = _STOP if command == _HALT else _RUN
+        if command == _TO_GAUGE:
+            note_range(senses, keys[i], memory, notes, clear_run(around, host.motion, i, p.heading)[0], value)
+            continue
+        if command == _TO_LOOK:
+            note_sight(senses, keys[i], memory, sees(around, host.motion, i, p.heading, value, number))
+            continue
+        p.mode, p.to_go, p.leg_ends = _RUN, np.inf, np.inf
+        if command == _HALT:
+            p.mode = _STOP
+        elif command == _TO_ADVANCE:
+            p.to_go = value
+        elif command == _TO_SLIDE:
+            p.mode = _SLIDE
+            if value >= 0.0:
+                p.to_go = value
+            else:
+                p.leg_ends = now - value
         p.pressed = 0.0
         p.until = -1.0
         p.ux, p.uy = math.cos(p.heading), math.sin(p.heading)
@@ -148,8 +180,31 @@ def _carry_out(
 
 
 @inlined
+def _ends_leg(rig: Rig, p: Any, vx: float, vy: float, now: float) -> bool:
+    """Whether a leg of given length or time is over, by the pusher's own reckoning of its way."""
+    if p.mode == _SLIDE:
+        p.to_go -= abs(vy * math.cos(p.percept_normal) - vx * math.sin(p.percept_normal)) * rig.dt
+    elif p.mode == _RUN:
+        p.to_go -= (vx * p.ux + vy * p.uy) * rig.dt
+    else:
+        return False
+    if p.to_go > 0.0 and now < p.leg_ends - 1e-9:
+        return False
+    if p.mode == _RUN:
+        p.percept_kind = 0
+    return True
+
+
+@inlined
 def drive(
-    host: Host, rig: Rig, crew: Crew, program: Program, senses: Senses, keys: NDArray[np.uint64], step: int
+    host: Host,
+    rig: Rig,
+    crew: Crew,
+    program: Program,
+    senses: Senses,
+    keys: NDArray[np.uint64],
+    around: Surroundings,
+    step: int,
 ) -> None:
     """Before the engine's step: reactions, turning and heading noise; then the forces on pushers and block."""
     now = step * rig.dt
@@ -158,8 +213,12 @@ def drive(
     for i in range(len(pushers)):
         p = pushers[i]
         spin, thrust = 0.0, rig.stall
-        if (p.mode == _REACT and now >= p.until - 1e-9) or (p.mode == _TURN and p.to_turn == 0.0):
-            _carry_out(rig, crew, program, senses, keys, i, now)
+        vx, vy = motion[MOTION * (i + 1) + 3], motion[MOTION * (i + 1) + 4]
+        is_over = (p.mode == _REACT and now >= p.until - 1e-9) or (p.mode == _TURN and p.to_turn == 0.0)
+        if p.to_go < np.inf or p.leg_ends < np.inf:
+            is_over |= _ends_leg(rig, p, vx, vy, now)
+        if is_over:
+            _carry_out(host, rig, crew, program, senses, keys, around, i, now)
         if p.mode == _TURN:
             most = rig.turn_rate * rig.dt
             angle = min(max(p.to_turn, -most), most)
@@ -176,7 +235,6 @@ def drive(
                 p.heading += spread * normal(keys[i, _HEADING], step // rig.noise_steps)
             p.heading += rig.drift * rig.dt
             p.ux, p.uy = math.cos(p.heading), math.sin(p.heading)
-        vx, vy = motion[MOTION * (i + 1) + 3], motion[MOTION * (i + 1) + 4]
         along = thrust - p.drag * (vx * p.ux + vy * p.uy)
         across = -p.side_drag * (vy * p.ux - vx * p.uy)
         p.force_x = along * p.ux - across * p.uy
@@ -228,7 +286,7 @@ def feel(rig: Rig, crew: Crew, keys: NDArray[np.uint64], step: int) -> None:
     pushers = borrowed(crew.pushers)
     for i in range(len(pushers)):
         p = pushers[i]
-        if p.mode != _RUN:
+        if p.mode != _RUN and p.mode != _SLIDE:
             continue
         if rig.false_bumps > 0.0:
             if p.next_false < 0.0:

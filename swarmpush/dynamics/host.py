@@ -172,12 +172,11 @@ class Disc(NamedTuple):
 
 
 class Plate(NamedTuple):
-    """The block for the engine: centre, half length, half width, mass, moment (infinite: no yaw)."""
+    """The block for the engine: centre, corners as seen from it, mass, moment (infinite: no yaw)."""
 
     x: float
     y: float
-    half_length: float
-    half_width: float
+    corners: Sequence[tuple[float, float]]
     mass: float
     moment: float
 
@@ -215,7 +214,7 @@ class HostSpace:
     def _add_plate(self, plate: Plate) -> pymunk.Body:
         body = pymunk.Body(plate.mass, plate.moment)
         body.position = plate.x, plate.y
-        shape = pymunk.Poly.create_box(body, (2 * plate.half_length, 2 * plate.half_width))
+        shape = pymunk.Poly(body, list(plate.corners))
         shape.collision_type = BLOCK
         self.space.add(body, shape)
         return body
@@ -231,16 +230,12 @@ class HostSpace:
         return body
 
     def _add_wall(self, start: tuple[float, float], end: tuple[float, float]) -> pymunk.Body:
-        """A wall as a thick plate behind the line from start to end, on a static body of its own.
+        """A side of the channel or of a post, on a static body of its own, which tells walls apart in the contact list.
 
-        A thick plate stops what a thin line might let through; an own body tells walls apart in the contact list.
+        A line has no thickness, and needs none: no body moves more than a hundredth of a radius in a step.
         """
         body = pymunk.Body(body_type=pymunk.Body.STATIC)
-        dx, dy = end[0] - start[0], end[1] - start[1]
-        length = math.hypot(dx, dy)
-        depth = 4.0 / length
-        outer = [(start[0] + dy * depth, start[1] - dx * depth), (end[0] + dy * depth, end[1] - dx * depth)]
-        shape = pymunk.Poly(body, [start, end, outer[1], outer[0]])
+        shape = pymunk.Segment(body, start, end, 0.0)
         shape.collision_type = WALL
         self.space.add(body, shape)
         return body
@@ -304,7 +299,8 @@ class HostSpace:
         n = 1 + len(self.pushers)
         # each disc can touch at most six equal discs, two walls and the block; each pair may show up twice
         n_pairs = 64 + 24 * n
-        motion, orders = np.zeros(MOTION * n + SPARE), np.zeros(ORDERS * n + SPARE)
+        n_visited = n + len(self.walls) + 1  # the engine visits the walls as well, and its own static body
+        motion, orders = np.zeros(MOTION * n_visited + SPARE), np.zeros(ORDERS * n_visited + SPARE)
         ints = np.zeros(CONTACT_INTS * n_pairs + SPARE, dtype=np.int64)
         floats = np.zeros(CONTACT_FLOATS * n_pairs + SPARE)
         get, put, contacts = batch.Buffer(), batch.Buffer(), batch.Buffer()
@@ -401,7 +397,7 @@ def _sorted_contacts(host: Host, n_pairs: int) -> FloatArray:
 
 def _little_space() -> HostSpace:
     return HostSpace(
-        Plate(4.0, 3.0, 1.0, 1.5, 2.0, 3.0),
+        Plate(4.0, 3.0, ((-1.0, -1.5), (1.0, -1.5), (1.0, 1.5), (-1.0, 1.5)), 2.0, 3.0),
         [Disc(1.5, 2.2, 1.0, 1.0), Disc(1.3, 4.3, 1.0, 1.0)],
         [((0.0, 0.0), (9.0, 0.0)), ((9.0, 6.0), (0.0, 6.0))],
         {

@@ -9,14 +9,13 @@ step (`effective_mass`); the share that the bare masses have in it is impact. Al
 from __future__ import annotations
 
 import math
-from enum import IntEnum
 from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
 from swarmpush.compiled import borrowed, inlined
-from swarmpush.dynamics.crew import Crew, Rig
+from swarmpush.dynamics.crew import Crew, Mode, Rig
 from swarmpush.dynamics.host import CONTACT_FLOATS, CONTACT_INTS, MOTION, Host
 
 FloatArray = NDArray[np.float64]
@@ -32,7 +31,7 @@ VISIT = np.dtype(
     [
         ("owner", "i8"),
         ("partner", "i8"),
-        ("face", "i8"),  # see `Face`
+        ("face", "i8"),  # see `REAR`
         ("first_step", "i8"),
         ("last_step", "i8"),
         ("impact", "f8"),  # normal impulse in either part, and
@@ -49,18 +48,7 @@ VISIT = np.dtype(
 )
 
 
-class Face(IntEnum):
-    """Side of the block that a visit is on; NONE for other partners."""
-
-    NONE = 0
-    REAR = 1
-    LOWER = 2
-    FRONT = 3
-    UPPER = 4
-
-
-_REAR, _LOWER, _FRONT, _UPPER = 1, 2, 3, 4
-
+REAR = 1  # a visit's `face` is 0 unless it is on the block, and then the number of the side plus one
 
 TOTALS = np.dtype(
     [
@@ -84,6 +72,8 @@ TOTALS = np.dtype(
     ]
 )  # fmt: skip
 _TOUCHES_WALL, _TOUCHES_PUSHER = 1, 2  # bits
+_SLIDE = int(Mode.SLIDE)
+_SAME_SURFACE = math.cos(math.radians(20.0))  # normals closer than this belong to one surface, or a gentle bend of it
 
 
 class Ledger(NamedTuple):
@@ -178,13 +168,14 @@ def close_visits(ledger: Ledger, step: int) -> None:
 
 
 @inlined
-def _face(yaw: float, nx: float, ny: float) -> int:
-    """Side of the block that a pusher touches whose normal into the block is (nx, ny)."""
-    c, s = math.cos(yaw), math.sin(yaw)
-    bx, by = c * nx + s * ny, c * ny - s * nx
-    if abs(bx) >= abs(by):
-        return _REAR if bx > 0.0 else _FRONT
-    return _LOWER if by > 0.0 else _UPPER
+def _face(sides: FloatArray, nx: float, ny: float) -> int:
+    """Side of the block that is touched where the normal into the block, in its own frame, is (nx, ny)."""
+    best, face = -2.0, 0
+    for k in range(len(sides)):
+        squarely = -(sides[k, 0] * nx + sides[k, 1] * ny)
+        if squarely > best:
+            best, face = squarely, k + 1
+    return face
 
 
 @inlined
@@ -196,6 +187,8 @@ def _feel(
     if rig.half_arc < math.pi and nx * p.ux + ny * p.uy < math.cos(rig.half_arc):
         return
     p.touched_at = step
+    if p.mode == _SLIDE and -(nx * math.cos(p.percept_normal) + ny * math.sin(p.percept_normal)) > _SAME_SURFACE:
+        return  # what it slides along is no bump
     if impulse > p.hardest:
         p.hardest, p.step_kind, p.step_normal = impulse, kind, math.atan2(-ny, -nx)
 
@@ -209,16 +202,17 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ledger: Ledger, n_pairs: in
     ids, entities, slots = borrowed(ledger.ids), borrowed(ledger.entities), borrowed(ledger.slots)
     n_open, on_block, touching = borrowed(ledger.n_open), borrowed(ledger.on_block), borrowed(ledger.touching)
     inverse_mass, inverse_step_mass = borrowed(rig.inverse_mass), borrowed(rig.inverse_step_mass)
+    corners, sides = borrowed(rig.corners), borrowed(rig.sides)
     totals.wall_bottom = totals.wall_top = 0.0
     leaning = 0.0
-    for p in range(n_pairs):
-        if whole[CONTACT_INTS * p + 2] == 0:
+    for pair in range(n_pairs):
+        if whole[CONTACT_INTS * pair + 2] == 0:
             continue
-        owner = _entity(ids, entities, whole[CONTACT_INTS * p])
-        partner = _entity(ids, entities, whole[CONTACT_INTS * p + 1])
+        owner = _entity(ids, entities, whole[CONTACT_INTS * pair])
+        partner = _entity(ids, entities, whole[CONTACT_INTS * pair + 1])
         if owner < 0 or partner < 0:
             continue
-        at = CONTACT_FLOATS * p
+        at = CONTACT_FLOATS * pair
         jx, jy = numbers[at], numbers[at + 1]
         nx, ny = numbers[at + 2], numbers[at + 3]
         # a pusher owns its visits; of two pushers the first; the block owns those with walls
@@ -232,7 +226,7 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ledger: Ledger, n_pairs: in
         base = MOTION * owner
         x, y = motion[base] + motion[base + 3] * dt, motion[base + 1] + motion[base + 4] * dt
         rvx, rvy = motion[base + 3], motion[base + 4]
-        overlap, drive = 0.0, 0.0
+        overlap, drive, face = 0.0, 0.0, 0
         if owner > 0:
             p = pushers[owner - 1]
             drive = (p.force_x * nx + p.force_y * ny) * dt
@@ -251,11 +245,13 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ledger: Ledger, n_pairs: in
             cx, cy = x + nx - motion[0], y + ny - motion[1]
             rvx, rvy = rvx - motion[3] + motion[5] * cy, rvy - motion[4] - motion[5] * cx
             c, s = math.cos(motion[2]), math.sin(motion[2])
-            # depth of the disc in the plate, in the plate's frame
-            bx, by = abs(c * (x - motion[0]) + s * (y - motion[1])), abs(c * (y - motion[1]) - s * (x - motion[0]))
-            gap_x, gap_y = bx - rig.half_length, by - rig.half_width
-            outside = math.hypot(max(gap_x, 0.0), max(gap_y, 0.0))
-            overlap = 1.0 - outside if outside > 0.0 else 1.0 - max(gap_x, gap_y)
+            bnx, bny = c * nx + s * ny, c * ny - s * nx
+            # the block's nearest reach towards the disc, along the normal, from the disc's centre
+            reach = np.inf
+            for corner in range(len(corners)):
+                reach = min(reach, bnx * corners[corner, 0] + bny * corners[corner, 1])
+            overlap = 1.0 - reach - (nx * (motion[0] - x) + ny * (motion[1] - y))
+            face = _face(sides, bnx, bny)
             _feel(rig, pushers, owner - 1, 2, nx, ny, push, step)
             on_block[owner, 0] -= jx
             on_block[owner, 1] -= jy
@@ -275,7 +271,7 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ledger: Ledger, n_pairs: in
             visit.approach = approach
             visit.x, visit.y = x, y
             visit.block_x_on = motion[0]
-            visit.face = _face(motion[2], nx, ny) if partner == 0 else 0
+            visit.face = face
             visit.heading = pushers[owner - 1].heading if owner > 0 else motion[2]
         lean = push
         if approach > APPROACH:
@@ -290,7 +286,7 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ledger: Ledger, n_pairs: in
         visit.block_x_off = motion[0]
         visit.overlap = max(visit.overlap, overlap)
         totals.overlap_max = max(totals.overlap_max, overlap)
-        if partner == 0 and visit.face == _REAR and lean > rig.lean_force * dt:
+        if partner == 0 and visit.face == REAR and lean > rig.lean_force * dt:
             leaning += 1.0
     totals.step_leaning = leaning
     _add_up(ledger, n)

@@ -24,6 +24,7 @@ from swarmpush.dynamics.ledger import (
     enter_contacts,
     remember_block,
 )
+from swarmpush.dynamics.ranging import Surroundings
 from swarmpush.program import Program, Senses
 
 FloatArray = NDArray[np.float64]
@@ -64,6 +65,7 @@ class Task(NamedTuple):
     crew: Crew
     program: Program
     senses: Senses
+    around: Surroundings
     keys: NDArray[np.uint64]
     ledger: Ledger
     path: Path
@@ -79,7 +81,7 @@ def _before(host: Host, task: Task, step: int, final_step: int) -> int:
         balance_block(host, rig, ledger)
     remember_block(host, ledger)
     pushers, n = borrowed(crew.pushers), len(crew.pushers)
-    ahead_of = motion[0] + rig.half_length
+    ahead_of = motion[0] + rig.front_reach
     ending = _NOT_YET
     for i in range(n):
         x, y = motion[MOTION * (i + 1)], motion[MOTION * (i + 1) + 1]
@@ -111,7 +113,7 @@ def _before(host: Host, task: Task, step: int, final_step: int) -> int:
             pusher_rows[row, i, 2] = pushers[i].heading
             pusher_rows[row, i, 3] = pushers[i].mode
     if ending == _NOT_YET:
-        drive(host, rig, crew, task.program, task.senses, task.keys, step)
+        drive(host, rig, crew, task.program, task.senses, task.keys, task.around, step)
         if rig.has_floor:
             set_floor(host, rig)
     return ending

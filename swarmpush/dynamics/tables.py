@@ -9,16 +9,12 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from swarmpush.dynamics.crew import Mode
-from swarmpush.dynamics.ledger import Face, Ledger
+from swarmpush.dynamics.ledger import Ledger
 from swarmpush.dynamics.loop import Path, Task
 from swarmpush.dynamics.run import Books
 from swarmpush.dynamics.steps import Units
-from swarmpush.kinematics.boundary import SURFACES
 
 VisitArray = NDArray[np.void]
-
-_FACES = {Face.REAR: "rear", Face.LOWER: "block bottom", Face.FRONT: "front", Face.UPPER: "block top"}
-_WALLS = SURFACES[:4]
 
 
 def open_visits(ledger: Ledger) -> VisitArray:
@@ -26,15 +22,17 @@ def open_visits(ledger: Ledger) -> VisitArray:
     return ledger.slots[ledger.slots["partner"] >= 0]
 
 
-def visit_table(rows: Sequence[VisitArray], n_pushers: int, dt: float, u: Units) -> pd.DataFrame:
-    """The visits of a run; see `Run.visits`."""
+def visit_table(
+    rows: Sequence[VisitArray], walls: Sequence[str], sides: Sequence[str], n_pushers: int, dt: float, u: Units
+) -> pd.DataFrame:
+    """The visits of a run; see `Run.visits`. walls, sides: names of the fixed sides and of the block's."""
     log = np.concatenate(rows)
     log = log[np.lexsort((log["partner"], log["owner"], log["first_step"]))]
     partner = log["partner"]
     is_pusher, is_wall = (partner >= 1) & (partner <= n_pushers), partner > n_pushers
     kinds = np.where(partner == 0, "block", np.where(is_wall, "wall", "pusher"))
-    names = np.array(["pusher", *(_FACES[Face(k)] for k in range(1, 5)), *_WALLS], dtype=object)
-    code = np.where(is_wall, 5 + partner - n_pushers - 1, log["face"])
+    names = np.array(["pusher", *sides, *walls], dtype=object)
+    code = np.where(is_wall, len(sides) + partner - n_pushers, log["face"])
     step_s = dt * u.time
     return pd.DataFrame(
         {

@@ -16,10 +16,8 @@ from swarmpush.dynamics.host import HostSpace, host_disagreement
 from swarmpush.dynamics.loop import Ending, Task, advance, advance_plainly
 from swarmpush.dynamics.run import Run
 from swarmpush.dynamics.steps import StepSettings, choose_step, engine_units
-from swarmpush.geometry import is_plain
+from swarmpush.kinematics.boundary import surface_names
 from swarmpush.kinematics.laps import find_laps
-from swarmpush.problems import Problem, ScenarioError
-from swarmpush.routine import Advance, Gauge, Sight, Slide
 from swarmpush.scenario import Scenario
 
 Progress = Callable[[float], None]
@@ -65,9 +63,6 @@ def simulate(
         cycles: surfaces of the laps to recognise; those of the plan unless given.
         progress: called now and then with the share of the time limit that is done, 0 to 1.
 
-    Raises:
-        ScenarioError: for outlines, posts and acts that only the point world knows.
-
     Returns:
         A `Run`; the same scenario, seed and versions give the same tables, bit by bit.
 
@@ -76,7 +71,6 @@ def simulate(
     >>> swarmpush.simulate(s, seed=7).ended
     'time'
     """
-    _demand_what_it_knows(s)
     seed = s.trial.seed if seed is None else seed
     steps = steps or choose_step(s)
     if cycles is None:
@@ -94,19 +88,6 @@ def simulate(
             progress(step / final_step)
     log.append(tables.open_visits(task.ledger))
     return _record(s, seed, steps, cycles, task, log, step, ENDINGS[ending], start_x)
-
-
-def _demand_what_it_knows(s: Scenario) -> None:
-    """The body world knows straight corridors, rectangular blocks, and routines of runs and turns."""
-    acts = {type(act) for stage in s.routine.stages for act in stage.acts}
-    unknown = sorted(act.__name__.lower() for act in acts & {Advance, Slide, Gauge, Sight})
-    problems = [Problem("routine", f"the body world does not know the act '{name}' yet; use plan") for name in unknown]
-    if not is_plain(s):
-        problems.append(
-            Problem("channel", "the body world knows plain corridors and rectangular blocks only; use plan")
-        )
-    if problems:
-        raise ScenarioError(s.about.name, problems)
 
 
 def _fetch_log(task: Task) -> NDArray[np.void]:
@@ -128,7 +109,10 @@ def _record(
 ) -> Run:
     u, totals = engine_units(s), task.ledger.totals[0]
     interval_s, n_rows = steps.sample_steps * steps.dt_s, n_steps // steps.sample_steps + 1
-    visits = tables.visit_table(log, s.pushers.count, steps.dt_s / u.time, u)
+    n_walls, n_sides = len(task.ledger.on_block) - s.pushers.count - 1, len(task.rig.sides)
+    names = surface_names(s)
+    walls, sides = names[:n_walls], names[n_walls : n_walls + n_sides]
+    visits = tables.visit_table(log, walls, sides, s.pushers.count, steps.dt_s / u.time, u)
     block = tables.block_table(task.path, n_rows, interval_s, u)
     covered = np.hypot(np.diff(block["x_m"]), np.diff(block["y_m"])).sum() / u.length
     bumps = find_bumps(visits)

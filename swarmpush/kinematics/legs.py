@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from swarmpush.compiled import compiled, inlined
 from swarmpush.kinematics.boundary import Boundary
-from swarmpush.program import PC, RANGE, RESOLUTION, SEEN, Command, Op, Program, Senses, decide
+from swarmpush.program import PC, Command, Op, Program, Senses, decide, note_range, note_sight
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -18,7 +18,7 @@ IntArray = NDArray[np.int64]
 _END_TOLERANCE = 1e-12  # of the scale: closes the seam between a segment and the arc at its end
 BEHIND_TOLERANCE = 1e-9  # of the scale: a pusher further behind a surface than rounding explains is not stopped by it
 _PARALLEL = 1e-12  # rad: a run this parallel to a surface does not meet it
-_LOOKS = 16  # rays into a cone of sight; the edges and the middle are among them
+LOOKS = 16  # rays into a cone of sight; the edges and the middle are among them
 
 _ROTATE, _STOP, _ADVANCE, _SLIDE = (int(c) for c in (Command.ROTATE, Command.STOP, Command.ADVANCE, Command.SLIDE))
 _GAUGE, _SIGHT = int(Command.GAUGE), int(Command.SIGHT)
@@ -100,7 +100,7 @@ def hit_among(
 
 
 @compiled
-def _gauge(
+def _clear_run(
     segments: FloatArray,
     arcs: FloatArray,
     moving: IntArray,
@@ -109,13 +109,9 @@ def _gauge(
     x: float,
     y: float,
     heading: float,
-    most: float,
-    step: float,
 ) -> float:
-    """Clear run along the heading as the pusher reads it."""
-    hit = hit_among(segments, arcs, moving, scale, shift, x, y, math.cos(heading), math.sin(heading))
-    reading = min(hit.run, most)
-    return step * np.floor(reading / step + 0.5) if step > 0.0 else reading
+    """How far the pusher could run along the heading before it touches something."""
+    return hit_among(segments, arcs, moving, scale, shift, x, y, math.cos(heading), math.sin(heading)).run
 
 
 @compiled
@@ -132,8 +128,8 @@ def _sees(
     face: int,
 ) -> bool:
     """Whether a ray within the cone meets the face first."""
-    for k in range(_LOOKS + 1):
-        angle = heading + half_angle * (2.0 * k / _LOOKS - 1.0)
+    for k in range(LOOKS + 1):
+        angle = heading + half_angle * (2.0 * k / LOOKS - 1.0)
         hit = hit_among(segments, arcs, moving, scale, shift, x, y, math.cos(angle), math.sin(angle))
         if hit.surface == face:
             return True
@@ -197,9 +193,11 @@ def next_leg(
             elif op != _TURN:
                 by_heading, by_normal = 0.0, 1.0
         elif command == _GAUGE:
-            notes[RANGE] = _gauge(segments, arcs, moving, scale, shift, x, y, heading, value, notes[RESOLUTION])
+            run = _clear_run(segments, arcs, moving, scale, shift, x, y, heading)
+            note_range(senses, keys, memory, notes, run, value)
         elif command == _SIGHT:
-            memory[SEEN] = int(_sees(segments, arcs, moving, scale, shift, x, y, heading, value, number))
+            is_there = _sees(segments, arcs, moving, scale, shift, x, y, heading, value, number)
+            note_sight(senses, keys, memory, is_there)
         else:
             break
     ux, uy = math.cos(heading), math.sin(heading)

@@ -23,6 +23,11 @@ MU = 0.3
 WEIGHT = 1.0 * G  # N, of the block
 
 
+def rectangle_arm(a: float, b: float) -> float:
+    """Mean distance of an a x b rectangle from its centre."""
+    return friction_arm(((-a / 2, -b / 2), (a / 2, -b / 2), (a / 2, b / 2), (-a / 2, b / 2)))
+
+
 # ---- one impact -----------------------------------------------------------------------------------------------------
 
 SLIDE = 4e-3  # relative: positions lag a step behind velocities, one in some 300 steps of a slide
@@ -165,10 +170,10 @@ def test_friction_moment_of_a_patch(sides: tuple[float, float], arm: float) -> N
     Source of the idea: Goyal, Ruina and Papadopoulos, "Planar sliding with dry friction", Wear 143 (1991) 307.
     """
     a, b = sides
-    assert friction_arm(a, b) == pytest.approx(arm, abs=1e-9)  # digits of the table
-    assert friction_arm(b, a) == pytest.approx(arm, abs=1e-9)
+    assert rectangle_arm(a, b) == pytest.approx(arm, abs=1e-9)  # digits of the table
+    assert rectangle_arm(b, a) == pytest.approx(arm, abs=1e-9)
     quadrature = dblquad(lambda y, x: math.hypot(x, y), 0, a / 2, 0, b / 2)[0] * 4 / (a * b)
-    assert friction_arm(a, b) == pytest.approx(quadrature, rel=1e-8)  # what dblquad promises
+    assert rectangle_arm(a, b) == pytest.approx(quadrature, rel=1e-8)  # what dblquad promises
 
 
 @pytest.mark.parametrize("sides", [(0.2, 0.2), (0.1, 0.3)])
@@ -178,7 +183,7 @@ def test_off_centre_threshold(sides: tuple[float, float], offset: float) -> None
 
     Source of the ellipse: Howe and Cutkosky, Int. J. Robotics Research 15 (1996) 557.
     """
-    arm = friction_arm(*sides)
+    arm = rectangle_arm(*sides)
     threshold = MU * WEIGHT / math.hypot(1.0, offset / arm)
     for share, moves in ((0.999, False), (1.005, True)):
         keys = {"block": {"length": sides[0], "width": sides[1]}, "floor": dry(MU), "goal": {"time_limit": 2.0}}
@@ -229,7 +234,7 @@ def coast(run: Run, offset: float, friction: Friction) -> tuple[float, float, fl
 
 def ellipse(vx: float, vy: float, spin: float) -> NDArray[np.float64]:
     """Friction by the elliptic limit surface."""
-    arm = friction_arm(SPIN[1], SPIN[1])
+    arm = rectangle_arm(SPIN[1], SPIN[1])
     return -np.array([vx, vy, arm**2 * spin]) / math.hypot(vx, vy, arm * spin)
 
 
@@ -279,7 +284,7 @@ def test_how_far_the_ellipse_is_from_a_uniform_patch() -> None:
 # ---- slow pushing ---------------------------------------------------------------------------------------------------
 
 SIDE, TIP = 0.1, 0.01  # m: square block, pusher's radius
-ARM = friction_arm(SIDE, SIDE)
+ARM = rectangle_arm(SIDE, SIDE)
 
 
 def pushed_slowly(heading: float, offset: float, friction: float) -> Scenario:

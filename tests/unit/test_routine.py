@@ -10,7 +10,7 @@ import pytest
 from pydantic import ValidationError
 
 from swarmpush.draws import stream_keys
-from swarmpush.program import MEMORY, NOTES, Command, Contact, Program, Senses, compile_routine, decide, scale_time
+from swarmpush.program import MEMORY, NOTES, Command, Contact, Program, Senses, compile_routine, decide, in_units
 from swarmpush.routine import MAX_COUNTERS, Device, Routine
 
 ROUNDING = 1e-12  # rad; a few additions of angles
@@ -267,7 +267,7 @@ def test_times_can_be_scaled() -> None:
     """A program for an engine with another unit of time branches at the same moment."""
     late = {"act": "branch", "on": "time", "after": "10 s", "go": "a"}
     program = compile_routine(routine(stage("a", RUN, late)))
-    scaled = scale_time(program, 2.0)
+    scaled = in_units(program, 3.0, 2.0)
     assert program["value"][1] == 10.0
     assert scaled["value"][1] == 5.0
     assert (scaled["op"] == program["op"]).all()
