@@ -91,7 +91,7 @@ def test_bodies_go_where_points_go(name: str, channel: dict[str, Any]) -> None:
     # at a corner a hair's breadth decides where a pusher is sent
     known = next((k for k, surface in enumerate(names) if "corner" in surface), n)
     bumps = hits[:known][surfaces[:known] >= 0]
-    assert len(bumps) >= 3
+    assert len(bumps) >= 2
     run = simulate(s.replace(goal={"time_limit": float(hits[:, 5].sum()) + 0.1}), seed=1, cycles=())
     starts = run.visits[["x_m", "y_m"]].to_numpy()
     for x, y in bumps[:, :2]:
