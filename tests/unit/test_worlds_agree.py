@@ -19,6 +19,7 @@ from swarmpush.program import EXACT, MEMORY, NOTES, compile_routine
 from swarmpush.scenario import Scenario
 
 N_LEGS = 14
+HEADING = 0.3  # rad
 R = 0.02  # m
 # A bump is felt up to one step late and one step more passes before the turn; 0.8 % of a radius is run per step, and
 # each lap of errors is carried on by the next legs, which turn flat angles into longer ones.
@@ -69,7 +70,7 @@ def rig(channel: dict[str, Any], acts: list[dict[str, Any]]) -> Scenario:
         "contacts": dict.fromkeys(("pusher_wall", "pusher_block", "pusher_pusher", "block_wall"), smooth),
         "routine": {"stages": [{"name": "go", "acts": acts}, SHORT]},
         "errors": {},
-        "start": {"placed": [{"x": 0.3, "y": 0.1, "heading": 0.4}]},
+        "start": {"placed": [{"x": 0.3, "y": 0.1, "heading": HEADING}]},
         "goal": {"travel": 0.1, "time_limit": 30.0},
     }
     return from_tables(tables)
@@ -83,7 +84,7 @@ def test_bodies_go_where_points_go(name: str, channel: dict[str, Any]) -> None:
     hits, surfaces = np.zeros((N_LEGS, 6)), np.zeros(N_LEGS, dtype=np.int64)
     n = trace(
         boundary_of(s), compile_routine(s.routine, surface_names(s)), EXACT, 0.0, s.pushers.free_speed,
-        stream_keys(1, 1)[0], np.array([0.3, 0.1, 0.4]), 0.0, hits, surfaces, np.zeros(MEMORY, dtype=np.int64),
+        stream_keys(1, 1)[0], np.array([0.3, 0.1, HEADING]), 0.0, hits, surfaces, np.zeros(MEMORY, dtype=np.int64),
         np.zeros(NOTES),
     )  # fmt: skip
     assert n == N_LEGS
@@ -91,7 +92,7 @@ def test_bodies_go_where_points_go(name: str, channel: dict[str, Any]) -> None:
     # at a corner a hair's breadth decides where a pusher is sent
     known = next((k for k, surface in enumerate(names) if "corner" in surface), n)
     bumps = hits[:known][surfaces[:known] >= 0]
-    assert len(bumps) >= 2
+    assert len(bumps) >= 3
     run = simulate(s.replace(goal={"time_limit": float(hits[:, 5].sum()) + 0.1}), seed=1, cycles=())
     starts = run.visits[["x_m", "y_m"]].to_numpy()
     for x, y in bumps[:, :2]:
