@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from pathlib import Path
 
-DEMOS = ("service_passage", "vibration_duct", "gel_channel")
+DEMOS = ("service_passage", "vibration_duct", "gel_channel", "loading_bay")
 
 
 def demo(name: str) -> Path:
