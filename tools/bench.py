@@ -2,12 +2,14 @@
 
     python tools/bench.py                      all cases
     python tools/bench.py --csv bench.csv      and append one row per case to this file
-    python tools/bench.py --cases body point   only some: body, point, start, audit
+    python tools/bench.py --cases body point   only some: body, point, basin, start, audit
 
 Cases and bars:
 - body: one step of the body world with 16, 64 and 256 pushers in one and the same corridor; the hand-written script
   must take at least 10 times as long at 64 pushers.
 - point: bumps per second and core in the point world; at least 8 million.
+- basin: a million starts in the service passage, each followed for 100 legs; at least 10 million legs per second and
+  core on one thread, at least 1.8 times as many on two threads, less than 500 MB.
 - start: `python -m swarmpush --help`; at most twice as long as `python -c "import typer"`.
 - audit: a whole audit of the service passage with everything compiled; no bar.
 
@@ -21,6 +23,12 @@ What the columns of the body case hold:
   and feel bumps, a loop over the carts for routine and forces, caps for the floor. It splits no impulses, keeps no
   books and records no path, so it does less than ours. Its world is the same one, though its course is its own.
 The crew thickens at the block as time goes on, so each round compares the same stretch of model time.
+
+What the basin case counts: a leg is one straight run to the next bump, with all acts of the routine before it. No start
+stops early, not even where its lap has closed. Clocked are the following of all starts and the keeping of their ends;
+drawing the starts and compiling are not. "By hand" are two versions in vectorised NumPy, on one thread and with fewer
+starts (`contenders_point.py`). On 1000 starts their legs must be ours, surface by surface and to 1e-9 in m, rad and s.
+The peak memory is that of a fresh process that follows the million starts on two threads.
 
 Use it on a quiet machine; it says how busy the machine was before.
 """
@@ -51,6 +59,11 @@ CREWS = (16, 64, 256)
 WARM_UP, STEPS, ROUNDS = 2000, 2000, 7  # steps before the clock runs; steps per round
 BUSY = 0.5  # processes waiting for a processor, above which the numbers are in doubt
 MIN_BY_HAND, MIN_BUMPS, MAX_START = 10.0, 8e6, 2.0  # the bars
+MIN_LEGS, MIN_SPEED_UP, MAX_MB = 10e6, 1.8, 500.0  # those of the basin case
+
+N_BASIN, N_LEGS, N_NUMPY, N_CHECKED = 1_000_000, 100, 100_000, 1000  # starts, legs each; starts of the NumPy versions
+BASIN_ROUNDS = 5
+SAME_LEG = 1e-9  # m, rad, s; the laps contract, so rounding stays at its own size, about 1e-13
 
 COLUMNS = "date commit machine load python packages case unit ours bare by_hand ours_to_bare by_hand_to_ours bar is_met"
 
@@ -222,6 +235,92 @@ def point_case(rounds: int = 25) -> Iterator[Result]:
     )
 
 
+def basin_case() -> Iterator[Result]:
+    """A million starts, on one thread and on two, against vectorised NumPy."""
+    from basin import Basin, draw_many, rig
+    from contenders_point import CorridorInNumPy, InNumPy
+
+    command = [sys.executable, str(Path(__file__).with_name("basin.py")), str(N_BASIN), str(N_LEGS), "2"]
+    peak_MB = float(subprocess.run(command, capture_output=True, text=True, check=True).stdout.split()[-1])
+    s = rig()
+    ours, rivals = Basin(s), {"any channel": InNumPy(s), "a straight corridor": CorridorInNumPy(s)}
+    starts, checked = draw_many(s, N_BASIN), draw_many(s, N_CHECKED, seed=1)
+    worst = max(_worst_difference(ours.legs(checked, N_LEGS), rival, checked) for rival in rivals.values())
+    rounds = []
+    for _ in range(BASIN_ROUNDS):
+        pair = [_rate(lambda n=n: ours.follow(starts, N_LEGS, n)) for n in (1, 2)]
+        others = [_rate(lambda rival=rival: rival.follow(starts[:N_NUMPY], N_LEGS)) for rival in rivals.values()]
+        rounds.append([*pair, *others])
+    (ones, ones_cores), (twos, twos_cores), *others = (
+        zip(*column, strict=True) for column in zip(*rounds, strict=True)
+    )
+    one, two = statistics.median(ones), statistics.median(twos)
+    speed_up = statistics.median(b / a for a, b in zip(ones, twos, strict=True))
+
+    is_met = one >= MIN_LEGS
+    row = {
+        "case": "basin, one thread", "unit": "legs per second and core", "ours": one,
+        "bar": f"at least {MIN_LEGS:g}", "is_met": is_met,
+    }  # fmt: skip
+    lines = [
+        f"\nbasin, {N_BASIN} starts in the service passage, {N_LEGS} legs each, {BASIN_ROUNDS} rounds by turns",
+        f"{N_CHECKED} others give the same legs here and in NumPy, largest difference {worst:.1e} m, rad or s",
+        f"one thread: {one / 1e6:.2f} million legs per second and core (median; best round {max(ones) / 1e6:.2f}); "
+        f"{statistics.median(ones_cores):.2f} cores in use",
+        f"        bar: at least {MIN_LEGS / 1e6:g} million, by the median: {_verdict(is_met)}",
+    ]
+    yield Result(row, lines)
+
+    is_met = speed_up >= MIN_SPEED_UP
+    row = {
+        "case": "basin, two threads", "unit": "times one thread", "ours": speed_up,
+        "bar": f"at least {MIN_SPEED_UP:g}", "is_met": is_met,
+    }  # fmt: skip
+    lines = [
+        f"two threads: {two / 1e6:.2f} million legs per second, {two / 2e6:.2f} per core; {speed_up:.2f} times one "
+        f"thread (best rounds {max(twos) / max(ones):.2f}); {statistics.median(twos_cores):.2f} cores in use",
+        f"        bar: at least {MIN_SPEED_UP:g} times, by the median: {_verdict(is_met)}",
+    ]
+    yield Result(row, lines)
+
+    is_met = peak_MB < MAX_MB
+    row = {"case": "basin, peak memory", "unit": "MB", "ours": peak_MB, "bar": f"below {MAX_MB:g}", "is_met": is_met}
+    yield Result(row, [f"peak memory: {peak_MB:.0f} MB", f"        bar: below {MAX_MB:g} MB: {_verdict(is_met)}"])
+
+    for name, (rates, _) in zip(rivals, others, strict=True):
+        rate = statistics.median(rates)
+        ratio = statistics.median(a / b for a, b in zip(ones, rates, strict=True))
+        row = {
+            "case": f"basin, NumPy for {name}", "unit": "ns per leg", "ours": 1e9 / one, "by_hand": 1e9 / rate,
+            "by_hand_to_ours": ratio,
+        }  # fmt: skip
+        yield Result(
+            row, [f"NumPy for {name}: {rate / 1e6:.2f} million legs per second; ours/NumPy {ratio:.2f} (no bar)"]
+        )
+
+
+def _rate(follow: Callable[[], int]) -> tuple[float, float]:
+    """Legs per second, and the cores that this process had in the mean."""
+    busy, start = time.process_time(), time.perf_counter()
+    n_legs = follow()
+    seconds = time.perf_counter() - start
+    return n_legs / seconds, (time.process_time() - busy) / seconds
+
+
+def _worst_difference(ours: Any, rival: Any, starts: Any) -> float:
+    """Largest difference between any two legs of the same number; ends the program if they are not alike."""
+    import numpy as np
+
+    hits, surfaces = np.zeros_like(ours.hits), np.zeros_like(ours.surfaces)
+    rival.follow(starts, surfaces.shape[1], hits, surfaces)
+    difference = hits - ours.hits
+    difference[:, :, 2:4] = np.remainder(difference[:, :, 2:4] + math.pi, 2 * math.pi) - math.pi  # headings
+    worst = float(np.abs(difference).max())
+    if not (surfaces == ours.surfaces).all() or not worst <= SAME_LEG:
+        raise SystemExit(f"{type(rival).__name__} follows other paths than the compiled engine ({worst:.1e})")
+    return worst
+
+
 # ---- the program as a whole ----------------------------------------------------------------------------------
 
 
@@ -265,6 +364,7 @@ def _run_quietly(command: list[str]) -> None:
 CASES: dict[str, Callable[[], Iterator[Result]]] = {
     "body": body_cases,
     "point": point_case,
+    "basin": basin_case,
     "start": start_case,
     "audit": audit_case,
 }
