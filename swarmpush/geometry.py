@@ -1,8 +1,12 @@
-"""Outlines of channel, posts and block at the start of a run: lists of corners, all counter-clockwise."""
+"""Outlines of channel, posts and block at the start of a run: lists of corners, all counter-clockwise.
+
+Corners at which an outline goes straight on are left out, so that a side is one surface however it was written down.
+"""
 
 from __future__ import annotations
 
 import math
+from itertools import pairwise
 from typing import TYPE_CHECKING
 
 from swarmpush.scenario import Scenario
@@ -13,7 +17,8 @@ if TYPE_CHECKING:
 Corner = tuple[float, float]
 Corners = tuple[Corner, ...]
 
-ARC_SIDES = 64  # of the polygon that stands for a circle where regions are computed; 0.03 % of the radius off
+STRAIGHT = 1e-9  # rad: an outline that turns by less at a corner has none there; also: sides that look back alike
+ARC_SIDES = 256  # of the polygon that stands for a circle where areas and pockets are found; 0.008 % of the radius off
 
 
 def is_plain(s: Scenario) -> bool:
@@ -24,36 +29,48 @@ def is_plain(s: Scenario) -> bool:
 def channel_corners(s: Scenario) -> Corners:
     """Corners of the channel, m."""
     length, width = s.channel.length, s.channel.width
-    return counter_clockwise(s.channel.outline or ((0.0, 0.0), (length, 0.0), (length, width), (0.0, width)))
+    return tidy(s.channel.outline or ((0.0, 0.0), (length, 0.0), (length, width), (0.0, width)))
 
 
 def post_corners(s: Scenario) -> tuple[Corners, ...]:
     """Corners of each post, m."""
-    return tuple(counter_clockwise(post) for post in s.channel.posts)
+    return tuple(tidy(post) for post in s.channel.posts)
 
 
 def block_corners(s: Scenario) -> Corners:
-    """Corners of the block at its starting place, m; the first edge is the rear face.
+    """Corners of the block at its starting place, m; the first side is the rear face.
 
-    The rear face is the side that looks most squarely back along the channel.
+    The rear face is the side that looks most squarely back along the channel; of two that do so alike, it is the
+    one that begins first in the outline.
     """
     half = s.block.width / 2
     outline = s.block.outline or ((0.0, half), (0.0, -half), (s.block.length, -half), (s.block.length, half))
     x, y = s.block.rear_at, s.channel.width / 2 + s.block.offset
-    corners = counter_clockwise(tuple((x + a, y + b) for a, b in outline))
-    rear = min(range(len(corners)), key=lambda k: outward_normal(corners, k)[0])
+    corners = tidy(tuple((x + a, y + b) for a, b in outline))
+    rear = _facing(corners, -1.0)
     return corners[rear:] + corners[:rear]
 
 
-def counter_clockwise(corners: Corners) -> Corners:
-    """The same outline with its inside on the left."""
-    return corners if signed_area(corners) >= 0.0 else corners[::-1]
+def front_side(block: Corners) -> int:
+    """Number of the block's side that looks most squarely ahead along the channel, chosen like the rear face."""
+    return _facing(block, 1.0)
+
+
+def _facing(corners: Corners, sense: float) -> int:
+    ahead = [sense * outward_normal(corners, k)[0] for k in range(len(corners))]
+    return next(k for k, value in enumerate(ahead) if value >= max(ahead) - STRAIGHT)
+
+
+def tidy(outline: Corners) -> Corners:
+    """The outline from its first corner on with its inside on the left, without corners that are none."""
+    corners = outline if signed_area(outline) >= 0.0 else outline[:1] + outline[:0:-1]
+    return tuple(corner for k, corner in enumerate(corners) if abs(turning(corners, k)) > STRAIGHT) or corners
 
 
 def signed_area(corners: Corners) -> float:
     """Area of a polygon, m2; negative when it is gone round clockwise (the shoelace formula)."""
-    pairs = zip(corners, corners[1:] + corners[:1], strict=True)
-    return 0.5 * sum(a[0] * b[1] - b[0] * a[1] for a, b in pairs)
+    x, y = corners[0]  # seen from there, a small outline far from the origin keeps its digits
+    return 0.5 * sum((a[0] - x) * (b[1] - y) - (b[0] - x) * (a[1] - y) for a, b in pairwise(corners))
 
 
 def outward_normal(corners: Corners, k: int) -> Corner:
@@ -70,12 +87,14 @@ def turning(corners: Corners, k: int) -> float:
     return math.atan2(into[0] * out[1] - into[1] * out[0], into[0] * out[0] + into[1] * out[1])
 
 
-def free_region(s: Scenario) -> BaseGeometry:
-    """Where a pusher's centre can be, the block at its starting place; circles as polygons."""
+def open_floor(s: Scenario) -> BaseGeometry:
+    """The channel without posts and block, the block at its starting place."""
     from shapely import Polygon, union_all
 
-    r = s.pushers.radius
-    obstacles = [
-        Polygon(corners).buffer(r, quad_segs=ARC_SIDES // 4) for corners in (*post_corners(s), block_corners(s))
-    ]
-    return Polygon(channel_corners(s)).buffer(-r, quad_segs=ARC_SIDES // 4).difference(union_all(obstacles))
+    obstacles = union_all([Polygon(corners) for corners in (*post_corners(s), block_corners(s))])
+    return Polygon(channel_corners(s)).difference(obstacles)
+
+
+def free_region(s: Scenario) -> BaseGeometry:
+    """Where a pusher's centre can be, the block at its starting place; circles as polygons."""
+    return open_floor(s).buffer(-s.pushers.radius, quad_segs=ARC_SIDES // 4)

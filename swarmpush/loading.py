@@ -10,7 +10,7 @@ import difflib
 import json
 import math
 import tomllib
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import suppress
 from pathlib import Path
 from typing import Annotated, Any, NamedTuple, get_args
@@ -18,7 +18,17 @@ from typing import Annotated, Any, NamedTuple, get_args
 from pydantic import BaseModel, TypeAdapter, ValidationError
 from pydantic.fields import FieldInfo
 
-from swarmpush.geometry import block_corners, channel_corners, free_region, is_plain, post_corners
+from swarmpush.geometry import (
+    ARC_SIDES,
+    Corners,
+    block_corners,
+    channel_corners,
+    free_region,
+    is_plain,
+    post_corners,
+    tidy,
+    turning,
+)
 from swarmpush.problems import Problem, ScenarioError
 from swarmpush.quantities import Quantity, for_people
 from swarmpush.scenario import Scenario
@@ -286,50 +296,93 @@ def _outline_misfits(s: Scenario) -> Iterator[Problem]:
     """Outlines that are no polygons, do not fit one another, or shut pushers in."""
     if is_plain(s):
         return
-    from shapely import Polygon
+    if alone := [problem for key, outline in _outlines(s).items() for problem in _polygon_misfits(s, key, outline)]:
+        yield from alone
+        return
+    if _has_block_inside(s):
+        yield from _overlaps(s)
+
+
+def _has_block_inside(s: Scenario) -> bool:
+    """Whether the block lies within the channel's length and width, which other checks see to."""
+    return s.block_front_at <= s.channel.length * (1 + ROUNDING) and not any(_block_width_misfits(s))
+
+
+def _outlines(s: Scenario) -> dict[str, Corners]:
+    """The outlines that stand in the file, by key."""
+    given = {"channel.outline": s.channel.outline, "block.outline": s.block.outline}
+    posts = {f"channel.posts[{k + 1}]": post for k, post in enumerate(s.channel.posts)}
+    return {key: outline for key, outline in (given | posts).items() if outline is not None}
+
+
+def _polygon_misfits(s: Scenario, key: str, outline: Corners) -> Iterator[Problem]:
+    """What is wrong with an outline by itself; what comes later is only looked at when nothing was found before."""
+    span = max(max(values) - min(values) for values in zip(*outline, strict=True))
+    near = ROUNDING * min(span, s.channel.length + s.channel.width)
+    for k in range(len(outline)):
+        if math.dist(outline[k], outline[k - 1]) <= near:
+            which = f"corner {k + 1} repeats the one before it" if k else "the last corner repeats the first"
+            yield Problem(key, f"{which}; write every corner once")
+            return
+    if extent := list(_extent_misfits(s, key, outline)):
+        yield from extent
+        return
+    from shapely import MultiPoint, Polygon
     from shapely.validation import explain_validity
 
-    posts = {f"channel.posts[{k + 1}]": Polygon(corners) for k, corners in enumerate(post_corners(s))}
+    hull, polygon = MultiPoint(outline).convex_hull, Polygon(outline)
+    if hull.area <= ROUNDING * hull.length**2:
+        yield Problem(key, "encloses no area: its corners lie on one line")
+    elif not polygon.is_valid:
+        x, y = map(float, explain_validity(polygon).partition("[")[2].rstrip("]").split())
+        yield Problem(key, f"its sides cross or touch near ({x:.3g}, {y:.3g}) m; list the corners in order, once round")
+    elif key == "block.outline":
+        corners = tidy(outline)
+        for x, y in [corner for k, corner in enumerate(corners) if turning(corners, k) < 0.0][:1]:
+            yield Problem(key, f"the block must be convex; at ({x:g}, {y:g}) m its outline bends inwards")
+
+
+def _extent_misfits(s: Scenario, key: str, outline: Corners) -> Iterator[Problem]:
+    """An outline must fill the length and width that stand beside it; a post must stay within the channel's."""
+    table, is_post = key.partition(".")[0], key.startswith("channel.posts")
+    sizes = (s.block.length, s.block.width) if table == "block" else (s.channel.length, s.channel.width)
+    lowest = (0.0, -s.block.width / 2 if table == "block" else 0.0)
+    for axis, (low, size) in enumerate(zip(lowest, sizes, strict=True)):
+        values = [corner[axis] for corner in outline]
+        below, above = min(values) - low, max(values) - (low + size)
+        if is_post and max(-below, above) > ROUNDING * size:
+            yield Problem(key, _OUTSIDE)
+            return
+        if not is_post and max(abs(below), abs(above)) > ROUNDING * size:
+            yield Problem(
+                key,
+                f"reaches in {'xy'[axis]} from {min(values):g} to {max(values):g} m; with {table}."
+                f"{('length', 'width')[axis]} as given it must reach from {low:g} to {low + size:g} m",
+            )
+
+
+_OUTSIDE = "reaches out of the channel; move it inside or cut it off at the wall"
+
+
+def _overlaps(s: Scenario) -> Iterator[Problem]:
+    """Posts and block must stand in the channel and clear of each other, and no pusher must be shut in."""
+    from shapely import Polygon
+
     channel, block = Polygon(channel_corners(s)), Polygon(block_corners(s))
-    outlines = {"channel.outline": channel, "block.outline": block, **posts}
-    crossing = {key: polygon for key, polygon in outlines.items() if not polygon.is_valid or polygon.area == 0.0}
-    for key, polygon in crossing.items():
-        yield Problem(key, f"its sides cross or touch ({explain_validity(polygon)})")
-    if crossing:
-        return
-    yield from _extent_misfits(s)
-    if s.block.outline is not None and block.area < block.convex_hull.area * (1 - ROUNDING):
-        yield Problem("block.outline", "the block must be convex")
+    posts = {f"channel.posts[{k + 1}]": Polygon(corners) for k, corners in enumerate(post_corners(s))}
+    within = channel.buffer(ROUNDING * max(s.channel.length, s.channel.width))
+    fits = True
     for key, post in posts.items():
-        if not channel.covers(post):
-            yield Problem(key, "reaches out of the channel")
-        if post.intersects(block):
-            yield Problem(key, "stands in the block")
-    slack = ROUNDING * s.channel.width
-    if not channel.buffer(slack).covers(block):
-        yield Problem("block", "the block does not lie within the channel at its start")
-        return
-    yield from _region_misfits(s)
-
-
-def _extent_misfits(s: Scenario) -> Iterator[Problem]:
-    """An outline must fill the length and width that stand beside it."""
-    half = s.block.width / 2
-    for table, outline, low, high in (
-        ("channel", s.channel.outline, (0.0, 0.0), (s.channel.length, s.channel.width)),
-        ("block", s.block.outline, (0.0, -half), (s.block.length, half)),
-    ):
-        if outline is None:
-            continue
-        for axis, name in enumerate("xy"):
-            values = [corner[axis] for corner in outline]
-            slack = ROUNDING * (high[axis] - low[axis])
-            if abs(min(values) - low[axis]) > slack or abs(max(values) - high[axis]) > slack:
-                yield Problem(
-                    f"{table}.outline",
-                    f"reaches in {name} from {min(values):g} to {max(values):g} m; with {table}."
-                    f"{('length', 'width')[axis]} as given it must reach from {low[axis]:g} to {high[axis]:g} m",
-                )
+        if not within.covers(post):
+            yield Problem(key, _OUTSIDE)
+        if post.intersection(block).area > ROUNDING * min(post.area, block.area):
+            yield Problem(key, "stands in the block; move it or change block.rear_at or block.offset")
+            fits = False
+    if not within.covers(block):
+        yield Problem("block", "does not lie within the channel at its start; change block.rear_at or block.offset")
+        fits = False
+    if fits and 2 * s.pushers.radius < s.channel.width:
+        yield from _region_misfits(s)
 
 
 def _region_misfits(s: Scenario) -> Iterator[Problem]:
@@ -337,10 +390,10 @@ def _region_misfits(s: Scenario) -> Iterator[Problem]:
     from shapely import Polygon
 
     region = free_region(s)
-    reach = Polygon(block_corners(s)).buffer(1.001 * s.pushers.radius)
+    reach = Polygon(block_corners(s)).buffer(1.001 * s.pushers.radius, quad_segs=ARC_SIDES // 4)
     for part in getattr(region, "geoms", [region]):
         if part.is_empty:
-            yield Problem("pushers.radius", "no pusher fits the channel anywhere")
+            yield Problem("pushers.radius", "no pusher fits the channel anywhere; make it smaller")
         elif not part.intersects(reach):
             x, y = part.representative_point().coords[0]
             yield Problem(
@@ -413,7 +466,7 @@ def _step_misfits(s: Scenario) -> Iterator[Problem]:
 def _start_misfits(s: Scenario) -> Iterator[Problem]:
     from swarmpush.starts import room_for_starts
 
-    if 2 * s.pushers.radius >= s.channel.width or any(_outline_misfits(s)):
+    if 2 * s.pushers.radius >= s.channel.width or not _has_block_inside(s) or any(_outline_misfits(s)):
         return  # a start has no place to be right or wrong in
     if s.start.placed is not None:
         yield from _placed_misfits(s)
@@ -434,33 +487,45 @@ def _start_misfits(s: Scenario) -> Iterator[Problem]:
 
 
 def _placed_misfits(s: Scenario) -> Iterator[Problem]:
-    placed = s.start.placed or ()
+    placed, r = s.start.placed or (), s.pushers.radius
     if len(placed) != s.pushers.count:
         yield Problem("start.placed", f"{len(placed)} pushers placed, but pushers.count = {s.pushers.count}")
-    r, half_width = s.pushers.radius, s.block.width / 2
-    middle = s.channel.width / 2 + s.block.offset
+    in_the_way = _obstacles(s)
     for k, p in enumerate(placed):
         key = f"start.placed[{k + 1}]"
-        to_wall = min(p.x, s.channel.length - p.x, p.y, s.channel.width - p.y)
-        if to_wall < r * (1 - ROUNDING):
-            yield Problem(
-                key,
-                f"({p.x:g}, {p.y:g}) m puts the pusher into a wall; its centre must keep {_metre(r)} from every wall",
-            )
-            continue
-        gap_x = max(s.block.rear_at - p.x, p.x - s.block_front_at, 0.0)
-        gap_y = max(abs(p.y - middle) - half_width, 0.0)
-        if math.hypot(gap_x, gap_y) < r * (1 - ROUNDING):
-            yield Problem(key, f"({p.x:g}, {p.y:g}) m puts the pusher into the block")
-        for j, q in enumerate(placed[:k]):
-            if not s.pushers.pass_through and math.hypot(p.x - q.x, p.y - q.y) < 2 * r * (1 - ROUNDING):
-                yield Problem(key, f"overlaps start.placed[{j + 1}]")
+        for thing, remedy, gap in in_the_way:
+            if gap(p.x, p.y) < r * (1 - ROUNDING):
+                yield Problem(key, f"({p.x:g}, {p.y:g}) m puts the pusher into {thing}{remedy}")
+                break
+        else:
+            for j, q in enumerate(placed[:k]):
+                if not s.pushers.pass_through and math.hypot(p.x - q.x, p.y - q.y) < 2 * r * (1 - ROUNDING):
+                    yield Problem(key, f"overlaps start.placed[{j + 1}]")
+
+
+def _obstacles(s: Scenario) -> list[tuple[str, str, Callable[[float, float], float]]]:
+    """What a pusher can start in: its name, what to say besides, and how far it is from a place (negative: in it)."""
+    from shapely import Point, Polygon
+
+    channel = Polygon(channel_corners(s))
+
+    def to_wall(x: float, y: float) -> float:
+        distance = channel.exterior.distance(Point(x, y))
+        return distance if channel.covers(Point(x, y)) else -distance
+
+    keep = f"its centre must keep {_metre(s.pushers.radius)} from every wall"
+    posts = {f"channel.posts[{k + 1}]": Polygon(corners) for k, corners in enumerate(post_corners(s))}
+    things = posts | {"the block": Polygon(block_corners(s))}
+    return [
+        ("a wall", f"; {keep}", to_wall),
+        *((name, "", lambda x, y, thing=thing: thing.distance(Point(x, y))) for name, thing in things.items()),
+    ]
 
 
 def _face_misfits(s: Scenario) -> Iterator[Problem]:
     from swarmpush.kinematics.boundary import surface_names
 
-    if not s.routine.faces() or any(_outline_misfits(s)):
+    if not s.routine.faces() or not _has_block_inside(s) or any(_outline_misfits(s)):
         return
     names = surface_names(s)
     for face in s.routine.faces():

@@ -19,8 +19,9 @@ from numpy.typing import NDArray
 from swarmpush.compiled import borrowed, compiled
 from swarmpush.draws import Purpose, normal
 from swarmpush.kinematics.boundary import Boundary
-from swarmpush.kinematics.legs import BEHIND_TOLERANCE, SLIDE, STOP, next_leg
-from swarmpush.program import NOTES, PC, Program, Senses, wrap_angle
+from swarmpush.kinematics.legs import SLIDE, STOP, next_leg
+from swarmpush.program import FIRST_COUNTER, NOTES, PC, STAGE_SINCE, Op, Program, Senses, wrap_angle
+from swarmpush.routine import MAX_COUNTERS
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -52,7 +53,8 @@ def trace(
         keys: (n_purposes,) random streams.
         start: (3,) x, y in m and heading in rad.
         nudge: how far the block gives way at each bump on its rear face, m.
-        hits: (n, 6) filled with x, y, arriving heading, departing heading, length and duration of the leg.
+        hits: (n, 6) filled with x, y, arriving heading (from -pi to pi), departing heading (the same plus the turns),
+            length and duration of the leg.
         surfaces: (n,) filled with surface numbers; -1 for a leg that ended without a bump.
         memory, notes: (MEMORY,), (NOTES,) what the pusher remembers, changed in place.
 
@@ -85,11 +87,11 @@ def trace(
             contact,
             normal_angle,
         )
-        heading = leg.heading
         if k > 0:
-            hits[k - 1, 3] = heading
+            hits[k - 1, 3] = leg.heading
         if leg.command == STOP:
             return k
+        heading = wrap_angle(leg.heading)  # one that grows turn by turn would lose digits
         x += leg.run * leg.ux
         y += leg.run * leg.uy
         now += leg.time
@@ -136,9 +138,40 @@ FATE_WORDS = {
 _LOCKED, _UNDECIDED, _NEVER, _LEAVES, _AHEAD, _STUCK, _HALTED = (int(fate) for fate in Fate)
 
 MAX_PERIOD = 8  # longest lap looked for, in bumps on the rear face
-SHORTEST_LAP = 1e-3  # of the scale; what repeats within less is on its way into a corner, or bumps on the spot
-_LOCK_TOLERANCE = 1e-6  # of the scale, and in rad: a lap that returns this closely is closed; contraction does the rest
+SHORTEST_LAP = 1e-3  # of the size; what repeats within less is on its way into a corner, or bumps on the spot
+_LOCK_TOLERANCE = 1e-6  # of the size, and in rad: a lap that returns this closely is closed; contraction does the rest
+_ON_THE_SPOT = 1e-9  # of the size: a run shorter than this is rounding
 _HASH = 1_000_003
+_WITHIN = 0x3FFFFFFFFFFFFF  # the bits that are kept of a number that stands for many others
+_MOST_INSTRUCTIONS = 8192  # in a program: 64 stages of 64 acts and a way on
+
+_ADD, _IF_COUNTER, _IF_TIME = int(Op.ADD), int(Op.IF_COUNTER), int(Op.IF_TIME)
+_UNREAD, _UNBOUNDED = -(10**9), 10**9  # no counter gets that far within a budget
+
+
+@compiled
+def _what_counts(program: Program, caps: IntArray) -> float:
+    """How far a pusher's counters and clock matter to what it will do.
+
+    Beyond the largest value that a branch asks for, counters are alike if they are never counted down.
+
+    Arguments:
+        caps: (MAX_COUNTERS,) filled with the value from which on each counter is as good as any larger one.
+
+    Returns:
+        The same for the time in the present stage, s.
+    """
+    caps[:] = _UNREAD
+    longest = 0.0
+    for step in program:
+        if step.op == _IF_COUNTER:
+            caps[step.number] = max(caps[step.number], int(step.value))
+        elif step.op == _IF_TIME:
+            longest = max(longest, step.value)
+    for step in program:
+        if step.op == _ADD and step.amount < 0 and caps[step.number] > _UNREAD:
+            caps[step.number] = _UNBOUNDED
+    return longest
 
 
 class Settled(NamedTuple):
@@ -175,10 +208,13 @@ def settle(
 ) -> Settled:
     """Follow a pusher until it repeats a lap, halts, or the budget of legs is spent; the block stands still.
 
+    A lap is repeated when the pusher comes back to the rear face at the same place with the same heading by the same
+    legs, and with nothing in its counters and its clock that could ever make it do something else.
+
     Arguments:
         speed: m/s. x, y, heading: present state (m, rad).
         memory, notes: (MEMORY,), (NOTES,) what the pusher remembers, changed in place; on a lock it is that at the last
-            arrival at the rear face.
+            arrival at the rear face, the clock being 0 then.
         contact, normal_angle: the bump that the routine is to react to first (0: none).
         budget: largest number of legs.
     """
@@ -186,7 +222,10 @@ def settle(
     ring_along = np.zeros(2 * MAX_PERIOD)
     ring_heading = np.zeros(2 * MAX_PERIOD)
     ring_way = np.zeros(2 * MAX_PERIOD)
-    now, way, shortest = 0.0, 0.0, SHORTEST_LAP * boundary.scale
+    ring_stage_time = np.zeros(2 * MAX_PERIOD)
+    caps = np.zeros(MAX_COUNTERS, dtype=np.int64)
+    longest = _what_counts(program, caps)
+    now, way, shortest = 0.0, 0.0, SHORTEST_LAP * boundary.size
     n_rear, last_rear, n_short = 0, -1, 0
     signature, along = 0, 0.0
     segments, arcs, moving = borrowed(boundary.segments), borrowed(boundary.arcs), borrowed(boundary.moving)
@@ -194,7 +233,7 @@ def settle(
     memory, notes = borrowed(memory), borrowed(notes)
     rear = boundary.rear
     rear_x, rear_y, rear_tx, rear_ty = segments[rear, 0], segments[rear, 1], segments[rear, 2], segments[rear, 3]
-    tolerance = _LOCK_TOLERANCE * boundary.scale
+    tolerance = _LOCK_TOLERANCE * boundary.size
     for k in range(budget):
         leg = next_leg(
             segments,
@@ -215,7 +254,7 @@ def settle(
             contact,
             normal_angle,
         )
-        heading = leg.heading
+        heading = wrap_angle(leg.heading)
         if leg.command == STOP:
             # what halts has stopped for good; a run into nothing can only be a hole in the boundary
             return Settled(_HALTED if leg.run == 0.0 else _UNDECIDED, 0, 0, along, heading, k)
@@ -223,8 +262,8 @@ def settle(
         y += leg.run * leg.uy
         now += leg.time
         way += leg.run
-        signature = (signature * _HASH + (leg.surface + 1) * 64 + memory[PC]) & 0x3FFFFFFFFFFFFF
-        if 2 * k > budget and leg.run < BEHIND_TOLERANCE * boundary.scale:
+        signature = (signature * _HASH + (leg.surface + 1) * _MOST_INSTRUCTIONS + memory[PC]) & _WITHIN
+        if 2 * k > budget and leg.run < _ON_THE_SPOT * boundary.size:
             n_short += 1
         if leg.surface < 0:
             if leg.command != SLIDE:
@@ -233,24 +272,30 @@ def settle(
         contact, normal_angle = kinds[leg.surface], leg.normal_angle
         if leg.surface == rear:
             along = (x - rear_x) * rear_tx + (y - rear_y) * rear_ty
+            for c in range(MAX_COUNTERS):
+                if caps[c] > _UNREAD:
+                    signature = (signature * _HASH + min(memory[FIRST_COUNTER + c], caps[c])) & _WITHIN
+            stage_time = min(now - notes[STAGE_SINCE], longest)
             place = n_rear % (2 * MAX_PERIOD)
             ring_signature[place], ring_along[place], ring_heading[place] = signature, along, heading
-            ring_way[place] = way
+            ring_way[place], ring_stage_time[place] = way, stage_time
             n_rear += 1
             last_rear = k
             signature = 0
             for period in range(1, min(MAX_PERIOD, n_rear // 2) + 1):
                 before = (place - period) % (2 * MAX_PERIOD)
                 gap = abs(along - ring_along[before])
-                gap = max(gap, boundary.scale * abs(wrap_angle(heading - ring_heading[before])))
+                gap = max(gap, boundary.size * abs(wrap_angle(heading - ring_heading[before])))
+                gap = max(gap, speed * abs(stage_time - ring_stage_time[before]))
                 if gap >= 100.0 * tolerance or way - ring_way[before] < shortest:
                     continue
                 alike, total = True, 0
                 for j in range(period):
                     mine = ring_signature[(place - j) % (2 * MAX_PERIOD)]
                     alike &= mine == ring_signature[(place - j - period) % (2 * MAX_PERIOD)]
-                    total = (total + mine * mine) & 0x3FFFFFFFFFFFFF  # the same wherever in the lap one starts
+                    total = (total + mine * mine) & _WITHIN  # the same wherever in the lap one starts
                 if alike and gap < tolerance:
+                    notes[STAGE_SINCE] -= now
                     return Settled(_LOCKED, period, total, along, heading, k + 1)
                 if alike:
                     break  # about to close; an alternating lap passes the test at twice its period first
@@ -385,9 +430,9 @@ def trace_lap(
             contact,
             normal_angle,
         )
-        heading, ux, uy = leg.heading, leg.ux, leg.uy
+        heading, ux, uy = wrap_angle(leg.heading), leg.ux, leg.uy
         if k > 0:
-            hits[k - 1, 3] = heading
+            hits[k - 1, 3] = leg.heading
         if leg.command == STOP:
             return broken
         x += leg.run * ux

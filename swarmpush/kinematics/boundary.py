@@ -20,8 +20,8 @@ from swarmpush.geometry import (
     Corners,
     block_corners,
     channel_corners,
+    front_side,
     is_plain,
-    outward_normal,
     post_corners,
     turning,
 )
@@ -49,8 +49,8 @@ class Boundary(NamedTuple):
     arcs: (m, 3): centre and radius; the open region lies outside the circle.
     kinds, moving: (n + m,) kind of partner (`Contact`) and whether the piece belongs to the block; segments
         first, then arcs. The position in this list is the surface's number.
-    scale: a length of the region, for tolerances. rear, front: numbers of the block's rear and front face. ahead_x: a
-        centre from here on is ahead of the block.
+    scale: the pusher's radius, to which tolerances of touching refer. size: a length of the region, for those of laps.
+    rear, front: numbers of the block's rear and front face. ahead_x: a centre from here on is ahead of the block.
     """
 
     segments: FloatArray
@@ -58,6 +58,7 @@ class Boundary(NamedTuple):
     kinds: IntArray
     moving: IntArray
     scale: float
+    size: float
     rear: int
     front: int
     ahead_x: float
@@ -79,9 +80,10 @@ def boundary_of(s: Scenario) -> Boundary:
         arcs=np.array([[x, y, r] for x, y in (*fixed_arcs, *block_arcs)]).reshape(-1, 3),
         kinds=np.array([Contact.BLOCK if moves else Contact.WALL for moves in is_block], dtype=np.int64),
         moving=np.array(is_block, dtype=np.int64),
-        scale=s.channel.width,
+        scale=r,
+        size=s.channel.width,
         rear=rear,
-        front=rear + max(range(len(block)), key=lambda k: outward_normal(block, k)[0]),
+        front=rear + front_side(block),
         ahead_x=max(x for x, _ in block) + r,
     )
 
@@ -91,8 +93,7 @@ def surface_names(s: Scenario) -> tuple[str, ...]:
     if is_plain(s):
         return SURFACES
     walls, posts, block = channel_corners(s), post_corners(s), block_corners(s)
-    front = max(range(len(block)), key=lambda k: outward_normal(block, k)[0])
-    sides = {0: REAR, front: FRONT}
+    sides = {0: REAR, front_side(block): FRONT}
     names = [f"wall {k + 1}" for k in range(len(walls))]
     names += [f"post {n + 1} side {k + 1}" for n, post in enumerate(posts) for k in range(len(post))]
     names += [sides.get(k, f"block side {k + 1}") for k in range(len(block))]

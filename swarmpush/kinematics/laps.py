@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,8 +13,8 @@ from numpy.typing import NDArray
 from swarmpush.draws import stream_keys
 from swarmpush.kinematics.bounce import FATE_WORDS, Fate, LapTrace, settle, settle_many, trace_lap
 from swarmpush.kinematics.boundary import REAR, Boundary, boundary_of, surface_names
-from swarmpush.kinematics.legs import next_hit
-from swarmpush.program import EXACT, MEMORY, NOTES, PC, Contact, Program, compile_routine
+from swarmpush.kinematics.legs import SLIDE, Leg, leg_from
+from swarmpush.program import EXACT, MEMORY, NOTES, PC, STAGE_SINCE, Contact, Program, compile_routine
 from swarmpush.routine import Depart, Routine, Wander
 from swarmpush.scenario import Scenario
 from swarmpush.starts import draw_starts
@@ -86,7 +87,7 @@ def find_laps(s: Scenario, *, n_starts: int = N_STARTS, seed: int = 0) -> tuple[
     """Find the laps that the scenario's starts fall into, without any error, the block standing still.
 
     A departure with a spread is taken at its mean angle. A routine that draws sides or directions by chance has no
-    laps, whatever it may happen to repeat.
+    laps, whatever it may happen to repeat; nor is it a lap what repels the pushers that come close to it.
 
     Arguments:
         s: the scenario. n_starts: starts drawn from its start region. seed: of those draws.
@@ -112,9 +113,12 @@ def find_laps(s: Scenario, *, n_starts: int = N_STARTS, seed: int = 0) -> tuple[
     signatures, first, counts = np.unique(fates[locked, 2], return_index=True, return_counts=True)
     for k in np.argsort(-counts):
         i = np.flatnonzero(locked)[first[k]]
-        lap = tracer.lap(states[i], memories[i], int(fates[i, 1]), int(signatures[k]), counts[k] / n)
+        lap = tracer.lap(starts[i], int(fates[i, 1]), int(signatures[k]), counts[k] / n)
         if lap is not None:
             laps.append(lap)
+        else:
+            fates[locked & (fates[:, 2] == signatures[k]), 0] = Fate.UNDECIDED
+    locked = fates[:, 0] == Fate.LOCKED
     lost = {word: float(np.mean(fates[:, 0] == fate)) for fate, word in FATE_WORDS.items()}
     capture = Capture(
         captured=float(locked.mean()),
@@ -142,8 +146,28 @@ def _without_spread(routine: Routine) -> Routine:
     return routine.model_copy(update={"stages": tuple(stages)})
 
 
+class _Mind(NamedTuple):
+    """What a pusher knows: its memory and its notes, the clock being 0. Compiled code changes only copies."""
+
+    memory: IntArray
+    notes: FloatArray
+
+    def copy(self) -> _Mind:
+        return _Mind(self.memory.copy(), self.notes.copy())
+
+
+class _Moment(NamedTuple):
+    """A pusher where its routine is to decide: place, heading, and the bump it is to react to."""
+
+    x: float
+    y: float
+    heading: float
+    contact: int
+    normal_angle: float
+
+
 class _Tracer:
-    """Laps of one rig: polishing, multipliers, bands."""
+    """Laps of one rig: polishing, multipliers, bands. A state is a place along the rear face and the heading there."""
 
     def __init__(
         self, boundary: Boundary, names: tuple[str, ...], program: Program, keys: NDArray[np.uint64], speed: float
@@ -151,25 +175,30 @@ class _Tracer:
         self._boundary, self._names, self._program, self._keys, self._speed = boundary, names, program, keys, speed
         self._rear = boundary.segments[boundary.rear]
 
-    def trace(self, state: FloatArray, memory: IntArray, n_rear: int) -> tuple[LapTrace, FloatArray, IntArray]:
+    def trace(self, state: FloatArray, mind: _Mind, n_rear: int) -> tuple[LapTrace, FloatArray, IntArray]:
         hits, surfaces = np.zeros((MAX_LAP_BUMPS, 4)), np.zeros(MAX_LAP_BUMPS, dtype=np.int64)
         lap = trace_lap(
             self._boundary, self._program, EXACT, self._keys, self._speed,
-            state[0], state[1], memory.copy(), np.zeros(NOTES), n_rear, hits, surfaces,
+            state[0], state[1], *mind.copy(), n_rear, hits, surfaces,
         )  # fmt: skip
         return lap, hits[: lap.n_bumps], surfaces[: lap.n_bumps]
 
-    def lap(self, state: FloatArray, memory: IntArray, n_rear: int, signature: int, share: float) -> Lap | None:
-        """The lap near a state that was seen to repeat; None if it does not close after all."""
-        polished = self._polish(state, memory, n_rear)
+    def lap(self, start: FloatArray, n_rear: int, signature: int, share: float) -> Lap | None:
+        """The lap that a start was seen to end in; None if it does not close after all, or repels."""
+        mind = _Mind(np.zeros(MEMORY, dtype=np.int64), np.zeros(NOTES))
+        x, y, heading = start
+        state = self._settle(_Moment(x, y, heading, int(Contact.NONE), heading + math.pi), mind, BUDGET, signature)
+        polished = None if state is None else self._polish(state, mind, n_rear)
         if polished is None:
             return None
-        if self._is_neutral(polished, memory, n_rear):
-            polished = self._centred(polished, memory, n_rear, signature)
-        trace, hits, surfaces = self.trace(polished, memory, n_rear)
+        largest = max(map(abs, _multipliers(self.trace(polished, mind, n_rear)[0])))
+        if largest > 1.0 + _NEUTRAL:
+            return None
+        if largest > 1.0 - _NEUTRAL:
+            polished = self._centred(polished, mind, n_rear, signature)
+        trace, hits, surfaces = self.trace(polished, mind, n_rear)
         x, y = self._place(polished[0])
-        first = [x, y, polished[1], math.atan2(hits[0, 1] - y, hits[0, 0] - x)]
-        rows = np.vstack([first, hits[:-1]])
+        rows = np.vstack([[x, y, polished[1], hits[0, 2]], hits[:-1]])
         rows[:, 2:] = np.remainder(rows[:, 2:] + math.pi, 2 * math.pi) - math.pi
         return Lap(
             surfaces=(REAR, *(self._names[k] if k >= 0 else IN_THE_OPEN for k in surfaces[:-1])),
@@ -180,7 +209,7 @@ class _Tracer:
             multipliers=_multipliers(trace),
             rear_y_m=float(y),
             rear_heading_rad=float(rows[0, 2]),
-            leg_bands_rad=tuple(self._leg_bands(polished, memory, n_rear, signature)),
+            leg_bands_rad=tuple(self._leg_bands(polished, mind, n_rear, signature)),
             share=float(share),
         )
 
@@ -188,87 +217,84 @@ class _Tracer:
         """The point of the rear face's surface at a length from its beginning."""
         return float(self._rear[0] + along * self._rear[2]), float(self._rear[1] + along * self._rear[3])
 
-    def _centred(self, state: FloatArray, memory: IntArray, n_rear: int, signature: int) -> FloatArray:
+    def _at_rear(self, state: FloatArray) -> _Moment:
+        return _Moment(*self._place(state[0]), float(state[1]), int(Contact.BLOCK), float(self._rear[7]))
+
+    def _centred(self, state: FloatArray, mind: _Mind, n_rear: int, signature: int) -> FloatArray:
         """Of a family of laps, one for each heading, the one in the middle of the band."""
-        *_, (low, high) = self._leg_bands(state, memory, n_rear, signature)
-        end, _ = self._resettle(state[0], state[1] + (low + high) / 2, memory, n_rear, signature)
-        polished = self._polish(end, memory, n_rear) if end is not None else None
+        *_, (low, high) = self._leg_bands(state, mind, n_rear, signature)
+        turned = state + np.array([0.0, (low + high) / 2])
+        end = self._settle(self._at_rear(turned), mind.copy(), 2 * BUDGET, signature)
+        polished = self._polish(end, mind, n_rear) if end is not None else None
         return state if polished is None else polished
 
-    def _polish(self, state: FloatArray, memory: IntArray, n_rear: int) -> FloatArray | None:
+    def _polish(self, state: FloatArray, mind: _Mind, n_rear: int) -> FloatArray | None:
         """Newton's method on the return map; a neutral direction is left where it is (least-squares step)."""
         state = state.copy()
         for _ in range(20):
-            lap, _, _ = self.trace(state, memory, n_rear)
+            lap, _, _ = self.trace(state, mind, n_rear)
             if lap.n_bumps == 0:
                 return None
             residual = np.array([lap.along - state[0], math.remainder(lap.heading - state[1], 2 * math.pi)])
-            if abs(residual[0]) < 1e-13 * self._boundary.scale and abs(residual[1]) < 1e-13:
+            if abs(residual[0]) < 1e-13 * self._boundary.size and abs(residual[1]) < 1e-13:
                 break
             jacobian = np.array([[lap.aa, lap.ah], [lap.ha, lap.hh]]) - np.eye(2)
             state -= np.linalg.lstsq(jacobian, residual, rcond=1e-9)[0]
-        lap, _, _ = self.trace(state, memory, n_rear)
-        closed = abs(lap.along - state[0]) < 1e-9 * self._boundary.scale
+        lap, _, _ = self.trace(state, mind, n_rear)
+        closed = abs(lap.along - state[0]) < 1e-9 * self._boundary.size
         closed &= abs(math.remainder(lap.heading - state[1], 2 * math.pi)) < 1e-9
         return state if lap.n_bumps and closed else None
 
-    def _is_neutral(self, state: FloatArray, memory: IntArray, n_rear: int) -> bool:
-        lap, _, _ = self.trace(state, memory, n_rear)
-        return any(abs(abs(m) - 1.0) < _NEUTRAL for m in _multipliers(lap))
-
-    def _resettle(
-        self, along: float, heading: float, memory: IntArray, n_rear: int, signature: int
-    ) -> tuple[FloatArray | None, IntArray]:
-        """Where a pusher ends up that arrives at the rear face otherwise; None if it is another lap."""
-        after = memory.copy()
-        x, y = self._place(along)
+    def _settle(self, moment: _Moment, mind: _Mind, budget: int, signature: int) -> FloatArray | None:
+        """The state in which a pusher ends up, its mind changed in place; None if it is another lap, or none."""
+        x, y, heading, contact, normal_angle = moment
         end = settle(
             self._boundary, self._program, EXACT, self._keys, self._speed,
-            x, y, heading, after, np.zeros(NOTES), int(Contact.BLOCK), self._rear[7], 2 * BUDGET,
+            x, y, heading, *mind, contact, normal_angle, budget,
         )  # fmt: skip
         same = end.fate == Fate.LOCKED and end.signature == signature
-        return (np.array([end.along, end.heading]) if same else None), after
+        return np.array([end.along, end.heading]) if same else None
 
-    def _leg_bands(
-        self, state: FloatArray, memory: IntArray, n_rear: int, signature: int
-    ) -> Iterator[tuple[float, float]]:
+    def _leg(self, moment: _Moment, mind: _Mind) -> Leg:
+        """The next leg, the mind changed in place."""
+        x, y, heading, contact, normal_angle = moment
+        return leg_from(
+            self._boundary, self._program, EXACT, self._keys, self._speed, *mind, x, y, heading, contact, normal_angle
+        )
+
+    def _leg_bands(self, state: FloatArray, mind: _Mind, n_rear: int, signature: int) -> Iterator[tuple[float, float]]:
         """For each leg of the lap, the errors of heading that keep it."""
-        _, hits, surfaces = self.trace(state, memory, n_rear)
-        starts = np.vstack([self._place(state[0]), hits[:-1, :2]])
-        for (x, y), (next_x, next_y), surface, k in zip(starts, hits[:, :2], surfaces, range(len(hits)), strict=True):
-            heading = math.atan2(next_y - y, next_x - x)
-            running = self._memory_on_leg(state, memory, n_rear, k)
+        lap, _, _ = self.trace(state, mind, n_rear)
+        moment, mind = self._at_rear(state), mind.copy()
+        for _ in range(lap.n_bumps):
+            leg = self._leg(moment, mind)
+            moment = moment._replace(heading=leg.heading)
+            moving = mind.copy()
+            moving.memory[PC] -= 1  # the turns are done, the move is still to be made
 
-            def keeps(error: float, place=(x, y, heading), running=running, surface=surface) -> bool:  # type: ignore[no-untyped-def]
-                x, y, heading = place
-                new_heading = heading + error
-                hit = next_hit(self._boundary, 0.0, x, y, math.cos(new_heading), math.sin(new_heading))
-                if hit.surface != surface:
+            def keeps(error: float, moment=moment, moving=moving, surface=leg.surface) -> bool:  # type: ignore[no-untyped-def]
+                off, after = moment._replace(heading=moment.heading + error), moving.copy()
+                if self._leg(off, moving.copy()).surface != surface:
                     return False
-                after = running.copy()
-                end = settle(
-                    self._boundary, self._program, EXACT, self._keys, self._speed,
-                    x, y, new_heading, after, np.zeros(NOTES), int(Contact.NONE), 0.0, 2 * BUDGET,
-                )  # fmt: skip
-                if end.fate != Fate.LOCKED or end.signature != signature:
+                end = self._settle(off, after, 2 * BUDGET, signature)
+                if end is None:
                     return False
-                trace, _, _ = self.trace(np.array([end.along, end.heading]), after, n_rear)
-                return trace.n_bumps > 0 and abs(trace.aa) < 1.0
+                trace, _, _ = self.trace(end, after, n_rear)
+                return trace.n_bumps > 0 and abs(trace.aa) < 1.0 + _NEUTRAL
 
             if keeps(0.0):
                 yield -_edge(lambda a, keeps=keeps: keeps(-a)), _edge(keeps)  # type: ignore[misc]
             else:
                 yield 0.0, 0.0
+            moment = self._after(moment, leg)
+            mind.notes[STAGE_SINCE] -= leg.time
 
-    def _memory_on_leg(self, state: FloatArray, memory: IntArray, n_rear: int, k: int) -> IntArray:
-        """The pusher's memory on leg k, the run still to be done."""
-        after = memory.copy()
-        trace_lap(
-            self._boundary, self._program, EXACT, self._keys, self._speed,
-            state[0], state[1], after, np.zeros(NOTES), n_rear, np.zeros((k + 1, 4)), np.zeros(k + 1, dtype=np.int64),
-        )  # fmt: skip
-        after[PC] -= 1
-        return after
+    def _after(self, moment: _Moment, leg: Leg) -> _Moment:
+        """Where the routine decides next, after a leg that began at a moment."""
+        contact = int(Contact.NONE) if leg.command != SLIDE else moment.contact
+        if leg.surface >= 0:
+            contact = int(self._boundary.kinds[leg.surface])
+        return _Moment(moment.x + leg.run * leg.ux, moment.y + leg.run * leg.uy, leg.heading, contact, leg.normal_angle)
 
 
 def _edge(holds: Callable[[float], bool]) -> float:

@@ -15,9 +15,16 @@ from swarmpush.program import PC, Command, Op, Program, Senses, decide, note_ran
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
-_END_TOLERANCE = 1e-12  # of the scale: closes the seam between a segment and the arc at its end
-BEHIND_TOLERANCE = 1e-9  # of the scale: a pusher further behind a surface than rounding explains is not stopped by it
+# of the pusher's radius
+_BEHIND_TOLERANCE = 0.5  # a centre less far behind a surface is in it, by rounding or overlap, and not beyond the wall
+_TOUCH = 1e-11  # a surface this near is touched: in a corner rounding must not choose which of two comes first
+_END_TOLERANCE = 1e-9  # closes the seam between a segment and the arc at its end
+_GRAZE = 1e-12  # a path that cuts into a corner's circle by less goes past, as one along the sides next to it does
+_FLAT = 1.5e-6  # rad, a little more than sqrt(2 _GRAZE): a path that grazed a corner may point into the side next to it
+#   by this, and meets it so much before its beginning
+
 _PARALLEL = 1e-12  # rad: a run this parallel to a surface does not meet it
+_SQUARE = 1e-9  # rad: a pusher that presses this squarely on a surface does not slide
 LOOKS = 16  # rays into a cone of sight; the edges and the middle are among them
 
 _ROTATE, _STOP, _ADVANCE, _SLIDE = (int(c) for c in (Command.ROTATE, Command.STOP, Command.ADVANCE, Command.SLIDE))
@@ -56,9 +63,10 @@ def hit_among(
     ux: float,
     uy: float,
 ) -> Hit:
-    """`next_hit` among the surfaces of a boundary."""
-    slack = _END_TOLERANCE * scale
-    behind = -BEHIND_TOLERANCE * scale
+    """`next_hit` among the surfaces of a boundary; `scale` is the pusher's radius."""
+    slack, long_slack = _END_TOLERANCE * scale, _FLAT * scale
+    behind = -_BEHIND_TOLERANCE * scale
+    touch, graze = _TOUCH * scale, _GRAZE * scale
     best, surface, normal_angle = np.inf, -1, 0.0
     n = len(segments)
     for k in range(n):
@@ -71,9 +79,10 @@ def hit_among(
         distance = px * nx + py * ny
         if distance < behind or distance >= best * approach:
             continue
-        run = max(distance / approach, 0.0)
+        run = distance / approach if distance > touch else 0.0
         along = (px + run * ux) * segments[k, 2] + (py + run * uy) * segments[k, 3]
-        if -slack <= along <= segments[k, 4] + slack:
+        reach = slack if approach > _FLAT else long_slack
+        if -reach <= along <= segments[k, 4] + reach:
             best, surface, normal_angle = run, k, segments[k, 7]
     corner = -1
     for k in range(len(arcs)):
@@ -83,12 +92,13 @@ def hit_among(
         radius = arcs[k, 2]
         if approach <= 0.0 or approach - radius >= best:
             continue
-        outside = qx * qx + qy * qy - radius * radius
-        discriminant = approach * approach - outside
-        if discriminant < 0.0:
+        beside = abs(qx * uy - qy * ux)  # of the ray, from the centre; a difference of squares would lose digits
+        depth = radius - beside
+        if depth <= graze:
             continue
-        # the smaller root, written so that nothing cancels for a start close to the circle
-        run = max(outside / (approach + math.sqrt(discriminant)), 0.0)
+        run = approach - math.sqrt(depth * (radius + beside))
+        if run < touch:
+            run = 0.0
         if run < best:
             best, corner = run, k
     if corner >= 0:
@@ -212,7 +222,7 @@ def next_leg(
         ux, uy = (tx, ty) if along >= 0.0 else (-tx, -ty)
         pace = speed * abs(along)
         limit = value if value >= 0.0 else -value * pace
-        if contact == 0 or pace == 0.0:  # nothing to slide along, or pressing straight on
+        if contact == 0 or abs(along) < _SQUARE:  # nothing to slide along, or pressing straight on
             waits = max(-value, 0.0)
             return Leg(_SLIDE, heading, by_heading, by_normal, ux, uy, 0.0, waits, -1, normal_angle)
     hit = hit_among(segments, arcs, moving, scale, shift, x, y, ux, uy)
@@ -221,3 +231,40 @@ def next_leg(
     if hit.surface < 0:
         command = _STOP
     return Leg(command, heading, by_heading, by_normal, ux, uy, hit.run, hit.run / pace, hit.surface, hit.normal_angle)
+
+
+@compiled
+def leg_from(
+    boundary: Boundary,
+    program: Program,
+    senses: Senses,
+    keys: NDArray[np.uint64],
+    speed: float,
+    memory: IntArray,
+    notes: FloatArray,
+    x: float,
+    y: float,
+    heading: float,
+    contact: int,
+    normal_angle: float,
+) -> Leg:
+    """`next_leg` by itself, the block at its starting place and the clock at 0."""
+    return next_leg(
+        boundary.segments,
+        boundary.arcs,
+        boundary.moving,
+        boundary.scale,
+        0.0,
+        speed,
+        program,
+        senses,
+        keys,
+        memory,
+        notes,
+        0.0,
+        x,
+        y,
+        heading,
+        contact,
+        normal_angle,
+    )

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from itertools import zip_longest
 from typing import Any
 
 import numpy as np
@@ -10,11 +11,15 @@ from numpy.typing import NDArray
 
 from swarmpush.kinematics.drift import laps_to_drift_out
 from swarmpush.kinematics.forecast import PushForce, TravelForecast, forecast, push_force
+from swarmpush.kinematics.lap_loss import MOST_LEGS, LapsKept, laps_kept
 from swarmpush.kinematics.laps import N_STARTS, Capture, Lap, find_laps
+from swarmpush.kinematics.noise_budget import NoiseBudget, noise_budget
 from swarmpush.kinematics.regimes import Regime, regimes
 from swarmpush.kinematics.strikes import count_strikes, point_path
 from swarmpush.routine import Device
 from swarmpush.scenario import Scenario
+
+N_LAPS_FOLLOWED = 4  # the laps that most starts fall into; pushers are followed on these
 
 
 @dataclass(frozen=True)
@@ -23,7 +28,9 @@ class Plan:
 
     scenario: what was planned. laps: closed cycles, most frequent first. capture: what becomes of the starts.
     force: thrust against floor friction. regime: dimensionless numbers. travel: the forecast for the block.
-    laps_to_drift_out: mean, per lap in `laps`. kit: hardware the routine needs. path_m: see `point_path`.
+    laps_to_drift_out: mean, per lap in `laps`, by theory. laps_to_drift_out_mc: by following pushers, for the first
+    `N_LAPS_FOLLOWED` of them. noise_budget: what the main lap tolerates; None without a lap. kit: hardware the routine
+    needs. path_m: see `point_path`.
     """
 
     scenario: Scenario
@@ -33,6 +40,8 @@ class Plan:
     regime: tuple[Regime, ...]
     travel: TravelForecast
     laps_to_drift_out: tuple[float, ...]
+    laps_to_drift_out_mc: tuple[LapsKept, ...]
+    noise_budget: NoiseBudget | None
     kit: tuple[Device, ...]
     path_m: NDArray[np.float64]
 
@@ -55,10 +64,11 @@ class Plan:
                 "rear_hit": {"y_m": lap.rear_y_m, "heading_rad": lap.rear_heading_rad},
                 "band": {"heading_rad": lap.band_rad},
                 "laps_to_drift_out": drift,
+                "laps_to_drift_out_mc": kept,
                 "share": lap.share,
                 "corners_m": lap.hits[:, :2],
             }
-            for lap, drift in zip(self.laps, self.laps_to_drift_out, strict=True)
+            for lap, drift, kept in zip_longest(self.laps, self.laps_to_drift_out, self.laps_to_drift_out_mc)
         ]
         answer: dict[str, Any] = plain(
             {
@@ -72,6 +82,7 @@ class Plan:
                 "force": self.force,
                 "regime": self.regime,
                 "forecast": self.travel,
+                "noise_budget": self.noise_budget,
                 "kit": self.kit,
                 "provenance": provenance(self.scenario),
             }
@@ -96,6 +107,7 @@ def plan(s: Scenario, *, n_starts: int = N_STARTS) -> Plan:
     """
     laps, capture = find_laps(s, n_starts=n_starts)
     travel = forecast(s, laps, count_strikes(s))
+    followed = laps[:N_LAPS_FOLLOWED]
     return Plan(
         scenario=s,
         laps=laps,
@@ -104,6 +116,8 @@ def plan(s: Scenario, *, n_starts: int = N_STARTS) -> Plan:
         regime=regimes(s, laps, travel),
         travel=travel,
         laps_to_drift_out=tuple(laps_to_drift_out(s, lap) for lap in laps),
+        laps_to_drift_out_mc=tuple(laps_kept(s, lap, most_legs=MOST_LEGS // len(followed)) for lap in followed),
+        noise_budget=noise_budget(s, lap=laps[0]) if laps else None,
         kit=s.routine.kit(),
         path_m=point_path(s),
     )

@@ -9,8 +9,9 @@ import math
 from collections.abc import Iterator
 from dataclasses import dataclass
 
+from swarmpush.geometry import block_corners, channel_corners, is_plain, post_corners
 from swarmpush.kinematics.drift import laps_to_drift_out
-from swarmpush.kinematics.forecast import TravelForecast, push_force
+from swarmpush.kinematics.forecast import PushForce, TravelForecast, push_force
 from swarmpush.kinematics.laps import Lap
 from swarmpush.scenario import Scenario
 
@@ -61,10 +62,21 @@ def _force(s: Scenario, travel: TravelForecast) -> Iterator[Regime]:
         else:
             text = "one leaning pusher moves the block: held pushing adds to the planned nudges"
         yield Regime("floor hold", "mu m g / stall force", needed, text, needed > 1.0 or s.pushers.latency > 0)
+        yield _force_margin(s.pushers.count, force)
     if travel.nudge_m > 0.0:
         slide = travel.nudge_m / s.pushers.radius
         text = "a strike is almost nothing; transport needs many" if slide < 0.05 else "strikes move the block visibly"
         yield Regime("slide per strike", "nudge / r", slide, text, False)
+
+
+def _force_margin(crew: int, force: PushForce) -> Regime:
+    """Crew against floor, for friction from half to twice the given: a pair's handbook values scatter by that much."""
+    margin = crew / force.pushers_to_move
+    low, high = force.pushers_to_move_low, force.pushers_to_move_high
+    text = f"from half to twice the friction it takes {low:.2g} to {high:.2g} leaning together, of {crew}"
+    if high > crew >= force.pushers_to_move:
+        text += "; at twice the friction the crew cannot"
+    return Regime("force margin", "n stall force / (mu m g)", margin, text, high > crew)
 
 
 def _channel(s: Scenario) -> Iterator[Regime]:
@@ -74,25 +86,58 @@ def _channel(s: Scenario) -> Iterator[Regime]:
     packing = s.pushers.count * math.pi * s.pushers.radius**2 / max(s.block.rear_at * s.channel.width, 1e-300)
     text = "pushers meet often" if packing > 0.03 else "meetings are rare"
     yield Regime("crowding", "crew area / area behind the block", packing, text, packing > 0.03)
-    friction = s.contacts.block_wall.friction
+    if is_plain(s):
+        yield from _between_walls(s)
+    else:
+        corners = len(channel_corners(s)) + sum(map(len, post_corners(s))) + len(block_corners(s))
+        text = "the rules for wedging, turning round and clearance hold for plain corridors and do not apply here"
+        yield Regime("outline", "corners of channel, posts and block", corners, text, False)
+
+
+def _between_walls(s: Scenario) -> Iterator[Regime]:
+    """What a rectangular block can do between two parallel walls.
+
+    Two corners touch at the tilt phi from l sin(phi) + b cos(phi) = w, D = l cos(phi) - b sin(phi) apart along the
+    channel. A push at the offset q jams against the friction mu of the walls if q >= D/(2 mu), about l/(2 mu): the
+    sticking drawer. It holds even without a push if D <= mu w (Whitney, J. Dyn. Syst. Meas. Control 104 (1982) 65:
+    wedging). Wider than the diagonal, the channel lets the block turn round and never touch both walls. (Statics,
+    worked out here.)
+    """
+    length, width, channel = s.block.length, s.block.width, s.channel.width
+    friction, turns = s.contacts.block_wall.friction, s.block.yaw == "free"
     if friction > 0.0:
-        # a sticking drawer: an axial push at offset q jams a snug block when q >= l/(2 mu)
-        wedge = (s.block.width / 2) / (s.block.length / (2 * friction))
+        wedge = (width / 2) / (length / (2 * friction))
         text = (
             "a push near the edge of the face can jam the block between the walls (sticking drawer)"
             if wedge >= 1.0
             else f"no axial push on the face can jam it; an edge push loses up to {wedge:.0%} to the walls"
         )
         yield Regime("wedging", "(b/2) / (l / (2 mu))", wedge, text, wedge >= 1.0)
-    clearance = (s.channel.width - s.block.width) / s.block.length
-    diagonal = math.hypot(s.block.length, s.block.width)
-    if s.channel.width > diagonal:
+    diagonal = math.hypot(length, width)
+    if channel > diagonal:
+        text, risk = "the channel is wider: the block can turn right round and present another face", turns
+    else:
+        tilt = math.asin(min(1.0, channel / diagonal)) - math.atan2(width, length)
+        spacing = length * math.cos(tilt) - width * math.sin(tilt)
+        risk = turns and spacing <= friction * channel
+        text = f"the block cannot turn round; its corners touch both walls at a yaw of {math.degrees(tilt):.2g} deg"
+        text += ", where friction alone can hold it cornerwise" if risk else ""
+    yield Regime("diagonal", "sqrt(l^2 + b^2) / w", diagonal / channel, text, risk)
+    clearance = (channel - width) / length
+    passes = channel - width > 2 * s.pushers.radius
+    text, risk = _clearance(clearance, channel > diagonal, passes)
+    yield Regime("clearance", "(w - b) / l", clearance, text, (risk and turns) or passes)
+
+
+def _clearance(clearance: float, is_wide: bool, passes: bool) -> tuple[str, bool]:
+    """The window of good clearances is below a tenth of the length; beyond the diagonal the block turns freely."""
+    if is_wide:
         text, risk = "the block can turn freely", True
     elif clearance > 0.1:
         text, risk = "the block can tilt by several degrees and wedge cornerwise", True
     else:
-        text, risk = f"the block cannot yaw more than about {math.degrees(clearance):.2g} deg", False
-    yield Regime("clearance", "(w - b) / l", clearance, text, risk and s.block.yaw == "free")
+        text, risk = "snug: the block stays nearly straight", False
+    return text + ("; pushers can slip past it to the front" if passes else ""), risk
 
 
 def _turning(s: Scenario, lap: Lap) -> Iterator[Regime]:

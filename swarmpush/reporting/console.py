@@ -11,6 +11,8 @@ from rich.table import Table
 from swarmpush.auditing.audit import Audit
 from swarmpush.cautions import CAUTIONS
 from swarmpush.dynamics.run import Run
+from swarmpush.kinematics.lap_loss import LapsKept
+from swarmpush.kinematics.noise_budget import Limit, NoiseBudget
 from swarmpush.kinematics.planning import Plan
 from swarmpush.quantities import for_people
 from swarmpush.reporting.wording import CAUSES, finding_row, interval, number, rung_row
@@ -37,49 +39,108 @@ def _plain(text: str) -> str:
 
 
 def show_plan(plan: Plan) -> None:
-    """The point world's answer."""
-    s, travel, capture = plan.scenario, plan.travel, plan.capture
-    if math.isfinite(travel.time_to_goal_s):
-        text = (
-            f"Geometry promises {for_people(travel.block_speed_m_s, 'm/s')}: {for_people(s.goal.travel, 'm')} in "
-            f"{for_people(travel.time_to_goal_s, 's')} (limit {for_people(s.goal.time_limit, 's')}), by "
-            f"{travel.strikes_to_goal:.0f} strikes of {for_people(travel.nudge_m, 'm')}."
-        )
-    elif travel.block_speed_m_s < 0.0:
-        back = for_people(-travel.block_speed_m_s, "m/s")
-        text = f"Geometry promises no arrival: strikes on the front drive the block back at {back}."
-    else:
-        text = "Geometry promises no arrival: no strike moves the block."
-    _head(s.about.name, text)
+    """The point world's answer: laps and what they survive, starts, force, forecast, risks, hardware."""
+    _head(plan.scenario.about.name, _plan_answer(plan))
     if plan.laps:
-        table = _table("lap", "starts", "time", "multipliers", "heading band", "kept for", right=("starts", "time"))
-        for lap, drift in zip(plan.laps, plan.laps_to_drift_out, strict=True):
-            low, high = (round(end, 6) for end in lap.band_rad)  # the search for the ends stops at 1e-7 rad
-            multipliers = ", ".join(f"{m.real:.3f}" if abs(m.imag) < 1e-12 else f"{m:.3f}" for m in lap.multipliers)
-            table.add_row(
-                " - ".join(lap.surfaces),
-                f"{lap.share:.0%}",
-                for_people(lap.time_s, "s"),
-                multipliers,
-                f"{for_people(low, 'rad')} to {for_people(high, 'rad')}",
-                "ever" if math.isinf(drift) else f"{drift:.3g} laps",
-            )
-        _console.print(table)
-    shares = {"caught by a lap": capture.captured, **capture.lost, "no closed lap within the budget": capture.undecided}
-    _console.print("\nstarts: " + ", ".join(f"{share:.0%} {what}" for what, share in shares.items() if share >= 0.005))
-    force = plan.force
-    if force.floor_friction_N > 0:
-        _console.print(
-            f"force: one pusher {for_people(force.stall_N, 'N')}, floor holds "
-            f"{for_people(force.floor_friction_N, 'N')}: {force.pushers_to_move:.2f} pushers to move the block"
-        )
-    _console.print("kit: " + ", ".join(plan.kit) + "\n")
+        _show_laps(plan)
+    facts = Table(box=None, padding=(0, 2, 0, 0), show_header=False)
+    facts.add_column(style="bold", no_wrap=True)
+    facts.add_column()
+    for name, text in _plan_facts(plan).items():
+        facts.add_row(name, _plain(text))
+    _console.print(facts)
+    _console.print()
     table = _table("number", "value", "meaning", right=("value",))
     for regime in plan.regime:
         risk = "[yellow]at risk:[/yellow] " if regime.is_at_risk else ""
         table.add_row(regime.name, f"{regime.value:.3g}", risk + _plain(regime.meaning))
     _console.print(table)
     _caution()
+
+
+def _plan_answer(plan: Plan) -> str:
+    s, travel = plan.scenario, plan.travel
+    if math.isfinite(travel.time_to_goal_s):
+        lead = "In time" if travel.time_to_goal_s <= s.goal.time_limit else "Too late"
+        return (
+            f"{lead}: the plan promises {for_people(s.goal.travel, 'm')} in {for_people(travel.time_to_goal_s, 's')} "
+            f"(limit {for_people(s.goal.time_limit, 's')}), at {for_people(travel.block_speed_m_s, 'm/s')} by "
+            f"{travel.strikes_to_goal:.0f} strikes of {for_people(travel.nudge_m, 'm')}."
+        )
+    if travel.block_speed_m_s < 0.0:
+        back = for_people(-travel.block_speed_m_s, "m/s")
+        return f"No arrival: strikes on the front drive the block back at {back}."
+    return "No arrival: no strike moves the block."
+
+
+def _show_laps(plan: Plan) -> None:
+    table = _table("lap", "starts", "time", "multipliers", "heading band", "laps kept", right=("lap",))
+    for k, (lap, theory) in enumerate(zip(plan.laps, plan.laps_to_drift_out, strict=True)):
+        low, high = (round(end, 6) + 0.0 for end in lap.band_rad)  # the search for the ends stops at 1e-7 rad
+        table.add_row(
+            str(k + 1),
+            f"{lap.share:.0%}",
+            for_people(lap.time_s, "s"),
+            ", ".join(f"{m.real:.3f}" if abs(m.imag) < 1e-12 else f"{m:.3f}" for m in lap.multipliers),
+            f"{for_people(low, 'rad')} to {for_people(high, 'rad')}",
+            f"{_count(theory)} by theory" + "".join(map(_followed, plan.laps_to_drift_out_mc[k : k + 1])),
+        )
+    _console.print(table)
+    for k, lap in enumerate(plan.laps):
+        _console.print(f"lap {k + 1}: " + " - ".join(lap.surfaces))
+    kept = plan.laps_to_drift_out_mc[0]
+    if kept.n > 0:
+        _console.print(
+            f"{kept.n} pushers were followed on lap 1, and {kept.n - kept.censored} left it; {kept.basis}; "
+            f"{plan.scenario.trial.confidence:.0%} interval"
+        )
+    _console.print()
+
+
+def _followed(kept: LapsKept) -> str:
+    if kept.n == 0:
+        return ""
+    return f"\n{_count(kept.mean)} followed\n({_count(kept.low)} to {_count(kept.high)})"
+
+
+def _count(laps: float) -> str:
+    if not math.isfinite(laps):
+        return "-" if math.isnan(laps) else "ever"
+    return f"{laps:.0f}" if laps >= 100.0 else f"{laps:.2g}"
+
+
+def _plan_facts(plan: Plan) -> dict[str, str]:
+    """What a plan says in a sentence each, by name."""
+    capture, force = plan.capture, plan.force
+    shares = {"caught by a lap": capture.captured, **capture.lost, "no closed lap within the budget": capture.undecided}
+    facts = {"starts": ", ".join(f"{share:.0%} {what}" for what, share in shares.items() if share >= 0.005)}
+    if force.floor_friction_N > 0.0:
+        facts["force"] = (
+            f"one pusher {for_people(force.stall_N, 'N')}, floor holds {for_people(force.floor_friction_N, 'N')}: "
+            f"{force.pushers_to_move:.2f} pushers to move the block ({force.pushers_to_move_low:.2f} with half the "
+            f"friction, {force.pushers_to_move_high:.2f} with twice), of {plan.scenario.pushers.count}"
+        )
+    if plan.noise_budget:
+        facts["noise"] = _noise_words(plan.noise_budget)
+    facts["forecast"] = plan.travel.basis
+    facts["kit"] = ", ".join(plan.kit)
+    return facts
+
+
+def _noise_words(budget: NoiseBudget) -> str:
+    def limit(what: str, x: Limit, unit: str) -> str:
+        if x.value == 0.0:
+            return f"no {what} at all (here {for_people(x.given, 'rad')}{unit})"
+        if math.isinf(x.value):
+            return f"any {what}"
+        low, high, given = (for_people(value, "rad") for value in (x.low, x.high, x.given))
+        return f"a {what} up to {for_people(x.value, 'rad')}{unit} ({low} to {high}; here {given})"
+
+    turn = limit("turn error", budget.turn_sd_rad, "")
+    diffusion = limit("heading diffusion", budget.heading_diffusion_rad_per_sqrt_s, "/sqrt(s)")
+    if budget.turn_sd_rad.value == budget.heading_diffusion_rad_per_sqrt_s.value == 0.0:
+        return f"without turn error or heading diffusion less than {budget.share:.0%} keep lap 1 for {budget.laps} laps"
+    return f"{budget.share:.0%} of the pushers keep lap 1 for {budget.laps} laps with {turn}, or with {diffusion}"
 
 
 def show_run(run: Run) -> None:

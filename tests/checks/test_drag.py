@@ -56,9 +56,10 @@ def test_leaning_speed(s: Scenario) -> None:
     speed = s.pushers.stall_force / (s.pushers.drag + s.fluid.block_drag)
     assert run.block["vx_m_s"].iloc[-1] == pytest.approx(speed, rel=BALANCE)
     assert len(run.visits) == 1
-    # the plan promises that speed for the latency, after the impact's share
-    nudge = swarmpush.plan(s.replace(forecast={"law": "lean"}), n_starts=1).travel.nudge_m
-    assert nudge == pytest.approx(speed * PUSH_ON, rel=BALANCE)
+    # the plan promises that speed for as long as the pusher leans, which is the whole trial
+    travel = swarmpush.plan(s.replace(forecast={"law": "lean"}), n_starts=1).travel
+    assert travel.leaning_share == pytest.approx(1.0, rel=BALANCE)
+    assert travel.block_speed_m_s == pytest.approx(speed, rel=BALANCE)
 
 
 def test_leaning_speed_at_any_step() -> None:

@@ -75,13 +75,17 @@ def test_what_is_granted_makes_no_rung() -> None:
 
 
 def test_rungs_keep_geometry_starts_and_forecast(s: Scenario) -> None:
-    """All rungs have the plan's laps and the same starts, so that what differs between them is the assumption."""
+    """All rungs have the plan's laps and the same starts, so that what differs between them is the assumption.
+
+    The forecast counts with the time that turns take and with the push meanwhile, which the first rung leaves out.
+    """
     expected = plan(s, n_starts=60)
     for rung in climb(s):
         assert (draw_starts(rung.scenario, 3) == draw_starts(s, 3)).all()
         found = plan(rung.scenario, n_starts=60)
         assert [lap.surfaces for lap in found.laps] == [lap.surfaces for lap in expected.laps]
-        assert found.travel == expected.travel
+        if rung.scenario.pushers.turn_rate == s.pushers.turn_rate:
+            assert found.travel == expected.travel
 
 
 def test_replicate_seeds() -> None:
