@@ -18,11 +18,14 @@ if TYPE_CHECKING:
     from swarmpush.demos import demo
     from swarmpush.dynamics.run import Run
     from swarmpush.dynamics.world import simulate
+    from swarmpush.kinematics.basins import basin_map
+    from swarmpush.kinematics.cycle_map import cycle_map
     from swarmpush.kinematics.planning import Plan, plan
     from swarmpush.loading import load, loads
     from swarmpush.problems import ScenarioError
     from swarmpush.reporting.page import report
     from swarmpush.scenario import Scenario
+    from swarmpush.vary import with_value
 
 __all__ = [
     "Audit",
@@ -31,12 +34,15 @@ __all__ = [
     "Scenario",
     "ScenarioError",
     "audit",
+    "basin_map",
+    "cycle_map",
     "demo",
     "load",
     "loads",
     "plan",
     "report",
     "simulate",
+    "with_value",
 ]
 
 _HOME = {
@@ -46,12 +52,15 @@ _HOME = {
     "Scenario": "swarmpush.scenario",
     "ScenarioError": "swarmpush.problems",
     "audit": "swarmpush.auditing.audit",
+    "basin_map": "swarmpush.kinematics.basins",
+    "cycle_map": "swarmpush.kinematics.cycle_map",
     "demo": "swarmpush.demos",
     "load": "swarmpush.loading",
     "loads": "swarmpush.loading",
     "plan": "swarmpush.kinematics.planning",
     "report": "swarmpush.reporting.page",
     "simulate": "swarmpush.dynamics.world",
+    "with_value": "swarmpush.vary",
 }
 
 

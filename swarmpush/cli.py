@@ -8,7 +8,9 @@ from __future__ import annotations
 
 import io
 import os
+import shutil
 import sys
+import textwrap
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
 
@@ -17,6 +19,7 @@ import typer
 if TYPE_CHECKING:
     from swarmpush.auditing.audit import Audit
     from swarmpush.auditing.verdicts import Finding
+    from swarmpush.kinematics.declarations import Declarations
     from swarmpush.scenario import Scenario
 
 BAD_INPUT, NOT_MET, INTERRUPTED = 2, 3, 130
@@ -64,28 +67,55 @@ def _common(
 
 
 @app.command(short_help="laps and block speed from geometry alone")
-def plan(scenario: ScenarioArgument, as_json: AsJson = False, out: OutFolder = None, force: Force = False) -> None:
+def plan(
+    scenario: ScenarioArgument,
+    vary: Annotated[
+        str | None,
+        typer.Option(metavar="KEY=LOW:HIGH:N", help="laps along a key of the scenario: channel.width=25cm:40cm:16"),
+    ] = None,
+    figure: Annotated[
+        bool,
+        typer.Option(
+            "--figure",
+            help="draw the laps, the laps along --vary (default: the routine's first angle, half to one and a half of "
+            "it), and what becomes of starts, as PNG and SVG; without --out into a new folder, results/NAME-plan",
+        ),
+    ] = False,
+    as_json: AsJson = False,
+    out: OutFolder = None,
+    force: Force = False,
+) -> None:
     """Predict laps, their stability and the block's speed from geometry alone."""
     import swarmpush
-    from swarmpush.output import claim_folder, to_json, write_bytes, write_text
+    from swarmpush.output import claim_folder, free_folder
+    from swarmpush.reporting.plan_results import PlanResults
 
     s = _load(scenario)
-    folder = claim_folder(out, force=force) if out else None
-    with _preparing(as_json):
-        planned = swarmpush.plan(s)
+    key, values = _range(s, vary, figure)
+    folder = out or (free_folder(RESULTS, f"{_stem(scenario)}-plan") if figure else None)
     if folder:
-        from swarmpush.reporting.drawing import as_png, plan_picture
-
-        write_bytes(folder / "plan.png", as_png(plan_picture, planned))
-        write_text(folder / "plan.json", to_json(planned.to_dict()))
+        claim_folder(folder, force=force)
+    with _preparing(as_json) as bar:
+        planned = swarmpush.plan(s)
+        results = PlanResults(
+            planned,
+            key=key,
+            cycle_map=swarmpush.cycle_map(s, key, values, progress=bar) if key else None,
+            basin_map=swarmpush.basin_map(s, laps=planned.laps, progress=bar) if figure else None,
+            declarations=_declarations(s),
+        )
+    answer = results.save(folder, is_drawn=figure) if folder else results.to_dict()
     if as_json:
-        _print_json(planned.to_dict())
+        _print_json(answer)
         return
     from swarmpush.reporting import console
 
     console.show_plan(planned)
+    for sentence in results.sentences():
+        print(textwrap.fill(sentence, shutil.get_terminal_size().columns, subsequent_indent="    "))
     if folder:
-        console.say_where(folder / "plan.json", folder / "plan.png")
+        console.say_where(*(folder / name for name in ("plan.json", "plan.png")))
+        console.say_where(*(folder / f"{name}.png" for name in ("cycle_map", "basin_map") if figure))
 
 
 @app.command(short_help="one run with rigid bodies, books balanced")
@@ -264,6 +294,25 @@ def _load(name: str) -> Scenario:
             raise _Refusal(f"{name}: no such file; the demo scenarios are {', '.join(DEMOS)}")
         path = swarmpush.demo(path.name.replace("-", "_"))
     return swarmpush.load(path)
+
+
+def _range(s: Scenario, text: str | None, has_default: bool) -> tuple[str, Any]:
+    """Key and values of the cycle map that is asked for; no key for none."""
+    from swarmpush.vary import first_angle_range, parse_range
+
+    if text is None:
+        return first_angle_range(s) if has_default else ("", ())
+    try:
+        return parse_range(s, text)
+    except ValueError as error:
+        raise _Refusal(f"--vary {text}: {error}") from None
+
+
+def _declarations(s: Scenario) -> Declarations | None:
+    """What declaring is worth, where the routine declares."""
+    from swarmpush.kinematics.declarations import declarations, declares
+
+    return declarations(s) if declares(s.routine) else None
 
 
 def _stem(name: str) -> str:

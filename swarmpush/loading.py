@@ -136,6 +136,10 @@ def _problem(tables: dict[str, Any], details: Any) -> Problem:
             return Problem(key, str(context["error"]))
     given = f"{_shown(_value_at(tables, place.keys))} given"
     match details["type"]:
+        case "too_short":
+            return Problem(key, f"{given}; must have at least {context['min_length']} items")
+        case "too_long":
+            return Problem(key, f"{given}; must have at most {context['max_length']} items")
         case "greater_than" | "greater_than_equal" | "less_than" | "less_than_equal" if place.field:
             return Problem(key, f"{given}; must be {_bounds(place.field)}")
         case "literal_error":
@@ -472,14 +476,13 @@ def _start_misfits(s: Scenario) -> Iterator[Problem]:
         yield from _placed_misfits(s)
         return
     room = room_for_starts(s)
-    needed = s.pushers.count * math.pi * s.pushers.radius**2
+    most = max(1, int(MAX_PACKING * room / (math.pi * s.pushers.radius**2)))  # one fits wherever its centre has a place
     if room <= 0:
         yield Problem(
             "start.region",
             f'no room for a pusher "{s.start.region}"; move block.rear_at or lengthen the channel',
         )
-    elif needed > MAX_PACKING * room:
-        most = int(MAX_PACKING * room / (math.pi * s.pushers.radius**2))
+    elif s.pushers.count > most:
         yield Problem(
             "pushers.count",
             f'{s.pushers.count} pushers do not fit the start region "{s.start.region}"; at most {most}',

@@ -116,7 +116,8 @@ def _basis(s: Scenario, push: CrewPush, back: CrewPush, leaning_share: float) ->
     total = sum(parts.values())
     if total == 0.0 or not math.isfinite(total):
         return "no strike moves the block" if total == 0.0 else "nothing stops the block after a strike"
-    shares = ", ".join(f"{value / total:.0%} {what}" for what, value in parts.items() if value != 0.0)
+    # adding 0 turns a rounded -0 into 0
+    shares = ", ".join(f"{round(value / total, 2) + 0.0:.0%} {what}" for what, value in parts.items() if value != 0.0)
     text = f"{shares}. A pusher leans for {_percent(leaning_share)} of its time"
     if static_friction(s) > 0.0:
         text += f"; those who lean overcome the resting floor for {_percent(push.enough)} of it"

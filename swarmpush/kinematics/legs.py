@@ -82,7 +82,7 @@ def hit_among(
         run = distance / approach if distance > touch else 0.0
         along = (px + run * ux) * segments[k, 2] + (py + run * uy) * segments[k, 3]
         reach = slack if approach > _FLAT else long_slack
-        if -reach <= along <= segments[k, 4] + reach:
+        if run < best and -reach <= along <= segments[k, 4] + reach:
             best, surface, normal_angle = run, k, segments[k, 7]
     corner = -1
     for k in range(len(arcs)):
@@ -226,7 +226,7 @@ def next_leg(
             waits = max(-value, 0.0)
             return Leg(_SLIDE, heading, by_heading, by_normal, ux, uy, 0.0, waits, -1, normal_angle)
     hit = hit_among(segments, arcs, moving, scale, shift, x, y, ux, uy)
-    if hit.run > limit:
+    if hit.run > limit + _TOUCH * scale:
         return Leg(command, heading, by_heading, by_normal, ux, uy, limit, limit / pace, -1, normal_angle)
     if hit.surface < 0:
         command = _STOP

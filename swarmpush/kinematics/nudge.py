@@ -12,6 +12,7 @@ from typing import NamedTuple
 from swarmpush.scenario import Scenario
 
 _NO_REBOUND = 1e-3  # of the speed of arrival: bodies that part more slowly stay together
+_MOST_BOUNCES = 100  # of a pusher that hardly loses speed in them
 
 
 class Strike(NamedTuple):
@@ -134,7 +135,7 @@ def _push_on(s: Scenario, strike: Strike, others: int, others_push: float) -> fl
     p, m, big = s.pushers, s.pushers.mass, s.block.mass
     friction, drag = kinetic_friction(s) - others_push, block_drag(s)
     own, speed, way, time_left = strike.approach_m_s, 0.0, 0.0, strike.push_s
-    while True:
+    for _ in range(_MOST_BOUNCES):
         parting = s.contacts.pusher_block.restitution * (own - speed)
         impulse = impact_impulse(s, own - speed)
         own, speed = own - impulse / m, speed + strike.kept * impulse / big
@@ -142,7 +143,7 @@ def _push_on(s: Scenario, strike: Strike, others: int, others_push: float) -> fl
             break
         flight = _Flight(0.0, 0.0, own, speed)
         for _ in range(3):  # accelerations at the flight's mean speeds, which three rounds find to a percent
-            gains = (strike.push_N - p.drag * (own + flight.own) / 2.0) / m
+            gains = max(0.0, strike.push_N - p.drag * (own + flight.own) / 2.0) / m
             loses = (friction + drag * (speed + flight.speed) / 2.0) / big
             flight = _catch_up(own, speed, parting, gains, loses)
         if flight.time >= time_left:
@@ -173,12 +174,15 @@ def _catch_up(own: float, speed: float, parting: float, gains: float, loses: flo
 
     The gap closes after 2 (parting speed)/(gains + loses), or later if the block rests before.
     """
+    if gains + loses <= 0.0:
+        return _Flight(math.inf, 0.0, own, speed)
     time = 2.0 * parting / (gains + loses)
     if speed >= loses * time:
         return _Flight(time, speed * time - loses * time**2 / 2.0, own + gains * time, speed - loses * time)
     way = speed**2 / (2.0 * loses)
-    time = (math.sqrt(own**2 + 2.0 * gains * way) - own) / gains
-    return _Flight(time, way, own + gains * time, 0.0)
+    mean = (own + math.sqrt(own**2 + 2.0 * gains * way)) / 2.0  # speed of the pusher until it is there
+    time = way / mean if mean > 0.0 else math.inf
+    return _Flight(time, way, own + gains * time if math.isfinite(time) else own, 0.0)
 
 
 def _driven(mass: float, drag: float, force: float, speed: float, time: float) -> tuple[float, float]:

@@ -1,9 +1,8 @@
-"""The pictures: each function draws one figure from records. Nothing else in the package draws."""
+"""The pictures of runs and audits, each function one figure from records, and the style that all pictures share."""
 
 from __future__ import annotations
 
 import io
-import math
 from collections.abc import Callable
 from itertools import pairwise
 from typing import Any
@@ -16,23 +15,25 @@ import matplotlib.pyplot as plt
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
-from matplotlib.patches import Circle, Rectangle
+from matplotlib.patches import Circle, Polygon
 
 from swarmpush.auditing.audit import Audit
 from swarmpush.dynamics.run import Run
+from swarmpush.geometry import block_corners, channel_corners, post_corners
 from swarmpush.kinematics.planning import Plan
 from swarmpush.quantities import prefix_for
 
 PLANNED, MEASURED, QUIET, GOOD, BAD = "#b3261e", "#1f4e79", "#9aa5b1", "#2e7d32", "#b3261e"
+INK, AXIS, PALE = "#22303c", "#5f6b76", "#e3e7eb"
 STYLE: dict[Any, Any] = {
     "font.family": "DejaVu Sans",
     "font.size": 9,
     "axes.spines.top": False,
     "axes.spines.right": False,
-    "axes.edgecolor": "#5f6b76",
-    "axes.labelcolor": "#22303c",
-    "xtick.color": "#5f6b76",
-    "ytick.color": "#5f6b76",
+    "axes.edgecolor": AXIS,
+    "axes.labelcolor": INK,
+    "xtick.color": AXIS,
+    "ytick.color": AXIS,
     "svg.fonttype": "none",
     "svg.hashsalt": "swarmpush",  # the same figure gives the same file
 }
@@ -65,7 +66,7 @@ def lap_over_runs(plan: Plan, run: Run) -> Figure:
     s = plan.scenario
     scale, prefix = prefix_for(s.channel.width)
     figure, axes = plt.subplots(figsize=(8.4, 3.4))
-    reach = _draw_rig(axes, plan, scale, has_ends=False)
+    reach = draw_rig(axes, plan, scale, has_ends=False)
     _draw_legs(axes, run, scale)
     if (lap := plan.main_lap) is not None:
         corners = np.vstack([lap.hits[:, :2], lap.hits[:1, :2]]) / scale
@@ -87,25 +88,39 @@ def lap_over_runs(plan: Plan, run: Run) -> Figure:
     return figure
 
 
-def _draw_rig(axes: Axes, plan: Plan, scale: float, *, has_ends: bool) -> tuple[float, float]:
-    """Walls, block and one pusher, to scale; returns the stretch of the channel worth showing."""
+def draw_rig(axes: Axes, plan: Plan, scale: float, *, has_ends: bool) -> tuple[float, float]:
+    """Walls, posts, block and one pusher, to scale; returns the stretch of the channel worth showing.
+
+    Without ends a straight corridor goes on for ever, as it looks from a block that moves; any other channel moves past
+    such a block, so that its outline at the start is only hinted at.
+    """
     s = plan.scenario
     width, rear, front = s.channel.width / scale, s.block.rear_at / scale, s.block_front_at / scale
     length = s.channel.length / scale
-    if has_ends:
-        axes.plot([0.0, length, length, 0.0, 0.0], [0.0, 0.0, width, width, 0.0], color="#22303c", lw=2.5)
+    walls, posts, block = (
+        [np.array(corners) / scale for corners in outlines]
+        for outlines in ((channel_corners(s),), post_corners(s), (block_corners(s),))
+    )
+    if has_ends or s.channel.outline or posts:
+        outline = Polygon(walls[0], fill=False, edgecolor=INK, lw=2.5)
+        if not has_ends:
+            outline.set(ls="--", lw=1.0, label="channel at the start")
+        axes.add_patch(outline)
     else:
         for y in (0.0, width):
-            axes.axhline(y, color="#22303c", lw=2.5)
-    low = (s.channel.width - s.block.width) / 2 / scale + s.block.offset / scale
-    size = front - rear, s.block.width / scale
-    axes.add_patch(Rectangle((rear, low), *size, facecolor="#e3e7eb", edgecolor="#22303c", lw=1.2, zorder=2))
-    axes.text((rear + front) / 2, width / 2, "block", ha="center", va="center", color="#22303c", zorder=3)
+            axes.axhline(y, color=INK, lw=2.5)
+    for post in posts:
+        axes.add_patch(Polygon(post, facecolor=QUIET, edgecolor=INK, lw=1.2, ls="-" if has_ends else "--", zorder=2))
+    axes.add_patch(Polygon(block[0], facecolor=PALE, edgecolor=INK, lw=1.2, zorder=2))
+    x, y = (0.5 * (block[0].min(axis=0) + block[0].max(axis=0))).tolist()
+    axes.text(x, y, "block", ha="center", va="center", color=INK, zorder=3)
     lap = plan.main_lap
     back = float(lap.hits[:, 0].min()) / scale if lap is not None else rear - 3 * width
     radius = s.pushers.radius / scale
-    x, y = (lap.hits[0, :2] / scale).tolist() if lap is not None else (rear - radius, width / 2)
+    middle = block[0][:2].mean(axis=0)  # of the rear face
+    x, y = (lap.hits[0, :2] / scale).tolist() if lap is not None else (middle[0] - radius, middle[1])
     axes.add_patch(Circle((x, y), radius, facecolor="white", edgecolor=MEASURED, lw=1.2, zorder=4))
+    axes.set_ylim(-0.06 * width, 1.06 * width)
     reach = max(min(back - 2 * radius, rear - 2 * width), rear - 6 * width, -0.1 * width if has_ends else -0.5 * width)
     return reach, min(front + 0.5 * width, length + 0.1 * width)
 
@@ -143,9 +158,9 @@ def ladder(audit: Audit) -> Figure:
         axes.barh(k, speed.mean / scale, height=0.55, color=colour, alpha=0.85)
         if k:
             reach = [[(speed.mean - speed.low) / scale], [(speed.high - speed.mean) / scale]]
-            axes.errorbar(speed.mean / scale, k, xerr=reach, color="#22303c", capsize=3, lw=1.2)
-    axes.axvline(needed / scale, color="#22303c", ls="--", lw=1)
-    axes.text(needed / scale, -0.62, "needed", ha="center", va="bottom", color="#22303c", fontsize=8)
+            axes.errorbar(speed.mean / scale, k, xerr=reach, color=INK, capsize=3, lw=1.2)
+    axes.axvline(needed / scale, color=INK, ls="--", lw=1)
+    axes.text(needed / scale, -0.62, "needed", ha="center", va="bottom", color=INK, fontsize=8)
     names = ["geometry alone", *(f"+ {rung.adds}" for rung in rungs[1:])]
     axes.set_yticks(range(len(rungs)), names)
     axes.invert_yaxis()
@@ -177,8 +192,8 @@ def block_path(run: Run, planned_speed_m_s: float | None = None, ends: Any = Non
     scale, prefix = prefix_for(s.goal.travel)
     figure, axes = plt.subplots(figsize=(8.4, 2.6))
     travel = (run.block["x_m"] - run.block["x_m"].iloc[0]) / scale
-    axes.axhline(s.goal.travel / scale, color="#22303c", lw=1, ls="--")
-    axes.text(0.0, s.goal.travel / scale, " goal", va="bottom", color="#22303c", fontsize=8)
+    axes.axhline(s.goal.travel / scale, color=INK, lw=1, ls="--")
+    axes.text(0.0, s.goal.travel / scale, " goal", va="bottom", color=INK, fontsize=8)
     if planned_speed_m_s:
         last = min(s.goal.time_limit, s.goal.travel / planned_speed_m_s)
         axes.plot([0.0, last], [0.0, planned_speed_m_s * last / scale], color=PLANNED, lw=1.8, label="planned")
@@ -214,41 +229,8 @@ def books(run: Run) -> Figure:
     figure, axes = plt.subplots(figsize=(8.4, 1.9))
     for k, (_, value) in enumerate(entries):
         axes.barh(k, value / scale, height=0.55, color=GOOD if value >= 0 else BAD, alpha=0.8)
-    axes.axvline(0.0, color="#22303c", lw=0.8)
+    axes.axvline(0.0, color=INK, lw=0.8)
     axes.set_yticks(range(len(entries)), [name for name, _ in entries])
     axes.invert_yaxis()
     axes.set_xlabel(f"impulse on the block along the channel, {prefix}N s")
     return figure
-
-
-def plan_picture(plan: Plan) -> Figure:
-    """The planned laps in the channel with the first one's bands of heading, over the path of one exact point."""
-    s = plan.scenario
-    scale, prefix = prefix_for(s.channel.width)
-    figure, axes = plt.subplots(figsize=(8.4, 3.2))
-    reach = _draw_rig(axes, plan, scale, has_ends=True)
-    axes.plot(*(plan.path_m / scale).T, color=QUIET, lw=0.6, label=f"first {len(plan.path_m) - 1} runs of one pusher")
-    for k, lap in enumerate(plan.laps[:3]):
-        corners = np.vstack([lap.hits[:, :2], lap.hits[:1, :2]]) / scale
-        label = f"{' - '.join(lap.surfaces[:6])}{' ...' if len(lap.surfaces) > 6 else ''} ({lap.share:.0%} of starts)"
-        axes.plot(*corners.T, color=(PLANNED, MEASURED, GOOD)[k], lw=2.0 if k == 0 else 1.2, zorder=5, label=label)
-        if k == 0:
-            _draw_bands(axes, lap.hits, lap.leg_bands_rad, corners, scale)
-    axes.set_xlim(*reach)
-    axes.set_aspect("equal")
-    axes.set_xlabel(f"along the channel, {prefix}m")
-    axes.set_ylabel(f"across, {prefix}m")
-    axes.legend(loc="lower center", bbox_to_anchor=(0.5, 1.0), frameon=False, fontsize=8)
-    return figure
-
-
-def _draw_bands(axes: Axes, hits: Any, bands: Any, corners: Any, scale: float) -> None:
-    """From each corner of the lap, the wedge of headings that keep it."""
-    for (x, y, _, heading), (low, high), end, start in zip(hits, bands, corners[1:], corners[:-1], strict=True):
-        if high - low <= 0.0 or high - low > math.pi:
-            continue
-        length = 0.35 * float(np.hypot(*(end - start)))
-        angles = heading + np.linspace(low, high, 24)
-        xs = np.concatenate([[x / scale], x / scale + length * np.cos(angles)])
-        ys = np.concatenate([[y / scale], y / scale + length * np.sin(angles)])
-        axes.fill(xs, ys, color=PLANNED, alpha=0.12, lw=0, zorder=3)

@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import io
 import math
 from typing import Any
 
 import numpy as np
 import pytest
 from numpy.typing import NDArray
+from rich.console import Console
 from scipy.integrate import solve_ivp
 
 import swarmpush
@@ -19,6 +21,7 @@ from swarmpush.kinematics.regimes import Regime
 from swarmpush.kinematics.teams import binomial, kept_by_walls
 from swarmpush.kinematics.visits import Visits, follow_visits
 from swarmpush.loading import load
+from swarmpush.reporting import console
 from swarmpush.routine import Routine
 from swarmpush.scenario import Errors, Floor, Fluid, Pair, Scenario, Start
 
@@ -171,6 +174,19 @@ def test_nudge_of_bodies(restitution: float, latency: float) -> None:
     assert run.travel_m == pytest.approx(travel.nudge_m, rel=IN_BODIES)
 
 
+@pytest.mark.parametrize("heavy", ["pusher", "block"])
+@pytest.mark.parametrize("drag", [1e-12, 1e-3, 1e3])
+@pytest.mark.parametrize("restitution", [0.0, 0.5, 1.0])
+def test_nudge_of_any_masses_is_finite(restitution: float, drag: float, heavy: str) -> None:
+    """However bouncy, light or heavy the two are, a strike moves the block, by half its bare slide or more."""
+    s = resisted(0.0, 0.0, drag, restitution)
+    s = s.replace(**{"pushers" if heavy == "pusher" else "block": {"mass": 50.0}})
+    for time in (0.0, 0.01, 1.0, 1e4):
+        way = strike_nudge(s, Strike(0.15, 1.0, time))
+        assert math.isfinite(way)
+        assert way >= 0.5 * impact_nudge(s, 0.15)
+
+
 def test_slide_out_limits() -> None:
     """A body slides M V^2/(2 f) without drag and M V/g without friction, and for ever without either."""
     assert slide_out(2.0, 3.0, 4.0, 0.0) == 2.25
@@ -320,3 +336,39 @@ def test_visits_of_nobody() -> None:
     rear, front = follow_visits(s)
     assert isinstance(rear, Visits)
     assert (rear.strike_rate_1_s, rear.leaning_share, front.strike_rate_1_s) == (0.0, 0.0, 0.0)
+
+
+# ---- the page -----------------------------------------------------------------------------------------------------
+
+
+def shown(s: Scenario, width: int, monkeypatch: pytest.MonkeyPatch) -> str:
+    paper = io.StringIO()
+    monkeypatch.setattr(console, "_console", Console(file=paper, width=width, highlight=False))
+    console.show_plan(plan(s, n_starts=20))
+    return paper.getvalue()
+
+
+@pytest.mark.parametrize("width", [60, 80])
+@pytest.mark.parametrize("name", ["service_passage", "vibration_duct", "gel_channel", "loading_bay"])
+def test_page_fits(name: str, width: int, monkeypatch: pytest.MonkeyPatch) -> None:
+    """A plan fits the terminal's width with nothing cut off."""
+    text = shown(load(demo(name)), width, monkeypatch)
+    assert max(map(len, text.splitlines())) <= width
+    assert "…" not in text
+
+
+def test_page_says_it_all(monkeypatch: pytest.MonkeyPatch) -> None:
+    """The page answers in a sentence and names laps, their keeping, starts, force, noise, basis, risks and kit."""
+    text = " ".join(shown(load(demo("service_passage")), 80, monkeypatch).split())
+    assert text.startswith("Service passage In time: the plan promises 100 mm in ")
+    for words in (
+        "lap 1: rear - top - bottom", "by theory", "followed", "caught by a lap", "1.72 pushers to move the block",
+        "0.86 with half the friction", "80% of the pushers keep lap 1 for 60 laps with a turn error up to",
+        "here 4 deg", "sliding after impacts", "pushing on", "leaning together", "at risk: pushers meet often",
+        "bump sensor",
+    ):  # fmt: skip
+        assert words in text
+    s = load(demo("service_passage"))
+    assert "Too late: the plan promises" in shown(s.replace(goal={"time_limit": 60.0}), 80, monkeypatch)
+    hopeless = hall({"act": "halt"}, start=(0.5, 0.5, math.pi / 2))
+    assert "No arrival: no strike moves the block." in shown(hopeless, 80, monkeypatch)

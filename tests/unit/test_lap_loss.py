@@ -11,6 +11,7 @@ from swarmpush.demos import demo
 from swarmpush.kinematics.drift import laps_to_drift_out
 from swarmpush.kinematics.lap_loss import LapFollower, errs, estimate_laps, laps_kept
 from swarmpush.kinematics.laps import Lap, find_laps
+from swarmpush.kinematics.planning import plan
 from swarmpush.loading import load
 from swarmpush.scenario import Errors, Scenario
 
@@ -121,3 +122,12 @@ def test_no_loss_seen() -> None:
     kept = estimate_laps(np.full(4, 25.0), np.ones(4, dtype=bool), 0.95)
     assert kept.mean == kept.high == math.inf
     assert kept.low == pytest.approx(100 / -math.log(0.025))
+
+
+def test_laps_kept_stand_in_the_plan() -> None:
+    """Each lap of a plan has its laps kept by theory and, for the most frequent laps, by following."""
+    for lap in plan(load(demo("gel_channel")), n_starts=50).to_dict()["laps"]:
+        kept = lap["laps_to_drift_out_mc"]
+        assert set(kept) == {"mean", "low", "high", "n", "censored", "basis"}
+        assert kept["low"] < kept["mean"] < kept["high"] < 1.0
+        assert lap["laps_to_drift_out"] < 1.0
