@@ -60,7 +60,7 @@ def find_verdicts(plan: Plan, runs: pd.DataFrame) -> tuple[Finding, ...]:
         per_lap = mean_of("strike_rate_1_s", lap.time_s)
         claim(claims.STRIKES_PER_LAP, "every pusher strikes in every lap time", "1", travel.strikes_per_lap, per_lap)
     else:
-        statement = "the crew strikes as often as undisturbed points would"
+        statement = "the crew strikes as often as undisturbed pushers would"
         claim(claims.STRIKE_RATE, statement, "1/s", travel.strike_rate_1_s, mean_of("strike_rate_1_s", s.pushers.count))
     claim(claims.NUDGE, f"a strike moves the block by {_law(plan)}", "m", travel.nudge_m, mean_of("nudge_m"))
     statement = "an impact passes on (1 + e) v m M/(m + M)"
