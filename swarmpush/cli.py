@@ -17,9 +17,12 @@ from typing import TYPE_CHECKING, Annotated, Any
 import typer
 
 if TYPE_CHECKING:
+    import pandas as pd
+
     from swarmpush.auditing.audit import Audit
     from swarmpush.auditing.verdicts import Finding
     from swarmpush.kinematics.declarations import Declarations
+    from swarmpush.kinematics.planning import Plan
     from swarmpush.scenario import Scenario
 
 BAD_INPUT, NOT_MET, INTERRUPTED = 2, 3, 130
@@ -101,7 +104,7 @@ def plan(
             planned,
             key=key,
             cycle_map=swarmpush.cycle_map(s, key, values, progress=bar) if key else None,
-            basin_map=swarmpush.basin_map(s, laps=planned.laps, progress=bar) if figure else None,
+            basin_map=_basin_map(planned, bar) if figure else None,
             declarations=_declarations(s),
         )
     answer = results.save(folder, is_drawn=figure) if folder else results.to_dict()
@@ -114,8 +117,8 @@ def plan(
     for sentence in results.sentences():
         print(textwrap.fill(sentence, shutil.get_terminal_size().columns, subsequent_indent="    "))
     if folder:
-        console.say_where(*(folder / name for name in ("plan.json", "plan.png")))
-        console.say_where(*(folder / f"{name}.png" for name in ("cycle_map", "basin_map") if figure))
+        drawn = ["cycle_map.png"] * figure + ["basin_map.png"] * (results.basin_map is not None)
+        console.say_where(*(folder / name for name in ("plan.json", "plan.png", *drawn)))
 
 
 @app.command(short_help="one run with rigid bodies, books balanced")
@@ -306,6 +309,17 @@ def _range(s: Scenario, text: str | None, has_default: bool) -> tuple[str, Any]:
         return parse_range(s, text)
     except ValueError as error:
         raise _Refusal(f"--vary {text}: {error}") from None
+
+
+def _basin_map(planned: Plan, progress: Any) -> pd.DataFrame | None:
+    """The basin map of a plan; None, with a word on the error stream, where nothing fits behind the block."""
+    import swarmpush
+
+    try:
+        return swarmpush.basin_map(planned.scenario, laps=planned.laps, progress=progress)
+    except ValueError as error:
+        print(f"no basin map: {error}", file=sys.stderr)
+        return None
 
 
 def _declarations(s: Scenario) -> Declarations | None:

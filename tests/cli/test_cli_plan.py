@@ -109,6 +109,20 @@ def test_figures_go_to_a_new_folder(short: Path, tmp_path: Path, monkeypatch: py
     assert contents(tmp_path / "results" / "short-plan") == {}
 
 
+def test_a_block_with_nothing_behind_it_has_no_basin_map(tmp_path: Path) -> None:
+    """Where no pusher fits behind the block, the other figures are drawn, and it is said that this one is not."""
+    scenario = tmp_path / "rig.toml"
+    ahead = (('rear_at = "1.2 m"', "rear_at = 0"), ('region = "behind"', 'region = "ahead"'))
+    scenario.write_text(edited(*ahead), encoding="utf-8")
+    outcome = call("plan", scenario, "--vary", WIDTHS, "--figure", "--out", tmp_path / "plan")
+    assert outcome.code == DONE
+    assert outcome.err.strip().startswith("no basin map: no pusher has room")
+    assert "basin_map" not in outcome.out
+    assert contents(tmp_path / "plan").keys() == {
+        "plan.json", "cycle_map.parquet", *(f"{name}.{kind}" for name in NAMES[:2] for kind in ("png", "svg"))
+    }  # fmt: skip
+
+
 def test_results_are_not_overwritten(short: Path, tmp_path: Path) -> None:
     """Maps are written into a folder that holds something only by force."""
     (tmp_path / "cycle_map.parquet").write_text("mine")
