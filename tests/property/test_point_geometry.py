@@ -20,7 +20,7 @@ from swarmpush.kinematics.boundary import boundary_of, surface_names
 from swarmpush.kinematics.laps import BUDGET, IN_THE_OPEN, find_laps
 from swarmpush.loading import from_tables
 from swarmpush.problems import ScenarioError
-from swarmpush.program import EXACT, MEMORY, NOTES, compile_routine
+from swarmpush.program import EXACT, MEMORY, NOTES, PC, compile_routine
 from swarmpush.routine import Routine
 from swarmpush.scenario import Scenario
 
@@ -215,7 +215,7 @@ def placed(s: Scenario) -> Points:
 
 N_LEGS = 12
 NUDGE = 1e-8  # m or rad: a start so far beside shows how much a path spreads
-# Of the spread: rounding is 1e-15 of a metre, and each leg adds its own to what the one before passed on.
+# Of the spread: rounding is 1e-15 m at the start, 1e-7 of NUDGE, and every leg adds as much to what was passed on.
 ROUNDING = 1e-5
 
 
@@ -245,9 +245,8 @@ def agrees(paths: tuple[Points, Points], wide: Points) -> int:
     one, other = paths[0][:n, [0, 1, 2, 4, 5]], paths[1][:n, [0, 1, 2, 4, 5]]
     off = one - other
     off[:, 2] = np.remainder(off[:, 2] + math.pi, math.tau) - math.pi
-    # times of slides that press nearly straight on are long, and as uncertain as their speed
-    off[:, 4] /= 1.0 + np.maximum(one[:, 4] - one[:, 3], 0.0) / NUDGE * ROUNDING
-    assert (np.abs(off).max(axis=1, initial=0.0) <= ROUNDING * wide[:n] * 10).all()
+    off[:, 4] /= 1.0 + one[:, 4]  # a slide that presses nearly straight on takes long, and is as uncertain as slow
+    assert (np.abs(off).max(axis=1, initial=0.0) <= ROUNDING * wide[:n]).all()
     return n
 
 
@@ -322,7 +321,7 @@ def test_among_mirrors_a_path_runs_back(seed: int) -> None:
     back, back_surfaces = follow(s, turned, n - 1)
     assert back_surfaces.tolist() == surfaces[: n - 1][::-1].tolist()
     # what the way out spread is gathered in again, from rounding that was spread as well
-    assert np.abs(back[:, :2] - hits[: n - 1, :2][::-1]).max() <= 10 * ROUNDING * wide[n - 1] * wide[n - 1] / NUDGE
+    assert np.abs(back[:, :2] - hits[: n - 1, :2][::-1]).max() <= ROUNDING * wide[n - 1] * wide[n - 1] / NUDGE
 
 
 # ---- derivatives ----------------------------------------------------------------------------------------------------
@@ -332,87 +331,81 @@ MOST_SPREAD = 1e3  # a map that spreads more leaves too few digits for a differe
 MAX_LEGS = 60
 
 
-def return_map(
-    s: Scenario, state: Points, memory: NDArray[np.int64], notes: Points, n_rear: int
-) -> tuple[LapTrace, tuple[int, ...], Points]:
-    hits, surfaces = np.zeros((MAX_LEGS, 4)), np.zeros(MAX_LEGS, dtype=np.int64)
-    program = compile_routine(s.routine, surface_names(s))
-    lap = trace_lap(
-        boundary_of(s), program, EXACT, stream_keys(0, 1)[0], 1.0, state[0], state[1], memory.copy(), notes.copy(),
-        n_rear, hits, surfaces,
-    )  # fmt: skip
-    return lap, tuple(surfaces[: lap.n_bumps].tolist()), hits[: lap.n_bumps]
+class Returns(NamedTuple):
+    """The way from one arrival at the rear face to the next or next but one."""
+
+    s: Scenario
+    pc: int  # the act that comes first
+    n_rear: int
+
+    def follow(self, state: Points) -> tuple[LapTrace, list[int], Points]:
+        """Arrival and derivatives, surfaces, and places of the legs' ends."""
+        hits, surfaces = np.zeros((MAX_LEGS, 4)), np.zeros(MAX_LEGS, dtype=np.int64)
+        memory = np.zeros(MEMORY, dtype=np.int64)
+        memory[PC] = self.pc
+        lap = trace_lap(
+            boundary_of(self.s), compile_routine(self.s.routine, surface_names(self.s)), EXACT, stream_keys(0, 1)[0],
+            1.0, state[0], state[1], memory, np.zeros(NOTES), self.n_rear, hits, surfaces,
+        )  # fmt: skip
+        return lap, surfaces[: lap.n_bumps].tolist(), hits[: lap.n_bumps, :2]
+
+    def differences(self, state: Points, step: float) -> Points | None:
+        """The derivatives from four arrivals nearby; None on an edge of the map."""
+        middle, way, _ = self.follow(state)
+        columns = []
+        for direction in np.eye(2):
+            sides = [self.follow(state + k * step * direction) for k in (-2, -1, 1, 2)]
+            if any(side[1] != way for side in sides):
+                return None
+            a, b, c, d = (
+                np.array([lap.along, middle.heading + math.remainder(lap.heading - middle.heading, math.tau)])
+                for lap, _, _ in sides
+            )
+            columns.append((a - 8 * b + 8 * c - d) / (12 * step))
+        return np.column_stack(columns)
 
 
 def test_multipliers_are_derivatives() -> None:
     """The return map's Jacobian agrees with differences in any room, over corners, slides and measured legs."""
-    counts = {"all": 0, "corner": 0, "open": 0, "slide length": 0, "slide time": 0, "advance": 0}
+    counts = {"corner": 0, "open": 0, "slide length": 0, "slide time": 0, "advance": 0, "mirror": 0}
 
-    @steady(3000)
+    @steady(250)
     @given(seeds)
     def check(seed: int) -> None:
         rng = np.random.default_rng(seed)
         acts = any_acts(rng)
-        # back to the block soon, and no stage without a turn
-        acts.append({"act": "depart", "angle": float(rng.uniform(0.0, 1.2)), "side": "onward"})
-        if rng.random() < 0.5:
-            acts[-1] = {"act": "turn", "angle": float(rng.uniform(1.5, 3.0))}
-        reach = float(rng.uniform(0.05, 0.4))
-        measured = [
-            {"act": "advance", "distance": reach},
-            {"act": "slide", "length": reach},
-            {"act": "slide", "time": reach},
-        ]
-        if rng.random() < 0.4:
-            acts.insert(len(acts) - 1, measured[rng.integers(3)])
         _, _, s = valid(rng, one_stage(acts))
         boundary = boundary_of(s)
-        _, surfaces = follow(s, placed(s), 200)
-        at_rear = np.flatnonzero(surfaces == boundary.rear)
-        if len(at_rear) == 0:
-            return
-        # what the pusher knows when it arrives there
-        n = int(at_rear[rng.integers(len(at_rear))]) + 1
-        hits, memory, notes = np.zeros((n, 6)), np.zeros(MEMORY, dtype=np.int64), np.zeros(NOTES)
-        trace(
-            boundary, compile_routine(s.routine, surface_names(s)), EXACT, 0.0, 1.0, stream_keys(0, 1)[0], placed(s),
-            0.0, hits, np.zeros(n, dtype=np.int64), memory, notes,
-        )  # fmt: skip
-        x, y, heading = hits[-1, :3]
         rear = boundary.segments[boundary.rear]
-        state, n_rear = np.array([(x - rear[0]) * rear[2] + (y - rear[1]) * rear[3], heading]), int(rng.integers(1, 3))
-        lap, way, points = return_map(s, state, memory, notes, n_rear)
-        exact = np.array([[lap.aa, lap.ah], [lap.ha, lap.hh]])
-        size = max(1.0, float(np.abs(exact).max()))
-        legs = np.hypot(*np.diff(np.vstack([[x, y], points[:, :2]]), axis=0).T)
-        if lap.n_bumps == 0 or size > MOST_SPREAD or (legs < 1e-9).any():
-            return  # no return; too steep; or stuck in a corner, where the map has a kink
-        errors = []
-        for step in (1e-4 / size, 1e-5 / size, 1e-6 / size):
-            columns = []
-            for direction in np.eye(2):
-                sides = [return_map(s, state + k * step * direction, memory, notes, n_rear) for k in (-2, -1, 1, 2)]
-                if any(side[1] != way for side in sides):
-                    break
-                a, b, c, d = (
-                    np.array([side[0].along, lap.heading + math.remainder(side[0].heading - lap.heading, math.tau)])
-                    for side in sides
-                )
-                columns.append((a - 8 * b + 8 * c - d) / (12 * step))
-            if len(columns) == 2:
-                errors.append(float(np.abs(np.column_stack(columns) - exact).max()) / size)
-        if not errors:
-            return  # on an edge of the map
-        assert min(errors) < DIFFERENCE  # of a step too long and one too short, one between is right
-        kinds = {act["act"] + (" length" if "length" in act else " time" if "time" in act else "") for act in acts}
-        counts["all"] += 1
-        counts["corner"] += any(k >= len(boundary.segments) for k in way)
-        counts["open"] += -1 in way
-        for kind in ("slide length", "slide time", "advance"):
-            counts[kind] += kind in kinds
+        moves = [k for k, act in enumerate(acts) if act["act"] in ("run", "advance", "slide")]
+        for _ in range(8):
+            returns = Returns(s, int(rng.choice(moves)) + 1, int(rng.integers(1, 3)))
+            state = np.array([rng.uniform(0.0, rear[4]), rear[7] + math.pi + rng.uniform(-1.4, 1.4)])
+            lap, way, points = returns.follow(state)
+            exact = np.array([[lap.aa, lap.ah], [lap.ha, lap.hh]])
+            size = max(1.0, float(np.abs(exact).max()))
+            if lap.n_bumps == 0 or size > MOST_SPREAD or _is_in_a_corner(way, points):
+                continue  # it does not return; the map is too steep; it has a kink
+            found = [returns.differences(state, step / size) for step in (1e-4, 1e-5, 1e-6)]
+            errors = [np.abs(difference - exact).max() / size for difference in found if difference is not None]
+            if not errors:
+                continue
+            assert min(errors) < DIFFERENCE  # the longest step is too long for some maps, the shortest for none
+            counts["corner"] += any(k >= len(boundary.segments) for k in way)
+            counts["open"] += -1 in way
+            for act in acts if len(way) > len(acts) else ():
+                kind = act["act"] + (" length" if "length" in act else " time" if "time" in act else "")
+                if kind in counts:
+                    counts[kind] += 1
 
     check()
-    assert min(counts.values()) >= 8
+    assert min(counts.values()) >= 15
+
+
+def _is_in_a_corner(way: list[int], points: Points) -> bool:
+    """Whether two walls are met at the same time, so that beside there the one or the other comes first."""
+    on_the_spot = np.hypot(*np.diff(points, axis=0).T) < 1e-9
+    return any(is_there and a != b for is_there, a, b in zip(on_the_spot, way[:-1], way[1:], strict=True))
 
 
 # ---- laps -----------------------------------------------------------------------------------------------------------
@@ -482,7 +475,7 @@ def test_laps_are_kept() -> None:
 
     One that attracts is then at its fixed point to rounding; at a neutral one what was left open at first stays so.
     """
-    rng = np.random.default_rng(4)
+    rng = np.random.default_rng(12)
     n_attracting, n_neutral, n_open = 0, 0, 0
     for _ in range(N_ROUTINES):
         stages = any_stages(rng)
@@ -501,7 +494,8 @@ def test_laps_are_kept() -> None:
         hits, surfaces = follow(s, placed(s), BUDGET + (N_MORE + 1) * n)
         assert len(hits) == BUDGET + (N_MORE + 1) * n
         way = [names[k] for k in surfaces[BUDGET:]]
-        first = next(k for k in range(n) if tuple(way[k : k + n]) == lap.surfaces)
+        first = next((k for k in range(n) if tuple(way[k : k + n]) == lap.surfaces), None)
+        assert first is not None, "it is on its way"
         assert way[first : first + N_MORE * n] == list(lap.surfaces) * N_MORE
         rows = hits[BUDGET + first : BUDGET + first + N_MORE * n].reshape(N_MORE, n, 6)
         n_open += IN_THE_OPEN in lap.surfaces
@@ -513,7 +507,7 @@ def test_laps_are_kept() -> None:
         else:
             n_neutral += 1
             assert _off(rows, rows[0]) < CLOSED * s.channel.width
-    assert min(n_attracting, n_neutral, n_open) >= 5  # the draws are the same at every run; each kind is among them
+    assert min(n_attracting, n_neutral, n_open) >= 8
 
 
 def _off(rows: Points, others: Points) -> float:
@@ -526,7 +520,7 @@ def _off(rows: Points, others: Points) -> float:
 # ---- no way out -----------------------------------------------------------------------------------------------------
 
 N_ROOMS, N_EACH, SOME_LEGS = 400, 25, 80  # 10,000 scenarios in all
-AT_THE_EDGE = 1e-7  # of the radius: thousands of times rounding, and what is still no way through a wall
+AT_THE_EDGE = 1e-9  # of the radius: a path that grazes a corner may cut into it by 1e-12, the rest is rounding
 
 
 @pytest.mark.parametrize("part", range(4))
