@@ -85,11 +85,12 @@ def plain_space(like: Ours, s: Any) -> tuple[Any, Any, list[Any], Any]:
             body.mass, body.moment = original.mass, original.moment
         body.position, body.angle = original.position, original.angle
         (shape,) = original.shapes
-        copy = (
-            pymunk.Circle(body, shape.radius)
-            if isinstance(shape, pymunk.Circle)
-            else pymunk.Poly(body, shape.get_vertices())
-        )
+        if isinstance(shape, pymunk.Circle):
+            copy = pymunk.Circle(body, shape.radius)
+        elif isinstance(shape, pymunk.Segment):
+            copy = pymunk.Segment(body, shape.a, shape.b, shape.radius)
+        else:
+            copy = pymunk.Poly(body, shape.get_vertices())
         copy.collision_type = kind
         copy.elasticity, copy.friction = math.sqrt(0.2), math.sqrt(0.4)  # the product is the pair's value
         space.add(body, copy)

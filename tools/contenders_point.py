@@ -20,7 +20,7 @@ from swarmpush.kinematics.boundary import REAR, SURFACES, boundary_of, surface_n
 from swarmpush.program import FIRST_COUNTER, MEMORY, Op, compile_routine
 
 BATCH = 16384  # starts; what they need at one time fits into a core's own cache
-SLACK, BEHIND, PARALLEL = 1e-12, 1e-9, 1e-12  # as in the compiled engine: of the width, of the width, rad
+SLACK, BEHIND, PARALLEL = 1e-12, 1e-9, 1e-12  # of the pusher's radius, of it, rad
 
 
 class InNumPy:

@@ -69,24 +69,9 @@ def trace(
     contact, normal_angle = 0, heading + math.pi
     for k in range(len(surfaces)):
         leg = next_leg(
-            segments,
-            arcs,
-            moving,
-            boundary.scale,
-            shift,
-            speed,
-            program,
-            senses,
-            keys,
-            memory,
-            notes,
-            now,
-            x,
-            y,
-            heading,
-            contact,
-            normal_angle,
-        )
+            segments, arcs, moving, boundary.scale, shift, speed,
+            program, senses, keys, memory, notes, now, x, y, heading, contact, normal_angle,
+        )  # fmt: skip
         if k > 0:
             hits[k - 1, 3] = leg.heading
         if leg.command == STOP:
@@ -236,24 +221,9 @@ def settle(
     tolerance = _LOCK_TOLERANCE * boundary.size
     for k in range(budget):
         leg = next_leg(
-            segments,
-            arcs,
-            moving,
-            boundary.scale,
-            0.0,
-            speed,
-            program,
-            senses,
-            keys,
-            memory,
-            notes,
-            now,
-            x,
-            y,
-            heading,
-            contact,
-            normal_angle,
-        )
+            segments, arcs, moving, boundary.scale, 0.0, speed,
+            program, senses, keys, memory, notes, now, x, y, heading, contact, normal_angle,
+        )  # fmt: skip
         heading = wrap_angle(leg.heading)
         if leg.command == STOP:
             # what halts has stopped for good; a run into nothing can only be a hole in the boundary
@@ -412,24 +382,9 @@ def trace_lap(
     broken = LapTrace(0, along, heading, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0)
     for k in range(len(surfaces)):
         leg = next_leg(
-            segments,
-            arcs,
-            moving,
-            boundary.scale,
-            0.0,
-            speed,
-            program,
-            senses,
-            keys,
-            memory,
-            notes,
-            now,
-            x,
-            y,
-            heading,
-            contact,
-            normal_angle,
-        )
+            segments, arcs, moving, boundary.scale, 0.0, speed,
+            program, senses, keys, memory, notes, now, x, y, heading, contact, normal_angle,
+        )  # fmt: skip
         heading, ux, uy = wrap_angle(leg.heading), leg.ux, leg.uy
         if k > 0:
             hits[k - 1, 3] = leg.heading

@@ -250,21 +250,6 @@ def leg_from(
 ) -> Leg:
     """`next_leg` by itself, the block at its starting place and the clock at 0."""
     return next_leg(
-        boundary.segments,
-        boundary.arcs,
-        boundary.moving,
-        boundary.scale,
-        0.0,
-        speed,
-        program,
-        senses,
-        keys,
-        memory,
-        notes,
-        0.0,
-        x,
-        y,
-        heading,
-        contact,
-        normal_angle,
-    )
+        boundary.segments, boundary.arcs, boundary.moving, boundary.scale, 0.0, speed,
+        program, senses, keys, memory, notes, 0.0, x, y, heading, contact, normal_angle,
+    )  # fmt: skip

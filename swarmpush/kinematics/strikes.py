@@ -16,7 +16,7 @@ from swarmpush.scenario import Scenario
 from swarmpush.starts import draw_starts
 
 N_FOLLOWED = 300  # pushers; with tens of strikes each, the rate's standard error is about one percent or less
-AT_ONCE = 1e-9  # of the channel's width: a run shorter than this is rounding
+AT_ONCE = 1e-9  # of the pusher's radius: a run shorter than this is rounding
 MAX_BUMPS = 4000  # per pusher; a longer trial is represented by its first part
 
 
