@@ -17,7 +17,7 @@ from functools import cache
 from pathlib import Path
 from typing import Any, TypeVar, cast
 
-from numba import config, njit
+from numba import config, njit, types
 from numba.extending import intrinsic
 
 Function = TypeVar("Function", bound=Callable[..., object])
@@ -83,17 +83,28 @@ def inlined(function: Function) -> Function:
 
 
 @intrinsic
-def borrowed(typingctx: Any, array: Any) -> Any:
-    """In compiled code: the same array without a share in its ownership, while the caller surely owns it.
+def borrowed(typingctx: Any, value: Any) -> Any:
+    """In compiled code: the same array, or tuple of arrays, without a share in their ownership.
 
     Each array that a compiled function is given, or takes out of a tuple, costs an atomic count up and one down, which
     shows at millions of calls per second. A borrowed array is not counted, so it must not outlive the function that
-    borrowed it, and what the function itself has made must not be borrowed.
+    borrowed it, its owner must surely live as long, and what the function itself has made must not be borrowed.
     """
 
     def codegen(context: Any, builder: Any, signature: Any, args: Any) -> Any:
-        view = context.make_array(signature.args[0])(context, builder, args[0])
+        return _disowned(context, builder, signature.args[0], args[0])
+
+    return value(value), codegen
+
+
+def _disowned(context: Any, builder: Any, kind: Any, value: Any) -> Any:
+    if isinstance(kind, types.Array):
+        view = context.make_array(kind)(context, builder, value)
         view.meminfo = view.meminfo.type(None)
         return view._getvalue()
-
-    return array(array), codegen
+    if isinstance(kind, types.BaseTuple):
+        parts = enumerate(kind.types)
+        return context.make_tuple(
+            builder, kind, [_disowned(context, builder, part, builder.extract_value(value, k)) for k, part in parts]
+        )
+    return value

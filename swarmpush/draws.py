@@ -34,6 +34,9 @@ class Purpose(IntEnum):
     UNIT_MASS = 8
     RANGE = 9
     SIGHT = 10
+    UNIT_STALL = 11
+    UNIT_DRIFT = 12
+    DROPOUT = 13
 
 
 def stream_keys(seed: int, n_pushers: int) -> NDArray[np.uint64]:

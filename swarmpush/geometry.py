@@ -9,7 +9,7 @@ import math
 from itertools import pairwise
 from typing import TYPE_CHECKING
 
-from swarmpush.scenario import Scenario
+from swarmpush.scenario import Block, Scenario
 
 if TYPE_CHECKING:
     from shapely.geometry.base import BaseGeometry
@@ -37,15 +37,16 @@ def post_corners(s: Scenario) -> tuple[Corners, ...]:
     return tuple(tidy(post) for post in s.channel.posts)
 
 
-def block_corners(s: Scenario) -> Corners:
-    """Corners of the block at its starting place, m; the first side is the rear face.
+def block_corners(s: Scenario, block: Block | None = None) -> Corners:
+    """Corners of the block, or of another one, at its starting place, m; the first side is the rear face.
 
     The rear face is the side that looks most squarely back along the channel; of two that do so alike, it is the
     one that begins first in the outline.
     """
-    half = s.block.width / 2
-    outline = s.block.outline or ((0.0, half), (0.0, -half), (s.block.length, -half), (s.block.length, half))
-    x, y = s.block.rear_at, s.channel.width / 2 + s.block.offset
+    block = block or s.block
+    half = block.width / 2
+    outline = block.outline or ((0.0, half), (0.0, -half), (block.length, -half), (block.length, half))
+    x, y = block.rear_at, s.channel.width / 2 + block.offset
     corners = tidy(tuple((x + a, y + b) for a, b in outline))
     rear = _facing(corners, -1.0)
     return corners[rear:] + corners[:rear]
@@ -65,6 +66,11 @@ def tidy(outline: Corners) -> Corners:
     """The outline from its first corner on with its inside on the left, without corners that are none."""
     corners = outline if signed_area(outline) >= 0.0 else outline[:1] + outline[:0:-1]
     return tuple(corner for k, corner in enumerate(corners) if abs(turning(corners, k)) > STRAIGHT) or corners
+
+
+def sides_of(corners: Corners) -> list[tuple[Corner, Corner]]:
+    """Sides of a polygon, each from its first corner to its second."""
+    return list(zip(corners, corners[1:] + corners[:1], strict=True))
 
 
 def signed_area(corners: Corners) -> float:
@@ -88,10 +94,11 @@ def turning(corners: Corners, k: int) -> float:
 
 
 def open_floor(s: Scenario) -> BaseGeometry:
-    """The channel without posts and block, the block at its starting place."""
+    """The channel without posts and blocks, the blocks at their starting places."""
     from shapely import Polygon, union_all
 
-    obstacles = union_all([Polygon(corners) for corners in (*post_corners(s), block_corners(s))])
+    blocks = [block_corners(s, block) for block in s.blocks]
+    obstacles = union_all([Polygon(corners) for corners in (*post_corners(s), *blocks)])
     return Polygon(channel_corners(s)).difference(obstacles)
 
 

@@ -298,7 +298,7 @@ def _salvage(model: type[Any], table: dict[str, Any]) -> Any:
 
 def _outline_misfits(s: Scenario) -> Iterator[Problem]:
     """Outlines that are no polygons, do not fit one another, or shut pushers in."""
-    if is_plain(s):
+    if is_plain(s) and not s.train:
         return
     if alone := [problem for key, outline in _outlines(s).items() for problem in _polygon_misfits(s, key, outline)]:
         yield from alone
@@ -315,6 +315,7 @@ def _has_block_inside(s: Scenario) -> bool:
 def _outlines(s: Scenario) -> dict[str, Corners]:
     """The outlines that stand in the file, by key."""
     given = {"channel.outline": s.channel.outline, "block.outline": s.block.outline}
+    given |= {f"train[{k + 1}].outline": block.outline for k, block in enumerate(s.train)}
     posts = {f"channel.posts[{k + 1}]": post for k, post in enumerate(s.channel.posts)}
     return {key: outline for key, outline in (given | posts).items() if outline is not None}
 
@@ -340,7 +341,7 @@ def _polygon_misfits(s: Scenario, key: str, outline: Corners) -> Iterator[Proble
     elif not polygon.is_valid:
         x, y = map(float, explain_validity(polygon).partition("[")[2].rstrip("]").split())
         yield Problem(key, f"its sides cross or touch near ({x:.3g}, {y:.3g}) m; list the corners in order, once round")
-    elif key == "block.outline":
+    elif not key.startswith("channel"):
         corners = tidy(outline)
         for x, y in [corner for k, corner in enumerate(corners) if turning(corners, k) < 0.0][:1]:
             yield Problem(key, f"the block must be convex; at ({x:g}, {y:g}) m its outline bends inwards")
@@ -349,8 +350,9 @@ def _polygon_misfits(s: Scenario, key: str, outline: Corners) -> Iterator[Proble
 def _extent_misfits(s: Scenario, key: str, outline: Corners) -> Iterator[Problem]:
     """An outline must fill the length and width that stand beside it; a post must stay within the channel's."""
     table, is_post = key.partition(".")[0], key.startswith("channel.posts")
-    sizes = (s.block.length, s.block.width) if table == "block" else (s.channel.length, s.channel.width)
-    lowest = (0.0, -s.block.width / 2 if table == "block" else 0.0)
+    block = {"block": s.block, **{f"train[{k + 1}]": other for k, other in enumerate(s.train)}}.get(table)
+    sizes = (block.length, block.width) if block else (s.channel.length, s.channel.width)
+    lowest = (0.0, -block.width / 2 if block else 0.0)
     for axis, (low, size) in enumerate(zip(lowest, sizes, strict=True)):
         values = [corner[axis] for corner in outline]
         below, above = min(values) - low, max(values) - (low + size)
@@ -385,6 +387,16 @@ def _overlaps(s: Scenario) -> Iterator[Problem]:
     if not within.covers(block):
         yield Problem("block", "does not lie within the channel at its start; change block.rear_at or block.offset")
         fits = False
+    standing = [*posts.values(), block]
+    for k, other in enumerate(s.train):
+        key, body = f"train[{k + 1}]", Polygon(block_corners(s, other))
+        if not within.covers(body):
+            yield Problem(key, "does not lie within the channel at its start; change its rear_at or offset")
+            fits = False
+        if any(body.intersection(thing).area > ROUNDING * min(body.area, thing.area) for thing in standing):
+            yield Problem(key, "stands in another block or in a post; change its rear_at or offset")
+            fits = False
+        standing.append(body)
     if fits and 2 * s.pushers.radius < s.channel.width:
         yield from _region_misfits(s)
 
@@ -451,6 +463,37 @@ def _resistance_misfits(s: Scenario) -> Iterator[Problem]:
             "floor.kinetic_friction",
             f"{s.floor.kinetic_friction:g} is more than static_friction ({s.floor.static_friction:g})",
         )
+
+
+def _slope_misfits(s: Scenario) -> Iterator[Problem]:
+    for name in ("slope", "cross_slope"):
+        if getattr(s.channel, name) != 0.0 and s.floor is None:
+            yield Problem(f"channel.{name}", "needs a [floor]; a liquid carries an unknown part of the weight")
+
+
+def _heading_misfits(s: Scenario) -> Iterator[Problem]:
+    p = s.pushers
+    if p.heading == "free" and math.isinf(p.turn_rate):
+        yield Problem("pushers.turn_rate", 'a free heading cannot turn at once; give a rate, or heading = "held"')
+    elif not p.is_disc and math.isinf(p.turn_rate):
+        yield Problem("pushers.turn_rate", "a bar cannot turn at once, it would stand in a wall; give a rate")
+    for name in ("turn_drag", "contact_arm"):
+        if p.heading == "held" and getattr(p, name):
+            yield Problem(f"pushers.{name}", 'only a free heading has it; give heading = "free" as well')
+    if 2 * p.reach >= s.channel.width and not p.is_disc:
+        yield Problem("pushers.nose", f"a bar ({_metre(2 * p.reach)} from corner to corner) cannot turn in the channel")
+
+
+def _centre_misfits(s: Scenario) -> Iterator[Problem]:
+    for key, block in {"block": s.block, **{f"train[{k + 1}]": other for k, other in enumerate(s.train)}}.items():
+        for name in ("centre_of_mass", "centre_of_friction"):
+            point = getattr(block, name)
+            if point and not (0.0 < point[0] < block.length and abs(point[1]) < block.width / 2):
+                yield Problem(
+                    f"{key}.{name}",
+                    f"({point[0]:g}, {point[1]:g}) m is not under the block; x runs from 0 to {block.length:g} m, "
+                    f"y from {-block.width / 2:g} to {block.width / 2:g} m",
+                )
 
 
 def _forecast_misfits(s: Scenario) -> Iterator[Problem]:
@@ -543,6 +586,9 @@ _CHECKS = (
     _block_width_misfits,
     _block_length_misfits,
     _resistance_misfits,
+    _slope_misfits,
+    _heading_misfits,
+    _centre_misfits,
     _forecast_misfits,
     _step_misfits,
     _start_misfits,

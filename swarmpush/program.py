@@ -44,6 +44,7 @@ class Op(IntEnum):
     DECLARE = 16
     IF_RANGE = 17
     IF_SIGHT = 18
+    ASK = 19
 
 
 class Command(IntEnum):
@@ -56,6 +57,7 @@ class Command(IntEnum):
     SLIDE = 4  # along the surface for `value` metres, or, where that is negative, for -`value` seconds
     GAUGE = 5  # write the clear run ahead, at most `value`, to notes[RANGE]
     SIGHT = 6  # write whether face `number` is seen within +-`value` to memory[SEEN]
+    ASK = 7  # let a Python function write the next acts into the program
 
 
 class Contact(IntEnum):
@@ -74,10 +76,11 @@ _KIND = {"none": Contact.NONE, "wall": Contact.WALL, "block": Contact.BLOCK, "pu
 _RUN, _TURN, _DEPART, _MIRROR, _WANDER, _ADD, _SET, _IF_CONTACT, _IF_COUNTER, _IF_TIME, _JUMP, _HALT = (
     int(op) for op in list(Op)[:12]
 )
-_ADVANCE, _SLIDE, _GAUGE, _SIGHT, _DECLARE, _IF_RANGE, _IF_SIGHT = (int(op) for op in list(Op)[12:])
+_ADVANCE, _SLIDE, _GAUGE, _SIGHT, _DECLARE, _IF_RANGE, _IF_SIGHT, _ASK = (int(op) for op in list(Op)[12:])
 _COMMAND_RUN, _COMMAND_ROTATE, _COMMAND_STOP, _COMMAND_ADVANCE, _COMMAND_SLIDE, _COMMAND_GAUGE, _COMMAND_SIGHT = (
-    int(c) for c in Command
+    int(c) for c in list(Command)[:7]
 )
+_COMMAND_ASK = int(Command.ASK)
 _ONWARD, _EITHER = 0, 2
 _TURN_STREAM, _DEPART_STREAM, _BEARING_STREAM = int(Purpose.TURN), int(Purpose.DEPART), int(Purpose.BEARING)
 _RANGE_STREAM, _SIGHT_STREAM = int(Purpose.RANGE), int(Purpose.SIGHT)
@@ -314,6 +317,9 @@ def decide(
         elif op == _HALT:
             memory[PC] = pc  # halted pushers stay at the halt
             return _COMMAND_STOP, 0.0, 0
+        elif op == _ASK:
+            memory[PC] = following
+            return _COMMAND_ASK, 0.0, 0
 
 
 @compiled

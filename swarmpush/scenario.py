@@ -68,6 +68,8 @@ class Channel(_Table):
     width: Length = Field(ge=SMALLEST, le=1e3, description="between the side walls; with an outline, its extent in y")
     outline: Outline | None = Field(default=None, description="corners x, y in order; left out: the rectangle")
     posts: tuple[Outline, ...] = Field(default=(), max_length=50, description="fixed obstacles, each a list of corners")
+    slope: Angle = Field(default=0.0, ge=-0.5, le=0.5, description="rise of the table towards the goal")
+    cross_slope: Angle = Field(default=0.0, ge=-0.5, le=0.5, description="rise of the table towards increasing y")
 
 
 class Block(_Table):
@@ -81,28 +83,52 @@ class Block(_Table):
         "left out: the rectangle",
     )
     mass: Mass = Field(ge=LIGHTEST, le=1e6)
-    yaw_inertia: Inertia | None = Field(default=None, ge=1e-45, le=1e12, description="default: a uniform plate")
+    yaw_inertia: Inertia | None = Field(
+        default=None, ge=1e-45, le=1e12, description="about the centre of mass; left out: a uniform plate"
+    )
+    centre_of_mass: Point | None = Field(
+        default=None, description="x from the rearmost edge, y from the middle of its width; left out: that of a plate"
+    )
+    centre_of_friction: Point | None = Field(
+        default=None, description="where the floor's friction acts, measured likewise; left out: the centre of mass"
+    )
     rear_at: Length = Field(ge=0, description="x of the rear face at the start")
     offset: Length = Field(default=0.0, description="y of the centre at the start, from the middle of the channel")
     yaw: Literal["free", "held"] = Field(default="free", description="held: a rail keeps the block from turning")
 
-    @property
-    def moment(self) -> float:
-        """Yaw inertia about the centre, kg m2; a uniform rectangle's m (l^2 + b^2)/12 unless given."""
-        return self.yaw_inertia or self.mass * (self.length**2 + self.width**2) / 12.0
-
 
 class Pushers(_Table):
-    """The crew: discs that drive themselves along their heading."""
+    """The crew: discs, or bars with a flat nose, that drive themselves along their heading."""
 
     count: Whole = Field(ge=1, le=5000, description="size of the crew")
-    radius: Length = Field(ge=SMALLEST, le=1e2)
+    radius: Length = Field(ge=SMALLEST, le=1e2, description="of the disc, or of a bar's rounded corners")
+    nose: Length = Field(default=0.0, ge=0, le=1e2, description="width of a bar's flat nose, between its corners")
+    trunk: Length = Field(default=0.0, ge=0, le=1e2, description="length of a bar's flat sides, between its corners")
     mass: Mass = Field(ge=LIGHTEST, le=1e4)
+    yaw_inertia: Inertia | None = Field(
+        default=None, ge=1e-45, le=1e12, description="about its centre; left out: evenly spread mass"
+    )
     free_speed: Speed = Field(ge=SLOWEST, le=1e3)
     stall_force: Force = Field(
         ge=WEAKEST, le=1e6, description="push at zero speed; falls linearly to 0 at the free speed"
     )
     sideways_drag: Ratio = Field(default=1.0, ge=1e-2, le=1e2, description="drag across the heading over drag along it")
+    heading: Literal["held", "free"] = Field(
+        default="held", description="held: only its own drive turns a pusher; free: contacts turn it as well"
+    )
+    turn_drag: TurnDrag | None = Field(
+        default=None,
+        gt=0,
+        le=1e9,
+        description="torque per turning rate of a free heading; left out: the drag spread evenly over a disc",
+    )
+    contact_arm: Length = Field(
+        default=0.0,
+        ge=-1e2,
+        le=1e2,
+        description="how far ahead of its centre a contact's force swings a free heading: more than 0 turns it along "
+        "the force, less than 0 into it",
+    )
     turn_rate: TurnRate = Field(
         default=math.inf,
         gt=0,
@@ -123,6 +149,21 @@ class Pushers(_Table):
         return self.stall_force / self.free_speed
 
     @property
+    def is_disc(self) -> bool:
+        """Whether the outline is round."""
+        return self.nose == 0.0 and self.trunk == 0.0
+
+    @property
+    def reach(self) -> float:
+        """Farthest point of the outline from the centre, m."""
+        return self.radius + math.hypot(self.nose, self.trunk) / 2
+
+    @property
+    def turning_drag(self) -> float:
+        """Torque per turning rate of a free heading, N m s; by default that of the drag spread over the disc."""
+        return self.turn_drag or self.drag * self.radius**2 / 2
+
+    @property
     def relaxation_time(self) -> float:
         """Time in which a free pusher gains speed, s: mass over drag."""
         return self.mass / self.drag
@@ -139,10 +180,31 @@ class Floor(_Table):
 class Fluid(_Table):
     """Liquid round the block (Stokes drag). The pushers' own drag is stall force over free speed."""
 
-    block_drag: Drag = Field(gt=0, le=1e9, description="force per speed of the block in this channel")
-    block_yaw_drag: TurnDrag = Field(gt=0, le=1e9, description="torque per yaw rate of the block in this channel")
+    block_drag: Drag = Field(gt=0, le=1e9, description="force per speed of the block along its own length")
+    block_drag_across: Drag | None = Field(
+        default=None, gt=0, le=1e9, description="the same across its length; left out: as along it"
+    )
+    block_yaw_drag: TurnDrag = Field(gt=0, le=1e9, description="torque per yaw rate of the block")
+    near_wall_factor: Ratio = Field(
+        default=1.0, ge=1, le=1e3, description="drag in this channel over the drags given; 1: they are those in it"
+    )
     viscosity: Viscosity | None = Field(default=None, gt=0, description="only for the Reynolds number")
     density: Density | None = Field(default=None, gt=0, description="only for the Reynolds number")
+
+    @property
+    def drag_along(self) -> float:
+        """Drag of the block in this channel along its length, N s/m."""
+        return self.block_drag * self.near_wall_factor
+
+    @property
+    def drag_across(self) -> float:
+        """Drag of the block in this channel across its length, N s/m."""
+        return (self.block_drag_across or self.block_drag) * self.near_wall_factor
+
+    @property
+    def yaw_drag(self) -> float:
+        """Torque per yaw rate of the block in this channel, N m s."""
+        return self.block_yaw_drag * self.near_wall_factor
 
 
 class Pair(_Table):
@@ -159,6 +221,7 @@ class Contacts(_Table):
     pusher_block: Pair
     pusher_pusher: Pair
     block_wall: Pair
+    block_block: Pair | None = Field(default=None, description="of a train; left out: as block_wall")
 
 
 class Errors(_Table):
@@ -178,6 +241,16 @@ class Errors(_Table):
     false_bumps: Rate = Field(default=0.0, ge=0, le=1e3, description="bumps felt out of nothing, per second")
     speed_spread: Ratio = Field(default=0.0, ge=0, le=0.3, description="s.d. of free speed from unit to unit, relative")
     mass_spread: Ratio = Field(default=0.0, ge=0, le=0.3, description="s.d. of mass from unit to unit, relative")
+    stall_spread: Ratio = Field(
+        default=0.0, ge=0, le=0.3, description="s.d. of stall force from unit to unit, relative"
+    )
+    drift_spread: AngularSpeed = Field(
+        default=0.0, ge=0, le=100, description="s.d. of the steady curving from unit to unit"
+    )
+    fade_time: Time | None = Field(
+        default=None, gt=0, le=1e9, description="time in which thrust falls to 1/e of itself; left out: it stays"
+    )
+    dropout: Rate = Field(default=0.0, ge=0, le=1e3, description="failures per second and pusher; it then lies still")
 
 
 class FixedStart(_Table):
@@ -245,6 +318,9 @@ class Scenario(_Table):
     about: About
     channel: Channel
     block: Block
+    train: tuple[Block, ...] = Field(
+        default=(), max_length=20, description="further blocks ahead of the first, which it pushes along"
+    )
     pushers: Pushers
     floor: Floor | None = None
     fluid: Fluid | None = None
@@ -276,6 +352,16 @@ class Scenario(_Table):
         """A hash of all values, the same on every platform; 16 hexadecimal digits."""
         text = json.dumps(self.to_tables(), sort_keys=True)
         return hashlib.sha256(text.encode()).hexdigest()[:16]
+
+    @property
+    def blocks(self) -> tuple[Block, ...]:
+        """The block that is struck, then those ahead of it."""
+        return (self.block, *self.train)
+
+    @property
+    def gravity(self) -> float:
+        """Gravity, m/s2."""
+        return self.floor.gravity if self.floor else GRAVITY
 
     @property
     def block_front_at(self) -> float:

@@ -21,7 +21,7 @@ MAX_PATCHES = 4096  # enough to follow a slanted channel a thousand times as lon
 
 def _x_ranges(s: Scenario) -> list[tuple[float, float]]:
     """Stretches of x open to a pusher's centre, clear of the block and the ends."""
-    r = s.pushers.radius
+    r = s.pushers.reach
     behind = (r, s.block.rear_at - r)
     ahead = (s.block_front_at + r, s.channel.length - r)
     wanted = {"behind": [behind], "ahead": [ahead], "anywhere": [behind, ahead]}[s.start.region]
@@ -39,9 +39,9 @@ class _Patch(NamedTuple):
 
 def _patches(s: Scenario) -> list[_Patch]:
     """Rectangles that cover the start region's free part and, where it is crooked, little more than twice its area."""
-    r = s.pushers.radius
+    r = s.pushers.reach
     patches = [_Patch(low, r, high - low, s.channel.width - 2 * r) for low, high in _x_ranges(s)]
-    if is_plain(s):
+    if is_plain(s) and not s.train:
         return patches
     from shapely import box, intersects, prepare, union_all
 
@@ -62,8 +62,8 @@ def _patches(s: Scenario) -> list[_Patch]:
 
 def room_for_starts(s: Scenario) -> float:
     """Area open to the pushers' discs in the start region, m2."""
-    r = s.pushers.radius
-    if not is_plain(s):
+    r = s.pushers.reach
+    if not is_plain(s) or s.train:
         from shapely import box, union_all
 
         stretches = union_all([box(low, 0.0, high, s.channel.width) for low, high in _x_ranges(s)])
@@ -108,7 +108,7 @@ def _draw_centres(
     apart: bool,
 ) -> NDArray[np.float64] | None:
     """Centres drawn one by one, or None when one found no place; `first` is where in the streams to begin."""
-    r = s.pushers.radius
+    r = s.pushers.reach
     shares = [patch.height / patches[0].height for patch in patches]
     bounds = np.cumsum([0.0, *(patch.length * share for patch, share in zip(patches, shares, strict=True))])
     centres = np.empty((len(keys), 2))
@@ -129,11 +129,11 @@ def _draw_centres(
 
 def _free_test(s: Scenario) -> Callable[[float, float], bool]:
     """Whether a centre is clear of walls, posts and block; in a plain corridor the ranges of x and y see to that."""
-    if is_plain(s):
+    if is_plain(s) and not s.train:
         return lambda x, y: True
     from shapely import Point, contains_xy, prepare
 
-    floor, r = open_floor(s), s.pushers.radius
+    floor, r = open_floor(s), s.pushers.reach
     edge = floor.boundary
     prepare(floor)
     prepare(edge)

@@ -3,36 +3,41 @@
 from __future__ import annotations
 
 import math
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
-from swarmpush.draws import Purpose, normal, stream_keys
-from swarmpush.dynamics.crew import Rig, new_crew
-from swarmpush.dynamics.host import BLOCK, PUSHER, WALL, Disc, HostSpace, Plate
-from swarmpush.dynamics.ledger import SLOTS, new_ledger
-from swarmpush.dynamics.loop import Path, Task
-from swarmpush.dynamics.patch import about, centre, friction_arm, gyration_squared
+from swarmpush.draws import Purpose, normal, stream_keys, uniform
+from swarmpush.dynamics.blocks import BLOCK_STATE, Ground
+from swarmpush.dynamics.chipmunk import address
+from swarmpush.dynamics.crew import Crew, Rig, new_crew
+from swarmpush.dynamics.host import BLOCK, PUSHER, WALL, Footing, HostSpace, Hull
+from swarmpush.dynamics.ledger import SERIES, SLOTS, new_ledger
+from swarmpush.dynamics.loop import Limits, Path, Task
+from swarmpush.dynamics.patch import about, centre, friction_arm, gyration_squared, rounded_gyration_squared
 from swarmpush.dynamics.ranging import surroundings
-from swarmpush.dynamics.steps import StepSettings, effective_mass, engine_units
-from swarmpush.geometry import Corner, Corners, block_corners, channel_corners, outward_normal, post_corners
+from swarmpush.dynamics.steps import StepSettings, Units, effective_mass, engine_units
+from swarmpush.geometry import Corner, Corners, block_corners, channel_corners, outward_normal, post_corners, sides_of
 from swarmpush.kinematics.boundary import surface_names
 from swarmpush.program import Senses, compile_routine, in_units
-from swarmpush.scenario import Scenario
+from swarmpush.scenario import Block, Pushers, Scenario
 from swarmpush.starts import draw_starts
 
 MISSED_BUMP_RETRY = 4.0  # radius / free speed: a pusher that goes on pressing feels a missed bump this much later
 LEAN_SHARE = 0.1  # of the stall force: pressing harder than this on the rear face counts as leaning
 
 
+def unit_deviates(keys: NDArray[np.uint64], purpose: Purpose) -> NDArray[np.float64]:
+    """How far each unit is off the mean in some respect, in standard deviations, three at most."""
+    return np.array([min(max(normal(key, 0), -3.0), 3.0) for key in keys[:, purpose]])
+
+
 def unit_spreads(s: Scenario, keys: NDArray[np.uint64]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Each pusher's free speed and mass over the nominal ones, three standard deviations at most off."""
-
-    def draw(spread: float, purpose: Purpose) -> NDArray[np.float64]:
-        deviates = [min(max(normal(key, 0), -3.0), 3.0) for key in keys[:, purpose]]
-        return np.array([1.0 + spread * z for z in deviates])
-
-    return draw(s.errors.speed_spread, Purpose.UNIT_SPEED), draw(s.errors.mass_spread, Purpose.UNIT_MASS)
+    """Each pusher's free speed and mass over the nominal ones."""
+    e = s.errors
+    speeds = 1.0 + e.speed_spread * unit_deviates(keys, Purpose.UNIT_SPEED)
+    return speeds, 1.0 + e.mass_spread * unit_deviates(keys, Purpose.UNIT_MASS)
 
 
 def scaled(corners: Corners, unit: float) -> Corners:
@@ -40,60 +45,125 @@ def scaled(corners: Corners, unit: float) -> Corners:
     return tuple((x / unit, y / unit) for x, y in corners)
 
 
-def sides_of(corners: Corners) -> list[tuple[Corner, Corner]]:
-    """Sides of a polygon, each from its first corner to its second."""
-    return list(zip(corners, corners[1:] + corners[:1], strict=True))
-
-
 def build(s: Scenario, seed: int, steps: StepSettings) -> tuple[HostSpace, Task]:
     """Set the stage for one run."""
-    u = engine_units(s)
-    p, e, n = s.pushers, s.errors, s.pushers.count
+    u, p, e, n = engine_units(s), s.pushers, s.errors, s.pushers.count
     dt = steps.dt_s / u.time
-    keys = stream_keys(seed, n)
-    speeds, masses = unit_spreads(s, keys)
-    starts = draw_starts(s, seed)
-    stall = p.stall_force / u.force
-    drag = stall / speeds
-    side_drag = drag * p.sideways_drag
-    # a body's sideways drag is explicit, which is stable while its mass is at least side drag times the step
-    step_masses = [
-        max(effective_mass(m, g, dt), g_side * dt) for m, g, g_side in zip(masses, drag, side_drag, strict=True)
-    ]
-
-    outline = block_corners(s)
-    at = centre(outline)
-    corners = scaled(about(outline, at), u.length)
-    block_mass = s.block.mass / u.mass
-    block_moment = s.block.yaw_inertia / u.inertia if s.block.yaw_inertia else block_mass * gyration_squared(corners)
-    block_drag = s.fluid.block_drag / u.drag if s.fluid else 0.0
-    yaw_drag = s.fluid.block_yaw_drag / u.turn_drag if s.fluid else 0.0
-    block_step_mass = effective_mass(block_mass, block_drag, dt)
-    step_moment = effective_mass(block_moment, yaw_drag, dt) if s.block.yaw == "free" else math.inf
-    weight = s.block.mass * s.floor.gravity / u.force if s.floor else 0.0
-
-    x, y = at[0] / u.length, at[1] / u.length
+    keys, starts = stream_keys(seed, n), draw_starts(s, seed)
+    crew = _crew(s, u, dt, keys, starts)
+    outline = pusher_outline(p, u.length)
+    footed = [_footed(s, block, u, dt) for block in s.blocks]
     walls = [side for fixed in (channel_corners(s), *post_corners(s)) for side in sides_of(scaled(fixed, u.length))]
-    immovable = [math.inf] * len(walls)
-    pair = {name: (q.restitution, q.friction) for name, q in s.contacts}
+    c = s.contacts
+    by_kind = {
+        (PUSHER, WALL): c.pusher_wall,
+        (PUSHER, BLOCK): c.pusher_block,
+        (PUSHER, PUSHER): c.pusher_pusher,
+        (BLOCK, WALL): c.block_wall,
+        (BLOCK, BLOCK): c.block_block or c.block_wall,
+    }
     space = HostSpace(
-        Plate(x, y, corners, block_step_mass, step_moment),
-        [Disc(a / u.length, b / u.length, 1.0, m) for (a, b, _), m in zip(starts, step_masses, strict=True)],
+        [block.hull for block in footed],
+        [
+            Hull(x / u.length, y / u.length, heading, outline, 1.0, unit["step_mass"], unit["step_moment"] or math.inf)
+            for (x, y, heading), unit in zip(starts.tolist(), crew.pushers, strict=True)
+        ],
         walls,
-        {
-            (PUSHER, WALL): pair["pusher_wall"],
-            (PUSHER, BLOCK): pair["pusher_block"],
-            (PUSHER, PUSHER): pair["pusher_pusher"],
-            (BLOCK, WALL): pair["block_wall"],
-        },
+        {kinds: (pair.restitution, pair.friction) for kinds, pair in by_kind.items()},
         slop=steps.slop_m / u.length,
         iterations=steps.iterations,
-        has_floor=s.floor is not None,
+        footings=[block.footing for block in footed] if s.floor else (),
         pass_through=p.pass_through,
     )
-    rig = Rig(
-        dt=dt,
-        stall=stall,
+    ground = _ground(s, u, crew, footed, len(walls))
+    moving = [address(body._body) for body in space.moving]
+    fixed = [address(body._body) for body in space.walls]
+    n_pairs = len(space.host.pairs) - 2
+    final_step = max(1, round(s.goal.time_limit / steps.dt_s))
+    n_samples = final_step // steps.sample_steps + 2
+    task = Task(
+        rig=_rig(s, u, steps),
+        crew=crew,
+        program=in_units(compile_routine(s.routine, surface_names(s)), u.length, u.time),
+        senses=Senses(e.turn_bias, e.turn_sd, e.bearing_step, e.bearing_sd, e.range_sd / u.length, e.missed_sights),
+        around=surroundings(s, u.length, (footed[0].hull.x, footed[0].hull.y)),
+        keys=keys,
+        ground=ground,
+        ledger=new_ledger(np.array(moving + fixed), len(moving), n_pairs, max(4096, 4 * SLOTS * len(moving))),
+        path=new_path(n_samples, n, len(s.train)),
+        limits=Limits(
+            outline=np.array([(*start, *end) for start, end in walls]),
+            length=s.channel.length / u.length,
+            width=s.channel.width / u.length,
+            goal_x=footed[0].hull.x + s.goal.travel / u.length,
+            final_step=final_step,
+            sample_steps=steps.sample_steps,
+        ),
+    )
+    return space, task
+
+
+def new_path(n_samples: int, n_pushers: int, n_train: int) -> Path:
+    """Room for this many samples."""
+    return Path(
+        steps=np.zeros(n_samples, dtype=np.int64),
+        block=np.zeros((n_samples, 4)),
+        train=np.zeros((n_samples, n_train, 3)),
+        pushers=np.zeros((n_samples, n_pushers, 4)),
+        series=np.zeros((n_samples, len(SERIES) + 1)),
+        n_rows=np.zeros(1, dtype=np.int64),
+    )
+
+
+def pusher_outline(p: Pushers, unit: float) -> Corners:
+    """Corners of a pusher's outline before it is rounded off with its radius: one of a disc, two or four of a bar."""
+    ahead, aside = p.trunk / 2 / unit, p.nose / 2 / unit
+    return tuple(dict.fromkeys(((-ahead, -aside), (ahead, -aside), (ahead, aside), (-ahead, aside))))
+
+
+def pusher_gyration_squared(p: Pushers) -> float:
+    """Moment of inertia of a pusher over its mass, m2; evenly spread unless given."""
+    return p.yaw_inertia / p.mass if p.yaw_inertia else rounded_gyration_squared(p.trunk, p.nose, p.radius)
+
+
+def _crew(s: Scenario, u: Units, dt: float, keys: NDArray[np.uint64], starts: NDArray[np.float64]) -> Crew:
+    """The pushers with their spreads, at their starts."""
+    p, e = s.pushers, s.errors
+    crew = new_crew(starts[:, 2])
+    units = crew.pushers
+    speeds, masses = unit_spreads(s, keys)
+    # the drag is that of the medium and alike for all: a stronger unit is faster as well
+    units["stall"] = p.stall_force / u.force * (1.0 + e.stall_spread * unit_deviates(keys, Purpose.UNIT_STALL))
+    units["drag"] = p.stall_force / u.force / speeds
+    units["side_drag"] = units["drag"] * p.sideways_drag
+    units["drift"] = (e.heading_drift + e.drift_spread * unit_deviates(keys, Purpose.UNIT_DRIFT)) * u.time
+    if e.dropout > 0.0:
+        units["fails_at"] = [-math.log(uniform(key, 0)) / (e.dropout * u.time) for key in keys[:, Purpose.DROPOUT]]
+    units["mass"] = masses
+    units["step_mass"] = [
+        step_mass(mass, drag, side_drag, dt)
+        for mass, drag, side_drag in zip(masses, units["drag"], units["side_drag"], strict=True)
+    ]
+    if p.heading == "free":
+        units["moment"] = masses * pusher_gyration_squared(p) / u.length**2
+        turn_drag = p.turning_drag / u.turn_drag
+        units["step_moment"] = [effective_mass(moment, turn_drag, dt) for moment in units["moment"]]
+    return crew
+
+
+def step_mass(mass: float, drag: float, side_drag: float, dt: float) -> float:
+    """The mass to step a body with whose drag differs along and across.
+
+    It is the effective mass under the drag along; the drag across is explicit, which is stable while the mass is at
+    least that drag times the step.
+    """
+    return max(effective_mass(mass, drag, dt), side_drag * dt)
+
+
+def _rig(s: Scenario, u: Units, steps: StepSettings) -> Rig:
+    p, e = s.pushers, s.errors
+    return Rig(
+        dt=steps.dt_s / u.time,
         drive_while_turning=p.drive_while_turning,
         turn_rate=p.turn_rate * u.time,
         bump_threshold=p.bump_threshold / u.impulse,
@@ -103,37 +173,95 @@ def build(s: Scenario, seed: int, steps: StepSettings) -> tuple[HostSpace, Task]
         missed_bumps=e.missed_bumps,
         false_bumps=e.false_bumps * u.time,
         diffusion=e.heading_diffusion * math.sqrt(u.time),
-        drift=e.heading_drift * u.time,
         noise_steps=steps.noise_steps,
-        inverse_mass=1.0 / np.array([block_mass, *masses, *immovable]),
-        inverse_step_mass=1.0 / np.array([block_step_mass, *step_masses, *immovable]),
-        block_mass=block_mass,
-        block_step_mass=block_step_mass,
-        block_drag=block_drag,
-        block_yaw_drag=yaw_drag,
-        front_reach=max(a for a, _ in corners),
-        corners=np.array(corners),
-        sides=np.array([outward_normal(corners, k) for k in range(len(corners))]),
+        heading_is_free=p.heading == "free",
+        follows=not p.is_disc,
+        turn_drag=p.turning_drag / u.turn_drag,
+        contact_arm=p.contact_arm / u.length,
+        fade_rate=u.time / e.fade_time if e.fade_time else 0.0,
+        pull_x=-s.gravity * math.sin(s.channel.slope) / u.acceleration,
+        pull_y=-s.gravity * math.sin(s.channel.cross_slope) / u.acceleration,
+    )
+
+
+class _Footed(NamedTuple):
+    """A block for the engine: hull and footing, its constants, and its outward normals."""
+
+    hull: Hull
+    footing: Footing
+    constants: dict[str, float]
+    normals: list[Corner]
+
+
+def _footed(s: Scenario, block: Block, u: Units, dt: float) -> _Footed:
+    """One block in engine units."""
+    outline = block_corners(s, block)
+    origin = block.rear_at, s.channel.width / 2 + block.offset
+
+    def placed(point: Corner | None, otherwise: Corner) -> Corner:
+        return (origin[0] + point[0], origin[1] + point[1]) if point else otherwise
+
+    at = placed(block.centre_of_mass, centre(outline))
+    footing = placed(block.centre_of_friction, at)
+    corners = scaled(about(outline, at), u.length)
+    mass, is_free = block.mass / u.mass, block.yaw == "free"
+    moment = block.yaw_inertia / u.inertia if block.yaw_inertia else mass * gyration_squared(corners)
+    along, across, yaw_drag, load = 0.0, 0.0, 0.0, 0.0
+    if s.fluid:
+        along, across = s.fluid.drag_along / u.drag, s.fluid.drag_across / u.drag
+        yaw_drag = s.fluid.yaw_drag / u.turn_drag
+    if s.floor:
+        load = block.mass * s.floor.gravity / u.force * math.cos(s.channel.slope) * math.cos(s.channel.cross_slope)
+    constants = {
+        "n_sides": len(corners),
+        "mass": mass,
+        "step_mass": step_mass(mass, along, across, dt),
+        "moment": moment if is_free else 0.0,
+        "step_moment": effective_mass(moment, yaw_drag, dt) if is_free else 0.0,
+        "drag_along": along,
+        "drag_across": across,
+        "yaw_drag": yaw_drag,
+        "floor_static": s.floor.static_friction * load if s.floor else 0.0,
+        "floor_kinetic": s.floor.kinetic_friction * load if s.floor else 0.0,
+        "floor_arm": friction_arm(about(outline, footing)) / u.length,
+        "footing_x": (footing[0] - at[0]) / u.length,
+        "footing_y": (footing[1] - at[1]) / u.length,
+    }
+    return _Footed(
+        hull=Hull(
+            at[0] / u.length, at[1] / u.length, 0.0, corners, 0.0,
+            constants["step_mass"], constants["step_moment"] or math.inf,
+        ),
+        footing=Footing(constants["footing_x"], constants["footing_y"]),
+        constants=constants,
+        normals=[outward_normal(corners, k) for k in range(len(corners))],
+    )  # fmt: skip
+
+
+def _ground(s: Scenario, u: Units, crew: Crew, footed: list[_Footed], n_walls: int) -> Ground:
+    n = s.pushers.count
+    blocks = np.zeros(len(footed), dtype=BLOCK_STATE)
+    for k, block in enumerate(footed):
+        blocks[k]["entity"] = k and n + k
+        blocks[k]["first_side"] = sum(len(other.normals) for other in footed[:k])
+        for name, value in block.constants.items():
+            blocks[k][name] = value
+    return Ground(
+        blocks=blocks,
+        sides=np.array([normal for block in footed for normal in block.normals]),
+        inertia=np.concatenate([inverse_inertia(rows) for rows in (blocks[:1], crew.pushers, blocks[1:])]),
+        wall_x=np.zeros(n_walls),
+        wall_y=np.zeros(n_walls),
         has_floor=s.floor is not None,
-        floor_static=s.floor.static_friction * weight if s.floor else 0.0,
-        floor_kinetic=s.floor.kinetic_friction * weight if s.floor else 0.0,
-        floor_arm=friction_arm(corners),
-        yaw_is_held=s.block.yaw == "held",
-        channel_length=s.channel.length / u.length,
-        channel_width=s.channel.width / u.length,
-        goal_x=x + s.goal.travel / u.length,
-        lean_force=LEAN_SHARE * stall,
+        pull_x=-s.gravity * math.sin(s.channel.slope) / u.acceleration,
+        pull_y=-s.gravity * math.sin(s.channel.cross_slope) / u.acceleration,
+        front_reach=max(x for x, _ in footed[0].hull.corners),
+        lean_force=LEAN_SHARE * s.pushers.stall_force / u.force,
     )
-    n_samples = round(s.goal.time_limit / steps.dt_s) // steps.sample_steps + 1
-    task = Task(
-        rig=rig,
-        crew=new_crew(starts[:, 2], drag, side_drag),
-        program=in_units(compile_routine(s.routine, surface_names(s)), u.length, u.time),
-        senses=Senses(e.turn_bias, e.turn_sd, e.bearing_step, e.bearing_sd, e.range_sd / u.length, e.missed_sights),
-        around=surroundings(s, u.length, (x, y)),
-        keys=keys,
-        ledger=new_ledger(space.moving_ids(), space.wall_ids(), max(4096, 4 * SLOTS * (n + 1))),
-        path=Path(np.zeros((n_samples, 5)), np.zeros((n_samples, n, 4))),
-        sample_steps=steps.sample_steps,
-    )
-    return space, task
+
+
+def inverse_inertia(rows: NDArray[np.void]) -> NDArray[np.float64]:
+    """(n, 4) inverse mass and moment as they are, then as the engine has them; a moment of 0 stands for a held body."""
+    columns = [rows[name] for name in ("mass", "moment", "step_mass", "step_moment")]
+    with np.errstate(divide="ignore"):
+        return np.column_stack([np.where(values > 0.0, 1.0 / values, 0.0) for values in columns])

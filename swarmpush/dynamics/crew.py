@@ -9,9 +9,9 @@ from typing import Any, NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from swarmpush.compiled import borrowed, compiled, inlined
+from swarmpush.compiled import compiled, inlined
 from swarmpush.draws import Purpose, normal, uniform
-from swarmpush.dynamics.host import MOTION, ORDERS, Host
+from swarmpush.dynamics.host import Host
 from swarmpush.dynamics.ranging import Surroundings, clear_run, sees
 from swarmpush.program import MEMORY, NOTES, Command, Program, Senses, decide, note_range, note_sight
 
@@ -27,26 +27,29 @@ class Mode(IntEnum):
     TURN = 2
     STOP = 3
     SLIDE = 4  # presses on along the surface it has touched
+    FAILED = 5  # has dropped out for good
 
 
-_RUN, _REACT, _TURN, _STOP, _SLIDE = (int(mode) for mode in Mode)
-_ROTATE, _HALT, _TO_ADVANCE, _TO_SLIDE, _TO_GAUGE, _TO_LOOK = (
-    int(c) for c in (Command.ROTATE, Command.STOP, Command.ADVANCE, Command.SLIDE, Command.GAUGE, Command.SIGHT)
-)
+_RUN, _REACT, _TURN, _STOP, _SLIDE, _FAILED = (int(mode) for mode in Mode)
+_ROTATE, _HALT, _TO_ADVANCE, _TO_SLIDE, _TO_GAUGE, _TO_LOOK, _TO_ASK = (
+    int(c)
+    for c in (
+        Command.ROTATE, Command.STOP, Command.ADVANCE, Command.SLIDE, Command.GAUGE, Command.SIGHT, Command.ASK,
+    )
+)  # fmt: skip
 _HEADING, _MISSED, _FALSE = int(Purpose.HEADING), int(Purpose.MISSED_BUMP), int(Purpose.FALSE_BUMP)
 _WALL = 1
 
 
 class Rig(NamedTuple):
-    """Constants of a run, in engine units.
+    """Constants of the crew, in engine units.
 
-    inverse_mass, inverse_step_mass: (n_entities,) of block, pushers and walls (0), as they are and as the engine has
-    them (see `effective_mass`). corners: (m, 2) of the block, and sides: (m, 2) outward normals, in its own frame, the
-    rear face first. stall: of every pusher; what else differs from unit to unit is in `PUSHER_STATE`.
+    What differs from unit to unit is in `PUSHER_STATE`. heading_is_free: whether contacts turn pushers. follows:
+    whether a held heading must turn the body with it, as it does not look alike from all sides. turn_drag, contact_arm:
+    of a free heading. fade_rate: of the thrust. pull_x, pull_y: acceleration down the slope of the table.
     """
 
     dt: float
-    stall: float
     drive_while_turning: float
     turn_rate: float
     bump_threshold: float
@@ -56,37 +59,33 @@ class Rig(NamedTuple):
     missed_bumps: float
     false_bumps: float
     diffusion: float
-    drift: float
     noise_steps: int
-    inverse_mass: FloatArray
-    inverse_step_mass: FloatArray
-    block_mass: float
-    block_step_mass: float
-    block_drag: float
-    block_yaw_drag: float
-    front_reach: float
-    corners: FloatArray
-    sides: FloatArray
-    has_floor: bool
-    floor_static: float
-    floor_kinetic: float
-    floor_arm: float
-    yaw_is_held: bool
-    channel_length: float
-    channel_width: float
-    goal_x: float
-    lean_force: float
+    heading_is_free: bool
+    follows: bool
+    turn_drag: float
+    contact_arm: float
+    fade_rate: float
+    pull_x: float
+    pull_y: float
 
 
 # One record per pusher: compiled code reaches records much faster than one array per field.
 PUSHER_STATE = np.dtype(
     [
+        ("mass", "f8"),  # as it is, and
+        ("step_mass", "f8"),  # as the engine has it, see `effective_mass`
+        ("moment", "f8"),  # likewise; 0 for a held heading
+        ("step_moment", "f8"),
+        ("stall", "f8"),
         ("drag", "f8"),  # along the heading, and
         ("side_drag", "f8"),  # across it
+        ("drift", "f8"),  # steady curving
+        ("fails_at", "f8"),
         ("heading", "f8"),  # direction of drive, and
         ("ux", "f8"),  # its unit vector
         ("uy", "f8"),
         ("mode", "i8"),  # see `Mode`
+        ("asks", "i8"),  # whether it waits for an answer from outside compiled code
         ("until", "f8"),  # end of the latency, or of deafness after a missed bump
         ("to_turn", "f8"),  # angle still to turn
         ("to_go", "f8"),  # way along the heading, or along the surface, after which the leg ends by itself, and
@@ -96,15 +95,24 @@ PUSHER_STATE = np.dtype(
         ("percept_normal", "f8"),  # direction of its normal
         ("hardest", "f8"),  # hardest touch of the bumper in this step, its partner and its normal
         ("step_kind", "i8"),
-        ("step_normal", "f8"),
+        ("step_nx", "f8"),
+        ("step_ny", "f8"),
         ("touched_at", "i8"),  # last step in which the bumper was touched
+        ("touches", "i8"),  # bits: what the body touched in the last step
         ("n_bumps", "i8"),  # bumps felt or missed so far
         ("next_false", "f8"),  # time of the next false bump, and
         ("n_false", "i8"),  # how many there were
-        ("force_x", "f8"),  # drive and drag in this step
+        ("noise", "f8"),  # random turning rate of a free heading
+        ("thrust", "f8"),  # in this step
+        ("force_x", "f8"),  # drive, drag and slope in this step
         ("force_y", "f8"),
+        ("drive_torque", "f8"),  # of a free heading's own drive and contact arm in this step
+        ("contact_x", "f8"),  # impulse of the contacts in the last step
+        ("contact_y", "f8"),
+        ("contact_turn", "f8"),
     ]
 )
+TOUCHES_WALL, TOUCHES_PUSHER = 1, 2
 
 
 class Crew(NamedTuple):
@@ -118,16 +126,15 @@ class Crew(NamedTuple):
     notes: FloatArray
 
 
-def new_crew(headings: FloatArray, drag: FloatArray, side_drag: FloatArray) -> Crew:
-    """A crew at the start of its routine; one heading and drag per pusher."""
+def new_crew(headings: FloatArray) -> Crew:
+    """A crew at the start of its routine; masses, thrust and drag are still to be set."""
     n = len(headings)
     pushers = np.zeros(n, dtype=PUSHER_STATE)
-    pushers["drag"], pushers["side_drag"] = drag, side_drag
     pushers["heading"], pushers["ux"], pushers["uy"] = headings, np.cos(headings), np.sin(headings)
     pushers["mode"] = _TURN  # by nothing: the routine decides in the first step
     pushers["percept_normal"] = headings + math.pi
     pushers["until"] = pushers["next_false"] = -1.0
-    pushers["to_go"] = pushers["leg_ends"] = np.inf
+    pushers["to_go"] = pushers["leg_ends"] = pushers["fails_at"] = np.inf
     pushers["touched_at"] = -9
     return Crew(pushers, np.zeros((n, MEMORY), dtype=np.int64), np.zeros((n, NOTES)))
 
@@ -143,9 +150,10 @@ def _carry_out(
     around: Surroundings,
     i: int,
     now: float,
-) -> None:
-    """Let the routine decide until the pusher moves, turns for some time, or halts."""
+) -> int:
+    """Let the routine decide until the pusher moves, turns for some time, or halts; 1 if it must ask outside."""
     p, memory, notes = crew.pushers[i], crew.memory[i], crew.notes[i]
+    p.asks = 0
     while True:
         command, value, number = decide(
             program, senses, keys[i], memory, notes, now, p.heading, p.percept_kind, p.percept_normal
@@ -153,9 +161,12 @@ def _carry_out(
         if command == _ROTATE:
             if rig.turn_rate < np.inf:
                 p.mode, p.to_turn = _TURN, value
-                return
+                return 0
             p.heading += value
             continue
+        if command == _TO_ASK or (command == _TO_GAUGE and around.is_unknown):
+            p.asks = command
+            return 1
         if command == _TO_GAUGE:
             note_range(senses, keys[i], memory, notes, clear_run(around, host.motion, i, p.heading)[0], value)
             continue
@@ -176,7 +187,7 @@ def _carry_out(
         p.pressed = 0.0
         p.until = -1.0
         p.ux, p.uy = math.cos(p.heading), math.sin(p.heading)
-        return
+        return 0
 
 
 @inlined
@@ -196,7 +207,7 @@ def _ends_leg(rig: Rig, p: Any, vx: float, vy: float, now: float) -> bool:
 
 
 @inlined
-def drive(
+def react(
     host: Host,
     rig: Rig,
     crew: Crew,
@@ -205,85 +216,93 @@ def drive(
     keys: NDArray[np.uint64],
     around: Surroundings,
     step: int,
-) -> None:
-    """Before the engine's step: reactions, turning and heading noise; then the forces on pushers and block."""
+    is_answered: bool,
+) -> int:
+    """Let those decide whose latency, turn or leg is over; returns how many must ask outside compiled code.
+
+    is_answered: this is the second call in a step, for those who have asked.
+    """
     now = step * rig.dt
-    noisy = rig.diffusion > 0.0 and step % rig.noise_steps == 0
-    motion, orders, pushers = borrowed(host.motion), borrowed(host.orders), borrowed(crew.pushers)
+    n_asking = 0
+    motion, pushers = host.motion, crew.pushers
     for i in range(len(pushers)):
         p = pushers[i]
-        spin, thrust = 0.0, rig.stall
-        vx, vy = motion[MOTION * (i + 1) + 3], motion[MOTION * (i + 1) + 4]
-        is_over = (p.mode == _REACT and now >= p.until - 1e-9) or (p.mode == _TURN and p.to_turn == 0.0)
-        if p.to_go < np.inf or p.leg_ends < np.inf:
-            is_over |= _ends_leg(rig, p, vx, vy, now)
+        if is_answered:
+            is_over = p.asks != 0
+        else:
+            if rig.heading_is_free:
+                p.heading = motion[i + 1, 2]
+                p.ux, p.uy = math.cos(p.heading), math.sin(p.heading)
+            if now >= p.fails_at:
+                p.mode = _FAILED
+            is_over = (p.mode == _REACT and now >= p.until - 1e-9) or (p.mode == _TURN and p.to_turn == 0.0)
+            if p.to_go < np.inf or p.leg_ends < np.inf:
+                is_over |= _ends_leg(rig, p, motion[i + 1, 3], motion[i + 1, 4], now)
         if is_over:
-            _carry_out(host, rig, crew, program, senses, keys, around, i, now)
-        if p.mode == _TURN:
-            most = rig.turn_rate * rig.dt
-            angle = min(max(p.to_turn, -most), most)
-            p.to_turn -= angle
-            p.heading += angle
-            p.ux, p.uy = math.cos(p.heading), math.sin(p.heading)
-            spin = angle / rig.dt
-            thrust *= rig.drive_while_turning
-        elif p.mode == _STOP:
-            thrust = 0.0
-        elif noisy or rig.drift != 0.0:
-            if noisy:
-                spread = rig.diffusion * math.sqrt(rig.noise_steps * rig.dt)
-                p.heading += spread * normal(keys[i, _HEADING], step // rig.noise_steps)
-            p.heading += rig.drift * rig.dt
-            p.ux, p.uy = math.cos(p.heading), math.sin(p.heading)
-        along = thrust - p.drag * (vx * p.ux + vy * p.uy)
-        across = -p.side_drag * (vy * p.ux - vx * p.uy)
-        p.force_x = along * p.ux - across * p.uy
-        p.force_y = along * p.uy + across * p.ux
-        place = ORDERS * (i + 1)
-        orders[place] = spin
-        orders[place + 1] = p.force_x
-        orders[place + 2] = p.force_y
-        p.hardest = -1.0
-    orders[0] = motion[5]
-    orders[1] = -rig.block_drag * motion[3]
-    orders[2] = -rig.block_drag * motion[4]
-    orders[3] = -rig.block_yaw_drag * motion[5]
-
-
-_REST = 1e-9  # engine speed below which the floor's static friction holds; a held block has about 1e-17
+            n_asking += _carry_out(host, rig, crew, program, senses, keys, around, i, now)
+    return n_asking
 
 
 @inlined
-def set_floor(host: Host, rig: Rig) -> None:
-    """Caps of the dry floor for this step, force and torque coupled on the elliptic limit surface.
-
-    (F/F_max)^2 + (T/T_max)^2 = 1 (Howe and Cutkosky, Int. J. Robotics Research 15 (1996) 557), normality giving
-    F : T c^-2 = v : w with c = T_max/F_max while sliding. At rest the loads of the last step are brought back on to
-    the ellipse if they left it.
-    """
-    motion, floor_cap, floor_load = borrowed(host.motion), borrowed(host.floor_cap), borrowed(host.floor_load)
-    vx, vy, spin = motion[3], motion[4], motion[5]
-    slide, swivel = math.hypot(vx, vy), rig.floor_arm * abs(spin)
-    total = math.hypot(slide, swivel)
-    if total > _REST:
-        cap = rig.floor_kinetic
-        force, torque = cap * slide / total, cap * rig.floor_arm * swivel / total
-    else:
-        cap = rig.floor_static
-        force, torque = cap, cap * rig.floor_arm
-        pull = floor_load[0]
-        twist = 0.0 if rig.yaw_is_held else floor_load[1]  # a joint on a body that cannot turn gives no number
-        load = math.hypot(pull / (cap * rig.dt), twist / (cap * rig.floor_arm * rig.dt)) if cap > 0.0 else 0.0
-        if load > 1.0:
-            force, torque = pull / (rig.dt * load), twist / (rig.dt * load)
-    floor_cap[0], floor_cap[1] = force, torque
+def drive(host: Host, rig: Rig, crew: Crew, keys: NDArray[np.uint64], step: int) -> None:
+    """The orders of this step: turning, heading noise, thrust, drag and slope."""
+    dt = rig.dt
+    is_noise_due = rig.diffusion > 0.0 and step % rig.noise_steps == 0
+    fade = math.exp(-rig.fade_rate * step * dt) if rig.fade_rate > 0.0 else 1.0
+    motion, orders, pushers = host.motion, host.orders, crew.pushers
+    for i in range(len(pushers)):
+        p = pushers[i]
+        vx, vy = motion[i + 1, 3], motion[i + 1, 4]
+        turned = 0.0  # by its own drive
+        thrust = p.stall * fade
+        if p.mode == _TURN:
+            most = rig.turn_rate * dt
+            turned = min(max(p.to_turn, -most), most)
+            p.to_turn -= turned
+            thrust *= rig.drive_while_turning
+        elif p.mode == _STOP or p.mode == _FAILED:
+            thrust = 0.0
+        spin, torque = turned / dt, 0.0
+        if rig.heading_is_free:
+            if is_noise_due:
+                deviate = normal(keys[i, _HEADING], step // rig.noise_steps)
+                p.noise = rig.diffusion * deviate / math.sqrt(rig.noise_steps * dt)
+            if thrust > 0.0:
+                spin += p.drift + p.noise
+            arm = rig.contact_arm * (p.ux * p.contact_y - p.uy * p.contact_x) / dt
+            p.drive_torque = rig.turn_drag * spin + arm
+            spin = motion[i + 1, 5]
+            torque = p.drive_torque - rig.turn_drag * spin
+        else:
+            if thrust > 0.0 and p.mode != _TURN:
+                if is_noise_due:
+                    spread = rig.diffusion * math.sqrt(rig.noise_steps * dt)
+                    turned = spread * normal(keys[i, _HEADING], step // rig.noise_steps)
+                turned += p.drift * dt
+            if turned != 0.0:
+                p.heading += turned
+                p.ux, p.uy = math.cos(p.heading), math.sin(p.heading)
+                if rig.follows:
+                    spin = turned / dt
+        across = vy * p.ux - vx * p.uy
+        along = vx * p.ux + vy * p.uy
+        push, shove = thrust - p.drag * along, -p.side_drag * across
+        p.thrust = thrust
+        p.force_x = push * p.ux - shove * p.uy + p.mass * rig.pull_x
+        p.force_y = push * p.uy + shove * p.ux + p.mass * rig.pull_y
+        orders[i + 1, 0] = spin
+        orders[i + 1, 1] = p.force_x
+        orders[i + 1, 2] = p.force_y
+        orders[i + 1, 3] = torque
+        p.hardest = -1.0
+        p.contact_x = p.contact_y = p.contact_turn = 0.0
 
 
 @inlined
 def feel(rig: Rig, crew: Crew, keys: NDArray[np.uint64], step: int) -> None:
     """After the contacts are read: which pushers have felt a bump."""
     now = (step + 1) * rig.dt
-    pushers = borrowed(crew.pushers)
+    pushers = crew.pushers
     for i in range(len(pushers)):
         p = pushers[i]
         if p.mode != _RUN and p.mode != _SLIDE:
@@ -308,4 +327,4 @@ def feel(rig: Rig, crew: Crew, keys: NDArray[np.uint64], step: int) -> None:
             p.until = now + rig.retry
             continue
         p.mode, p.until = _REACT, now + rig.latency
-        p.percept_kind, p.percept_normal = p.step_kind, p.step_normal
+        p.percept_kind, p.percept_normal = p.step_kind, math.atan2(p.step_ny, p.step_nx)

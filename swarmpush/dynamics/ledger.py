@@ -1,22 +1,27 @@
-"""The ledger: every contact of every step, gathered into visits; and the block's books. Compiled, engine units.
+"""The ledger: every contact of every step, gathered into visits; and the books. Compiled, engine units.
 
-A visit is one unbroken contact of a pusher with one partner (the block, a wall, another pusher), or of the block
-with a wall. Its normal impulse is split into impact and lean. In a step that begins with the partners approaching,
-what exceeds the drive's own push has stopped the masses that the engine steps with, which contain the drag of one
-step (`effective_mass`); the share that the bare masses have in it is impact. All else is lean.
+A visit is one unbroken contact of a pusher with one partner (a block, a wall, another pusher), or of a block with a
+wall or another block. Its normal impulse is split into impact and lean. In a step that begins with the partners
+approaching, what exceeds the drive's own push has stopped the masses that the engine steps with, which contain the
+drag of one step (`effective_mass`); the share that the bare masses have in it is impact. All else is lean.
+
+An impulse J on a body does the work J u, u being the mean of the point's velocities before and after; what a contact
+takes from both partners that way is the energy lost in it.
 """
 
 from __future__ import annotations
 
 import math
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
-from swarmpush.compiled import borrowed, inlined
-from swarmpush.dynamics.crew import Crew, Mode, Rig
-from swarmpush.dynamics.host import CONTACT_FLOATS, CONTACT_INTS, MOTION, Host
+from swarmpush.compiled import inlined
+from swarmpush.dynamics.blocks import Ground
+from swarmpush.dynamics.chipmunk import pair_bodies, pair_normal, pair_point
+from swarmpush.dynamics.crew import TOUCHES_PUSHER, TOUCHES_WALL, Crew, Mode, Rig
+from swarmpush.dynamics.host import Host
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -26,7 +31,7 @@ GAP_STEPS = 2  # a contact that is missing for more steps than this has ended
 APPROACH = 0.005  # of the free speed; slower than this nothing arrives, it only presses
 
 
-# A visit. owner, partner: 0 block, then pushers from 1, then walls; partner -1 marks a free slot.
+# A visit. owner, partner: 0 block, then pushers from 1, then further blocks, then walls; partner -1: a free slot.
 VISIT = np.dtype(
     [
         ("owner", "i8"),
@@ -37,7 +42,9 @@ VISIT = np.dtype(
         ("impact", "f8"),  # normal impulse in either part, and
         ("lean", "f8"),
         ("tangential", "f8"),
-        ("approach", "f8"),  # normal speed, heading and places at the first touch
+        ("energy", "f8"),  # lost in the contact
+        ("approach", "f8"),  # normal speed, speed, heading and places at the first touch
+        ("speed", "f8"),
         ("heading", "f8"),
         ("x", "f8"),
         ("y", "f8"),
@@ -48,84 +55,105 @@ VISIT = np.dtype(
 )
 
 
-REAR = 1  # a visit's `face` is 0 unless it is on the block, and then the number of the side plus one
+REAR = 1  # a visit's `face` is 0 unless it is on a block, and then the number of the side plus one
 
-TOTALS = np.dtype(
-    [
-        (name, "f8")
-        for name in (
-            # impulse on the block by each, and what momentum balance leaves for the floor
-            "pushers_x", "pushers_y", "walls_x", "walls_y", "floor_x", "floor_y", "drag_x", "drag_y",
-            "gross",  # sum of the sizes of all contact impulses on the block
-            "residual",  # sum over steps of the size of what does not balance
-            "phantom",  # sum of the sizes of block displacements that no velocity explains
-            "yaw_max", "overlap_max",
-            # steps with a pusher leaning on the rear face, of these with enough push for the floor, and of these with
-            # a block at rest between both walls
-            "leaning_steps", "strong_steps", "jammed_steps",
-            # pusher-steps ahead of the block, touching a wall, touching another pusher, turning, halted
-            "ahead", "at_wall", "at_pusher", "turning", "stopped",
-            # the block at the end of the last step; the contact impulse of the step; who leaned on it, who held it
-            "old_x", "old_y", "old_vx", "old_vy", "step_x", "step_y", "step_leaning", "wall_bottom", "wall_top",
-            "sample_leaning",  # sum of pushers leaning since the last sample
-        )
-    ]
+# What happens how much, step by step: summed up since the last sample of the path.
+SERIES = (
+    "n_leaning",  # pushers leaning on the rear face
+    "leaning_share",  # whether there are any, whether their push exceeds what the floor holds, and whether the block
+    "strong_share",  # stands then, held by two walls
+    "jammed_share",
+    "n_ahead",  # pushers ahead of the block, touching a wall, touching another pusher, turning, halted, failed
+    "n_at_wall",
+    "n_at_pusher",
+    "n_turning",
+    "n_halted",
+    "n_failed",
+)
+
+ENERGY = (
+    # work of the thrust, of the drives that turn and hold headings, of gravity; then what is lost
+    "drive", "heading", "gravity", "drag", "floor",
+    "pusher_block", "pusher_wall", "pusher_pusher", "block_wall", "block_block",
 )  # fmt: skip
-_TOUCHES_WALL, _TOUCHES_PUSHER = 1, 2  # bits
-_SLIDE = int(Mode.SLIDE)
+
+TOTALS = np.dtype([(name, "f8") for name in (*SERIES, *ENERGY, "leaning_most", "yaw_max", "overlap_max", "kinetic_0")])
+
+_SLIDE, _TURN, _STOP, _FAILED = int(Mode.SLIDE), int(Mode.TURN), int(Mode.STOP), int(Mode.FAILED)
 _SAME_SURFACE = math.cos(math.radians(20.0))  # normals closer than this belong to one surface, or a gentle bend of it
 
 
 class Ledger(NamedTuple):
     """Open visits, finished visits, totals.
 
-    ids, entities: sorted body ids and what they are (0 block, 1..n pushers, then walls). slots: (n + 1, SLOTS) open
-    visits of block and pushers. n_open: how many. log: finished visits; n_log[0]: how many. on_block: (n_entities, 2)
-    impulse of each on the block in the last step; summed up in this order, because the engine lists contacts in an
-    order that depends on addresses. touching: what each owner touched in the last step. totals: one record.
+    known, entities: hash table from bodies' addresses to what they are (see `VISIT`). first, following: lists of a
+    step's pairs by owner; partners: of each pair; senses: 1 where the engine's first body is the owner, else -1.
+    slots: (n_moving, SLOTS) open visits. n_open: how many. log: finished visits; n_log[0]: how many. totals: one
+    record.
     """
 
-    ids: IntArray
+    known: IntArray
     entities: IntArray
+    first: IntArray
+    following: IntArray
+    partners: IntArray
+    senses: FloatArray
     n_open: IntArray
     slots: NDArray[np.void]
     log: NDArray[np.void]
     n_log: IntArray
-    on_block: FloatArray
-    touching: IntArray
     totals: NDArray[np.void]
 
 
-def new_ledger(moving_ids: IntArray, wall_ids: IntArray, capacity: int) -> Ledger:
-    """An empty ledger; `capacity` rows of finished visits are kept before they must be fetched."""
-    ids = np.concatenate([moving_ids, wall_ids])
-    order = np.argsort(ids)
-    n = len(moving_ids)
-    slots = np.zeros((n, SLOTS), dtype=VISIT)
+_MIX = np.uint64(0x9E3779B97F4A7C15)  # odd, 2^64 over the golden ratio: spreads addresses evenly (Knuth, TAOCP 3, 6.4)
+
+
+def new_ledger(addresses: IntArray, n_moving: int, n_pairs: int, capacity: int) -> Ledger:
+    """An empty ledger.
+
+    Arguments:
+        addresses: of all bodies in the order of `VISIT`, the moving ones first.
+        n_moving: how many of them move.
+        n_pairs: most pairs that a step can have.
+        capacity: rows of finished visits that are kept before they must be fetched.
+    """
+    size = 1 << max(4, int(4 * len(addresses)).bit_length())
+    known, entities = np.zeros(size, dtype=np.int64), np.full(size, -1, dtype=np.int64)
+    for entity, address in enumerate(addresses.tolist()):
+        at = _home(address, size)
+        while known[at] != 0:
+            at = (at + 1) & (size - 1)
+        known[at], entities[at] = address, entity
+    slots = np.zeros((n_moving, SLOTS), dtype=VISIT)
     slots["partner"] = -1
     return Ledger(
-        ids=ids[order],
-        entities=order.astype(np.int64),
-        n_open=np.zeros(n, dtype=np.int64),
+        known=known,
+        entities=entities,
+        first=np.full(n_moving, -1, dtype=np.int64),
+        following=np.zeros(n_pairs, dtype=np.int64),
+        partners=np.zeros(n_pairs, dtype=np.int64),
+        senses=np.zeros(n_pairs),
+        n_open=np.zeros(n_moving, dtype=np.int64),
         slots=slots,
         log=np.zeros(capacity, dtype=VISIT),
         n_log=np.zeros(1, dtype=np.int64),
-        on_block=np.zeros((len(ids), 2)),
-        touching=np.zeros(n, dtype=np.int64),
         totals=np.zeros(1, dtype=TOTALS),
     )
 
 
+def _home(address: int, size: int) -> int:
+    return ((address * int(_MIX)) & 0xFFFFFFFFFFFFFFFF) >> (65 - size.bit_length())
+
+
 @inlined
-def _entity(ids: IntArray, entities: IntArray, body_id: int) -> int:
-    low, high = 0, len(ids) - 1
-    while low < high:
-        middle = (low + high) >> 1
-        if ids[middle] < body_id:
-            low = middle + 1
-        else:
-            high = middle
-    return entities[low] if ids[low] == body_id else -1
+def _entity(known: IntArray, entities: IntArray, shift: int, address: int) -> int:
+    """What a body is; -1 for one that is not watched."""
+    at = np.int64((np.uint64(address) * _MIX) >> np.uint64(shift))
+    while known[at] != address:
+        if known[at] == 0:
+            return -1
+        at = (at + 1) & (len(known) - 1)
+    return int(entities[at])
 
 
 @inlined
@@ -141,7 +169,7 @@ def _slot(slots: NDArray[np.void], n_open: IntArray, owner: int, partner: int) -
     if free >= 0:
         visit = slots[owner, free]
         visit.owner, visit.partner, visit.first_step = owner, partner, -1
-        visit.impact = visit.lean = visit.tangential = visit.overlap = 0.0
+        visit.impact = visit.lean = visit.tangential = visit.energy = visit.overlap = 0.0
         n_open[owner] += 1
     return free
 
@@ -150,10 +178,10 @@ def _slot(slots: NDArray[np.void], n_open: IntArray, owner: int, partner: int) -
 def close_visits(ledger: Ledger, step: int) -> None:
     """Move visits that have ended before `step` to the log."""
     slots, n_open, log, n_log = (
-        borrowed(ledger.slots),
-        borrowed(ledger.n_open),
-        borrowed(ledger.log),
-        borrowed(ledger.n_log),
+        ledger.slots,
+        ledger.n_open,
+        ledger.log,
+        ledger.n_log,
     )
     for owner in range(len(n_open)):
         if n_open[owner] == 0:
@@ -168,17 +196,6 @@ def close_visits(ledger: Ledger, step: int) -> None:
 
 
 @inlined
-def _face(sides: FloatArray, nx: float, ny: float) -> int:
-    """Side of the block that is touched where the normal into the block, in its own frame, is (nx, ny)."""
-    best, face = -2.0, 0
-    for k in range(len(sides)):
-        squarely = -(sides[k, 0] * nx + sides[k, 1] * ny)
-        if squarely > best:
-            best, face = squarely, k + 1
-    return face
-
-
-@inlined
 def _feel(
     rig: Rig, pushers: NDArray[np.void], i: int, kind: int, nx: float, ny: float, impulse: float, step: int
 ) -> None:
@@ -190,179 +207,297 @@ def _feel(
     if p.mode == _SLIDE and -(nx * math.cos(p.percept_normal) + ny * math.sin(p.percept_normal)) > _SAME_SURFACE:
         return  # what it slides along is no bump
     if impulse > p.hardest:
-        p.hardest, p.step_kind, p.step_normal = impulse, kind, math.atan2(-ny, -nx)
+        p.hardest, p.step_kind, p.step_nx, p.step_ny = impulse, kind, -nx, -ny
 
 
 @inlined
-def enter_contacts(host: Host, rig: Rig, crew: Crew, ledger: Ledger, n_pairs: int, step: int) -> None:
-    """Enter the contacts of this step: visits, bumpers, and the impulses on the block."""
-    n = len(crew.pushers)
-    motion, totals, dt = borrowed(host.motion), borrowed(ledger.totals)[0], rig.dt
-    numbers, whole, pushers = borrowed(host.contact_floats), borrowed(host.contact_ints), borrowed(crew.pushers)
-    ids, entities, slots = borrowed(ledger.ids), borrowed(ledger.entities), borrowed(ledger.slots)
-    n_open, on_block, touching = borrowed(ledger.n_open), borrowed(ledger.on_block), borrowed(ledger.touching)
-    inverse_mass, inverse_step_mass = borrowed(rig.inverse_mass), borrowed(rig.inverse_step_mass)
-    corners, sides = borrowed(rig.corners), borrowed(rig.sides)
-    totals.wall_bottom = totals.wall_top = 0.0
-    leaning = 0.0
-    for pair in range(n_pairs):
-        if whole[CONTACT_INTS * pair + 2] == 0:
-            continue
-        owner = _entity(ids, entities, whole[CONTACT_INTS * pair])
-        partner = _entity(ids, entities, whole[CONTACT_INTS * pair + 1])
-        if owner < 0 or partner < 0:
-            continue
-        at = CONTACT_FLOATS * pair
-        jx, jy = numbers[at], numbers[at + 1]
-        nx, ny = numbers[at + 2], numbers[at + 3]
-        # a pusher owns its visits; of two pushers the first; the block owns those with walls
-        if owner > n or (owner == 0 and partner <= n) or (0 < partner < owner):
-            owner, partner, jx, jy, nx, ny = partner, owner, -jx, -jy, -nx, -ny
-        push = max(-(jx * nx + jy * ny), 0.0)  # size of the normal impulse; n points from owner to partner
-        k = _slot(slots, n_open, owner, partner)
-        if k < 0:
-            continue
-        visit = slots[owner, k]
-        base = MOTION * owner
-        x, y = motion[base] + motion[base + 3] * dt, motion[base + 1] + motion[base + 4] * dt
-        rvx, rvy = motion[base + 3], motion[base + 4]
-        overlap, drive, face = 0.0, 0.0, 0
-        if owner > 0:
-            p = pushers[owner - 1]
-            drive = (p.force_x * nx + p.force_y * ny) * dt
-        if 0 < partner <= n:
-            other = MOTION * partner
-            rvx, rvy = rvx - motion[other + 3], rvy - motion[other + 4]
-            p = pushers[partner - 1]
-            drive -= (p.force_x * nx + p.force_y * ny) * dt
-            ox, oy = motion[other] + motion[other + 3] * dt, motion[other + 1] + motion[other + 4] * dt
-            overlap = 2.0 - math.hypot(ox - x, oy - y)
-            _feel(rig, pushers, owner - 1, 3, nx, ny, push, step)
-            _feel(rig, pushers, partner - 1, 3, -nx, -ny, push, step)
-            touching[owner] |= _TOUCHES_PUSHER
-            touching[partner] |= _TOUCHES_PUSHER
-        elif partner == 0:
-            cx, cy = x + nx - motion[0], y + ny - motion[1]
-            rvx, rvy = rvx - motion[3] + motion[5] * cy, rvy - motion[4] - motion[5] * cx
-            c, s = math.cos(motion[2]), math.sin(motion[2])
-            bnx, bny = c * nx + s * ny, c * ny - s * nx
-            # the block's nearest reach towards the disc, along the normal, from the disc's centre
-            reach = np.inf
-            for corner in range(len(corners)):
-                reach = min(reach, bnx * corners[corner, 0] + bny * corners[corner, 1])
-            overlap = 1.0 - reach - (nx * (motion[0] - x) + ny * (motion[1] - y))
-            face = _face(sides, bnx, bny)
-            _feel(rig, pushers, owner - 1, 2, nx, ny, push, step)
-            on_block[owner, 0] -= jx
-            on_block[owner, 1] -= jy
-        elif owner > 0:
-            _feel(rig, pushers, owner - 1, 1, nx, ny, push, step)
-            touching[owner] |= _TOUCHES_WALL
-        else:
-            on_block[partner, 0] += jx
-            on_block[partner, 1] += jy
-            if ny > 0.5:
-                totals.wall_top = 1.0
-            elif ny < -0.5:
-                totals.wall_bottom = 1.0
-        approach = rvx * nx + rvy * ny
-        if visit.first_step < 0:
-            visit.first_step = step
-            visit.approach = approach
-            visit.x, visit.y = x, y
-            visit.block_x_on = motion[0]
-            visit.face = face
-            visit.heading = pushers[owner - 1].heading if owner > 0 else motion[2]
-        lean = push
-        if approach > APPROACH:
-            mass = (inverse_step_mass[owner] + inverse_step_mass[partner]) / (
-                inverse_mass[owner] + inverse_mass[partner]
-            )
-            lean -= max(push - max(drive, 0.0), 0.0) * mass
-        visit.impact += push - lean
-        visit.lean += lean
-        visit.tangential += jy * nx - jx * ny
-        visit.last_step = step
-        visit.block_x_off = motion[0]
-        visit.overlap = max(visit.overlap, overlap)
-        totals.overlap_max = max(totals.overlap_max, overlap)
-        if partner == 0 and visit.face == REAR and lean > rig.lean_force * dt:
-            leaning += 1.0
-    totals.step_leaning = leaning
-    _add_up(ledger, n)
+def _sort_pairs(host: Host, ledger: Ledger, n_pushers: int, n_pairs: int) -> None:
+    """Lay the step's pairs into lists by owner, in the order of their partners.
 
-
-@inlined
-def _add_up(ledger: Ledger, n: int) -> None:
-    """Sum up the impulses on the block and who touches what, and clear them for the next step."""
-    totals, on_block, touching = borrowed(ledger.totals)[0], borrowed(ledger.on_block), borrowed(ledger.touching)
-    for owner in range(1, n + 1):
-        if touching[owner] != 0:
-            if touching[owner] & _TOUCHES_WALL:
-                totals.at_wall += 1.0
-            if touching[owner] & _TOUCHES_PUSHER:
-                totals.at_pusher += 1.0
-            touching[owner] = 0
-    totals.step_x = totals.step_y = 0.0
-    for entity in range(len(on_block)):
-        jx, jy = on_block[entity, 0], on_block[entity, 1]
-        if jx == 0.0 and jy == 0.0:
-            continue
-        on_block[entity, 0] = on_block[entity, 1] = 0.0
-        totals.step_x += jx
-        totals.step_y += jy
-        totals.gross += math.hypot(jx, jy)
-        if entity <= n:
-            totals.pushers_x += jx
-            totals.pushers_y += jy
-        else:
-            totals.walls_x += jx
-            totals.walls_y += jy
-
-
-@inlined
-def balance_block(host: Host, rig: Rig, ledger: Ledger) -> None:
-    """Close the books of the last step, the block's new state having been read.
-
-    The engine steps the block with the mass M' of `effective_mass` and the force -g v. The drag's impulse is
-    -(M' - M) dv - g v dt, and what is then left of M dv after the contacts' impulses must come from the floor: zero
-    without one, else as large as the floor's joint says by itself.
+    A pusher owns its visits, of two pushers the first; a block those with walls, of two blocks the first.
     """
-    totals, motion, dt = borrowed(ledger.totals)[0], borrowed(host.motion), rig.dt
-    old_vx, old_vy = totals.old_vx, totals.old_vy
-    dvx, dvy = motion[3] - old_vx, motion[4] - old_vy
-    extra = rig.block_step_mass - rig.block_mass
-    drag_x = -extra * dvx - rig.block_drag * old_vx * dt
-    drag_y = -extra * dvy - rig.block_drag * old_vy * dt
-    left_x = rig.block_mass * dvx - drag_x - totals.step_x
-    left_y = rig.block_mass * dvy - drag_y - totals.step_y
-    left = math.hypot(left_x, left_y)
-    if rig.has_floor:
-        totals.residual += abs(left - host.floor_load[0])
-        totals.floor_x += left_x
-        totals.floor_y += left_y
-    else:
-        totals.residual += left
-    totals.drag_x += drag_x
-    totals.drag_y += drag_y
-    phantom_x = motion[0] - totals.old_x - old_vx * dt
-    phantom_y = motion[1] - totals.old_y - old_vy * dt
-    totals.phantom += math.hypot(phantom_x, phantom_y)
-    totals.yaw_max = max(totals.yaw_max, abs(motion[2]))
-    leaning = totals.step_leaning
-    totals.sample_leaning += leaning
-    if leaning > 0.0:
-        totals.leaning_steps += 1.0
-        if leaning * rig.stall > rig.floor_static:
-            totals.strong_steps += 1.0
-            held = totals.wall_bottom > 0.0 and totals.wall_top > 0.0
-            if held and abs(motion[3]) < APPROACH * 0.01:
-                totals.jammed_steps += 1.0
+    known, entities, first = ledger.known, ledger.entities, ledger.first
+    following, partners, senses = ledger.following, ledger.partners, ledger.senses
+    pairs = host.pairs
+    shift = 65
+    size = len(known)
+    while size > 0:
+        size >>= 1
+        shift -= 1
+    for pair in range(min(n_pairs, len(partners))):
+        body_a, body_b = pair_bodies(pairs[2 + pair])
+        a = _entity(known, entities, shift, body_a)
+        b = _entity(known, entities, shift, body_b)
+        if a < 0 or b < 0:
+            continue
+        a_pushes, b_pushes = 0 < a <= n_pushers, 0 < b <= n_pushers
+        owner, partner, sense = a, b, 1.0
+        if (b_pushes and not a_pushes) or (a_pushes == b_pushes and b < a):
+            owner, partner, sense = b, a, -1.0
+        if owner >= len(first):
+            continue
+        partners[pair], senses[pair] = partner, sense
+        at = first[owner]
+        if at < 0 or partners[at] > partner:
+            following[pair] = at
+            first[owner] = pair
+        else:
+            while following[at] >= 0 and partners[following[at]] <= partner:
+                at = following[at]
+            following[pair] = following[at]
+            following[at] = pair
 
 
 @inlined
-def remember_block(host: Host, ledger: Ledger) -> None:
-    """Keep the block's state for the next balance."""
-    totals, motion = borrowed(ledger.totals)[0], borrowed(host.motion)
-    totals.old_x, totals.old_y = motion[0], motion[1]
-    totals.old_vx, totals.old_vy = motion[3], motion[4]
+def enter_contacts(host: Host, rig: Rig, crew: Crew, ground: Ground, ledger: Ledger, n_pairs: int, step: int) -> None:
+    """Enter the contacts of this step: visits, bumpers, and the impulses on blocks and pushers."""
+    n = len(crew.pushers)
+    before, motion, totals, dt = host.before, host.motion, ledger.totals[0], rig.dt
+    pairs, pushers, blocks = host.pairs, crew.pushers, ground.blocks
+    first, following, partners = ledger.first, ledger.following, ledger.partners
+    senses, slots, n_open = ledger.senses, ledger.slots, ledger.n_open
+    inertia, sides = ground.inertia, ground.sides
+    wall_x, wall_y = ground.wall_x, ground.wall_y
+    n_moving = len(motion)
+    _sort_pairs(host, ledger, n, n_pairs)
+    leaning, push_of_all, wall_below, wall_above = 0.0, 0.0, False, False
+    for owner in range(n_moving):
+        pair = first[owner]
+        first[owner] = -1
+        while pair >= 0:
+            at, partner, sense = pairs[2 + pair], partners[pair], senses[pair]
+            nx, ny, n_points = pair_normal(at)
+            nx, ny = sense * nx, sense * ny  # from owner to partner
+            pair = following[pair]
+            k = _slot(slots, n_open, owner, partner)
+            if k < 0:
+                continue
+            visit = slots[owner, k]
+            moves = partner < n_moving
+            # everything below is what the partner gets; rx, ry and qx, qy lead to the point from either centre
+            jx, jy, owner_turn, partner_turn, lost, overlap = 0.0, 0.0, 0.0, 0.0, 0.0, -np.inf
+            rx, ry, qx, qy = 0.0, 0.0, 0.0, 0.0
+            for point in range(n_points):
+                ax, ay, bx, by, jn, jt = pair_point(at, point)
+                if sense > 0.0:
+                    rx, ry, qx, qy = ax, ay, bx, by
+                else:
+                    rx, ry, qx, qy = bx, by, ax, ay
+                # turned round, the impulse on the other one has the same parts along normal and tangent
+                px, py = nx * jn - ny * jt, ny * jn + nx * jt
+                jx, jy = jx + px, jy + py
+                owner_turn -= rx * py - ry * px
+                ux = 0.5 * (before[owner, 3] + motion[owner, 3] - (before[owner, 5] + motion[owner, 5]) * ry)
+                uy = 0.5 * (before[owner, 4] + motion[owner, 4] + (before[owner, 5] + motion[owner, 5]) * rx)
+                gap = -(rx * nx + ry * ny) - motion[owner, 0] * nx - motion[owner, 1] * ny
+                if moves:
+                    partner_turn += qx * py - qy * px
+                    ux -= 0.5 * (
+                        before[partner, 3] + motion[partner, 3] - (before[partner, 5] + motion[partner, 5]) * qy
+                    )
+                    uy -= 0.5 * (
+                        before[partner, 4] + motion[partner, 4] + (before[partner, 5] + motion[partner, 5]) * qx
+                    )
+                    gap += (motion[partner, 0] + qx) * nx + (motion[partner, 1] + qy) * ny
+                else:
+                    gap += qx * nx + qy * ny + wall_x[partner - n_moving] * nx
+                    gap += wall_y[partner - n_moving] * ny
+                lost += px * ux + py * uy
+                overlap = max(overlap, -gap)
+            push = max(jx * nx + jy * ny, 0.0)
+            approach = (before[owner, 3] - before[owner, 5] * ry) * nx + (before[owner, 4] + before[owner, 5] * rx) * ny
+            if moves:
+                approach -= (before[partner, 3] - before[partner, 5] * qy) * nx
+                approach -= (before[partner, 4] + before[partner, 5] * qx) * ny
+            drive, face, kind = 0.0, 0, 1
+            if 0 < owner <= n:
+                p = pushers[owner - 1]
+                drive = (p.force_x * nx + p.force_y * ny) * dt
+                p.contact_x -= jx
+                p.contact_y -= jy
+                p.contact_turn += owner_turn
+            else:
+                block = blocks[owner if owner == 0 else owner - n]
+                block.step_turn += owner_turn
+                block.step_x -= jx
+                block.step_y -= jy
+                block.gross += math.hypot(jx, jy)
+                if moves:
+                    block.blocks_x -= jx
+                    block.blocks_y -= jy
+                    block.blocks_turn += owner_turn
+                    totals.block_block += lost
+                else:
+                    block.walls_x -= jx
+                    block.walls_y -= jy
+                    block.walls_turn += owner_turn
+                    totals.block_wall += lost
+                    if owner == 0:
+                        wall_above |= ny > 0.5
+                        wall_below |= ny < -0.5
+            if 0 < partner <= n:
+                p = pushers[partner - 1]
+                drive -= (p.force_x * nx + p.force_y * ny) * dt
+                p.contact_x += jx
+                p.contact_y += jy
+                p.contact_turn += partner_turn
+                p.touches |= TOUCHES_PUSHER
+                _feel(rig, pushers, partner - 1, 3, -nx, -ny, push, step)
+                kind = 3
+            elif moves:
+                block = blocks[partner if partner == 0 else partner - n]
+                block.step_x += jx
+                block.step_y += jy
+                block.step_turn += partner_turn
+                block.gross += math.hypot(jx, jy)
+                kind = 2
+                c, s = math.cos(motion[partner, 2]), math.sin(motion[partner, 2])
+                face = _face(sides, block.first_side, block.n_sides, c * nx + s * ny, c * ny - s * nx)
+                if 0 < owner <= n:
+                    block.pushers_x += jx
+                    block.pushers_y += jy
+                    block.pushers_turn += partner_turn
+                else:
+                    block.blocks_x += jx
+                    block.blocks_y += jy
+                    block.blocks_turn += partner_turn
+            if 0 < owner <= n:
+                _feel(rig, pushers, owner - 1, kind, nx, ny, push, step)
+                if kind == 1:
+                    pushers[owner - 1].touches |= TOUCHES_WALL
+                    totals.pusher_wall += lost
+                elif kind == 2:
+                    totals.pusher_block += lost
+                else:
+                    pushers[owner - 1].touches |= TOUCHES_PUSHER
+                    totals.pusher_pusher += lost
+            if visit.first_step < 0:
+                visit.first_step = step
+                visit.approach = approach
+                visit.speed = math.hypot(before[owner, 3], before[owner, 4])
+                visit.x, visit.y = motion[owner, 0], motion[owner, 1]
+                visit.block_x_on = before[0, 0]
+                visit.face = face
+                visit.heading = pushers[owner - 1].heading if 0 < owner <= n else before[owner, 2]
+            lean = push
+            if approach > APPROACH:
+                owner_arm, partner_arm = rx * ny - ry * nx, qx * ny - qy * nx
+                bare = inertia[owner, 0] + inertia[owner, 1] * owner_arm * owner_arm
+                stepped = inertia[owner, 2] + inertia[owner, 3] * owner_arm * owner_arm
+                if moves:
+                    bare += inertia[partner, 0] + inertia[partner, 1] * partner_arm * partner_arm
+                    stepped += inertia[partner, 2] + inertia[partner, 3] * partner_arm * partner_arm
+                lean -= max(push - max(drive, 0.0), 0.0) * stepped / bare
+            visit.impact += push - lean
+            visit.lean += lean
+            visit.tangential += jx * ny - jy * nx
+            visit.energy += lost
+            visit.last_step = step
+            visit.block_x_off = before[0, 0]
+            visit.overlap = max(visit.overlap, overlap)
+            totals.overlap_max = max(totals.overlap_max, overlap)
+            if partner == 0 and visit.face == REAR and lean > ground.lean_force * dt:
+                leaning += 1.0
+                push_of_all += pushers[owner - 1].thrust
+    _count(crew, ground, ledger, motion, leaning, push_of_all, wall_below and wall_above)
+
+
+@inlined
+def _face(sides: FloatArray, first: int, n: int, nx: float, ny: float) -> int:
+    """Side of a block, plus one, that is touched where the normal into the block, in its own frame, is (nx, ny)."""
+    best, face = -2.0, 0
+    for k in range(first, first + n):
+        squarely = -(sides[k, 0] * nx + sides[k, 1] * ny)
+        if squarely > best:
+            best, face = squarely, k + 1
+    return face
+
+
+@inlined
+def _count(
+    crew: Crew,
+    ground: Ground,
+    ledger: Ledger,
+    motion: FloatArray,
+    leaning: float,
+    push_of_all: float,
+    is_held: bool,
+) -> None:
+    """What happens how much in this step."""
+    totals, pushers, block = ledger.totals[0], crew.pushers, ground.blocks[0]
+    ahead_of = motion[0, 0] + ground.front_reach
+    for i in range(len(pushers)):
+        p = pushers[i]
+        if p.touches != 0:
+            if p.touches & TOUCHES_WALL:
+                totals.n_at_wall += 1.0
+            if p.touches & TOUCHES_PUSHER:
+                totals.n_at_pusher += 1.0
+            p.touches = 0
+        if motion[i + 1, 0] > ahead_of:
+            totals.n_ahead += 1.0
+        if p.mode >= _TURN:
+            if p.mode == _TURN:
+                totals.n_turning += 1.0
+            elif p.mode == _STOP:
+                totals.n_halted += 1.0
+            elif p.mode == _FAILED:
+                totals.n_failed += 1.0
+    totals.yaw_max = max(totals.yaw_max, abs(motion[0, 2]))
+    if leaning > 0.0:
+        totals.n_leaning += leaning
+        totals.leaning_share += 1.0
+        totals.leaning_most = max(totals.leaning_most, leaning)
+        if push_of_all > block.floor_static:
+            totals.strong_share += 1.0
+            if is_held and abs(motion[0, 3]) < APPROACH * 0.01:
+                totals.jammed_share += 1.0
+
+
+@inlined
+def balance_crew(host: Host, rig: Rig, crew: Crew, ledger: Ledger) -> None:
+    """Work of the drives, and what drag took, in the step that has just been made.
+
+    The engine steps a body with the mass M' of `effective_mass` and the force F - g v, so the drag's impulse is
+    -(M' - M) dv - g v dt; likewise for turning.
+    """
+    totals, pushers, dt = ledger.totals[0], crew.pushers, rig.dt
+    before, motion = host.before, host.motion
+    drive, heading, gravity, drag = 0.0, 0.0, 0.0, 0.0
+    for i in range(len(pushers)):
+        p = pushers[i]
+        vx, vy, wx, wy = before[i + 1, 3], before[i + 1, 4], motion[i + 1, 3], motion[i + 1, 4]
+        mx, my = 0.5 * (vx + wx), 0.5 * (vy + wy)
+        extra = p.step_mass - p.mass
+        tx, ty = p.thrust * p.ux, p.thrust * p.uy
+        gx, gy = p.mass * rig.pull_x, p.mass * rig.pull_y
+        drive += (tx * mx + ty * my) * dt
+        gravity += (gx * mx + gy * my) * dt
+        drag += (extra * (wx - vx) - (p.force_x - tx - gx) * dt) * mx
+        drag += (extra * (wy - vy) - (p.force_y - ty - gy) * dt) * my
+        if rig.heading_is_free:
+            spin, after = before[i + 1, 5], motion[i + 1, 5]
+            middle = 0.5 * (spin + after)
+            heading += p.drive_torque * middle * dt
+            drag += (rig.turn_drag * spin * dt + (p.step_moment - p.moment) * (after - spin)) * middle
+        elif p.contact_turn != 0.0:
+            heading -= p.contact_turn * motion[i + 1, 5]
+    totals.drive += drive
+    totals.heading += heading
+    totals.gravity += gravity
+    totals.drag += drag
+
+
+@inlined
+def kinetic_energy(host: Host, crew: Crew, ground: Ground) -> float:
+    """Kinetic energy of all that moves, with the bare masses."""
+    motion, pushers, blocks = host.motion, crew.pushers, ground.blocks
+    total = 0.0
+    for i in range(len(pushers)):
+        p: Any = pushers[i]
+        total += 0.5 * p.mass * (motion[i + 1, 3] ** 2 + motion[i + 1, 4] ** 2) + 0.5 * p.moment * motion[i + 1, 5] ** 2
+    for k in range(len(blocks)):
+        b: Any = blocks[k]
+        m = b.entity
+        total += 0.5 * b.mass * (motion[m, 3] ** 2 + motion[m, 4] ** 2) + 0.5 * b.moment * motion[m, 5] ** 2
+    return total

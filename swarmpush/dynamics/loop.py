@@ -1,6 +1,6 @@
 """The step loop: one compiled function that drives the engine from sample to sample.
 
-The same rooms (crew, ledger) are also driven by `advance_plainly`, which talks to pymunk through its public
+The same rooms (crew, blocks, ledger) are also driven by `advance_plainly`, which talks to pymunk through its public
 interface. It is slow, serves as the oracle of the compiled loop, and takes over if the two ever disagree.
 """
 
@@ -14,16 +14,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from swarmpush.compiled import borrowed, compiled, inlined
-from swarmpush.dynamics.crew import Crew, Rig, drive, feel, set_floor
-from swarmpush.dynamics.host import MOTION, Host, HostSpace, read_state, take_step
-from swarmpush.dynamics.ledger import (
-    SLOTS,
-    Ledger,
-    balance_block,
-    close_visits,
-    enter_contacts,
-    remember_block,
-)
+from swarmpush.dynamics.blocks import Ground, balance_blocks, order_blocks
+from swarmpush.dynamics.crew import Crew, Rig, drive, feel, react
+from swarmpush.dynamics.host import Host, HostSpace, read_state, take_step
+from swarmpush.dynamics.ledger import SERIES, SLOTS, Ledger, balance_crew, close_visits, enter_contacts
 from swarmpush.dynamics.ranging import Surroundings
 from swarmpush.program import Program, Senses
 
@@ -31,6 +25,7 @@ FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
 MAX_OVERLAP = 0.5  # radii; a pusher this deep in something is no longer a rigid body in contact
+MAX_JUMP = 1.0  # radii; a pusher that moves farther in one step could pass through something
 
 
 class Ending(IntEnum):
@@ -42,20 +37,38 @@ class Ending(IntEnum):
     ESCAPED = 3
     OVERLAP = 4
     NOT_A_NUMBER = 5
+    JUMPED = 6
+    ASKED = 7  # some pusher waits for an answer from outside
 
 
-_NOT_YET, _GOAL, _TIME, _ESCAPED, _OVERLAP, _NOT_A_NUMBER = (int(ending) for ending in Ending)
+_NOT_YET, _GOAL, _TIME, _ESCAPED, _OVERLAP, _NOT_A_NUMBER, _JUMPED, _ASKED = (int(ending) for ending in Ending)
 
 
 class Path(NamedTuple):
-    """Samples at fixed intervals, engine units.
+    """Samples at fixed intervals, and one more at the end of the run; engine units.
 
-    block: (n, 5) x, y, yaw, speed along the channel, pushers leaning on the rear face (mean since the last sample).
-    pushers: (n, n_pushers, 4) x, y, heading, mode.
+    steps: (n,) number of the step. block: (n, 4) x, y, yaw, speed along the channel. train: (n, n_more, 3) x, y, yaw of
+    further blocks. pushers: (n, n_pushers, 4) x, y, heading, mode. series: (n, len(SERIES) + 1) sums over the steps
+    since the last sample, and the most pushers that leaned at once in it. n_rows[0]: samples taken so far.
     """
 
+    steps: IntArray
     block: FloatArray
+    train: FloatArray
     pushers: FloatArray
+    series: FloatArray
+    n_rows: IntArray
+
+
+class Limits(NamedTuple):
+    """Where a run ends. outline: (m, 4) x, y of the fixed sides' ends. goal_x: of the block."""
+
+    outline: FloatArray
+    length: float
+    width: float
+    goal_x: float
+    final_step: int
+    sample_steps: int
 
 
 class Task(NamedTuple):
@@ -67,74 +80,123 @@ class Task(NamedTuple):
     senses: Senses
     around: Surroundings
     keys: NDArray[np.uint64]
+    ground: Ground
     ledger: Ledger
     path: Path
-    sample_steps: int
+    limits: Limits
+
+
+_N_SERIES = len(SERIES)
 
 
 @inlined
-def _before(host: Host, task: Task, step: int, final_step: int) -> int:
-    """Books of the last step, sample, guards, then orders for this step; the state must have been read."""
-    rig, crew, ledger = task.rig, task.crew, task.ledger
-    motion, totals = borrowed(host.motion), borrowed(ledger.totals)[0]
-    if step > 0:
-        balance_block(host, rig, ledger)
-    remember_block(host, ledger)
-    pushers, n = borrowed(crew.pushers), len(crew.pushers)
-    ahead_of = motion[0] + rig.front_reach
-    ending = _NOT_YET
-    for i in range(n):
-        x, y = motion[MOTION * (i + 1)], motion[MOTION * (i + 1) + 1]
-        if not (x > 0.0 and x < rig.channel_length and y > 0.0 and y < rig.channel_width):
-            ending = _ESCAPED if math.isfinite(x + y) else _NOT_A_NUMBER
-        if x > ahead_of:
-            totals.ahead += 1.0
-        if pushers[i].mode == 2:
-            totals.turning += 1.0
-        elif pushers[i].mode == 3:
-            totals.stopped += 1.0
-    if not math.isfinite(motion[0] + motion[1] + motion[2]):
-        ending = _NOT_A_NUMBER
-    elif totals.overlap_max > MAX_OVERLAP:
-        ending = _OVERLAP
-    elif ending == _NOT_YET and motion[0] >= rig.goal_x:
-        ending = _GOAL
-    elif ending == _NOT_YET and step >= final_step:
-        ending = _TIME
-    if step % task.sample_steps == 0:
-        row, block_rows, pusher_rows = step // task.sample_steps, borrowed(task.path.block), borrowed(task.path.pushers)
-        for c in range(4):
-            block_rows[row, c] = motion[c]
-        block_rows[row, 4] = totals.sample_leaning / task.sample_steps
-        totals.sample_leaning = 0.0
-        for i in range(n):
-            pusher_rows[row, i, 0] = motion[MOTION * (i + 1)]
-            pusher_rows[row, i, 1] = motion[MOTION * (i + 1) + 1]
-            pusher_rows[row, i, 2] = pushers[i].heading
-            pusher_rows[row, i, 3] = pushers[i].mode
-    if ending == _NOT_YET:
-        drive(host, rig, crew, task.program, task.senses, task.keys, task.around, step)
-        if rig.has_floor:
-            set_floor(host, rig)
-    return ending
+def _sample(host: Host, task: Task, step: int) -> None:
+    """Write a row of the path."""
+    path, motion, pushers = task.path, host.motion, task.crew.pushers
+    totals, row = task.ledger.totals[0], path.n_rows[0]
+    path.n_rows[0] = row + 1
+    path.steps[row] = step
+    for c in range(4):
+        path.block[row, c] = motion[0, c]
+    for k in range(path.train.shape[1]):
+        for c in range(3):
+            path.train[row, k, c] = motion[len(pushers) + 1 + k, c]
+    for i in range(len(pushers)):
+        path.pushers[row, i, 0] = motion[i + 1, 0]
+        path.pushers[row, i, 1] = motion[i + 1, 1]
+        path.pushers[row, i, 2] = pushers[i].heading
+        path.pushers[row, i, 3] = pushers[i].mode
+    series = path.series[row]
+    series[0], series[1] = totals.n_leaning, totals.leaning_share
+    series[2], series[3] = totals.strong_share, totals.jammed_share
+    series[4], series[5], series[6] = totals.n_ahead, totals.n_at_wall, totals.n_at_pusher
+    series[7], series[8], series[9] = totals.n_turning, totals.n_halted, totals.n_failed
+    series[_N_SERIES] = totals.leaning_most
+    totals.n_leaning = totals.leaning_share = totals.strong_share = totals.jammed_share = 0.0
+    totals.n_ahead = totals.n_at_wall = totals.n_at_pusher = 0.0
+    totals.n_turning = totals.n_halted = totals.n_failed = totals.leaning_most = 0.0
+
+
+@inlined
+def _is_inside(outline: FloatArray, x: float, y: float) -> bool:
+    """Whether a point lies in the channel and in no post: a line from it crosses their sides an odd number of times."""
+    inside = False
+    for k in range(len(outline)):
+        ax, ay, bx, by = outline[k, 0], outline[k, 1], outline[k, 2], outline[k, 3]
+        if (ay > y) != (by > y) and x < ax + (y - ay) / (by - ay) * (bx - ax):
+            inside = not inside
+    return inside
+
+
+@inlined
+def _ending(host: Host, task: Task, step: int, is_sample: bool) -> int:
+    """Whether the run has come to an end, and why."""
+    motion, limits = host.motion, task.limits
+    n, most = len(task.crew.pushers), (MAX_JUMP / task.rig.dt) ** 2
+    for i in range(1, n + 1):
+        x, y, vx, vy = motion[i, 0], motion[i, 1], motion[i, 3], motion[i, 4]
+        if not (x > 0.0 and x < limits.length and y > 0.0 and y < limits.width and vx * vx + vy * vy < most):
+            if not math.isfinite(x + y + vx + vy):
+                return _NOT_A_NUMBER
+            return _JUMPED if vx * vx + vy * vy >= most else _ESCAPED
+        if is_sample and not _is_inside(limits.outline, x, y):
+            return _ESCAPED
+    if not math.isfinite(motion[0, 0] + motion[0, 1] + motion[0, 2]):
+        return _NOT_A_NUMBER
+    if task.ledger.totals[0].overlap_max > MAX_OVERLAP:
+        return _OVERLAP
+    if motion[0, 0] >= limits.goal_x:
+        return _GOAL
+    if step >= limits.final_step:
+        return _TIME
+    return _NOT_YET
+
+
+@inlined
+def _before(host: Host, task: Task, step: int, is_answered: bool) -> int:
+    """Sample, guards, then orders for this step."""
+    rig = task.rig
+    if not is_answered:
+        is_sample = step % task.limits.sample_steps == 0
+        ending = _ending(host, task, step, is_sample)
+        if is_sample or ending != _NOT_YET:
+            _sample(host, task, step)
+        if ending != _NOT_YET:
+            return ending
+    if react(host, rig, task.crew, task.program, task.senses, task.keys, task.around, step, is_answered) > 0:
+        return _ASKED
+    drive(host, rig, task.crew, task.keys, step)
+    order_blocks(host, task.ground, rig.dt)
+    return _NOT_YET
 
 
 @inlined
 def _after(host: Host, task: Task, n_pairs: int, step: int) -> bool:
-    """Ledger and bumpers after the engine's step; True if the log must be fetched."""
-    ledger = task.ledger
-    enter_contacts(host, task.rig, task.crew, ledger, n_pairs, step)
-    feel(task.rig, task.crew, task.keys, step)
+    """Ledger, books and bumpers after the engine's step; True if the log must be fetched."""
+    ledger, rig, crew = task.ledger, task.rig, task.crew
+    enter_contacts(host, rig, crew, task.ground, ledger, n_pairs, step)
+    gravity, drag, floor = balance_blocks(host, task.ground, rig.dt)
+    totals = ledger.totals[0]
+    totals.gravity += gravity
+    totals.drag += drag
+    totals.floor += floor
+    balance_crew(host, rig, crew, ledger)
+    feel(rig, crew, task.keys, step)
     close_visits(ledger, step)
     return bool(ledger.n_log[0] + SLOTS * len(ledger.n_open) >= len(ledger.log))
 
 
 @compiled
-def advance(host: Host, task: Task, first_step: int, n_steps: int, final_step: int) -> tuple[int, int]:
-    """Up to `n_steps` steps. Returns the next step's number and why it came back (an `Ending`)."""
+def advance(host: Host, task: Task, first_step: int, n_steps: int, is_answered: bool) -> tuple[int, int]:
+    """Up to `n_steps` steps. Returns the next step's number and why it came back (an `Ending`).
+
+    After `ASKED` the answers must be written into the program, and the same step be taken again with `is_answered`.
+    """
+    host, task = borrowed(host), borrowed(task)
+    read_state(host)
     for step in range(first_step, first_step + n_steps):
-        read_state(host)
-        ending = _before(host, task, step, final_step)
+        ending = _before(host, task, step, is_answered)
+        is_answered = False
         if ending != 0:
             return step, ending
         n_pairs = take_step(host, task.rig.dt)
@@ -143,14 +205,29 @@ def advance(host: Host, task: Task, first_step: int, n_steps: int, final_step: i
     return first_step + n_steps, 0
 
 
-def advance_plainly(space: HostSpace, task: Task, first_step: int, n_steps: int, final_step: int) -> tuple[int, int]:
+def advance_plainly(
+    space: HostSpace, task: Task, first_step: int, n_steps: int, is_answered: bool = False
+) -> tuple[int, int]:
     """The same as `advance`, with pymunk driven through its public interface."""
+    space.read_plainly()
     for step in range(first_step, first_step + n_steps):
-        space.read_plainly()
-        ending = _before(space.host, task, step, final_step)
+        ending = before_step(space.host, task, step, is_answered)
+        is_answered = False
         if ending != 0:
             return step, ending
         n_pairs = space.step_plainly(task.rig.dt)
-        if _after(space.host, task, n_pairs, step):
+        if after_step(space.host, task, n_pairs, step):
             return step + 1, 0
     return first_step + n_steps, 0
+
+
+@compiled
+def before_step(host: Host, task: Task, step: int, is_answered: bool) -> int:
+    """What comes before a step that something else makes; returns an `Ending`."""
+    return _before(borrowed(host), borrowed(task), step, is_answered)
+
+
+@compiled
+def after_step(host: Host, task: Task, n_pairs: int, step: int) -> bool:
+    """What comes after it; True if the log must be fetched."""
+    return _after(borrowed(host), borrowed(task), n_pairs, step)

@@ -4,13 +4,13 @@ from __future__ import annotations
 
 import math
 
-from swarmpush.geometry import Corners, signed_area
+from swarmpush.geometry import Corners, sides_of, signed_area
 
 
 def centre(corners: Corners) -> tuple[float, float]:
     """Centroid of a polygon (any textbook of mechanics)."""
     x = y = 0.0
-    for (ax, ay), (bx, by) in _sides(corners):
+    for (ax, ay), (bx, by) in sides_of(corners):
         cross = ax * by - bx * ay
         x += (ax + bx) * cross
         y += (ay + by) * cross
@@ -30,7 +30,7 @@ def gyration_squared(corners: Corners) -> float:
     13.0
     """
     moment = 0.0
-    for (ax, ay), (bx, by) in _sides(corners):
+    for (ax, ay), (bx, by) in sides_of(corners):
         cross = ax * by - bx * ay
         moment += cross * (ax * ax + ax * bx + bx * bx + ay * ay + ay * by + by * by) / 12.0
     return moment / signed_area(corners)
@@ -47,7 +47,7 @@ def friction_arm(corners: Corners) -> float:
     0.382597858
     """
     total = 0.0
-    for (ax, ay), (bx, by) in _sides(corners):
+    for (ax, ay), (bx, by) in sides_of(corners):
         length = math.hypot(bx - ax, by - ay)
         h = (ax * by - bx * ay) / length
         if h == 0.0:
@@ -57,10 +57,22 @@ def friction_arm(corners: Corners) -> float:
     return total / signed_area(corners)
 
 
+def rounded_gyration_squared(length: float, width: float, radius: float) -> float:
+    """Moment of inertia over mass of a uniform rectangle about its centre, m2, after it is rounded off with a radius.
+
+    Put together from two crossing rectangles and four quarter discs (any textbook of mechanics); 0 by 0 gives a disc.
+
+    >>> rounded_gyration_squared(0.0, 0.0, 2.0)
+    2.0
+    """
+    a, b, r = length, width, radius
+    area = math.pi * r**2 + b * (a + 2 * r) + 2 * a * r
+    corners = math.pi * r**2 * (a**2 + b**2) / 4 + 4 * (a + b) * r**3 / 3 + math.pi * r**4 / 2
+    along = b * (a + 2 * r) * ((a + 2 * r) ** 2 + b**2) / 12
+    flanks = 2 * a * r * ((a**2 + r**2) / 12 + ((b + r) / 2) ** 2)
+    return (corners + along + flanks) / area
+
+
 def _primitive(tangent: float) -> float:
     secant = math.hypot(1.0, tangent)
     return secant * tangent + math.asinh(tangent)
-
-
-def _sides(corners: Corners) -> list[tuple[tuple[float, float], tuple[float, float]]]:
-    return list(zip(corners, corners[1:] + corners[:1], strict=True))

@@ -9,7 +9,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from swarmpush.compiled import borrowed, compiled
-from swarmpush.dynamics.host import MOTION
 from swarmpush.kinematics.boundary import boundary_of
 from swarmpush.kinematics.legs import LOOKS, hit_among
 from swarmpush.scenario import Scenario
@@ -24,7 +23,7 @@ class Surroundings(NamedTuple):
     """The point world's boundary in engine units: what is fixed, and the block in its own frame.
 
     walls, wall_arcs, block, block_arcs: as in `Boundary`. still: zeros, one per surface. n_pushers: how many can be
-    in the way.
+    in the way. is_unknown: there is no map, and ranges must be asked of the engine.
     """
 
     walls: FloatArray
@@ -34,6 +33,7 @@ class Surroundings(NamedTuple):
     still: IntArray
     scale: float
     n_pushers: int
+    is_unknown: bool = False
 
 
 def surroundings(s: Scenario, unit: float, centre: tuple[float, float]) -> Surroundings:
@@ -62,14 +62,14 @@ def clear_run(around: Surroundings, motion: FloatArray, i: int, heading: float) 
     """How far pusher i could run along a heading, and the number of the surface it would meet there."""
     walls, wall_arcs, still = borrowed(around.walls), borrowed(around.wall_arcs), borrowed(around.still)
     block, block_arcs, motion = borrowed(around.block), borrowed(around.block_arcs), borrowed(motion)
-    x, y = motion[MOTION * (i + 1)], motion[MOTION * (i + 1) + 1]
+    x, y = motion[i + 1, 0], motion[i + 1, 1]
     ux, uy = math.cos(heading), math.sin(heading)
     hit = hit_among(walls, wall_arcs, still, around.scale, 0.0, x, y, ux, uy)
     run, surface = hit.run, hit.surface
     if surface >= len(walls):  # numbers go: walls, block, corners of walls, corners of the block
         surface += len(block)
-    c, s = math.cos(motion[2]), math.sin(motion[2])
-    dx, dy = x - motion[0], y - motion[1]
+    c, s = math.cos(motion[0, 2]), math.sin(motion[0, 2])
+    dx, dy = x - motion[0, 0], y - motion[0, 1]
     bx, by, bux, buy = c * dx + s * dy, c * dy - s * dx, c * ux + s * uy, c * uy - s * ux
     hit = hit_among(block, block_arcs, still, around.scale, 0.0, bx, by, bux, buy)
     if hit.surface >= 0 and hit.run < run:
@@ -77,7 +77,7 @@ def clear_run(around: Surroundings, motion: FloatArray, i: int, heading: float) 
         if hit.surface >= len(block):
             surface += len(wall_arcs)
     for j in range(around.n_pushers):
-        qx, qy = motion[MOTION * (j + 1)] - x, motion[MOTION * (j + 1) + 1] - y
+        qx, qy = motion[j + 1, 0] - x, motion[j + 1, 1] - y
         ahead = qx * ux + qy * uy
         reach = 4.0 - (qx * qx + qy * qy - ahead * ahead)  # two discs of radius 1 touch at a distance of 2
         if j != i and ahead > 0.0 and reach > 0.0:

@@ -4,12 +4,16 @@ from __future__ import annotations
 
 import json
 from dataclasses import dataclass
+from functools import cached_property
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 import pandas as pd
+from numpy.typing import NDArray
 
 from swarmpush.dynamics.bumps import find_bumps, find_completed_laps
+from swarmpush.dynamics.states import STATES, failures, pusher_states
 from swarmpush.dynamics.steps import StepSettings
 from swarmpush.kinematics.boundary import REAR
 from swarmpush.loading import from_tables
@@ -23,22 +27,48 @@ TABLES = ("visits", "block", "pushers")
 class Books:
     """The block's momentum account over a run, in N s; x along the channel, y across it.
 
-    pushers, walls, floor, drag: impulse on the block by each. change: of its momentum. gross: sum of the sizes of
-    all contact impulses on it. residual_rel: what does not balance, summed over all steps, over `gross`.
-    floor is what the balance leaves for it, and the residual compares its size with the impulse that the floor's
-    joint reports by itself. phantom_m, phantom_share: displacement that no velocity explains, summed by size, and
-    over the distance the block covered; lower is better for both.
+    pushers, blocks, walls, floor, drag, slope: impulse on the block by each; blocks are the further ones of a train.
+    change: of its momentum. about_centre: the same account of angular momentum about its centre of mass, in N m s,
+    by name. gross: sum of the sizes of all contact impulses on it. residual_rel: what does not balance, summed over
+    all steps and blocks, over their `gross`; residual_turn_rel: the same about the centres. floor is what the balance
+    leaves for it, and the residuals compare its size with the floor's own force while the block slides and with
+    the impulses that its joints report by themselves. phantom_m, phantom_share: displacement that no velocity
+    explains, summed by size, and over the distance the block covered; lower is better for both.
     """
 
     pushers: tuple[float, float]
+    blocks: tuple[float, float]
     walls: tuple[float, float]
     floor: tuple[float, float]
     drag: tuple[float, float]
+    slope: tuple[float, float]
     change: tuple[float, float]
+    about_centre: dict[str, float]
     gross: float
     residual_rel: float
+    residual_turn_rel: float
     phantom_m: float
     phantom_share: float
+
+
+@dataclass(frozen=True)
+class Energy:
+    """Where the drives' work went over a run, in J, all bodies together.
+
+    drive: work of the thrust. heading: of the drives that turn headings and hold them against contacts. slope: of
+    gravity. drag, floor: taken by each. contacts: taken by collisions and friction, by kind of pair; less than 0 where
+    Newton's restitution with friction makes energy. change: of kinetic energy. residual_rel: what does not balance,
+    over all the work done.
+    """
+
+    drive: float
+    heading: float
+    slope: float
+    drag: float
+    floor: float
+    contacts: dict[str, float]
+    change: float
+    residual_rel: float
 
 
 @dataclass(frozen=True)
@@ -47,14 +77,18 @@ class Run:
 
     scenario, seed, steps: what was run. ended: "goal", "time" or the reason why it broke off. duration_s: model
     time. travel_m: of the block in +x. yaw_max_rad: largest yaw of the block. overlap_max_m: deepest overlap of two
-    bodies. books: see `Books`. causes: what kept the crew from pushing, as shares of time from 0 to 1.
+    bodies. books, energy: see `Books` and `Energy`.
 
-    visits: one row per visit, in order of time: pusher (from 0; -1 for the block against a wall), partner ("block",
-        "wall", "pusher"), surface, other_pusher (-1 unless partner is "pusher"), t_on_s, t_off_s, x_m, y_m and
-        heading_rad at the first touch, approach_m_s, impact_Ns, lean_Ns, tangential_Ns (on the pusher, to the left as
-        it faces its partner), block_dx_m within the visit,
-        overlap_m.
-    block: path of the block: t_s, x_m, y_m, yaw_rad, vx_m_s, n_leaning (mean since the last row).
+    visits: one row per visit, in order of time: pusher (from 0; -1 for a block against a wall or another block),
+        partner ("block", "wall", "pusher"), surface, other_pusher (-1 unless partner is "pusher"), t_on_s, t_off_s,
+        dwell_s, x_m, y_m and heading_rad at the first touch, approach_m_s (normal speed) and speed_m_s then, impact_Ns,
+        lean_Ns, tangential_Ns (on the pusher, to the left as it faces its partner), block_dx_m within the visit,
+        block_dx_next_m from then until a block is next touched (NaN for visits elsewhere), energy_lost_J, overlap_m.
+    block: path of the block: t_s, x_m, y_m (of its centre of mass), yaw_rad, vx_m_s; then what happened since the last
+        row, as means over time: n_leaning (pushers leaning on the rear face), leaning_share, strong_share,
+        jammed_share (of time with pushers leaning, with enough push for the floor, and of these with the block
+        standing between walls), n_ahead, n_at_wall, n_at_pusher, n_turning, n_halted, n_failed, and n_leaning_most;
+        of further blocks x_2_m, y_2_m, yaw_2_rad and so on.
     pushers: path of the pushers: t_s, pusher, x_m, y_m, heading_rad, mode.
     bumps, laps: see `bumps.py`.
     """
@@ -68,7 +102,7 @@ class Run:
     yaw_max_rad: float
     overlap_max_m: float
     books: Books
-    causes: dict[str, float]
+    energy: Energy
     visits: pd.DataFrame
     block: pd.DataFrame
     pushers: pd.DataFrame
@@ -79,6 +113,21 @@ class Run:
     def speed_m_s(self) -> float:
         """Mean speed of the block in +x."""
         return self.travel_m / self.duration_s if self.duration_s > 0.0 else 0.0
+
+    @cached_property
+    def states(self) -> NDArray[np.object_]:
+        """What each pusher is about at each row of `pushers`; see `states.pusher_states`."""
+        return pusher_states(self)
+
+    @cached_property
+    def failures(self) -> pd.DataFrame:
+        """What kept the crew from pushing, with times; see `states.failures`."""
+        return failures(self)
+
+    @property
+    def causes(self) -> dict[str, float]:
+        """What kept the crew from pushing, as shares of time from 0 to 1."""
+        return dict(zip(self.failures["cause"], self.failures["share"].astype(float), strict=True))
 
     @property
     def has_arrived(self) -> bool:
@@ -139,9 +188,12 @@ class Run:
                 "lock_share": self.lock_share,
                 "laps": len(self.laps),
                 "books": self.books,
+                "energy_J": self.energy,
                 "ended": self.ended,
                 "duration_s": self.duration_s,
                 "causes": self.causes,
+                "cause_times": self.failures.set_index("cause").to_dict(orient="index"),
+                "states": {name: float((self.states == name).mean()) for name in STATES},
                 "numerics": {**plain(self.steps), "overlap_max_m": self.overlap_max_m},
                 "files": files or {},
                 "provenance": provenance(self.scenario, seed=self.seed),
@@ -185,7 +237,7 @@ def load_run(folder: Path, cycles: tuple[tuple[str, ...], ...] = ()) -> Run:
         yaw_max_rad=text["block"]["yaw_max_rad"],
         overlap_max_m=overlap,
         books=Books(**books),
-        causes=text["causes"],
+        energy=Energy(**text["energy_J"]),
         visits=visits,
         block=block,
         pushers=pushers,

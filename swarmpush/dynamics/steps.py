@@ -34,6 +34,10 @@ class Units:
         return self.length / self.time
 
     @property
+    def acceleration(self) -> float:
+        return self.length / self.time**2
+
+    @property
     def force(self) -> float:
         return self.mass * self.length / self.time**2
 
@@ -52,6 +56,10 @@ class Units:
     @property
     def turn_drag(self) -> float:
         return self.inertia / self.time
+
+    @property
+    def turn_impulse(self) -> float:
+        return self.impulse * self.length
 
     @property
     def energy(self) -> float:

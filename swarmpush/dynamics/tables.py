@@ -9,75 +9,97 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from swarmpush.dynamics.crew import Mode
-from swarmpush.dynamics.ledger import Ledger
+from swarmpush.dynamics.ledger import ENERGY, SERIES
 from swarmpush.dynamics.loop import Path, Task
-from swarmpush.dynamics.run import Books
+from swarmpush.dynamics.run import Books, Energy
 from swarmpush.dynamics.steps import Units
 
 VisitArray = NDArray[np.void]
 
 
-def open_visits(ledger: Ledger) -> VisitArray:
-    """The visits that have not ended, as the log would hold them."""
-    return ledger.slots[ledger.slots["partner"] >= 0]
-
-
 def visit_table(
-    rows: Sequence[VisitArray], walls: Sequence[str], sides: Sequence[str], n_pushers: int, dt: float, u: Units
+    rows: VisitArray,
+    walls: Sequence[str],
+    sides: Sequence[str],
+    n_pushers: int,
+    n_moving: int,
+    end_x: float,
+    step_s: float,
+    u: Units,
 ) -> pd.DataFrame:
-    """The visits of a run; see `Run.visits`. walls, sides: names of the fixed sides and of the block's."""
-    log = np.concatenate(rows)
-    log = log[np.lexsort((log["partner"], log["owner"], log["first_step"]))]
-    partner = log["partner"]
-    is_pusher, is_wall = (partner >= 1) & (partner <= n_pushers), partner > n_pushers
-    kinds = np.where(partner == 0, "block", np.where(is_wall, "wall", "pusher"))
+    """The visits of a run; see `Run.visits`.
+
+    Arguments:
+        rows: records of `VISIT`, in any order.
+        walls, sides: names of the fixed sides, and of the blocks' sides.
+        n_pushers, n_moving: how many pushers, how many bodies that move.
+        end_x: the struck block's place at the end, in engine units.
+        step_s: time step.
+    """
+    log = rows[np.lexsort((rows["partner"], rows["owner"], rows["first_step"]))]
+    owner, partner = log["owner"], log["partner"]
+    is_pusher, is_wall = (partner >= 1) & (partner <= n_pushers), partner >= n_moving
+    kinds = np.where(is_wall, "wall", np.where(is_pusher, "pusher", "block"))
     names = np.array(["pusher", *sides, *walls], dtype=object)
-    code = np.where(is_wall, len(sides) + partner - n_pushers, log["face"])
-    step_s = dt * u.time
+    code = np.where(is_wall, 1 + len(sides) + partner - n_moving, log["face"])
+    on_block = kinds == "block"
+    places = np.append(log["block_x_on"][on_block], end_x)[1:]  # of the block when it is next touched
+    until_next = np.full(len(log), np.nan)
+    until_next[on_block] = places - log["block_x_off"][on_block]
     return pd.DataFrame(
         {
-            "pusher": log["owner"] - 1,
+            "pusher": np.where((owner >= 1) & (owner <= n_pushers), owner - 1, -1),
             "partner": kinds.astype(object),
             "surface": names[code],
             "other_pusher": np.where(is_pusher, partner - 1, -1),
             "t_on_s": log["first_step"] * step_s,
             "t_off_s": (log["last_step"] + 1.0) * step_s,
+            "dwell_s": (log["last_step"] + 1.0 - log["first_step"]) * step_s,
             "x_m": log["x"] * u.length,
             "y_m": log["y"] * u.length,
             "heading_rad": np.remainder(log["heading"] + np.pi, 2 * np.pi) - np.pi,
             "approach_m_s": log["approach"] * u.speed,
+            "speed_m_s": log["speed"] * u.speed,
             "impact_Ns": log["impact"] * u.impulse,
             "lean_Ns": log["lean"] * u.impulse,
             "tangential_Ns": log["tangential"] * u.impulse,
             "block_dx_m": (log["block_x_off"] - log["block_x_on"]) * u.length,
+            "block_dx_next_m": until_next * u.length,
+            "energy_lost_J": log["energy"] * u.energy,
             "overlap_m": log["overlap"] * u.length,
         }
     )
 
 
-def block_table(path: Path, n_rows: int, interval_s: float, u: Units) -> pd.DataFrame:
-    """Path of the block; see `Run.block`."""
-    rows = path.block[:n_rows]
-    return pd.DataFrame(
-        {
-            "t_s": np.arange(n_rows) * interval_s,
-            "x_m": rows[:, 0] * u.length,
-            "y_m": rows[:, 1] * u.length,
-            "yaw_rad": rows[:, 2],
-            "vx_m_s": rows[:, 3] * u.speed,
-            "n_leaning": rows[:, 4],
-        }
-    )
+def block_table(path: Path, dt_s: float, u: Units) -> pd.DataFrame:
+    """Path of the block and what happened since the last row; see `Run.block`."""
+    n = int(path.n_rows[0])
+    rows, series, steps = path.block[:n], path.series[:n], path.steps[:n]
+    lasted = np.maximum(np.diff(steps, prepend=0), 1)
+    columns = {
+        "t_s": steps * dt_s,
+        "x_m": rows[:, 0] * u.length,
+        "y_m": rows[:, 1] * u.length,
+        "yaw_rad": rows[:, 2],
+        "vx_m_s": rows[:, 3] * u.speed,
+    }
+    columns |= {name: series[:, k] / lasted for k, name in enumerate(SERIES)}
+    columns["n_leaning_most"] = series[:, -1]
+    for k in range(path.train.shape[1]):
+        x, y, yaw = path.train[:n, k].T
+        columns |= {f"x_{k + 2}_m": x * u.length, f"y_{k + 2}_m": y * u.length, f"yaw_{k + 2}_rad": yaw}
+    return pd.DataFrame(columns)
 
 
-def pusher_table(path: Path, n_rows: int, interval_s: float, u: Units) -> pd.DataFrame:
+def pusher_table(path: Path, dt_s: float, u: Units) -> pd.DataFrame:
     """Paths of the pushers; see `Run.pushers`."""
+    n_rows = int(path.n_rows[0])
     rows = path.pushers[:n_rows]
     n = rows.shape[1]
     modes = np.array([mode.name.lower() for mode in Mode], dtype=object)
     return pd.DataFrame(
         {
-            "t_s": np.repeat(np.arange(n_rows) * interval_s, n),
+            "t_s": np.repeat(path.steps[:n_rows] * dt_s, n),
             "pusher": np.tile(np.arange(n), n_rows),
             "x_m": rows[:, :, 0].ravel() * u.length,
             "y_m": rows[:, :, 1].ravel() * u.length,
@@ -87,41 +109,51 @@ def pusher_table(path: Path, n_rows: int, interval_s: float, u: Units) -> pd.Dat
     )
 
 
-def books(task: Task, distance: float, u: Units) -> Books:
-    """The block's account, from the running totals; `distance` covered by the block in engine units."""
-    totals = task.ledger.totals[0]
-    mass = task.rig.block_mass
+def books(task: Task, motion: NDArray[np.float64], distance: float, u: Units) -> Books:
+    """The struck block's account. motion: see `Host`; distance: covered by the block; both in engine units."""
+    block, velocity = task.ground.blocks[0], motion[0, 3:]
+    residual = float(sum(b["residual"] for b in task.ground.blocks))
+    twist = float(sum(b["residual_turn"] for b in task.ground.blocks))
+    gross, gross_turn = (float(sum(b[name] for b in task.ground.blocks)) for name in ("gross", "gross_turn"))
+    by = {"pushers": "pushers", "blocks": "blocks", "walls": "walls", "floor": "ground", "drag": "liquid"}
 
-    def pair(name: str, factor: float = 1.0) -> tuple[float, float]:
-        x, y = float(totals[f"{name}x"]), float(totals[f"{name}y"])
-        return x * factor * u.impulse, y * factor * u.impulse
+    def pair(name: str) -> tuple[float, float]:
+        return float(block[f"{name}_x"]) * u.impulse, float(block[f"{name}_y"]) * u.impulse
 
-    gross = float(totals["gross"])
     return Books(
-        pushers=pair("pushers_"),
-        walls=pair("walls_"),
-        floor=pair("floor_"),
-        drag=pair("drag_"),
-        change=pair("old_v", mass),
-        gross=gross * u.impulse,
-        residual_rel=float(totals["residual"]) / gross if gross > 0.0 else 0.0,
-        phantom_m=float(totals["phantom"]) * u.length,
-        phantom_share=float(totals["phantom"]) / distance if distance > 0.0 else 0.0,
+        **{name: pair(column) for name, column in by.items()},
+        slope=pair("weight"),
+        change=(float(block["mass"] * velocity[0]) * u.impulse, float(block["mass"] * velocity[1]) * u.impulse),
+        about_centre={
+            **{name: float(block[f"{column}_turn"]) * u.turn_impulse for name, column in by.items()},
+            "change": float(block["moment"] * velocity[2]) * u.turn_impulse,
+        },
+        gross=float(block["gross"]) * u.impulse,
+        residual_rel=_share(residual, gross),
+        residual_turn_rel=_share(twist, gross_turn),
+        phantom_m=float(block["phantom"]) * u.length,
+        phantom_share=_share(float(block["phantom"]), distance),
     )
 
 
-def causes(task: Task, n_steps: int) -> dict[str, float]:
-    """What kept the crew from pushing, as shares of the crew's or the block's time."""
-    totals, n = task.ledger.totals[0], len(task.crew.pushers)
-    crew_steps, block_steps = max(n_steps * n, 1), max(n_steps, 1)
-    weak = totals["leaning_steps"] - totals["strong_steps"]
-    shares = {
-        "ahead_of_block": totals["ahead"] / crew_steps,
-        "touching_wall": totals["at_wall"] / crew_steps,
-        "touching_pusher": totals["at_pusher"] / crew_steps,
-        "turning": totals["turning"] / crew_steps,
-        "halted": totals["stopped"] / crew_steps,
-        "leaning_too_weak_for_floor": weak / block_steps,
-        "block_jammed_between_walls": totals["jammed_steps"] / block_steps,
-    }
-    return {name: float(share) for name, share in shares.items()}
+def energy(task: Task, kinetic: float, u: Units) -> Energy:
+    """Where the drives' work went; `kinetic` energy at the end, in engine units."""
+    totals = {name: float(task.ledger.totals[0][name]) for name in ENERGY}
+    change = kinetic - float(task.ledger.totals[0]["kinetic_0"])
+    given = totals["drive"] + totals["heading"] + totals["gravity"]
+    taken = sum(totals[name] for name in ENERGY[3:])
+    scale = totals["drive"] + abs(totals["heading"]) + abs(totals["gravity"]) + abs(change)
+    return Energy(
+        drive=totals["drive"] * u.energy,
+        heading=totals["heading"] * u.energy,
+        slope=totals["gravity"] * u.energy,
+        drag=totals["drag"] * u.energy,
+        floor=totals["floor"] * u.energy,
+        contacts={name: totals[name] * u.energy for name in ENERGY[5:]},
+        change=change * u.energy,
+        residual_rel=_share(abs(given - taken - change), scale),
+    )
+
+
+def _share(part: float, whole: float) -> float:
+    return part / whole if whole > 0.0 else 0.0

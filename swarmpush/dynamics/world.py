@@ -7,15 +7,16 @@ from collections.abc import Callable
 from functools import cache
 
 import numpy as np
-from numpy.typing import NDArray
 
 from swarmpush.dynamics import tables
 from swarmpush.dynamics.build import build
 from swarmpush.dynamics.bumps import find_bumps, find_completed_laps
-from swarmpush.dynamics.host import HostSpace, host_disagreement
+from swarmpush.dynamics.host import Host, HostSpace, host_disagreement
+from swarmpush.dynamics.ledger import kinetic_energy
 from swarmpush.dynamics.loop import Ending, Task, advance, advance_plainly
 from swarmpush.dynamics.run import Run
 from swarmpush.dynamics.steps import StepSettings, choose_step, engine_units
+from swarmpush.dynamics.visit_log import VisitLog
 from swarmpush.kinematics.boundary import surface_names
 from swarmpush.kinematics.laps import find_laps
 from swarmpush.scenario import Scenario
@@ -30,11 +31,12 @@ ENDINGS = {
     Ending.ESCAPED: "a pusher left the channel",
     Ending.OVERLAP: "bodies were pressed into each other",
     Ending.NOT_A_NUMBER: "the motion ran away",
+    Ending.JUMPED: "a pusher moved farther than its radius in one step",
 }
 
 
 @cache
-def _stepper() -> Callable[[HostSpace, Task, int, int, int], tuple[int, int]]:
+def _stepper() -> Callable[[HostSpace, Task, int, int, bool], tuple[int, int]]:
     """The compiled loop, or the plain one if the compiled way to the engine does not do what pymunk itself does."""
     if disagreement := host_disagreement():
         warnings.warn(
@@ -43,7 +45,7 @@ def _stepper() -> Callable[[HostSpace, Task, int, int, int], tuple[int, int]]:
             stacklevel=2,
         )
         return advance_plainly
-    return lambda space, task, first, n, final: advance(space.host, task, first, n, final)
+    return lambda space, task, first, n, is_answered: advance(space.host, task, first, n, is_answered)
 
 
 def simulate(
@@ -77,23 +79,15 @@ def simulate(
         cycles = tuple(lap.surfaces for lap in find_laps(s)[0])
     space, task = build(s, seed, steps)
     start_x = float(space.block.position.x)
-    final_step = max(1, round(s.goal.time_limit / steps.dt_s))
-    advance_some, log = _stepper(), []
+    advance_some, log = _stepper(), VisitLog()
     step, ending = 0, Ending.NOT_YET
     while ending == Ending.NOT_YET:
-        step, code = advance_some(space, task, step, CHUNK, final_step)
+        step, code = advance_some(space, task, step, CHUNK, False)
         ending = Ending(code)
-        log.append(_fetch_log(task))
+        log.fetch(task.ledger)
         if progress:
-            progress(step / final_step)
-    log.append(tables.open_visits(task.ledger))
-    return _record(s, seed, steps, cycles, task, log, step, ENDINGS[ending], start_x)
-
-
-def _fetch_log(task: Task) -> NDArray[np.void]:
-    rows = task.ledger.log[: task.ledger.n_log[0]].copy()
-    task.ledger.n_log[0] = 0
-    return rows
+            progress(step / task.limits.final_step)
+    return _record(s, seed, steps, cycles, task, space.host, log, step, ENDINGS[ending], start_x)
 
 
 def _record(
@@ -102,18 +96,28 @@ def _record(
     steps: StepSettings,
     cycles: tuple[tuple[str, ...], ...],
     task: Task,
-    log: list[NDArray[np.void]],
+    host: Host,
+    log: VisitLog,
     n_steps: int,
     ended: str,
     start_x: float,
 ) -> Run:
-    u, totals = engine_units(s), task.ledger.totals[0]
-    interval_s, n_rows = steps.sample_steps * steps.dt_s, n_steps // steps.sample_steps + 1
-    n_walls, n_sides = len(task.ledger.on_block) - s.pushers.count - 1, len(task.rig.sides)
+    u, totals, motion = engine_units(s), task.ledger.totals[0], host.motion
+    n_walls, n_sides = len(task.ground.wall_x), int(task.ground.blocks[0]["n_sides"])
     names = surface_names(s)
     walls, sides = names[:n_walls], names[n_walls : n_walls + n_sides]
-    visits = tables.visit_table(log, walls, sides, s.pushers.count, steps.dt_s / u.time, u)
-    block = tables.block_table(task.path, n_rows, interval_s, u)
+    of_train = [f"block {k + 2}" for k, block in enumerate(task.ground.blocks[1:]) for _ in range(block["n_sides"])]
+    visits = tables.visit_table(
+        log.rows(task.ledger),
+        walls,
+        [*sides, *of_train],
+        s.pushers.count,
+        len(motion),
+        float(motion[0, 0]),
+        steps.dt_s,
+        u,
+    )
+    block = tables.block_table(task.path, steps.dt_s, u)
     covered = np.hypot(np.diff(block["x_m"]), np.diff(block["y_m"])).sum() / u.length
     bumps = find_bumps(visits)
     return Run(
@@ -122,14 +126,14 @@ def _record(
         steps=steps,
         ended=ended,
         duration_s=n_steps * steps.dt_s,
-        travel_m=float(totals["old_x"] - start_x) * u.length,
+        travel_m=float(motion[0, 0] - start_x) * u.length,
         yaw_max_rad=float(totals["yaw_max"]),
         overlap_max_m=float(totals["overlap_max"]) * u.length,
-        books=tables.books(task, float(covered), u),
-        causes=tables.causes(task, n_steps),
+        books=tables.books(task, motion, float(covered), u),
+        energy=tables.energy(task, float(kinetic_energy(host, task.crew, task.ground)), u),
         visits=visits,
         block=block,
-        pushers=tables.pusher_table(task.path, n_rows, interval_s, u),
+        pushers=tables.pusher_table(task.path, steps.dt_s, u),
         bumps=bumps,
         laps=find_completed_laps(bumps, cycles),
     )

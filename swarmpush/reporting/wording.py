@@ -11,10 +11,13 @@ from swarmpush.quantities import for_people, prefix_for
 
 CAUSES = {
     "ahead_of_block": "pushers ahead of the block",
+    "held_at_wall": "pushers held at a wall",
+    "in_no_lap": "pushers behind the block and in no lap",
     "touching_wall": "pushers in touch with a wall",
     "touching_pusher": "pushers in touch with one another",
     "turning": "pushers turning",
     "halted": "pushers halted",
+    "dropped_out": "pushers dropped out",
     "leaning_too_weak_for_floor": "time in which those leaning could not overcome the floor",
     "block_jammed_between_walls": "time in which both walls held the block against enough push",
 }

@@ -51,6 +51,11 @@ def placed(*starts: tuple[float, float, float]) -> dict[str, Any]:
     return {"placed": [{"x": x, "y": y, "heading": heading} for x, y, heading in starts]}
 
 
+def plate_moment(s: Scenario) -> float:
+    """Moment of inertia of the rectangular block as a uniform plate, kg m2: m (l^2 + b^2)/12 (textbook)."""
+    return s.block.mass * (s.block.length**2 + s.block.width**2) / 12
+
+
 def dry(friction: float) -> dict[str, Any]:
     """A dry floor whose static and kinetic friction are the same."""
     return {"static_friction": friction, "kinetic_friction": friction}

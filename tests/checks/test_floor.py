@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 import pytest
 from numpy.typing import NDArray
-from rigs import PUSH_ON, STOP_AT_A_BUMP, G, dry, pair, placed, rig
+from rigs import PUSH_ON, STOP_AT_A_BUMP, G, dry, pair, placed, plate_moment, rig
 from scipy.integrate import dblquad, solve_ivp
 
 import swarmpush
@@ -215,14 +215,14 @@ Friction = Callable[[float, float, float], NDArray[np.float64]]  # of vx, vy, sp
 
 def coast(run: Run, offset: float, friction: Friction) -> tuple[float, float, float]:
     """Travel, turn and time until the struck plate rests under a law of friction, integrated by SciPy."""
-    block, push = run.scenario.block, SPIN[0] * G
+    block, moment, push = run.scenario.block, plate_moment(run.scenario), SPIN[0] * G
     speed = run.visits["impact_Ns"].iloc[0] / block.mass
-    spin = -run.visits["impact_Ns"].iloc[0] * offset / block.moment
+    spin = -run.visits["impact_Ns"].iloc[0] * offset / moment
 
     def rates(t: float, z: NDArray[np.float64]) -> list[float]:
         c, s = math.cos(z[2]), math.sin(z[2])
         fx, fy, torque = push * friction(c * z[3] + s * z[4], c * z[4] - s * z[3], z[5])
-        return [z[3], z[4], z[5], c * fx - s * fy, s * fx + c * fy, torque * block.mass / block.moment]
+        return [z[3], z[4], z[5], c * fx - s * fy, s * fx + c * fy, torque * block.mass / moment]
 
     def rests(t: float, z: NDArray[np.float64]) -> float:
         return math.hypot(z[3], z[4], 0.1 * z[5]) - 1e-3 * speed

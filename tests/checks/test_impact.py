@@ -14,7 +14,7 @@ import numpy as np
 import pandas as pd
 import pytest
 from numpy.typing import NDArray
-from rigs import pair, placed, rig
+from rigs import pair, placed, plate_moment, rig
 
 import swarmpush
 from swarmpush.dynamics.run import Run
@@ -115,7 +115,7 @@ def algebra(s: Scenario, arm: NDArray[np.float64], velocity: NDArray[np.float64]
     slides: P_t = -mu s P_n and P_n = -(1 + e) u_n/(B_nn - mu s B_nt), s the sense of slip. Source: any of those above;
     normal n = x into the block, tangent t = y, u the block's velocity relative to the pusher's.
     """
-    m, big, inertia = s.pushers.mass, s.block.mass, s.block.moment
+    m, big, inertia = s.pushers.mass, s.block.mass, plate_moment(s)
     e, mu = s.contacts.pusher_block.restitution, s.contacts.pusher_block.friction
     n_arm, t_arm = -arm[1], arm[0]  # arm x n, arm x t
     b_nn, b_tt = 1 / m + 1 / big + n_arm**2 / inertia, 1 / m + 1 / big + t_arm**2 / inertia
