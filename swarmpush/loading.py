@@ -35,6 +35,7 @@ from swarmpush.scenario import Scenario
 
 MAX_FILE_BYTES = 1_000_000  # a scenario is a few kilobytes; a larger file is something else
 ROUNDING = 1e-9  # relative; by this much lengths may miss each other and still fit
+MAX_TRAVEL = 0.25  # radii that a pusher may run in one step: the slop that goes with it is below the largest overlap
 MAX_PACKING = 0.4  # share of the start region that discs can fill by random placement without getting stuck
 
 
@@ -502,11 +503,11 @@ def _forecast_misfits(s: Scenario) -> Iterator[Problem]:
 
 
 def _step_misfits(s: Scenario) -> Iterator[Problem]:
-    step, most = s.numerics.step, 0.5 * s.pushers.radius / s.pushers.free_speed
+    step, most = s.numerics.step, MAX_TRAVEL * s.pushers.radius / s.pushers.free_speed
     if step is not None and step > most:
         yield Problem(
             "numerics.step",
-            f"in {for_people(step, 's')} a pusher runs more than half its radius; at most {for_people(most, 's')}",
+            f"in {for_people(step, 's')} a pusher runs more than a quarter of its radius; at most {for_people(most, 's')}",
         )
 
 

@@ -17,6 +17,10 @@ class Problem:
         return f"{self.key}: {self.sentence}" if self.key else self.sentence
 
 
+class RoutineError(ValueError):
+    """A routine written as a Python function gave an answer that cannot be carried out."""
+
+
 class ScenarioError(ValueError):
     """A scenario cannot be used. `problems` lists every reason; the message is readable as it stands."""
 

@@ -137,6 +137,24 @@ def compile_routine(routine: acts.Routine, surfaces: Sequence[str] = ()) -> Prog
     return np.array(rows, dtype=INSTRUCTION)
 
 
+def asking_program(n_pushers: int, room: int) -> tuple[Program, IntArray]:
+    """A program that asks a Python function what to do next, and where in it each pusher begins.
+
+    Each pusher has a part of its own: one instruction to ask, then `room` for the answer and the way back.
+    """
+    begins = np.arange(n_pushers, dtype=np.int64) * (room + 2)
+    program = np.zeros(n_pushers * (room + 2), dtype=INSTRUCTION)
+    program["op"][begins] = Op.ASK
+    return program, begins
+
+
+def compile_acts(listed: Sequence[acts.Act], surfaces: Sequence[str], back_to: int) -> Program:
+    """Compile acts to be carried out one after another; then comes the instruction `back_to`."""
+    instructions = [_instruction(act, {}, surfaces) for act in listed]
+    rows = [(i.op, 0, i.number, i.amount, i.value, i.spread) for i in instructions]
+    return np.array([*rows, (Op.JUMP, back_to, 0, 0, 0.0, 0.0)], dtype=INSTRUCTION)
+
+
 class _Instruction(NamedTuple):
     op: Op
     go: str = ""  # name of a stage
@@ -210,7 +228,7 @@ def wrap_angle(angle: float) -> float:
 
 
 @compiled
-def _sensed_normal(senses: Senses, keys: NDArray[np.uint64], index: int, heading: float, normal_angle: float) -> float:
+def sensed_normal(senses: Senses, keys: NDArray[np.uint64], index: int, heading: float, normal_angle: float) -> float:
     """Direction of the touched surface's inward normal as the pusher knows it."""
     bearing = wrap_angle(normal_angle - heading)
     if senses.bearing_sd > 0.0:
@@ -260,7 +278,7 @@ def decide(
             if op == _TURN:
                 rotation = step.value
             else:
-                surface = _sensed_normal(senses, keys, index, heading, normal_angle)
+                surface = sensed_normal(senses, keys, index, heading, normal_angle)
                 incoming = wrap_angle(heading - surface)  # more than a quarter turn from the normal
                 if op == _DEPART:
                     angle = step.value

@@ -248,7 +248,7 @@ class Routine(_Table):
         if len(self.counters()) > MAX_COUNTERS:
             raise ValueError(f"more than {MAX_COUNTERS} counters")
         for stage in self.stages:
-            targets = [act.go for act in stage.acts if isinstance(act, _BRANCHES)]
+            targets = [act.go for act in stage.acts if isinstance(act, BRANCHES)]
             for target in [*targets, stage.then or stage.name]:
                 if target not in names:
                     known = ", ".join(map(repr, names))
@@ -257,7 +257,7 @@ class Routine(_Table):
         return self
 
 
-_BRANCHES = (BranchContact, BranchCounter, BranchTime, BranchRange, BranchSight)
+BRANCHES = (BranchContact, BranchCounter, BranchTime, BranchRange, BranchSight)
 MOVES = (Run, Advance, Slide)
 
 
@@ -303,7 +303,7 @@ def _demand_a_run_in_every_loop(routine: Routine) -> None:
                 continue
             following = (stage.name, k + 1) if k + 1 < len(stage.acts) else (stage.then or stage.name, 0)
             after[stage.name, k] = {following}
-            if isinstance(act, _BRANCHES):
+            if isinstance(act, BRANCHES):
                 after[stage.name, k].add((act.go, 0))
     try:
         TopologicalSorter(after).prepare()

@@ -34,6 +34,8 @@ BLOCK_STATE = np.dtype(
         # forces of this step: drag, slope, and the sliding floor as far as it is no joint
         ("drag_x", "f8"), ("drag_y", "f8"), ("drag_turn", "f8"), ("slope_x", "f8"), ("slope_y", "f8"),
         ("floor_x", "f8"), ("floor_y", "f8"), ("floor_turn", "f8"),
+        ("is_pushed", "i8"),  # whether pushers or other blocks touched it in the last step, and
+        ("was_pushed", "i8"),  # in the step before
         # contact impulse of this step
         ("step_x", "f8"), ("step_y", "f8"), ("step_turn", "f8"),
         # the books: impulses so far by pushers, other blocks, walls, floor, drag and slope
@@ -59,7 +61,7 @@ class Ground(NamedTuple):
     struck one's rear face first. inertia: (n_moving, 4) inverse mass and moment, as they are and as the engine has
     them; 0 for what cannot move. wall_x, wall_y: where the bodies of the walls are. has_floor: whether there are joints
     to a floor. pull_x, pull_y: acceleration down the slope. front_reach: of the struck block ahead of its centre.
-    lean_force: pressing harder than this is leaning.
+    lean_force: pressing harder than this is leaning. approach: normal speed below which nothing arrives, only presses.
     """
 
     blocks: NDArray[np.void]
@@ -72,6 +74,7 @@ class Ground(NamedTuple):
     pull_y: float
     front_reach: float
     lean_force: float
+    approach: float
 
 
 _REST = 1e-9  # engine speed below which the floor's static friction holds; a held block has about 1e-17
@@ -86,7 +89,9 @@ def order_blocks(host: Host, ground: Ground, dt: float) -> None:
     while it slides. A block that slides on through the step gets them as a force against its motion. The joints hold
     a block at rest and stop one that comes to rest. They would also stop a sliding one, but against a wall
     they can go on holding a lateral force that nothing calls for, which then is missing along the way.
-    At rest the loads of the last step are brought back on to the ellipse if they left it.
+    At rest the loads of the last step are brought back on to the ellipse if they left it. When the last pusher leaves a
+    block that rests on level ground, the joints let go for a step: walls and floor would else go on pressing against
+    each other through it.
     """
     motion, orders, blocks = host.motion, host.orders, ground.blocks
     cap, load = host.floor_cap, host.floor_load
@@ -98,9 +103,9 @@ def order_blocks(host: Host, ground: Ground, dt: float) -> None:
         along, across = -b.drag_along * (c * vx + s * vy), -b.drag_across * (c * vy - s * vx)
         b.drag_x, b.drag_y, b.drag_turn = c * along - s * across, s * along + c * across, -b.yaw_drag * spin
         b.slope_x, b.slope_y = b.mass * ground.pull_x, b.mass * ground.pull_y
-        b.step_x = b.step_y = b.step_turn = 0.0
         if ground.has_floor:
             _order_floor(b, cap, load, k, vx, vy, spin, c, s, dt)
+        b.was_pushed, b.is_pushed = b.is_pushed, 0
         orders[m, 0] = spin
         orders[m, 1] = b.drag_x + b.slope_x + b.floor_x
         orders[m, 2] = b.drag_y + b.slope_y + b.floor_y
@@ -139,6 +144,8 @@ def _order_floor(
     elif total > _REST:
         cap[k, 0] = kinetic * math.hypot(px, py) / total
         cap[k, 1] = kinetic * arm * abs(swivel) / total
+    elif b.was_pushed == 1 and b.is_pushed == 0 and b.slope_x == 0.0 and b.slope_y == 0.0:
+        cap[k, 0] = cap[k, 1] = 0.0
     else:
         force, torque = b.floor_static, b.floor_static * arm
         if force > 0.0:
@@ -200,5 +207,6 @@ def balance_blocks(host: Host, ground: Ground, dt: float) -> tuple[float, float,
         b.weight_y += weight_y
         gravity += weight_x * mx + weight_y * my
         drag -= drag_x * mx + drag_y * my
+        b.step_x = b.step_y = b.step_turn = 0.0
         b.phantom += math.hypot(motion[m, 0] - before[m, 0] - vx * dt, motion[m, 1] - before[m, 1] - vy * dt)
     return gravity, drag, floor

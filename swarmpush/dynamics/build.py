@@ -17,7 +17,7 @@ from swarmpush.dynamics.ledger import SERIES, SLOTS, new_ledger
 from swarmpush.dynamics.loop import Limits, Path, Task
 from swarmpush.dynamics.patch import about, centre, friction_arm, gyration_squared, rounded_gyration_squared
 from swarmpush.dynamics.ranging import surroundings
-from swarmpush.dynamics.steps import StepSettings, Units, effective_mass, engine_units
+from swarmpush.dynamics.steps import StepSettings, Units, effective_mass, engine_units, relaxed
 from swarmpush.geometry import Corner, Corners, block_corners, channel_corners, outward_normal, post_corners, sides_of
 from swarmpush.kinematics.boundary import surface_names
 from swarmpush.program import Senses, compile_routine, in_units
@@ -25,6 +25,7 @@ from swarmpush.scenario import Block, Pushers, Scenario
 from swarmpush.starts import draw_starts
 
 MISSED_BUMP_RETRY = 4.0  # radius / free speed: a pusher that goes on pressing feels a missed bump this much later
+APPROACH = 0.005  # of the free speed: slower than this nothing arrives, it only presses
 LEAN_SHARE = 0.1  # of the stall force: pressing harder than this on the rear face counts as leaning
 
 
@@ -140,15 +141,22 @@ def _crew(s: Scenario, u: Units, dt: float, keys: NDArray[np.uint64], starts: ND
     if e.dropout > 0.0:
         units["fails_at"] = [-math.log(uniform(key, 0)) / (e.dropout * u.time) for key in keys[:, Purpose.DROPOUT]]
     units["mass"] = masses
-    units["step_mass"] = [
-        step_mass(mass, drag, side_drag, dt)
-        for mass, drag, side_drag in zip(masses, units["drag"], units["side_drag"], strict=True)
-    ]
     if p.heading == "free":
         units["moment"] = masses * pusher_gyration_squared(p) / u.length**2
-        turn_drag = p.turning_drag / u.turn_drag
-        units["step_moment"] = [effective_mass(moment, turn_drag, dt) for moment in units["moment"]]
+    prepare_masses(units, p.turning_drag / u.turn_drag, dt)
     return crew
+
+
+def prepare_masses(units: NDArray[np.void], turn_drag: float, dt: float) -> None:
+    """What `crew.drive` steps pushers with, in touch and not, from their masses, moments and drags."""
+    for unit in units:
+        unit["held_mass"] = step_mass(unit["mass"], unit["drag"], unit["side_drag"], dt)
+        unit["along_rest"] = relaxed(unit["drag"] * dt / unit["mass"])
+        unit["across_rest"] = relaxed(unit["side_drag"] * dt / unit["mass"])
+        if unit["moment"] > 0.0:
+            unit["held_moment"] = effective_mass(unit["moment"], turn_drag, dt)
+            unit["turn_rest"] = relaxed(turn_drag * dt / unit["moment"])
+    units["step_mass"], units["step_moment"] = units["mass"], units["moment"]
 
 
 def step_mass(mass: float, drag: float, side_drag: float, dt: float) -> float:
@@ -257,6 +265,7 @@ def _ground(s: Scenario, u: Units, crew: Crew, footed: list[_Footed], n_walls: i
         pull_y=-s.gravity * math.sin(s.channel.cross_slope) / u.acceleration,
         front_reach=max(x for x, _ in footed[0].hull.corners),
         lean_force=LEAN_SHARE * s.pushers.stall_force / u.force,
+        approach=APPROACH,
     )
 
 

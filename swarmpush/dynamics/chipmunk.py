@@ -29,6 +29,10 @@ _SCANNED = 23  # doubles of a body's record that are looked through; it is longe
 class _BodyLayout(NamedTuple):
     """Places of a body's fields in its record, in doubles."""
 
+    mass: int
+    inverse_mass: int
+    moment: int
+    inverse_moment: int
     x: int
     vx: int
     force: int
@@ -55,6 +59,10 @@ def _find_layout() -> _BodyLayout | None:
 
     try:
         return _BodyLayout(
+            mass=place(1.25),
+            inverse_mass=place(0.8),
+            moment=place(2.5),
+            inverse_moment=place(0.4),
             x=place(11.5, 12.5),
             vx=place(13.5, 14.5),
             force=place(17.5, 18.5),
@@ -69,7 +77,9 @@ def _find_layout() -> _BodyLayout | None:
 
 _LAYOUT = _find_layout()
 LAYOUT_IS_KNOWN = _LAYOUT is not None
-_X, _VX, _FORCE, _ANGLE, _SPIN, _TORQUE, _SHOWN_AT = _LAYOUT or _BodyLayout(0, 0, 0, 0, 0, 0, 0)
+_MASS, _INVERSE_MASS, _MOMENT, _INVERSE_MOMENT, _X, _VX, _FORCE, _ANGLE, _SPIN, _TORQUE, _SHOWN_AT = (
+    _LAYOUT or _BodyLayout(*[0] * 11)
+)
 _V_BIAS = _SHOWN_AT + 3  # after the transform comes the user's pointer, then the speeds that push bodies apart
 _SPIN_BIAS = _V_BIAS + 2
 
@@ -216,6 +226,15 @@ def read_body(body: int, motion: FloatArray, k: int) -> None:
     b = _floats_at(body)
     motion[k, 0], motion[k, 1], motion[k, 2] = b[_X], b[_X + 1], b[_ANGLE]
     motion[k, 3], motion[k, 4], motion[k, 5] = b[_VX], b[_VX + 1], b[_SPIN]
+
+
+@inlined
+def weigh_body(body: int, mass: float, moment: float) -> None:
+    """Give a body another mass, and another moment of inertia unless it is 0."""
+    b = _floats_at(body)
+    b[_MASS], b[_INVERSE_MASS] = mass, 1.0 / mass
+    if moment > 0.0:
+        b[_MOMENT], b[_INVERSE_MOMENT] = moment, 1.0 / moment
 
 
 @inlined

@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from swarmpush.compiled import compiled, inlined
 from swarmpush.draws import Purpose, normal, uniform
+from swarmpush.dynamics.chipmunk import weigh_body
 from swarmpush.dynamics.host import Host
 from swarmpush.dynamics.ranging import Surroundings, clear_run, sees
 from swarmpush.program import MEMORY, NOTES, Command, Program, Senses, decide, note_range, note_sight
@@ -73,9 +74,14 @@ class Rig(NamedTuple):
 PUSHER_STATE = np.dtype(
     [
         ("mass", "f8"),  # as it is, and
-        ("step_mass", "f8"),  # as the engine has it, see `effective_mass`
+        ("held_mass", "f8"),  # as the engine has it in a lasting contact, see `effective_mass`
+        ("step_mass", "f8"),  # as the engine has it in this step
         ("moment", "f8"),  # likewise; 0 for a held heading
+        ("held_moment", "f8"),
         ("step_moment", "f8"),
+        ("along_rest", "f8"),  # share of a drag's impulse that is left when speed follows it through a step: along,
+        ("across_rest", "f8"),  # across
+        ("turn_rest", "f8"),  # and in turning
         ("stall", "f8"),
         ("drag", "f8"),  # along the heading, and
         ("side_drag", "f8"),  # across it
@@ -99,6 +105,7 @@ PUSHER_STATE = np.dtype(
         ("step_ny", "f8"),
         ("touched_at", "i8"),  # last step in which the bumper was touched
         ("touches", "i8"),  # bits: what the body touched in the last step
+        ("has_reacted", "i8"),  # whether the routine has answered to the touch that still lasts
         ("n_bumps", "i8"),  # bumps felt or missed so far
         ("next_false", "f8"),  # time of the next false bump, and
         ("n_false", "i8"),  # how many there were
@@ -106,13 +113,15 @@ PUSHER_STATE = np.dtype(
         ("thrust", "f8"),  # in this step
         ("force_x", "f8"),  # drive, drag and slope in this step
         ("force_y", "f8"),
-        ("drive_torque", "f8"),  # of a free heading's own drive and contact arm in this step
+        ("torque", "f8"),  # on a free heading in this step, and
+        ("drive_torque", "f8"),  # the part of its own drive and contact arm
         ("contact_x", "f8"),  # impulse of the contacts in the last step
         ("contact_y", "f8"),
         ("contact_turn", "f8"),
     ]
 )
-TOUCHES_WALL, TOUCHES_PUSHER = 1, 2
+GAP_STEPS = 2  # a contact that is missing for more steps than this has ended
+TOUCHES_WALL, TOUCHES_PUSHER, TOUCHES_BLOCK = 1, 2, 4
 
 
 class Crew(NamedTuple):
@@ -244,8 +253,13 @@ def react(
 
 
 @inlined
-def drive(host: Host, rig: Rig, crew: Crew, keys: NDArray[np.uint64], step: int) -> None:
-    """The orders of this step: turning, heading noise, thrust, drag and slope."""
+def drive(host: Host, rig: Rig, crew: Crew, inertia: FloatArray, keys: NDArray[np.uint64], step: int) -> None:
+    """The orders of this step: turning, heading noise, thrust, drag and slope; and the masses to step with.
+
+    A pusher that touches nothing is stepped with its own mass and with that force under which a step ends where linear
+    drag and a constant force would have led it (exponential relaxation), so an impact meets the bare mass. One in touch
+    is stepped with the `effective_mass`, under which it presses with exactly its force at rest.
+    """
     dt = rig.dt
     is_noise_due = rig.diffusion > 0.0 and step % rig.noise_steps == 0
     fade = math.exp(-rig.fade_rate * step * dt) if rig.fade_rate > 0.0 else 1.0
@@ -262,6 +276,18 @@ def drive(host: Host, rig: Rig, crew: Crew, keys: NDArray[np.uint64], step: int)
             thrust *= rig.drive_while_turning
         elif p.mode == _STOP or p.mode == _FAILED:
             thrust = 0.0
+        along_rest, across_rest, turn_rest = 1.0, 1.0, 1.0
+        mass, moment = p.held_mass, p.held_moment
+        if p.touches == 0:
+            along_rest, across_rest, turn_rest = p.along_rest, p.across_rest, p.turn_rest
+            mass, moment = p.mass, p.moment
+        p.touches = 0
+        if mass != p.step_mass:
+            p.step_mass, p.step_moment = mass, moment
+            weigh_body(host.bodies[i + 1], mass, moment)
+            inertia[i + 1, 2] = 1.0 / mass
+            if moment > 0.0:
+                inertia[i + 1, 3] = 1.0 / moment
         spin, torque = turned / dt, 0.0
         if rig.heading_is_free:
             if is_noise_due:
@@ -272,7 +298,7 @@ def drive(host: Host, rig: Rig, crew: Crew, keys: NDArray[np.uint64], step: int)
             arm = rig.contact_arm * (p.ux * p.contact_y - p.uy * p.contact_x) / dt
             p.drive_torque = rig.turn_drag * spin + arm
             spin = motion[i + 1, 5]
-            torque = p.drive_torque - rig.turn_drag * spin
+            torque = (p.drive_torque - rig.turn_drag * spin) * turn_rest
         else:
             if thrust > 0.0 and p.mode != _TURN:
                 if is_noise_due:
@@ -286,10 +312,12 @@ def drive(host: Host, rig: Rig, crew: Crew, keys: NDArray[np.uint64], step: int)
                     spin = turned / dt
         across = vy * p.ux - vx * p.uy
         along = vx * p.ux + vy * p.uy
-        push, shove = thrust - p.drag * along, -p.side_drag * across
+        push = (thrust - p.drag * along + p.mass * (rig.pull_x * p.ux + rig.pull_y * p.uy)) * along_rest
+        shove = (p.mass * (rig.pull_y * p.ux - rig.pull_x * p.uy) - p.side_drag * across) * across_rest
         p.thrust = thrust
-        p.force_x = push * p.ux - shove * p.uy + p.mass * rig.pull_x
-        p.force_y = push * p.uy + shove * p.ux + p.mass * rig.pull_y
+        p.force_x = push * p.ux - shove * p.uy
+        p.force_y = push * p.uy + shove * p.ux
+        p.torque = torque
         orders[i + 1, 0] = spin
         orders[i + 1, 1] = p.force_x
         orders[i + 1, 2] = p.force_y
@@ -318,6 +346,8 @@ def feel(rig: Rig, crew: Crew, keys: NDArray[np.uint64], step: int) -> None:
                 continue
         if p.touched_at != step:
             p.pressed = 0.0
+            if step - p.touched_at > GAP_STEPS:
+                p.has_reacted = 0
             continue
         p.pressed += p.hardest
         if p.pressed <= 0.0 or p.pressed < rig.bump_threshold or now < p.until:
@@ -326,5 +356,5 @@ def feel(rig: Rig, crew: Crew, keys: NDArray[np.uint64], step: int) -> None:
         if rig.missed_bumps > 0.0 and uniform(keys[i, _MISSED], p.n_bumps) < rig.missed_bumps:
             p.until = now + rig.retry
             continue
-        p.mode, p.until = _REACT, now + rig.latency
+        p.mode, p.until, p.has_reacted = _REACT, now + rig.latency, 1
         p.percept_kind, p.percept_normal = p.step_kind, math.atan2(p.step_ny, p.step_nx)

@@ -20,15 +20,13 @@ from numpy.typing import NDArray
 from swarmpush.compiled import inlined
 from swarmpush.dynamics.blocks import Ground
 from swarmpush.dynamics.chipmunk import pair_bodies, pair_normal, pair_point
-from swarmpush.dynamics.crew import TOUCHES_PUSHER, TOUCHES_WALL, Crew, Mode, Rig
+from swarmpush.dynamics.crew import GAP_STEPS, TOUCHES_BLOCK, TOUCHES_PUSHER, TOUCHES_WALL, Crew, Mode, Rig
 from swarmpush.dynamics.host import Host
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
 SLOTS = 12  # open visits per body: six equal discs can touch one, two walls, the block, and some just parted
-GAP_STEPS = 2  # a contact that is missing for more steps than this has ended
-APPROACH = 0.005  # of the free speed; slower than this nothing arrives, it only presses
 
 
 # A visit. owner, partner: 0 block, then pushers from 1, then further blocks, then walls; partner -1: a free slot.
@@ -60,9 +58,9 @@ REAR = 1  # a visit's `face` is 0 unless it is on a block, and then the number o
 # What happens how much, step by step: summed up since the last sample of the path.
 SERIES = (
     "n_leaning",  # pushers leaning on the rear face
-    "leaning_share",  # whether there are any, whether their push exceeds what the floor holds, and whether the block
-    "strong_share",  # stands then, held by two walls
-    "jammed_share",
+    "leaning_share",  # whether there are any
+    "strong_share",  # whether the block moves then, or the push exceeds what the floor holds
+    "jammed_share",  # and whether it stands against such a push, held by two walls
     "n_ahead",  # pushers ahead of the block, touching a wall, touching another pusher, turning, halted, failed
     "n_at_wall",
     "n_at_pusher",
@@ -204,6 +202,8 @@ def _feel(
     if rig.half_arc < math.pi and nx * p.ux + ny * p.uy < math.cos(rig.half_arc):
         return
     p.touched_at = step
+    if p.has_reacted == 1 and nx * p.ux + ny * p.uy <= 0.0:
+        return  # it has turned away already, and is about to leave
     if p.mode == _SLIDE and -(nx * math.cos(p.percept_normal) + ny * math.sin(p.percept_normal)) > _SAME_SURFACE:
         return  # what it slides along is no bump
     if impulse > p.hardest:
@@ -323,6 +323,7 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ground: Ground, ledger: Led
                 block.step_y -= jy
                 block.gross += math.hypot(jx, jy)
                 if moves:
+                    block.is_pushed = 1
                     block.blocks_x -= jx
                     block.blocks_y -= jy
                     block.blocks_turn += owner_turn
@@ -350,6 +351,7 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ground: Ground, ledger: Led
                 block.step_y += jy
                 block.step_turn += partner_turn
                 block.gross += math.hypot(jx, jy)
+                block.is_pushed = 1
                 kind = 2
                 c, s = math.cos(motion[partner, 2]), math.sin(motion[partner, 2])
                 face = _face(sides, block.first_side, block.n_sides, c * nx + s * ny, c * ny - s * nx)
@@ -367,6 +369,7 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ground: Ground, ledger: Led
                     pushers[owner - 1].touches |= TOUCHES_WALL
                     totals.pusher_wall += lost
                 elif kind == 2:
+                    pushers[owner - 1].touches |= TOUCHES_BLOCK
                     totals.pusher_block += lost
                 else:
                     pushers[owner - 1].touches |= TOUCHES_PUSHER
@@ -380,7 +383,7 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ground: Ground, ledger: Led
                 visit.face = face
                 visit.heading = pushers[owner - 1].heading if 0 < owner <= n else before[owner, 2]
             lean = push
-            if approach > APPROACH:
+            if approach > ground.approach:
                 owner_arm, partner_arm = rx * ny - ry * nx, qx * ny - qy * nx
                 bare = inertia[owner, 0] + inertia[owner, 1] * owner_arm * owner_arm
                 stepped = inertia[owner, 2] + inertia[owner, 3] * owner_arm * owner_arm
@@ -398,8 +401,8 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ground: Ground, ledger: Led
             totals.overlap_max = max(totals.overlap_max, overlap)
             if partner == 0 and visit.face == REAR and lean > ground.lean_force * dt:
                 leaning += 1.0
-                push_of_all += pushers[owner - 1].thrust
-    _count(crew, ground, ledger, motion, leaning, push_of_all, wall_below and wall_above)
+                push_of_all += lean
+    _count(crew, ground, ledger, motion, leaning, push_of_all / dt, wall_below and wall_above)
 
 
 @inlined
@@ -433,7 +436,6 @@ def _count(
                 totals.n_at_wall += 1.0
             if p.touches & TOUCHES_PUSHER:
                 totals.n_at_pusher += 1.0
-            p.touches = 0
         if motion[i + 1, 0] > ahead_of:
             totals.n_ahead += 1.0
         if p.mode >= _TURN:
@@ -448,9 +450,10 @@ def _count(
         totals.n_leaning += leaning
         totals.leaning_share += 1.0
         totals.leaning_most = max(totals.leaning_most, leaning)
-        if push_of_all > block.floor_static:
+        is_at_rest = abs(motion[0, 3]) < ground.approach * 0.01
+        if push_of_all > block.floor_static or not is_at_rest:
             totals.strong_share += 1.0
-            if is_held and abs(motion[0, 3]) < APPROACH * 0.01:
+            if is_held and is_at_rest:
                 totals.jammed_share += 1.0
 
 
@@ -458,8 +461,8 @@ def _count(
 def balance_crew(host: Host, rig: Rig, crew: Crew, ledger: Ledger) -> None:
     """Work of the drives, and what drag took, in the step that has just been made.
 
-    The engine steps a body with the mass M' of `effective_mass` and the force F - g v, so the drag's impulse is
-    -(M' - M) dv - g v dt; likewise for turning.
+    The engine steps a body with some mass M' and force (see `crew.drive`), of which thrust and slope are known; the
+    rest of the force, and -(M' - M) dv, is the drag's impulse. Likewise for turning.
     """
     totals, pushers, dt = ledger.totals[0], crew.pushers, rig.dt
     before, motion = host.before, host.motion
@@ -479,7 +482,7 @@ def balance_crew(host: Host, rig: Rig, crew: Crew, ledger: Ledger) -> None:
             spin, after = before[i + 1, 5], motion[i + 1, 5]
             middle = 0.5 * (spin + after)
             heading += p.drive_torque * middle * dt
-            drag += (rig.turn_drag * spin * dt + (p.step_moment - p.moment) * (after - spin)) * middle
+            drag += ((p.drive_torque - p.torque) * dt + (p.step_moment - p.moment) * (after - spin)) * middle
         elif p.contact_turn != 0.0:
             heading -= p.contact_turn * motion[i + 1, 5]
     totals.drive += drive

@@ -165,7 +165,7 @@ def _before(host: Host, task: Task, step: int, is_answered: bool) -> int:
             return ending
     if react(host, rig, task.crew, task.program, task.senses, task.keys, task.around, step, is_answered) > 0:
         return _ASKED
-    drive(host, rig, task.crew, task.keys, step)
+    drive(host, rig, task.crew, task.ground.inertia, task.keys, step)
     order_blocks(host, task.ground, rig.dt)
     return _NOT_YET
 

@@ -128,6 +128,15 @@ def choose_step(s: Scenario) -> StepSettings:
     )
 
 
+def relaxed(x: float) -> float:
+    """(1 - exp(-x))/x: mean of exp(-t) from 0 to x.
+
+    >>> relaxed(0.0), round(relaxed(1.0), 6)
+    (1.0, 0.632121)
+    """
+    return -math.expm1(-x) / x if x > 0.0 else 1.0
+
+
 def effective_mass(mass: float, drag: float, dt: float) -> float:
     """The mass to step with under linear drag, so that explicit drag is exact in both limits.
 

@@ -17,10 +17,21 @@ from swarmpush.dynamics.steps import Units
 VisitArray = NDArray[np.void]
 
 
+def in_order(rows: VisitArray) -> VisitArray:
+    """Visits in order of time, then owner, then partner."""
+    return rows[np.lexsort((rows["partner"], rows["owner"], rows["first_step"]))]
+
+
+def surfaces(log: VisitArray, walls: Sequence[str], sides: Sequence[str], n_moving: int) -> NDArray[np.object_]:
+    """Names of the surfaces visited. walls, sides: those of the fixed sides, and of the blocks' sides."""
+    names = np.array(["pusher", *sides, *walls], dtype=object)
+    partner = log["partner"]
+    return np.asarray(names[np.where(partner >= n_moving, 1 + len(sides) + partner - n_moving, log["face"])])
+
+
 def visit_table(
-    rows: VisitArray,
-    walls: Sequence[str],
-    sides: Sequence[str],
+    log: VisitArray,
+    surface: NDArray[np.object_],
     n_pushers: int,
     n_moving: int,
     end_x: float,
@@ -30,27 +41,24 @@ def visit_table(
     """The visits of a run; see `Run.visits`.
 
     Arguments:
-        rows: records of `VISIT`, in any order.
-        walls, sides: names of the fixed sides, and of the blocks' sides.
+        log: records of `VISIT` in order.
+        surface: what each was on.
         n_pushers, n_moving: how many pushers, how many bodies that move.
         end_x: the struck block's place at the end, in engine units.
         step_s: time step.
     """
-    log = rows[np.lexsort((rows["partner"], rows["owner"], rows["first_step"]))]
     owner, partner = log["owner"], log["partner"]
     is_pusher, is_wall = (partner >= 1) & (partner <= n_pushers), partner >= n_moving
     kinds = np.where(is_wall, "wall", np.where(is_pusher, "pusher", "block"))
-    names = np.array(["pusher", *sides, *walls], dtype=object)
-    code = np.where(is_wall, 1 + len(sides) + partner - n_moving, log["face"])
     on_block = kinds == "block"
-    places = np.append(log["block_x_on"][on_block], end_x)[1:]  # of the block when it is next touched
+    places = np.append(log["block_x_on"][on_block], end_x)[1:]  # of the block when one is next touched
     until_next = np.full(len(log), np.nan)
     until_next[on_block] = places - log["block_x_off"][on_block]
     return pd.DataFrame(
         {
             "pusher": np.where((owner >= 1) & (owner <= n_pushers), owner - 1, -1),
             "partner": kinds.astype(object),
-            "surface": names[code],
+            "surface": surface,
             "other_pusher": np.where(is_pusher, partner - 1, -1),
             "t_on_s": log["first_step"] * step_s,
             "t_off_s": (log["last_step"] + 1.0) * step_s,
