@@ -1,12 +1,12 @@
-"""The sticking drawer's jump: a push a little nearer the middle moves the block, a little farther out it stands for good.
+"""The sticking drawer's jump: a push a little nearer the middle moves the block, a little farther out it jams for good.
 
 Diagonal corners D apart along the channel carry the moment of an axial push P at the offset q from the middle with
 P q/D each, and their friction holds 2 mu P q/D. The block stands, whatever P, if q >= D/(2 mu). (Statics, worked out
 here; for a small clearance it is the textbook's drawer, q >= l/(2 mu), as in Whitney, "Quasi-static assembly of
-compliantly supported rigid parts", J. Dyn. Syst. Meas. Control 104 (1982) 65.) No single push within the face gets so far
-out unless the corners lie in each other's friction cones, D < mu w. There statics leaves the forces open, so a push short
-of the jump is only known to be able to move the block. Pushers behind and ahead of it, on opposite sides of the middle,
-make a couple that reaches the jump well clear of that.
+compliantly supported rigid parts", J. Dyn. Syst. Meas. Control 104 (1982) 65.) No single push within the face gets so
+far out unless the corners lie in each other's friction cones, D < mu w. There statics leaves the forces open, so a push
+short of the jump is only known to be able to move the block. Pushers behind and ahead of it, on opposite sides of the
+middle, make a couple that reaches the jump well clear of that.
 """
 
 from __future__ import annotations

@@ -3,9 +3,9 @@
 With u the block's velocity relative to the pusher's at the contact, n the normal into the block, t = n turned left and
 B the inverse masses there, B_nn = sum(1/m + (r x n)^2/I), B_tt likewise with t, B_nt = sum (r x n)(r x t)/I, a contact
 that sticks takes P = -B^-1 ((1 + e) u_n, u_t). If that needs |P_t| > mu P_n it slides, s being the sense of u_t:
-P_t = -mu s P_n, P_n = -(1 + e) u_n/(B_nn - mu s B_nt). A pusher holds its heading, so its moment is infinite and it adds
-1/m to B_nn and B_tt alone. Sources: Wang and Mason, "Two-dimensional rigid-body collisions with friction", J. Appl.
-Mech. 59 (1992) 635; Brach, "Mechanical Impact Dynamics" (1991).
+P_t = -mu s P_n, P_n = -(1 + e) u_n/(B_nn - mu s B_nt). A pusher holds its heading, so its moment is infinite and it
+adds 1/m to B_nn and B_tt alone. Sources: Wang and Mason, "Two-dimensional rigid-body collisions with friction", J.
+Appl. Mech. 59 (1992) 635; Brach, "Mechanical Impact Dynamics" (1991).
 """
 
 from __future__ import annotations
@@ -45,7 +45,7 @@ class Impact:
 def approaching(
     aim: tuple[float, float], heading: float, restitution: float, friction: float, *, step: float = STEP
 ) -> Scenario:
-    """A pusher that runs up at `heading` to where its centre is at `aim` as it touches the free block, and then halts."""
+    """A pusher that runs up at `heading`, touches the free block with its centre at `aim`, and halts."""
     x, y = aim[0] - RUN_UP * math.cos(heading), aim[1] - RUN_UP * math.sin(heading)
     return rig(
         channel={"width": 4.0},

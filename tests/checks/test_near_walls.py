@@ -1,13 +1,14 @@
 """A sphere near walls at low Reynolds number, pushed along them: its drag from the published series, its motion here.
 
-The scenario takes a block's drag as given. Fed with the drag of a sphere near a wall, the body world must make of it the
-leaning speed of the force balance and the travel of an impulse over the drag.
+The scenario takes a block's drag as given. Fed with the drag of a sphere near a wall, the body world must make of it
+the leaning speed of the force balance and the travel of an impulse over the drag.
 """
 
 from __future__ import annotations
 
 import math
 from collections.abc import Callable
+from itertools import pairwise
 
 import pytest
 from rigs import PUSH_ON, pair, placed, rig
@@ -101,7 +102,7 @@ def test_leaning_near_walls(series: Callable[[float], float], x: float, factor: 
 @pytest.mark.xfail(
     strict=True,
     reason="the overlap that is left alone is 1.5 times the travel per step, so that from a step of a third of "
-    "radius/speed on it passes the half radius at which a run is broken off, but steps up to half of it are let through",
+    "radius/speed on it passes the half radius at which a run is broken off; steps up to half of it are let through",
 )
 def test_longest_step_that_is_allowed() -> None:
     """With the longest step that a scenario may set, half a radius over the speed, a lone pusher leans to the end."""
@@ -139,7 +140,7 @@ def test_travel_of_an_impulse(series: Callable[[float], float], x: float, factor
         assert run.travel_m * drag == pytest.approx(passed_on, rel=EXACT)  # exp(-25) of it is left
         errors.append(passed_on / (1.5 * 0.1 * hit["approach_m_s"] * mass / (0.1 + mass)) - 1)
     assert abs(errors[0]) < 2e-3 / 0.2  # the step over the pusher's relaxation time of 0.2 s
-    order = [math.log2(coarse / fine) for coarse, fine in zip(errors, errors[1:], strict=False)]
+    order = [math.log2(coarse / fine) for coarse, fine in pairwise(errors)]
     assert order == pytest.approx([1.0, 1.0], abs=0.1)  # the second-order term is a hundredth of the first
     nudge = swarmpush.plan(run.scenario.replace(forecast={"law": "impact"}), n_starts=1).travel.nudge_m
     assert nudge * drag == pytest.approx(1.5 * 0.1 * mass / (0.1 + mass), rel=EXACT)  # at the free speed of 1 m/s
