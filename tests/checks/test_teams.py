@@ -64,8 +64,8 @@ def final_speed(run: Run) -> float:
     return float(run.block["vx_m_s"].iloc[-1])
 
 
-# static and kinetic friction, and the smallest team that sets the block off: mu_s W/F = 1.77, 4.51, 6.87, 6.87
-FLOORS = ((0.09, 0.05, 2), (0.23, 0.15, 5), (0.35, 0.35, 7), (0.35, 0.08, 7))
+# static and kinetic friction, and the smallest team that sets the block off: mu_s W/F = 1.03, 4.04, 6.87, 6.87
+FLOORS = ((0.0525, 0.03, 2), (0.206, 0.13, 5), (0.35, 0.35, 7), (0.35, 0.08, 7))
 
 
 @pytest.mark.parametrize(("static", "kinetic", "enough"), FLOORS)
