@@ -19,7 +19,6 @@ from rigs import PUSH_ON, pair, placed, rig
 from test_jamming import tilt
 
 import swarmpush
-from swarmpush.dynamics.run import Run
 from swarmpush.scenario import Scenario
 
 TIP, FREE_SPEED = 0.002, 0.2  # m, radius of the pushers; m/s
@@ -63,7 +62,7 @@ def drawer(
     )  # fmt: skip
 
 
-def offsets(run: Run) -> np.ndarray:
+def offsets(run: swarmpush.Run) -> np.ndarray:
     """How far out each push acts at the end, towards the side that turns the block on, m."""
     last = run.pushers[run.pushers["t_s"] == run.pushers["t_s"].max()]
     facing = np.cos(last["heading_rad"].to_numpy())

@@ -144,3 +144,32 @@ def test_travel_of_an_impulse(series: Callable[[float], float], x: float, factor
     assert order == pytest.approx([1.0, 1.0], abs=0.1)  # the second-order term is a hundredth of the first
     nudge = swarmpush.plan(run.scenario.replace(forecast={"law": "impact"}), n_starts=1).travel.nudge_m
     assert nudge * drag == pytest.approx(1.5 * 0.1 * mass / (0.1 + mass), rel=EXACT)  # at the free speed of 1 m/s
+
+
+@pytest.mark.parametrize("step", [5e-3, 2e-4])
+@pytest.mark.parametrize(("grip", "heading"), [(0.0, 0.0), (0.5, 0.3)])
+def test_turn_of_an_impulse(grip: float, heading: float, step: float) -> None:
+    """After an off-centre impulse the block turns by its moment over the yaw drag, and travels as if hit in the middle.
+
+    Forwards and sideways J/g, round L/g_yaw with L = r x J, to rounding at any step (integral of I dw = -g_yaw w dt).
+    """
+    drag, yaw_drag, y = 3.0 * one_wall(0.5), 0.02, 1.5
+    s = rig(
+        channel={"width": 2 * y},
+        block={"length": 0.1, "width": 0.2},
+        pushers={"stall_force": 0.5},
+        contacts={"pusher_block": pair(0.5, grip)},
+        fluid={"block_drag": drag, "block_yaw_drag": yaw_drag},
+        start=placed((3.6, y + 0.04 - 0.38 * math.tan(heading), heading)),
+        goal={"travel": 3.0, "time_limit": 12.0},
+        numerics={"step": step},
+    )
+    run = swarmpush.simulate(s, cycles=())
+    assert len(run.visits) == 1
+    hit, last = run.visits.iloc[0], run.block.iloc[-1]
+    forwards, sideways = hit["impact_Ns"] + hit["lean_Ns"], -hit["tangential_Ns"]
+    moment = -(hit["y_m"] - y) * forwards - 0.05 * sideways
+    assert abs(moment) > 1e-3
+    assert run.travel_m * drag == pytest.approx(forwards, rel=EXACT)
+    assert (last["y_m"] - y) * drag == pytest.approx(sideways, abs=EXACT * forwards)
+    assert last["yaw_rad"] * yaw_drag == pytest.approx(moment, rel=EXACT)

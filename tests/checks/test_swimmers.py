@@ -10,7 +10,6 @@ from numpy.typing import NDArray
 from rigs import placed, rig
 
 import swarmpush
-from swarmpush.dynamics.run import Run
 from swarmpush.scenario import Scenario
 
 ROOM = 100.0  # m: they start about the middle of it, and run at 1 m/s for some seconds
@@ -36,7 +35,7 @@ def in_the_open(
     )
 
 
-def positions(run: Run) -> tuple[NDArray[np.float64], NDArray[np.complex128]]:
+def positions(run: swarmpush.Run) -> tuple[NDArray[np.float64], NDArray[np.complex128]]:
     """Times, and places as x + i y from each one's start: (samples, pushers).
 
     A start from rest costs the way of one step, because positions move with the velocity of the step before; times are
@@ -104,14 +103,14 @@ AN_INTERVAL = (
 
 
 @pytest.fixture(scope="module", params=SWIMMERS, ids=lambda case: "diffusion {}, drift {}".format(*case))
-def school(request: pytest.FixtureRequest) -> Run:
+def school(request: pytest.FixtureRequest) -> swarmpush.Run:
     """Pushers that wander in the open."""
     diffusion, drift, time = request.param
     s = in_the_open(N, time, lag=1e-4, heading_diffusion=diffusion, heading_drift=drift)
     return swarmpush.simulate(s, cycles=())
 
 
-def decay_of(run: Run) -> complex:
+def decay_of(run: swarmpush.Run) -> complex:
     """D_r - i omega: what the mean heading vector decays and turns with; D_r is half the diffusion squared."""
     return run.scenario.errors.heading_diffusion**2 / 2 - 1j * run.scenario.errors.heading_drift
 
@@ -119,7 +118,7 @@ def decay_of(run: Run) -> complex:
 LOOKED_AT = (1, 2, 5, 10, 20, 40)  # samples
 
 
-def test_mean_square_displacement(school: Run) -> None:
+def test_mean_square_displacement(school: swarmpush.Run) -> None:
     """The mean square displacement is 2 v^2 Re[(t - (1 - exp(-c t))/c)/c], c = D_r - i omega.
 
     Without drift it is 2 v^2 tau^2 (t/tau + exp(-t/tau) - 1), tau = 1/D_r: the active Brownian particle in two
@@ -136,7 +135,7 @@ def test_mean_square_displacement(school: Run) -> None:
         assert squares.mean() == pytest.approx(expected, abs=error), f"t = {t} s"
 
 
-def test_mean_path(school: Run) -> None:
+def test_mean_path(school: swarmpush.Run) -> None:
     """The mean path is v (1 - exp(-c t))/c in the complex plane: a spiral that closes in, straight without drift.
 
     Source: van Teeffelen and Loewen, Phys. Rev. E 78 (2008) 020101(R), who name it the spira mirabilis.
@@ -150,7 +149,7 @@ def test_mean_path(school: Run) -> None:
             assert found.mean() == pytest.approx(part, abs=error), f"t = {times[k]} s"
 
 
-def test_effective_diffusion(school: Run) -> None:
+def test_effective_diffusion(school: swarmpush.Run) -> None:
     """Late, the mean square displacement grows by 4 D t with D = v^2/2 Re(1/c): v^2 tau/2 without drift."""
     times, places = positions(school)
     c = decay_of(school)
