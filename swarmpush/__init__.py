@@ -16,7 +16,9 @@ from typing import TYPE_CHECKING, Any
 if TYPE_CHECKING:
     from swarmpush.auditing.audit import Audit, audit
     from swarmpush.demos import demo
+    from swarmpush.dynamics.plugin import Crew, Drive, attach
     from swarmpush.dynamics.run import Run
+    from swarmpush.dynamics.steps import Units
     from swarmpush.dynamics.world import simulate
     from swarmpush.kinematics.basins import basin_map
     from swarmpush.kinematics.cycle_map import cycle_map
@@ -29,10 +31,14 @@ if TYPE_CHECKING:
 
 __all__ = [
     "Audit",
+    "Crew",
+    "Drive",
     "Plan",
     "Run",
     "Scenario",
     "ScenarioError",
+    "Units",
+    "attach",
     "audit",
     "basin_map",
     "cycle_map",
@@ -47,10 +53,14 @@ __all__ = [
 
 _HOME = {
     "Audit": "swarmpush.auditing.audit",
+    "Crew": "swarmpush.dynamics.plugin",
+    "Drive": "swarmpush.dynamics.plugin",
     "Plan": "swarmpush.kinematics.planning",
     "Run": "swarmpush.dynamics.run",
     "Scenario": "swarmpush.scenario",
     "ScenarioError": "swarmpush.problems",
+    "Units": "swarmpush.dynamics.steps",
+    "attach": "swarmpush.dynamics.plugin",
     "audit": "swarmpush.auditing.audit",
     "basin_map": "swarmpush.kinematics.basins",
     "cycle_map": "swarmpush.kinematics.cycle_map",

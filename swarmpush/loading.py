@@ -507,7 +507,7 @@ def _step_misfits(s: Scenario) -> Iterator[Problem]:
     if step is not None and step > most:
         yield Problem(
             "numerics.step",
-            f"in {for_people(step, 's')} a pusher runs more than a quarter of its radius; at most {for_people(most, 's')}",
+            f"in {for_people(step, 's')} it runs more than a quarter of its radius; at most {for_people(most, 's')}",
         )
 
 

@@ -36,6 +36,8 @@ BLOCK_STATE = np.dtype(
         ("floor_x", "f8"), ("floor_y", "f8"), ("floor_turn", "f8"),
         ("is_pushed", "i8"),  # whether pushers or other blocks touched it in the last step, and
         ("was_pushed", "i8"),  # in the step before
+        ("passed_on", "f8"),  # of the floor's pull in the last step: share that a hit on the resting block made up
+        ("relief", "f8"),  # by how much the floor's force is smaller in this step, see `balance_blocks`
         # contact impulse of this step
         ("step_x", "f8"), ("step_y", "f8"), ("step_turn", "f8"),
         # the books: impulses so far by pushers, other blocks, walls, floor, drag and slope
@@ -132,7 +134,8 @@ def _order_floor(
     swivel = arm * spin
     total = math.sqrt(px * px + py * py + swivel * swivel)
     b.floor_x = b.floor_y = b.floor_turn = 0.0
-    kinetic = b.floor_kinetic
+    kinetic = max(b.floor_kinetic - b.relief, 0.0)
+    b.relief = 0.0
     stops = kinetic * dt / b.step_mass
     if b.moment > 0.0:
         stops = max(stops, kinetic * dt * arm * arm / b.step_moment)
@@ -167,6 +170,10 @@ def balance_blocks(host: Host, ground: Ground, dt: float) -> tuple[float, float,
     -(M' - M) dv - g v dt, and what is then left of M dv after the contacts' impulses must come from the floor: zero
     without one, else its force while the block slides, plus an impulse as large as the floor's joints say by
     themselves. The same holds for turning, about the centre of mass.
+
+    In the step in which a block at rest is hit, the joints act through the whole step and with static friction, and
+    the contact, bent on its restitution, makes up for a part of that. An impact comes half-way through a step on
+    average and meets kinetic friction: what was too much is let off in the next step.
     """
     before, motion, load = host.before, host.motion, host.floor_load
     blocks = ground.blocks
@@ -185,17 +192,23 @@ def balance_blocks(host: Host, ground: Ground, dt: float) -> tuple[float, float,
         joint_x, joint_y = left_x - b.floor_x * dt, left_y - b.floor_y * dt
         joint = load[k, 0] if ground.has_floor else 0.0
         b.residual += abs(math.hypot(joint_x, joint_y) - joint)
-        drag_turn, left_turn = 0.0, 0.0
+        drag_turn, left_turn, torque = 0.0, 0.0, 0.0
         if b.moment > 0.0:
             drag_turn = b.drag_turn * dt - (b.step_moment - b.moment) * dspin
             left_turn = b.moment * dspin - drag_turn - b.step_turn
             c, s = math.cos(motion[m, 2]), math.sin(motion[m, 2])
             fx, fy = c * b.footing_x - s * b.footing_y, s * b.footing_x + c * b.footing_y
             twist = left_turn - b.floor_turn * dt - (fx * joint_y - fy * joint_x)
+            torque = abs(twist)
             b.residual_turn += abs(abs(twist) - (load[k, 1] if ground.has_floor else 0.0))
             b.gross_turn += abs(b.step_turn)
             drag -= drag_turn * mspin
             b.liquid_turn += drag_turn
+        if b.passed_on > 0.0:
+            if motion[m, 3] * motion[m, 3] + motion[m, 4] * motion[m, 4] > _REST * _REST:
+                took = math.hypot(joint, torque / b.floor_arm) / dt
+                b.relief = max((1.0 - b.passed_on) * took - 0.5 * b.floor_kinetic, 0.0)
+            b.passed_on = 0.0
         if ground.has_floor:
             b.ground_x += left_x
             b.ground_y += left_y

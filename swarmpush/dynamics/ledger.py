@@ -166,7 +166,7 @@ def _slot(slots: NDArray[np.void], n_open: IntArray, owner: int, partner: int) -
             free = k
     if free >= 0:
         visit = slots[owner, free]
-        visit.owner, visit.partner, visit.first_step = owner, partner, -1
+        visit.owner, visit.partner, visit.first_step, visit.last_step = owner, partner, -1, -1
         visit.impact = visit.lean = visit.tangential = visit.energy = visit.overlap = 0.0
         n_open[owner] += 1
     return free
@@ -391,6 +391,12 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ground: Ground, ledger: Led
                     bare += inertia[partner, 0] + inertia[partner, 1] * partner_arm * partner_arm
                     stepped += inertia[partner, 2] + inertia[partner, 3] * partner_arm * partner_arm
                 lean -= max(push - max(drive, 0.0), 0.0) * stepped / bare
+                if visit.last_step < 0 and kind == 2:
+                    speed = math.hypot(before[partner, 3], before[partner, 4])
+                    if max(speed, abs(before[partner, 5])) < ground.approach * 0.01:
+                        yields = inertia[partner, 2] + inertia[partner, 3] * partner_arm * partner_arm
+                        block = blocks[partner if partner == 0 else partner - n]
+                        block.passed_on = max(block.passed_on, yields / stepped)
             visit.impact += push - lean
             visit.lean += lean
             visit.tangential += jx * ny - jy * nx

@@ -93,8 +93,8 @@ def attach(
 
     Returns:
         A `Crew`: call its `step` in place of `space.step`. Until `detach`, the mass of a pusher in touch (and the
-        moment of a free heading) holds the drag of one step, a held heading has an infinite moment, no pair's impulse is
-        carried over from an earlier touch (`collision_persistence` is 1), and nothing falls asleep.
+        moment of a free heading) holds the drag of one step, a held heading has an infinite moment, no pair's impulse
+        is carried over from an earlier touch (`collision_persistence` is 1), and nothing falls asleep.
 
     Raises:
         ValueError: when the arguments do not fit together.
@@ -196,11 +196,12 @@ class Crew:
         self._watched = watched
         named = {body: name for name, body in watched.items()}
         others = [b for b in space.bodies if b.body_type != pymunk.Body.STATIC and b not in set(pushers)]
-        others.sort(key=lambda body: body not in named)
+        others.sort(key=lambda body: body not in named)  # watched ones first
         self._stand_in = pymunk.Body(1.0, 1.0)  # takes the block's place in a world without one
         blocks = others or [self._stand_in]
         static = [space.static_body, *(b for b in space.bodies if b.body_type == pymunk.Body.STATIC)]
         self._partners = [blocks[0], *pushers, *blocks[1:], *static]
+        named |= dict.fromkeys(pushers, "pusher")
         self._names = [_name(body, named, k) for k, body in enumerate(self._partners)]
         self._blocks, self._step, self._log, self._is_attached = blocks, 0, VisitLog(), True
         self._asker: Asker | None = None

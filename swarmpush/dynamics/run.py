@@ -86,9 +86,9 @@ class Run:
         block_dx_next_m from then until a block is next touched (NaN for visits elsewhere), energy_lost_J, overlap_m.
     block: path of the block: t_s, x_m, y_m (of its centre of mass), yaw_rad, vx_m_s; then what happened since the last
         row, as means over time: n_leaning (pushers leaning on the rear face), leaning_share, strong_share,
-        jammed_share (of time with pushers leaning, of these with a block that moves or enough push for the floor, and
-        with a block that stands against such a push between walls), n_ahead, n_at_wall, n_at_pusher, n_turning, n_halted, n_failed, and n_leaning_most;
-        of further blocks x_2_m, y_2_m, yaw_2_rad and so on.
+        jammed_share (of time with pushers leaning, of these with a block that moves or enough push for the floor,
+        and with a block that stands against such a push between walls), n_ahead, n_at_wall, n_at_pusher,
+        n_turning, n_halted, n_failed, and n_leaning_most; of further blocks x_2_m, y_2_m, yaw_2_rad and so on.
     pushers: path of the pushers: t_s, pusher, x_m, y_m, heading_rad, mode.
     bumps, laps: see `bumps.py`.
     """

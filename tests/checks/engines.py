@@ -15,6 +15,7 @@ from typing import Any, NamedTuple
 import numpy as np
 import pytest
 from numpy.typing import NDArray
+from rigs import plate_moment
 from scipy.optimize import brentq
 
 from swarmpush.scenario import Pair, Scenario
@@ -143,7 +144,7 @@ def mujoco_model(s: Scenario, dt: float) -> str:
         <worldbody>
           {"".join(f'<geom name="{name}" type="plane" size="1 1 1" {where} {alone}/>' for name, where in walls.items())}
           <body pos="{x} {y} 0">
-            <inertial pos="0 0 0" mass="{b.mass}" diaginertia="{b.moment} {b.moment} {b.moment}"/>
+            <inertial pos="0 0 0" mass="{b.mass}" diaginertia="{plate_moment(s)} {plate_moment(s)} {plate_moment(s)}"/>
             <joint type="slide" axis="1 0 0" damping="{drag}" {rubs}/>
             <joint type="slide" axis="0 1 0" damping="{drag}" {rubs}/>
             {yaw}
@@ -226,7 +227,7 @@ def box2d_rig(s: Scenario, home: FloatArray) -> Box2DRig:
         walls.CreatePolygonFixture(box=(*half, middle, 0.0))
     block = world.CreateDynamicBody(fixedRotation=b.yaw == "held", userData=BLOCK)
     block.CreatePolygonFixture(box=(u * b.length / 2 - SKIN, u * b.width / 2 - SKIN), density=1.0)
-    block.massData = b2.b2MassData(mass=b.mass, I=b.moment * u**2)
+    block.massData = b2.b2MassData(mass=b.mass, I=plate_moment(s) * u**2)
     if s.floor:
         holds = s.floor.kinetic_friction * b.mass * s.floor.gravity * u
         middles = {"localAnchorA": (0, 0), "localAnchorB": (0, 0)}

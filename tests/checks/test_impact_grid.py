@@ -17,7 +17,7 @@ from dataclasses import dataclass
 import numpy as np
 import pytest
 from numpy.typing import NDArray
-from rigs import pair, placed, rig
+from rigs import pair, placed, plate_moment, rig
 
 import swarmpush
 from swarmpush.scenario import Scenario
@@ -62,7 +62,7 @@ def approaching(
 def solve(s: Scenario, normal: NDArray[np.float64], arm: NDArray[np.float64], velocity: NDArray[np.float64]) -> Impact:
     """The algebraic solution for a pusher that arrives at `velocity`, with `arm` from the block's centre."""
     tangent = np.array([-normal[1], normal[0]])
-    inertia, law = s.block.moment, s.contacts.pusher_block
+    inertia, law = plate_moment(s), s.contacts.pusher_block
     n_arm, t_arm = (arm[0] * way[1] - arm[1] * way[0] for way in (normal, tangent))
     bare = 1 / s.pushers.mass + 1 / s.block.mass
     b_nn, b_tt, b_nt = bare + n_arm**2 / inertia, bare + t_arm**2 / inertia, n_arm * t_arm / inertia
@@ -97,8 +97,8 @@ def compare(s: Scenario, corner: NDArray[np.float64] | None = None) -> bool:
     assert run.books.pushers == pytest.approx(on_block, abs=IN_A_STEP)
     after = run.block[run.block["t_s"] > hit["t_off_s"]]
     spin, vy = (np.polyfit(after["t_s"], after[name], 1)[0] for name in ("yaw_rad", "y_m"))
-    assert spin * s.block.moment / HALF_WIDTH == pytest.approx(
-        expected.spin * s.block.moment / HALF_WIDTH, abs=IN_A_STEP
+    assert spin * plate_moment(s) / HALF_WIDTH == pytest.approx(
+        expected.spin * plate_moment(s) / HALF_WIDTH, abs=IN_A_STEP
     )
     assert s.block.mass * after["vx_m_s"].iloc[0] == pytest.approx(on_block[0], abs=IN_A_STEP)
     assert s.block.mass * vy == pytest.approx(on_block[1], abs=IN_A_STEP)

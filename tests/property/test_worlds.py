@@ -154,7 +154,8 @@ def _factor(unit: str, length: float, time: float, mass: float) -> float:
     force = mass * length / time**2
     return {
         "m": length, "s": time, "kg": mass, "kg*m^2": mass * length**2, "m/s": length / time, "rad/s": 1 / time,
-        "N": force, "J": force * length, "N*s": force * time, "N*s/m": mass / time, "N*m*s": force * length * time, "rad": 1.0,
+        "N": force, "J": force * length, "N*s": force * time, "N*s/m": mass / time,
+        "N*m*s": force * length * time, "rad": 1.0,
         "rad/sqrt(s)": time**-0.5, "1/s": 1 / time, "1": 1.0, "Pa*s": mass / length / time, "kg/m^3": mass / length**3,
         "m/s^2": length / time**2,
     }[unit]  # fmt: skip
