@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from swarmpush.auditing.audit import Audit, audit
+    from swarmpush.auditing.converge import Convergence, converge
     from swarmpush.demos import demo
     from swarmpush.dynamics.run import Run
     from swarmpush.dynamics.world import simulate
@@ -29,12 +30,14 @@ if TYPE_CHECKING:
 
 __all__ = [
     "Audit",
+    "Convergence",
     "Plan",
     "Run",
     "Scenario",
     "ScenarioError",
     "audit",
     "basin_map",
+    "converge",
     "cycle_map",
     "demo",
     "load",
@@ -47,12 +50,14 @@ __all__ = [
 
 _HOME = {
     "Audit": "swarmpush.auditing.audit",
+    "Convergence": "swarmpush.auditing.converge",
     "Plan": "swarmpush.kinematics.planning",
     "Run": "swarmpush.dynamics.run",
     "Scenario": "swarmpush.scenario",
     "ScenarioError": "swarmpush.problems",
     "audit": "swarmpush.auditing.audit",
     "basin_map": "swarmpush.kinematics.basins",
+    "converge": "swarmpush.auditing.converge",
     "cycle_map": "swarmpush.kinematics.cycle_map",
     "demo": "swarmpush.demos",
     "load": "swarmpush.loading",

@@ -6,6 +6,7 @@ import math
 
 from swarmpush.auditing.audit import RungResult
 from swarmpush.auditing.statistics import Estimate
+from swarmpush.auditing.step_effect import StepMean
 from swarmpush.auditing.verdicts import Finding
 from swarmpush.quantities import for_people, prefix_for
 
@@ -66,3 +67,13 @@ def finding_row(finding: Finding) -> dict[str, str]:
         "interval": interval(finding.measured, finding.unit),
         "verdict": str(finding.verdict),
     }
+
+
+def mean_and_error(mean: StepMean, unit: str) -> str:
+    """A mean with its standard error, both with the same prefix; alone where a single run gives no error."""
+    if math.isnan(mean.standard_error):
+        return number(mean.mean, unit)
+    if unit.startswith("share"):
+        return f"{number(mean.mean, unit)} ± {number(mean.standard_error, unit)}"
+    factor, prefix = (1.0, "") if unit.startswith("1") else prefix_for(max(abs(mean.mean), mean.standard_error))
+    return f"{mean.mean / factor:.3g} ± {mean.standard_error / factor:.2g} {prefix}{unit}"
