@@ -94,9 +94,10 @@ class Convergence:
     @property
     def answer(self) -> str:
         """What the step does, in words: what is resolved and large, resolved and small, or not to be told."""
-        n, dt, finest = self.steps[0].n, self.steps[0].dt_s, self.steps[-1].dt_s
+        n = self.steps[0].n
+        dt, finest = (for_people(self.steps[k].dt_s, "s") for k in (0, -1))
         runs = f"{n} seeds" if n > 1 else "one run" if self.is_drawn else "one run, as nothing is left to chance"
-        told = [f"Step {for_people(dt, 's')} against {for_people(finest, 's')}, {runs}."]
+        told = [f"Step {dt} against {'the limit of shorter ones' if self.has_limit else finest}, {runs}."]
         for effect, words in EFFECT_WORDS.items():
             those = [e for e in self.effects if e.effect is effect and e.is_measured]
             if those:
@@ -108,8 +109,8 @@ class Convergence:
         stuck = [e.quantity for e in self.effects if e.effect is Effect.LARGE and not e.is_shrinking]
         if stuck:
             told.append(
-                f"The second halving changes {', '.join(stuck)} about as much as the first, so that no finer step is "
-                "suggested: what is counted there may itself depend on the step."
+                f"The second halving changes {', '.join(stuck)} as much as the first, or nearly so, and therefore no "
+                "finer step is suggested: what is counted there may itself depend on the step."
             )
         speed = self.effects[0]
         if speed.replicates_to_tell > n:

@@ -97,7 +97,7 @@ class StepEffect:
             return f"{self.quantity}: no run has a value at all steps"
         head = f"{self.quantity}: {EFFECT_WORDS[self.effect]}"
         if not math.isfinite(self.bound):
-            return f"{head}, and one run sets no bound"
+            return f"{head}, one run sets no bound"
         at_most = f"at most {self._sized(self.bound)}"
         if self.effect is Effect.UNTOLD:
             return f"{head}, {at_most}"

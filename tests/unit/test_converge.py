@@ -73,6 +73,15 @@ def test_one_run_of_a_crowd_is_told_apart(crowd: Scenario) -> None:
     assert "only a mean over seeds can converge" in found.answer
 
 
+def test_a_run_without_chance(crowd: Scenario) -> None:
+    """A cart alone, placed and without errors, is run once at each step and judged against the limit."""
+    found = converge(lone(crowd))
+    assert [step.n for step in found.steps] == [1, 1, 1]
+    assert found.has_limit
+    assert "against the limit of shorter ones, one run, as nothing is left to chance." in found.answer
+    assert found.effects[0].effect is Effect.SMALL
+
+
 def test_numbers_that_follow_the_steps(halved: Convergence) -> None:
     """Means are those of the table, and the worst books are reported for each step."""
     speed = halved.effects[0]
@@ -123,7 +132,7 @@ def test_a_count_that_does_not_settle(crowd: Scenario, halved: Convergence) -> N
         runs.loc[runs["step"] == key, "nudge_m"] = 1.0 if key == "step" else 0.5
     found = find_convergence(crowd, runs)
     assert found.suggested_step_s is None
-    assert "The second halving changes strike rate about as much as the first" in found.answer
+    assert "The second halving changes strike rate as much as the first" in found.answer
     assert "Set step" not in found.answer
 
 
