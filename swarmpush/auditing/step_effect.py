@@ -100,7 +100,9 @@ class StepEffect:
             return f"{head}, one run sets no bound"
         at_most = f"at most {self._sized(self.bound)}"
         if self.effect is Effect.UNTOLD:
-            return f"{head}, {at_most}"
+            least = min(abs(self.judged.low), abs(self.judged.high))
+            is_seen = self.judged.low * self.judged.high > 0.0
+            return f"{head}, {at_most}" + (f" and at least {self._sized(least)}" if is_seen else "")
         size = self._sized(self.judged.mean)
         return f"{head}, {size} and {at_most}" if self.bound > 0.0 else f"{head}, nothing changes"
 
