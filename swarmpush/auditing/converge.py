@@ -26,6 +26,7 @@ from swarmpush.routine import Depart, Device
 from swarmpush.scenario import Scenario
 
 MOST_BY_DEFAULT = 8  # replicates; a run at a quarter of the step takes four times as long
+STEADY_ERRORS = {"turn_bias", "heading_drift", "bearing_step", "fade_time"}  # the same in every run; all others draw
 KEYS = ("step", "step/2", "step/4")
 QUANTITIES = {
     "block_speed_m_s": ("block speed", "m/s"),
@@ -305,14 +306,10 @@ def count_replicates(s: Scenario, replicates: int | None) -> int:
 
 def draws_something(s: Scenario) -> bool:
     """Whether a run depends on its seed: by starts, errors, unit spreads, or chance in the routine."""
-    e = s.errors
-    by_error = (
-        e.turn_sd, e.heading_diffusion, e.bearing_sd, e.range_sd, e.missed_sights, e.missed_bumps, e.false_bumps,
-        e.speed_spread, e.mass_spread,
-    )  # fmt: skip
+    by_error = any(value for name, value in s.errors if name not in STEADY_ERRORS)
     acts = [act for stage in s.routine.stages for act in stage.acts]
     is_spread = any(isinstance(act, Depart) and act.spread > 0.0 for act in acts)
-    return s.start.placed is None or any(by_error) or is_spread or Device.RANDOM in s.routine.kit()
+    return s.start.placed is None or by_error or is_spread or Device.RANDOM in s.routine.kit()
 
 
 def _story(run: Run) -> str:
