@@ -109,10 +109,19 @@ class StepEffect:
     def _sized(self, value: float) -> str:
         """A change in its unit and as a share of the value at the finest step."""
         if self.unit == SHARE:
-            return f"{100.0 * value:.2g} points"
+            return f"{two_digits(100.0 * value)} points"
         text = f"{value:.3g} {self.unit}" if self.unit.startswith("1") else for_people(value, self.unit)
         reference = abs(self.at_steps[-1].mean)
-        return f"{text} ({100.0 * value / reference:.2g} %)" if reference > 0.0 else text
+        return f"{text} ({two_digits(100.0 * value / reference)} %)" if reference > 0.0 else text
+
+
+def two_digits(value: float) -> str:
+    """A number with two digits, or all those before the point.
+
+    >>> two_digits(0.0123), two_digits(148.2)
+    ('0.012', '148')
+    """
+    return f"{value:.2g}" if abs(value) < 99.5 else f"{value:.0f}"
 
 
 def step_effect(

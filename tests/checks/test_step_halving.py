@@ -74,7 +74,6 @@ def test_a_lone_cart_on_its_lap() -> None:
     for name in ("block speed", "strike rate", "nudge", "lap time"):
         assert effects[name].effect is Effect.SMALL
     assert effects["nudge"].difference.high < 0.0
-    assert effects["nudge"].bound < 0.05 * effects["nudge"].at_steps[-1].mean  # the step rule's own measure, 1/20
 
 
 @pytest.mark.parametrize("name", ["vibration_duct", "loading_bay"])

@@ -120,7 +120,7 @@ def test_a_large_effect_brings_its_remedy(crowd: Scenario, halved: Convergence) 
     assert found.effects[0].effect is Effect.LARGE
     assert found.suggested_step_s is not None
     assert found.suggested_step_s < found.settings.dt_s
-    assert "resolved and large for block speed: 500 mm/s (1e+02 %)" in found.answer
+    assert "resolved and large for block speed: 500 mm/s (100 %)" in found.answer
     assert f'Set step = "{found.suggested_step_s * 1e6:.3g} us" under [numerics]' in found.answer
 
 
