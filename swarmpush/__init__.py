@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from swarmpush.auditing.audit import Audit, audit
+    from swarmpush.auditing.converge import Convergence, converge
     from swarmpush.demos import demo
     from swarmpush.dynamics.plugin import Crew, Drive, attach
     from swarmpush.dynamics.run import Run
@@ -31,6 +32,7 @@ if TYPE_CHECKING:
 
 __all__ = [
     "Audit",
+    "Convergence",
     "Crew",
     "Drive",
     "Plan",
@@ -41,6 +43,7 @@ __all__ = [
     "attach",
     "audit",
     "basin_map",
+    "converge",
     "cycle_map",
     "demo",
     "load",
@@ -55,6 +58,7 @@ _HOME = {
     "Audit": "swarmpush.auditing.audit",
     "Crew": "swarmpush.dynamics.plugin",
     "Drive": "swarmpush.dynamics.plugin",
+    "Convergence": "swarmpush.auditing.converge",
     "Plan": "swarmpush.kinematics.planning",
     "Run": "swarmpush.dynamics.run",
     "Scenario": "swarmpush.scenario",
@@ -63,6 +67,7 @@ _HOME = {
     "attach": "swarmpush.dynamics.plugin",
     "audit": "swarmpush.auditing.audit",
     "basin_map": "swarmpush.kinematics.basins",
+    "converge": "swarmpush.auditing.converge",
     "cycle_map": "swarmpush.kinematics.cycle_map",
     "demo": "swarmpush.demos",
     "load": "swarmpush.loading",

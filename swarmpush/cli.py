@@ -11,6 +11,8 @@ import os
 import shutil
 import sys
 import textwrap
+from collections.abc import Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
 
@@ -26,7 +28,7 @@ if TYPE_CHECKING:
     from swarmpush.scenario import Scenario
 
 BAD_INPUT, NOT_MET, INTERRUPTED = 2, 3, 130
-RESULTS = Path("results")  # where an audit goes that is not told where
+RESULTS = Path("results")  # where results of many runs go when no folder is named
 JOURNAL = "unfinished.jsonl"
 
 app = typer.Typer(
@@ -125,15 +127,38 @@ def plan(
 def run(
     scenario: ScenarioArgument,
     seed: Seed = None,
+    converging: Annotated[
+        bool,
+        typer.Option(
+            "--converge",
+            help="instead run the same seeds at the time step, half and a quarter of it, and say what the step costs; "
+            "without --out into a new folder, results/NAME-converge",
+        ),
+    ] = False,
+    replicates: Annotated[
+        int | None,
+        typer.Option(
+            min=1,
+            max=100_000,
+            help="with --converge: seeds; default: the scenario's trial.replicates up to 8, or 1 if nothing is drawn",
+        ),
+    ] = None,
     as_json: AsJson = False,
     out: OutFolder = None,
     force: Force = False,
 ) -> None:
-    """Run the scenario once with rigid bodies, and balance the books."""
+    """Run the scenario once with rigid bodies, and balance the books; or with --converge see what the step costs."""
     import swarmpush
     from swarmpush.output import claim_folder
 
+    if replicates is not None and not converging:
+        raise _Refusal("--replicates goes with --converge; a run is one run, and 'swarmpush audit' makes many")
     s = _load(scenario)
+    if converging:
+        _converge(
+            s if seed is None else s.replace(trial={"seed": seed}), _stem(scenario), replicates, as_json, out, force
+        )
+        return
     folder = claim_folder(out, force=force) if out else None
     with _preparing(as_json) as bar:
         result = swarmpush.simulate(s, seed=seed, progress=lambda share: bar(share, 1.0, "running"))
@@ -148,6 +173,28 @@ def run(
     console.show_run(result)
     if folder:
         console.say_where(folder / "run.json", folder / "report.html")
+
+
+def _converge(s: Scenario, stem: str, replicates: int | None, as_json: bool, out: Path | None, force: bool) -> None:
+    import swarmpush
+    from swarmpush.auditing.converge import count_replicates
+
+    try:
+        n = count_replicates(s, replicates)
+    except ValueError as error:
+        raise _Refusal(f"--replicates: {error}") from None
+    folder, journal = _resumable(out, f"{stem}-converge", force)
+    with _resuming(folder), _preparing(as_json) as bar:
+        result = swarmpush.converge(s, replicates=n, journal=journal, progress=bar)
+    files = result.save(folder) | {"folder": str(folder)}
+    journal.unlink(missing_ok=True)
+    if as_json:
+        _print_json(result.to_dict(files))
+        return
+    from swarmpush.reporting import console
+
+    console.show_convergence(result)
+    console.say_where(folder / "convergence.json")
 
 
 @app.command(short_help="the plan against rigid bodies: what holds, what it costs")
@@ -171,21 +218,14 @@ def audit(
 ) -> None:
     """Hold the plan against rigid bodies: does the block arrive, which assumptions fail, what does each cost?"""
     import swarmpush
-    from swarmpush.output import claim_folder, free_folder
 
     demanded = _claims(require or [])
     s = _load(scenario)
     if seed is not None:
         s = s.replace(trial={"seed": seed})
-    folder = out or free_folder(RESULTS, f"{_stem(scenario)}-audit")
-    claim_folder(folder, force=force or (folder / JOURNAL).exists())
-    journal = folder / JOURNAL
-    try:
-        with _preparing(as_json) as bar:
-            result = swarmpush.audit(s, replicates=replicates, workers=workers, journal=journal, progress=bar)
-    except KeyboardInterrupt:
-        print(f"interrupted; go on with --out {folder}", file=sys.stderr)
-        raise typer.Exit(INTERRUPTED) from None
+    folder, journal = _resumable(out, f"{_stem(scenario)}-audit", force)
+    with _resuming(folder), _preparing(as_json) as bar:
+        result = swarmpush.audit(s, replicates=replicates, workers=workers, journal=journal, progress=bar)
     files = result.save(folder) | {"folder": str(folder), "report": "report.html"}
     swarmpush.report(result, folder / "report.html")
     journal.unlink(missing_ok=True)
@@ -327,6 +367,25 @@ def _declarations(s: Scenario) -> Declarations | None:
     from swarmpush.kinematics.declarations import declarations, declares
 
     return declarations(s) if declares(s.routine) else None
+
+
+def _resumable(out: Path | None, stem: str, force: bool) -> tuple[Path, Path]:
+    """The folder of a command that makes many runs, and the journal of finished ones in it; one left there is used."""
+    from swarmpush.output import claim_folder, free_folder
+
+    folder = out or free_folder(RESULTS, stem)
+    claim_folder(folder, force=force or (folder / JOURNAL).exists())
+    return folder, folder / JOURNAL
+
+
+@contextmanager
+def _resuming(folder: Path) -> Iterator[None]:
+    """Turn an interruption into a word on how to go on, and the exit code for it."""
+    try:
+        yield
+    except KeyboardInterrupt:
+        print(f"interrupted; go on with --out {folder}", file=sys.stderr)
+        raise typer.Exit(INTERRUPTED) from None
 
 
 def _stem(name: str) -> str:

@@ -9,15 +9,17 @@ from rich.console import Console
 from rich.table import Table
 
 from swarmpush.auditing.audit import Audit
+from swarmpush.auditing.converge import Convergence
 from swarmpush.cautions import CAUTIONS
 from swarmpush.dynamics.run import Run
 from swarmpush.kinematics.lap_loss import LapsKept
 from swarmpush.kinematics.noise_budget import Limit, NoiseBudget
 from swarmpush.kinematics.planning import Plan
 from swarmpush.quantities import for_people
-from swarmpush.reporting.wording import CAUSES, finding_row, interval, number, rung_row
+from swarmpush.reporting.wording import CAUSES, finding_row, interval, mean_and_error, number, rung_row
 
 _COLOURS = {"holds": "green", "strained": "yellow", "fails": "red", "undecided": "bright_black"}
+_EFFECT_COLOURS = {"small": "green", "large": "red", "untold": "bright_black"}
 _console = Console(highlight=False)
 
 
@@ -191,6 +193,44 @@ def show_audit(audit: Audit) -> None:
         f"{for_people(numerics.steps.dt_s, 's')}, half of it changes the speed by {number(change.mean, 'm/s')} "
         f"({interval(change, 'm/s')}, chance included)"
     )
+    _caution()
+
+
+def show_convergence(result: Convergence) -> None:
+    """What the step size costs: means and books at three steps, paired differences, order where runs are smooth."""
+    _head(result.scenario.about.name, result.answer)
+    at = tuple(for_people(step.dt_s, "s") for step in result.steps)
+    table = _table("step", *at, right=at)
+    for effect in result.effects:
+        table.add_row(effect.quantity, *(mean_and_error(mean, effect.unit) for mean in effect.at_steps))
+    table.add_row("residual of the books", *(f"{step.residual_rel:.0e}" for step in result.steps))
+    table.add_row("motion without velocity", *(f"{step.phantom_share:.0e}" for step in result.steps))
+    _console.print(table)
+    for effect in result.effects:
+        left_out = [mean.n_left_out for mean in effect.at_steps]
+        if any(left_out):
+            _console.print(f"{effect.quantity}: undefined in {', '.join(map(str, left_out))} runs, which are left out")
+    _console.print()
+    columns = (f"{at[0]} less {'the limit' if result.has_limit else at[-1]}", "its interval", "allowed")
+    table = _table("what the step changes", *columns, "effect", right=columns)
+    for effect in result.effects:
+        unit, change = effect.unit, effect.judged
+        word = f"[{_EFFECT_COLOURS[effect.effect]}]{effect.effect}[/]" if effect.is_measured else ""
+        table.add_row(
+            effect.quantity, number(change.mean, unit), interval(change, unit), number(effect.allowed, unit), word
+        )
+    _console.print(table)
+    if result.is_smooth:
+        _console.print()
+        of_order = ("order", "extrapolated", "grid index")
+        table = _table("same bumps at all steps", *of_order, "differences", right=of_order)
+        for effect in result.effects:
+            if effect.grid:
+                grid = effect.grid
+                index = f"{grid.index_rel:.2%}" if math.isfinite(grid.index_rel) else "-"
+                order = f"{grid.order:.2f}" if math.isfinite(grid.order) else "-"
+                table.add_row(effect.quantity, order, number(grid.limit, effect.unit), index, str(grid.behaviour))
+        _console.print(table)
     _caution()
 
 

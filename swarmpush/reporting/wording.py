@@ -6,6 +6,7 @@ import math
 
 from swarmpush.auditing.audit import RungResult
 from swarmpush.auditing.statistics import Estimate
+from swarmpush.auditing.step_effect import StepMean, two_digits
 from swarmpush.auditing.verdicts import Finding
 from swarmpush.quantities import for_people, prefix_for
 
@@ -69,3 +70,17 @@ def finding_row(finding: Finding) -> dict[str, str]:
         "interval": interval(finding.measured, finding.unit),
         "verdict": str(finding.verdict),
     }
+
+
+def mean_and_error(mean: StepMean, unit: str) -> str:
+    """A mean with its standard error, both with the same prefix; alone where a single run gives no error.
+
+    >>> mean_and_error(StepMean(2.6e-4, 1.2e-5, 8, 0), "m/s")
+    '260 ± 12 µm/s'
+    """
+    if math.isnan(mean.standard_error):
+        return number(mean.mean, unit)
+    if unit.startswith("share"):
+        return f"{number(mean.mean, unit)} ± {number(mean.standard_error, unit)}"
+    factor, prefix = (1.0, "") if unit.startswith("1") else prefix_for(max(abs(mean.mean), mean.standard_error))
+    return f"{mean.mean / factor:.3g} ± {two_digits(mean.standard_error / factor)} {prefix}{unit}"
