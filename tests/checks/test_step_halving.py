@@ -1,4 +1,4 @@
-"""A lone pusher's run follows the step in first order, as the engine's way of stepping demands."""
+"""A lone pusher's run follows the step in first order or better."""
 
 from __future__ import annotations
 
@@ -11,15 +11,15 @@ from swarmpush.auditing.step_effect import Effect
 from swarmpush.demos import demo
 from swarmpush.scenario import Errors
 
-# The engine moves positions with the velocity of the step before, so that a way of braking is wrong by a share of the
-# step: first order. The next order adds the step over the relaxation time to it, here 1/20 by the step rule, or less.
-ORDER = (0.95, 1.05)
-SECOND_ORDER = 0.02  # of a difference of first order, for the same reason
+# The engine moves positions with the velocity of the step before, which alone would be first order. For one blow on a
+# resting block the error of the floor's pull in that step is made to cancel it, so that the second order is left.
+ORDER = (1.9, 2.1)
+THIRD_ORDER = 0.1  # of a difference of second order: the step is 1/20 of the relaxation time, and a few times that
 
 
 @pytest.mark.parametrize("start", [3.0, 3.0137, 3.05])
 def test_a_block_struck_head_on(start: float) -> None:
-    """A block that one elastic blow sends sliding over a dry floor goes a way of order 1 in the step.
+    """A block that one elastic blow sends sliding over a dry floor goes a way of order 2 in the step.
 
     The contact begins with the first step that finds an overlap, up to one step late, and that delay jumps about from
     step to step. It does not matter here: the pusher has long had its free speed, so that the blow is the same
@@ -39,9 +39,8 @@ def test_a_block_struck_head_on(start: float) -> None:
     assert speed.grid is not None
     assert speed.grid.behaviour is Behaviour.MONOTONE
     assert ORDER[0] < speed.grid.order < ORDER[1]
-    coarse, middle, fine = (mean.mean for mean in speed.at_steps)
-    assert abs((2 * fine - middle) - (2 * middle - coarse)) < SECOND_ORDER * abs(fine - middle)
-    assert abs(2 * fine - middle - speed.grid.limit) < SECOND_ORDER * abs(fine - middle)
+    _, middle, fine = (mean.mean for mean in speed.at_steps)
+    assert abs(4 * fine - middle - 3 * speed.grid.limit) < THIRD_ORDER * abs(fine - middle)
 
 
 def test_a_push_that_goes_on_hides_the_order() -> None:
@@ -62,9 +61,9 @@ def test_a_push_that_goes_on_hides_the_order() -> None:
 
 
 def test_a_lone_cart_on_its_lap() -> None:
-    """Without errors and company the demo's carts keep their bumps at every step; the step takes some of each nudge.
+    """Without errors and company the demo's carts keep their bumps at every step, which changes no measure by much.
 
-    Six drawn starts agree on the size of it, while the contacts' delays differ and hide the order.
+    The contacts' delays differ from start to start and hide the order.
     """
     s = swarmpush.load(demo("service_passage"))
     s = s.replace(pushers={"count": 1}, goal={"time_limit": 60.0}).model_copy(update={"errors": Errors()})
@@ -73,7 +72,8 @@ def test_a_lone_cart_on_its_lap() -> None:
     effects = {effect.quantity: effect for effect in found.effects}
     for name in ("block speed", "strike rate", "nudge", "lap time"):
         assert effects[name].effect is Effect.SMALL
-    assert effects["nudge"].difference.high < 0.0
+    nudge = effects["nudge"]
+    assert abs(nudge.difference.mean) < 0.02 * nudge.at_steps[-1].mean  # of 12 steps of sliding, a quarter of one
 
 
 @pytest.mark.parametrize("name", ["vibration_duct", "loading_bay"])

@@ -386,7 +386,7 @@ MISFITS: dict[str, tuple[Callable[[Tables], object], str, str]] = {
     "step too long": (
         lambda t: t.update(numerics={"step": "200 ms"}),
         "numerics.step",
-        "in 200 ms a pusher runs more than half its radius; at most 133 ms",
+        "in 200 ms it runs more than a quarter of its radius; at most 66.7 ms",
     ),
     "crew too large": (
         lambda t: t["pushers"].update(count=31),
