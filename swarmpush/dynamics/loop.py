@@ -104,7 +104,7 @@ def _sample(host: Host, task: Task, step: int) -> None:
     for i in range(len(pushers)):
         path.pushers[row, i, 0] = motion[i + 1, 0]
         path.pushers[row, i, 1] = motion[i + 1, 1]
-        path.pushers[row, i, 2] = pushers[i].heading
+        path.pushers[row, i, 2] = motion[i + 1, 2] if task.rig.heading_is_free else pushers[i].heading
         path.pushers[row, i, 3] = pushers[i].mode
     series = path.series[row]
     series[0], series[1] = totals.n_leaning, totals.leaning_share
