@@ -219,7 +219,9 @@ def _footed(s: Scenario, block: Block, u: Units, dt: float) -> _Footed:
         along, across = s.fluid.drag_along / u.drag, s.fluid.drag_across / u.drag
         yaw_drag = s.fluid.yaw_drag / u.turn_drag
     if s.floor:
-        load = block.mass * s.floor.gravity / u.force * math.cos(s.channel.slope) * math.cos(s.channel.cross_slope)
+        # both slopes are rises of an axis, so three parts at right angles make up gravity
+        pressing = math.sqrt(1.0 - math.sin(s.channel.slope) ** 2 - math.sin(s.channel.cross_slope) ** 2)
+        load = block.mass * s.floor.gravity / u.force * pressing
     constants = {
         "n_sides": len(corners),
         "mass": mass,
