@@ -150,7 +150,7 @@ def energy(task: Task, kinetic: float, u: Units) -> Energy:
     change = kinetic - float(task.ledger.totals[0]["kinetic_0"])
     given = totals["drive"] + totals["heading"] + totals["gravity"]
     taken = sum(totals[name] for name in ENERGY[3:])
-    scale = totals["drive"] + abs(totals["heading"]) + abs(totals["gravity"]) + abs(change)
+    scale = abs(totals["drive"]) + abs(totals["heading"]) + abs(totals["gravity"]) + abs(change)
     return Energy(
         drive=totals["drive"] * u.energy,
         heading=totals["heading"] * u.energy,
