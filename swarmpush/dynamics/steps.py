@@ -110,8 +110,11 @@ def choose_step(s: Scenario) -> StepSettings:
         limits["latency"] = max(p.latency / STEPS_PER_LATENCY, 1e-4 * crossing)
     if math.isfinite(p.turn_rate):
         limits["turn rate"] = TURN_PER_STEP / p.turn_rate
-    if s.fluid and s.block.mass / s.fluid.block_drag > OVERDAMPED * crossing:
-        limits["relaxation time of the block"] = s.block.mass / s.fluid.block_drag / STEPS_PER_RELAXATION
+    if s.fluid:
+        drag = max(s.fluid.drag_along, s.fluid.drag_across)
+        times = [block.mass / drag for block in s.blocks if block.mass / drag > OVERDAMPED * crossing]
+        if times:
+            limits["relaxation time of the block"] = min(times) / STEPS_PER_RELAXATION
     because = min(limits, key=limits.__getitem__)
     dt = limits[because]
     if s.numerics.step is not None:
