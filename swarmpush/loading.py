@@ -482,7 +482,8 @@ def _heading_misfits(s: Scenario) -> Iterator[Problem]:
         if p.heading == "held" and getattr(p, name):
             yield Problem(f"pushers.{name}", 'only a free heading has it; give heading = "free" as well')
     if 2 * p.reach >= s.channel.width and not p.is_disc:
-        yield Problem("pushers.nose", f"a bar ({_metre(2 * p.reach)} from corner to corner) cannot turn in the channel")
+        key = "pushers.nose" if p.nose > 0.0 else "pushers.trunk"
+        yield Problem(key, f"a bar ({_metre(2 * p.reach)} from corner to corner) cannot turn in the channel")
 
 
 def _centre_misfits(s: Scenario) -> Iterator[Problem]:
@@ -562,7 +563,8 @@ def _obstacles(s: Scenario) -> list[tuple[str, str, Callable[[float, float], flo
 
     keep = f"its centre must keep {_metre(s.pushers.radius)} from every wall"
     posts = {f"channel.posts[{k + 1}]": Polygon(corners) for k, corners in enumerate(post_corners(s))}
-    things = posts | {"the block": Polygon(block_corners(s))}
+    blocks = {"the block": s.block, **{f"train[{k + 1}]": other for k, other in enumerate(s.train)}}
+    things = posts | {name: Polygon(block_corners(s, block)) for name, block in blocks.items()}
     return [
         ("a wall", f"; {keep}", to_wall),
         *((name, "", lambda x, y, thing=thing: thing.distance(Point(x, y))) for name, thing in things.items()),

@@ -253,6 +253,99 @@ def test_survives_numbers_that_python_will_not_write(tables: Tables) -> None:
     assert problems(tables)["pushers.count"] == "a huge number given; must be at least 1 and at most 5000"
 
 
+BAR = {"nose": "6 cm", "trunk": "4 cm"}
+IN_TURN = 'only a free heading has it; give heading = "free" as well'
+AT_ONCE = 'a free heading cannot turn at once; give a rate, or heading = "held"'
+
+
+@pytest.mark.parametrize(
+    ("changes", "expected"),
+    [
+        ({"pushers": {"heading": "free"}}, {"pushers.turn_rate": AT_ONCE}),
+        ({"pushers": BAR}, {"pushers.turn_rate": "a bar cannot turn at once, it would stand in a wall; give a rate"}),
+        ({"pushers": {"turn_drag": 1.0}}, {"pushers.turn_drag": IN_TURN}),
+        ({"pushers": {"contact_arm": "-1 cm"}}, {"pushers.contact_arm": IN_TURN}),
+        (
+            {"pushers": {"nose": 0.3, "trunk": 0.4, "turn_rate": 1.0}},
+            {"pushers.nose": "a bar (580 mm from corner to corner) cannot turn in the channel"},
+        ),
+        (
+            {"pushers": {"trunk": 0.5, "turn_rate": 1.0}},
+            {"pushers.trunk": "a bar (580 mm from corner to corner) cannot turn in the channel"},
+        ),
+        (
+            {"block": {"centre_of_mass": [0.25, 0.0]}},
+            {
+                "block.centre_of_mass": "(0.25, 0) m is not under the block; x runs from 0 to 0.2 m, "
+                "y from -0.1 to 0.1 m"
+            },
+        ),
+        (
+            {"block": {"centre_of_friction": ["10 cm", "-12 cm"]}},
+            {
+                "block.centre_of_friction": "(0.1, -0.12) m is not under the block; x runs from 0 to 0.2 m, "
+                "y from -0.1 to 0.1 m"
+            },
+        ),
+    ],
+)
+def test_refuses_bodies_that_cannot_be(tables: Tables, changes: Tables, expected: dict[str, str]) -> None:
+    """Free headings, bars and centres that do not fit the rest are refused, each with a way out."""
+    plain = {
+        "channel": {"width": 0.55},
+        "block": {"length": 0.2, "width": 0.2},
+        "pushers": {"count": 2, "radius": 0.04},
+    }
+    for table in (plain, {"pushers": {"turn_rate": math.inf}}, changes):
+        for name, keys in table.items():
+            tables[name] |= keys
+    assert problems(tables) == expected
+
+
+@pytest.mark.parametrize("name", ["slope", "cross_slope"])
+def test_a_slope_needs_a_floor(tables: Tables, name: str) -> None:
+    """In a liquid alone the weight that pulls down a slope is not known."""
+    tables["channel"][name] = "2 deg"
+    del tables["floor"]
+    tables["fluid"] = {"block_drag": 1.0, "block_yaw_drag": 1.0}
+    assert problems(tables) == {f"channel.{name}": "needs a [floor]; a liquid carries an unknown part of the weight"}
+
+
+@pytest.mark.parametrize(
+    ("rear_at", "offset", "sentence"),
+    [
+        (1.1, 0.0, "stands in another block or in a post; change its rear_at or offset"),
+        (2.9, 0.0, "does not lie within the channel at its start; change its rear_at or offset"),
+        (1.3, 0.3, "does not lie within the channel at its start; change its rear_at or offset"),
+    ],
+)
+def test_refuses_a_train_that_does_not_fit(tables: Tables, rear_at: float, offset: float, sentence: str) -> None:
+    """Further blocks stand in the channel, clear of each other."""
+    block = {"length": 0.2, "width": 0.2, "mass": 1.0, "rear_at": 1.0}
+    tables["channel"] |= {"length": 3.0, "width": 0.6}
+    tables["block"] |= block
+    tables["pushers"]["count"] = 2
+    tables["goal"]["travel"] = 0.1
+    tables["train"] = [block | {"rear_at": rear_at, "offset": offset}]
+    assert problems(tables) == {"train[1]": sentence}
+    tables["train"] = [block | {"rear_at": 1.2, "centre_of_mass": [0.1, 0.2]}]
+    assert list(problems(tables)) == ["train[1].centre_of_mass"]
+    tables["train"] = [block | {"rear_at": 1.2}]
+    assert len(from_tables(tables).blocks) == 2
+
+
+def test_refuses_a_start_in_a_further_block(tables: Tables) -> None:
+    """A pusher placed in a block of the train is refused as one in the first block is."""
+    block = {"length": 0.2, "width": 0.2, "mass": 1.0, "rear_at": 1.0}
+    tables["channel"] |= {"length": 3.0, "width": 0.6}
+    tables["block"] |= block
+    tables["goal"]["travel"] = 0.1
+    tables["train"] = [block | {"rear_at": 1.5}]
+    tables["pushers"]["count"] = 1
+    tables["start"] = {"placed": [{"x": 1.6, "y": 0.3, "heading": 0.0}]}
+    assert problems(tables) == {"start.placed[1]": "(1.6, 0.3) m puts the pusher into train[1]"}
+
+
 @pytest.mark.parametrize(
     ("key", "nearest"),
     [
