@@ -79,7 +79,7 @@ def squaring_up(off: float, times: NDArray[np.float64]) -> NDArray[np.float64]:
     """The same for a frictionless bar without inertia that pivots on its leading corner (derived here).
 
     The corner is q = a sin p - b cos p to the side of the centre, a and b being half the trunk and half the nose. The
-    wall's force N turns the bar, g_t p' = N q, and holds it back, g q p' = F cos p - N; so p' = F q cos p/(g_t + g q^2).
+    wall's force N turns the bar, g_t p' = N q, and holds it back, g q p' = F cos p - N: p' = F q cos p/(g_t + g q^2).
     """
     a, b = TRUNK / 2, NOSE / 2
 
