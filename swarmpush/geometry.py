@@ -9,7 +9,7 @@ import math
 from itertools import pairwise
 from typing import TYPE_CHECKING
 
-from swarmpush.scenario import Block, Scenario
+from swarmpush.scenario import Block, Pushers, Scenario
 
 if TYPE_CHECKING:
     from shapely.geometry.base import BaseGeometry
@@ -50,6 +50,15 @@ def block_corners(s: Scenario, block: Block | None = None) -> Corners:
     corners = tidy(tuple((x + a, y + b) for a, b in outline))
     rear = _facing(corners, -1.0)
     return corners[rear:] + corners[:rear]
+
+
+def pusher_corners(p: Pushers) -> Corners:
+    """Corners of a pusher's outline before it is rounded off with its radius, as seen from its centre, m.
+
+    One of a disc, two or four of a bar.
+    """
+    ahead, aside = p.trunk / 2, p.nose / 2
+    return tuple(dict.fromkeys(((-ahead, -aside), (ahead, -aside), (ahead, aside), (-ahead, aside))))
 
 
 def front_side(block: Corners) -> int:

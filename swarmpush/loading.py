@@ -13,7 +13,7 @@ import tomllib
 from collections.abc import Callable, Iterator
 from contextlib import suppress
 from pathlib import Path
-from typing import Annotated, Any, NamedTuple, get_args
+from typing import TYPE_CHECKING, Annotated, Any, NamedTuple, get_args
 
 from pydantic import BaseModel, TypeAdapter, ValidationError
 from pydantic.fields import FieldInfo
@@ -26,12 +26,16 @@ from swarmpush.geometry import (
     free_region,
     is_plain,
     post_corners,
+    pusher_corners,
     tidy,
     turning,
 )
 from swarmpush.problems import Problem, ScenarioError
 from swarmpush.quantities import Quantity, for_people
-from swarmpush.scenario import Scenario
+from swarmpush.scenario import FixedStart, Scenario
+
+if TYPE_CHECKING:
+    from shapely.geometry.base import BaseGeometry
 
 MAX_FILE_BYTES = 1_000_000  # a scenario is a few kilobytes; a larger file is something else
 ROUNDING = 1e-9  # relative; by this much lengths may miss each other and still fit
@@ -538,36 +542,46 @@ def _placed_misfits(s: Scenario) -> Iterator[Problem]:
     placed, r = s.start.placed or (), s.pushers.radius
     if len(placed) != s.pushers.count:
         yield Problem("start.placed", f"{len(placed)} pushers placed, but pushers.count = {s.pushers.count}")
-    in_the_way = _obstacles(s)
-    for k, p in enumerate(placed):
+    in_the_way, cores = _obstacles(s), [_core(s, p) for p in placed]
+    for k, (p, core) in enumerate(zip(placed, cores, strict=True)):
         key = f"start.placed[{k + 1}]"
         for thing, remedy, gap in in_the_way:
-            if gap(p.x, p.y) < r * (1 - ROUNDING):
+            if gap(core) < r * (1 - ROUNDING):
                 yield Problem(key, f"({p.x:g}, {p.y:g}) m puts the pusher into {thing}{remedy}")
                 break
         else:
-            for j, q in enumerate(placed[:k]):
-                if not s.pushers.pass_through and math.hypot(p.x - q.x, p.y - q.y) < 2 * r * (1 - ROUNDING):
+            for j, other in enumerate(cores[:k]):
+                if not s.pushers.pass_through and core.distance(other) < 2 * r * (1 - ROUNDING):
                     yield Problem(key, f"overlaps start.placed[{j + 1}]")
 
 
-def _obstacles(s: Scenario) -> list[tuple[str, str, Callable[[float, float], float]]]:
-    """What a pusher can start in: its name, what to say besides, and how far it is from a place (negative: in it)."""
-    from shapely import Point, Polygon
+def _core(s: Scenario, start: FixedStart) -> BaseGeometry:
+    """A placed pusher before it is rounded off with its radius: its centre, or a line or rectangle of a bar."""
+    from shapely import MultiPoint
+
+    c, q = math.cos(start.heading), math.sin(start.heading)
+    corners = pusher_corners(s.pushers)
+    return MultiPoint([(start.x + c * x - q * y, start.y + q * x + c * y) for x, y in corners]).convex_hull
+
+
+def _obstacles(s: Scenario) -> list[tuple[str, str, Callable[[BaseGeometry], float]]]:
+    """What a pusher can start in: its name, what to say besides, and how far it is from its core (negative: in it)."""
+    from shapely import Polygon
 
     channel = Polygon(channel_corners(s))
 
-    def to_wall(x: float, y: float) -> float:
-        distance = channel.exterior.distance(Point(x, y))
-        return distance if channel.covers(Point(x, y)) else -distance
+    def to_wall(core: BaseGeometry) -> float:
+        distance = float(channel.exterior.distance(core))
+        return distance if channel.covers(core) else -distance
 
-    keep = f"its centre must keep {_metre(s.pushers.radius)} from every wall"
+    part = "centre" if s.pushers.is_disc else "outline before rounding"
+    keep = f"its {part} must keep {_metre(s.pushers.radius)} from every wall"
     posts = {f"channel.posts[{k + 1}]": Polygon(corners) for k, corners in enumerate(post_corners(s))}
     blocks = {"the block": s.block, **{f"train[{k + 1}]": other for k, other in enumerate(s.train)}}
     things = posts | {name: Polygon(block_corners(s, block)) for name, block in blocks.items()}
     return [
         ("a wall", f"; {keep}", to_wall),
-        *((name, "", lambda x, y, thing=thing: thing.distance(Point(x, y))) for name, thing in things.items()),
+        *((name, "", lambda core, thing=thing: thing.distance(core)) for name, thing in things.items()),
     ]
 
 

@@ -18,7 +18,16 @@ from swarmpush.dynamics.loop import Limits, Path, Task
 from swarmpush.dynamics.patch import about, centre, friction_arm, gyration_squared, rounded_gyration_squared
 from swarmpush.dynamics.ranging import surroundings
 from swarmpush.dynamics.steps import StepSettings, Units, effective_mass, engine_units, relaxed
-from swarmpush.geometry import Corner, Corners, block_corners, channel_corners, outward_normal, post_corners, sides_of
+from swarmpush.geometry import (
+    Corner,
+    Corners,
+    block_corners,
+    channel_corners,
+    outward_normal,
+    post_corners,
+    pusher_corners,
+    sides_of,
+)
 from swarmpush.kinematics.boundary import surface_names
 from swarmpush.program import Senses, compile_routine, in_units
 from swarmpush.scenario import Block, Pushers, Scenario
@@ -52,7 +61,7 @@ def build(s: Scenario, seed: int, steps: StepSettings) -> tuple[HostSpace, Task]
     dt = steps.dt_s / u.time
     keys, starts = stream_keys(seed, n), draw_starts(s, seed)
     crew = _crew(s, u, dt, keys, starts)
-    outline = pusher_outline(p, u.length)
+    outline = scaled(pusher_corners(p), u.length)
     footed = [_footed(s, block, u, dt) for block in s.blocks]
     walls = [side for fixed in (channel_corners(s), *post_corners(s)) for side in sides_of(scaled(fixed, u.length))]
     c = s.contacts
@@ -114,12 +123,6 @@ def new_path(n_samples: int, n_pushers: int, n_train: int) -> Path:
         series=np.zeros((n_samples, len(SERIES) + 1)),
         n_rows=np.zeros(1, dtype=np.int64),
     )
-
-
-def pusher_outline(p: Pushers, unit: float) -> Corners:
-    """Corners of a pusher's outline before it is rounded off with its radius: one of a disc, two or four of a bar."""
-    ahead, aside = p.trunk / 2 / unit, p.nose / 2 / unit
-    return tuple(dict.fromkeys(((-ahead, -aside), (ahead, -aside), (ahead, aside), (-ahead, aside))))
 
 
 def pusher_gyration_squared(p: Pushers) -> float:

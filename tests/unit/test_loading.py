@@ -253,6 +253,27 @@ def test_survives_numbers_that_python_will_not_write(tables: Tables) -> None:
     assert problems(tables)["pushers.count"] == "a huge number given; must be at least 1 and at most 5000"
 
 
+def test_placed_bars_keep_clear_with_their_corners(tables: Tables) -> None:
+    """A bar that only turned the other way would be clear of wall, block and neighbour is refused."""
+    tables["channel"] |= {"length": 3.0, "width": 0.6}
+    tables["block"] |= {"length": 0.2, "width": 0.2, "rear_at": 1.0}
+    tables["goal"]["travel"] = 0.1
+    tables["pushers"] |= {"count": 4, "radius": 0.02, "nose": 0.2, "trunk": 0.0, "turn_rate": 1.0}
+    places = [(0.2, 0.05), (0.95, 0.3), (0.5, 0.4), (0.6, 0.4)]
+    across = [math.pi / 2, 0.0, 0.0, 0.0]  # heading at which each is clear
+    starts = [{"x": x, "y": y, "heading": heading} for (x, y), heading in zip(places, across, strict=True)]
+    tables["start"] = {"placed": starts}
+    assert from_tables(tables).pushers.count == 4
+    for start in starts:
+        start["heading"] += math.pi / 2
+    assert problems(tables) == {
+        "start.placed[1]": "(0.2, 0.05) m puts the pusher into a wall; its outline before rounding must keep 20 mm "
+        "from every wall",
+        "start.placed[2]": "(0.95, 0.3) m puts the pusher into the block",
+        "start.placed[4]": "overlaps start.placed[3]",
+    }
+
+
 BAR = {"nose": "6 cm", "trunk": "4 cm"}
 IN_TURN = 'only a free heading has it; give heading = "free" as well'
 AT_ONCE = 'a free heading cannot turn at once; give a rate, or heading = "held"'
