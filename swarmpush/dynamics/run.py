@@ -83,7 +83,8 @@ class Run:
         partner ("block", "wall", "pusher"), surface, other_pusher (-1 unless partner is "pusher"), t_on_s, t_off_s,
         dwell_s, x_m, y_m and heading_rad at the first touch, approach_m_s (normal speed) and speed_m_s then, impact_Ns,
         lean_Ns, tangential_Ns (on the pusher, to the left as it faces its partner), block_dx_m within the visit,
-        block_dx_next_m from then until a block is next touched (NaN for visits elsewhere), energy_lost_J, overlap_m.
+        block_dx_next_m from then until a block is next touched anew (NaN for visits elsewhere), energy_lost_J,
+        overlap_m.
     block: path of the block: t_s, x_m, y_m (of its centre of mass), yaw_rad, vx_m_s; then what happened since the last
         row, as means over time: n_leaning (pushers leaning on the rear face), leaning_share, strong_share,
         jammed_share (of time with pushers leaning, of these with a block that moves or enough push for the floor,

@@ -51,9 +51,10 @@ def visit_table(
     is_pusher, is_wall = (partner >= 1) & (partner <= n_pushers), partner >= n_moving
     kinds = np.where(is_wall, "wall", np.where(is_pusher, "pusher", "block"))
     on_block = kinds == "block"
-    places = np.append(log["block_x_on"][on_block], end_x)[1:]  # of the block when one is next touched
+    touches = log[on_block]
+    following = np.searchsorted(touches["first_step"], touches["last_step"], side="right")  # the first to begin later
     until_next = np.full(len(log), np.nan)
-    until_next[on_block] = places - log["block_x_off"][on_block]
+    until_next[on_block] = np.append(touches["block_x_on"], end_x)[following] - touches["block_x_off"]
     return pd.DataFrame(
         {
             "pusher": np.where((owner >= 1) & (owner <= n_pushers), owner - 1, -1),

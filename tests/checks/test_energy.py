@@ -146,6 +146,22 @@ def test_travel_within_and_after_visits() -> None:
     assert told.to_numpy() == pytest.approx(seen, abs=2e-3)  # m: a sample is 6 ms long, and the block is hit in it
 
 
+def test_travel_after_visits_that_overlap() -> None:
+    """Where two pushers push at once, the travel after a visit begins at its end and never runs backwards."""
+    s = rig(
+        pushers={"count": 2, "mass": 1e-3, "latency": PUSH_ON}, block={"width": 0.3, "mass": 0.01},
+        fluid={"block_drag": 0.1, "block_yaw_drag": 1.0}, start=placed((3.9, 0.45, 0.0), (3.5, 0.55, 0.0)),
+        goal={"time_limit": 1.5},
+    )  # fmt: skip
+    run = swarmpush.simulate(s, cycles=())
+    visits = run.visits
+    assert (visits["t_on_s"].iloc[1:].to_numpy() < visits["t_off_s"].iloc[:-1].to_numpy()).any()
+    assert (visits["block_dx_next_m"] >= 0.0).all()
+    assert (visits["block_dx_m"] + visits["block_dx_next_m"] <= run.travel_m).all()
+    last = visits["t_off_s"] > run.duration_s - 0.01
+    assert (visits.loc[last, "block_dx_next_m"] < 1e-3).all()
+
+
 def test_dwell_of_a_lean() -> None:
     """A pusher that leans for good dwells until the end, touched at its settled speed."""
     s = rig(

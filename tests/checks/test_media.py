@@ -74,8 +74,8 @@ LIQUID = {
 }
 
 
-def coasted(run: Run, mu: float, arm: float) -> NDArray[np.float64]:
-    """x, y and yaw that the struck plate gains until the end under drag and the elliptic limit surface, by SciPy."""
+def coasted(run: Run, mu: float, wet: float, arm: float) -> NDArray[np.float64]:
+    """x, y and yaw that the struck plate gains until the end under drags times `wet` and the elliptic limit surface."""
     s = run.scenario
     impulse, moment, mass = float(run.visits["impact_Ns"].iloc[0]), plate_moment(s), s.block.mass
 
@@ -83,10 +83,10 @@ def coasted(run: Run, mu: float, arm: float) -> NDArray[np.float64]:
         c, q = math.cos(z[2]), math.sin(z[2])
         total = math.hypot(z[3], z[4], arm * z[5]) + 1e-9
         push = mu * mass * G / total
-        along = -FACTOR * ALONG * (c * z[3] + q * z[4])
-        across = -FACTOR * ACROSS * (c * z[4] - q * z[3])
+        along = -wet * FACTOR * ALONG * (c * z[3] + q * z[4])
+        across = -wet * FACTOR * ACROSS * (c * z[4] - q * z[3])
         fx, fy = c * along - q * across - push * z[3], q * along + c * across - push * z[4]
-        torque = -(FACTOR * YAW_DRAG + push * arm**2) * z[5]
+        torque = -(wet * FACTOR * YAW_DRAG + push * arm**2) * z[5]
         return [z[3], z[4], z[5], fx / mass, fy / mass, torque / moment]
 
     def rests(t: float, z: NDArray[np.float64]) -> float:
@@ -99,22 +99,23 @@ def coasted(run: Run, mu: float, arm: float) -> NDArray[np.float64]:
     return np.asarray(end.y[:3, -1])
 
 
-@pytest.mark.parametrize("mu", [0.0, 0.01])
-def test_coasting_with_two_drags(mu: float) -> None:
-    """A plate hit off centre coasts and turns by its drags along, across and about it, over a dry floor or not.
+@pytest.mark.parametrize(("mu", "wet"), [(0.0, 1.0), (0.01, 1.0), (0.03, 0.0)])
+def test_coasting_with_two_drags(mu: float, wet: float) -> None:
+    """A plate hit off centre coasts and turns by its drags along, across and about it, over a dry floor, or on one.
 
     The motion is integrated apart (SciPy) from the impulse; the error is of first order in the step.
     """
-    s = struck_plate(fluid=LIQUID, **({"floor": dry(mu)} if mu else {}))
+    s = struck_plate(**({"fluid": LIQUID} if wet else {}), **({"floor": dry(mu)} if mu else {}))
     arm = friction_arm(((-0.2, -0.05), (0.2, -0.05), (0.2, 0.05), (-0.2, 0.05)))
     errors = []
     for run in at_three_steps(s):
         assert len(run.visits) == 1
-        block, expected = run.block, coasted(run, mu, arm)
+        block, expected = run.block, coasted(run, mu, wet, arm)
         got = [block[name].iloc[-1] - block[name].iloc[0] for name in ("x_m", "y_m", "yaw_rad")]
         errors.append(np.array(got) - expected)
-    assert np.abs(errors[0]).max() < 2e-4  # m and rad: half a step of the first speeds
-    assert (orders(np.array(errors)) > FIRST_ORDER).all()
+    assert np.abs(errors[0]).max() < 3e-4  # m and rad: half a step of the first speeds
+    has_error = np.abs(errors[0]) > 1e-12  # on a dry floor alone a plate is not turned off its way
+    assert (orders(np.array(errors)[:, has_error]) > FIRST_ORDER).all()
 
 
 # ---- steady motion --------------------------------------------------------------------------------------------------
