@@ -26,7 +26,8 @@ from swarmpush.dynamics.host import Host
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
-SLOTS = 12  # open visits per body: six equal discs can touch one, two walls, the block, and some just parted
+SLOTS = 12  # open visits per body: six equal discs can touch one, two walls, the block, and some just parted; a space
+# of unknown contents may need more
 
 
 # A visit. owner, partner: 0 block, then pushers from 1, then further blocks, then walls; partner -1: a free slot.
@@ -86,7 +87,7 @@ class Ledger(NamedTuple):
 
     known, entities: hash table from bodies' addresses to what they are (see `VISIT`). first, following: lists of a
     step's pairs by owner; partners: of each pair; senses: 1 where the engine's first body is the owner, else -1.
-    slots: (n_moving, SLOTS) open visits. n_open: how many. log: finished visits; n_log[0]: how many. totals: one
+    slots: (n_moving, n_slots) open visits. n_open: how many. log: finished visits; n_log[0]: how many. totals: one
     record.
     """
 
@@ -110,7 +111,7 @@ def new_ledger(addresses: IntArray, n_moving: int, n_pairs: int, capacity: int) 
     """An empty ledger.
 
     Arguments:
-        addresses: of all bodies in the order of `VISIT`, the moving ones first.
+        addresses: of all bodies in the order of `VISIT`, the moving ones first; 0 for a body still to come.
         n_moving: how many of them move.
         n_pairs: most pairs that a step can have.
         capacity: rows of finished visits that are kept before they must be fetched.
@@ -118,10 +119,8 @@ def new_ledger(addresses: IntArray, n_moving: int, n_pairs: int, capacity: int) 
     size = 1 << max(4, int(4 * len(addresses)).bit_length())
     known, entities = np.zeros(size, dtype=np.int64), np.full(size, -1, dtype=np.int64)
     for entity, address in enumerate(addresses.tolist()):
-        at = _home(address, size)
-        while known[at] != 0:
-            at = (at + 1) & (size - 1)
-        known[at], entities[at] = address, entity
+        if address:
+            enter_body(known, entities, address, entity)
     slots = np.zeros((n_moving, SLOTS), dtype=VISIT)
     slots["partner"] = -1
     return Ledger(
@@ -139,8 +138,44 @@ def new_ledger(addresses: IntArray, n_moving: int, n_pairs: int, capacity: int) 
     )
 
 
+def enter_body(known: IntArray, entities: IntArray, address: int, entity: int) -> None:
+    """Let the ledger know a body by its address."""
+    at = _home(address, len(known))
+    while known[at] != 0:
+        at = (at + 1) & (len(known) - 1)
+    known[at], entities[at] = address, entity
+
+
 def _home(address: int, size: int) -> int:
     return ((address * int(_MIX)) & 0xFFFFFFFFFFFFFFFF) >> (65 - size.bit_length())
+
+
+@inlined
+def _shift(known: IntArray) -> int:
+    """By how many bits a mixed address is shifted to give its home in the table."""
+    shift, size = 65, len(known)
+    while size > 0:
+        size >>= 1
+        shift -= 1
+    return shift
+
+
+@inlined
+def most_visits(host: Host, ledger: Ledger, n_pairs: int) -> int:
+    """Most visits that any body can have open after this step: no fewer than it will have, and seldom more."""
+    most = 0
+    for owner in range(len(ledger.n_open)):
+        most = max(most, ledger.n_open[owner])
+    if n_pairs + most <= ledger.slots.shape[1]:
+        return n_pairs + most
+    shift, fresh = _shift(ledger.known), ledger.n_open.copy()
+    for pair in range(n_pairs):
+        for body in pair_bodies(host.pairs[2 + pair]):
+            entity = _entity(ledger.known, ledger.entities, shift, body)
+            if 0 <= entity < len(fresh):
+                fresh[entity] += 1
+                most = max(most, fresh[entity])
+    return most
 
 
 @inlined
@@ -158,7 +193,7 @@ def _entity(known: IntArray, entities: IntArray, shift: int, address: int) -> in
 def _slot(slots: NDArray[np.void], n_open: IntArray, owner: int, partner: int) -> int:
     """The open visit of owner and partner, or a fresh slot; -1 if the table is full."""
     free = -1
-    for k in range(SLOTS):
+    for k in range(slots.shape[1]):
         found = slots[owner, k].partner
         if found == partner:
             return k
@@ -184,7 +219,7 @@ def close_visits(ledger: Ledger, step: int) -> None:
     for owner in range(len(n_open)):
         if n_open[owner] == 0:
             continue
-        for k in range(SLOTS):
+        for k in range(slots.shape[1]):
             visit = slots[owner, k]
             if visit.partner >= 0 and visit.last_step < step - GAP_STEPS:
                 log[n_log[0]] = visit
@@ -211,6 +246,21 @@ def _feel(
 
 
 @inlined
+def _precedes(pair: int, other: int) -> bool:
+    """Which of two pairs of the same two bodies comes first: by normal, then by point. Bodies of several shapes have
+    several pairs, and the engine lists them in order of addresses."""
+    nx, ny, _ = pair_normal(pair)
+    mx, my, _ = pair_normal(other)
+    if nx != mx:
+        return bool(nx < mx)
+    if ny != my:
+        return bool(ny < my)
+    px, py = pair_point(pair, 0)[:2]
+    qx, qy = pair_point(other, 0)[:2]
+    return bool(px < qx if px != qx else py < qy)
+
+
+@inlined
 def _sort_pairs(host: Host, ledger: Ledger, n_pushers: int, n_pairs: int) -> None:
     """Lay the step's pairs into lists by owner, in the order of their partners.
 
@@ -219,11 +269,7 @@ def _sort_pairs(host: Host, ledger: Ledger, n_pushers: int, n_pairs: int) -> Non
     known, entities, first = ledger.known, ledger.entities, ledger.first
     following, partners, senses = ledger.following, ledger.partners, ledger.senses
     pairs = host.pairs
-    shift = 65
-    size = len(known)
-    while size > 0:
-        size >>= 1
-        shift -= 1
+    shift = _shift(known)
     for pair in range(min(n_pairs, len(partners))):
         body_a, body_b = pair_bodies(pairs[2 + pair])
         a = _entity(known, entities, shift, body_a)
@@ -237,15 +283,16 @@ def _sort_pairs(host: Host, ledger: Ledger, n_pushers: int, n_pairs: int) -> Non
         if owner >= len(first):
             continue
         partners[pair], senses[pair] = partner, sense
-        at = first[owner]
-        if at < 0 or partners[at] > partner:
-            following[pair] = at
+        before, at = -1, first[owner]
+        while at >= 0 and (
+            partners[at] < partner or (partners[at] == partner and not _precedes(pairs[2 + pair], pairs[2 + at]))
+        ):
+            before, at = at, following[at]
+        following[pair] = at
+        if before < 0:
             first[owner] = pair
         else:
-            while following[at] >= 0 and partners[following[at]] <= partner:
-                at = following[at]
-            following[pair] = following[at]
-            following[at] = pair
+            following[before] = pair
 
 
 @inlined
