@@ -28,9 +28,9 @@ from swarmpush.dynamics.build import (
     unit_deviates,
 )
 from swarmpush.dynamics.chipmunk import LAYOUT_IS_KNOWN, address, order_body
-from swarmpush.dynamics.crew import Mode, Rig, drive, feel, new_crew, react
+from swarmpush.dynamics.crew import Mode, Rig, act, new_crew
 from swarmpush.dynamics.host import Host, keep_state, lend, list_pairs, read_state
-from swarmpush.dynamics.ledger import SLOTS, balance_crew, close_visits, enter_contacts, new_ledger
+from swarmpush.dynamics.ledger import SLOTS, close_visits, enter_contacts, new_ledger, settle_crew
 from swarmpush.dynamics.loop import Limits, Task
 from swarmpush.dynamics.ranging import Surroundings
 from swarmpush.dynamics.steps import NOISE_INTERVAL, Units
@@ -149,9 +149,19 @@ def _before(host: Host, task: Task, step: int, is_answered: bool) -> int:
     host, task = borrowed(host), borrowed(task)
     if not is_answered:
         read_state(host)
-    n_asking = react(host, task.rig, task.crew, task.program, task.senses, task.keys, task.around, step, is_answered)
+    n_asking = act(
+        host,
+        task.rig,
+        task.crew,
+        task.program,
+        task.senses,
+        task.keys,
+        task.around,
+        task.ground.inertia,
+        step,
+        is_answered,
+    )
     if n_asking == 0:
-        drive_crew(host, task.rig, task.crew, task.ground.inertia, task.keys, step)
         for k in range(len(host.bodies)):
             if 0 < k <= len(task.crew.pushers):
                 order_body(host.bodies[k], host.orders, k)
@@ -161,9 +171,6 @@ def _before(host: Host, task: Task, step: int, is_answered: bool) -> int:
     return n_asking
 
 
-drive_crew = drive  # the argument of `attach` has the shorter name
-
-
 @compiled
 def _after(host: Host, task: Task, n_pairs: int, step: int) -> bool:
     """Ledger, books and bumpers after a step; True if the log must be fetched."""
@@ -171,8 +178,7 @@ def _after(host: Host, task: Task, n_pairs: int, step: int) -> bool:
     read_state(host)
     enter_contacts(host, task.rig, task.crew, task.ground, task.ledger, n_pairs, step)
     balance_blocks(host, task.ground, task.rig.dt)
-    balance_crew(host, task.rig, task.crew, task.ledger)
-    feel(task.rig, task.crew, task.keys, step)
+    settle_crew(host, task.rig, task.crew, task.ground, task.ledger, task.keys, step)
     close_visits(task.ledger, step)
     return bool(task.ledger.n_log[0] + SLOTS * len(task.ledger.n_open) >= len(task.ledger.log))
 
