@@ -20,7 +20,7 @@ from numpy.typing import NDArray
 from swarmpush.compiled import inlined
 from swarmpush.dynamics.blocks import Ground
 from swarmpush.dynamics.chipmunk import pair_bodies, pair_normal, pair_point
-from swarmpush.dynamics.crew import GAP_STEPS, TOUCHES_BLOCK, TOUCHES_PUSHER, TOUCHES_WALL, Crew, Mode, Rig
+from swarmpush.dynamics.crew import GAP_STEPS, TOUCHES_BLOCK, TOUCHES_PUSHER, TOUCHES_WALL, Crew, Mode, Rig, feel
 from swarmpush.dynamics.host import Host
 
 FloatArray = NDArray[np.float64]
@@ -455,7 +455,7 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ground: Ground, ledger: Led
             if partner == 0 and visit.face == REAR and lean > ground.lean_force * dt:
                 leaning += 1.0
                 push_of_all += lean
-    _count(crew, ground, ledger, motion, leaning, push_of_all / dt, wall_below and wall_above)
+    _count(ground, ledger, motion, leaning, push_of_all / dt, wall_below and wall_above)
 
 
 @inlined
@@ -471,19 +471,36 @@ def _face(sides: FloatArray, first: int, n: int, nx: float, ny: float) -> int:
 
 @inlined
 def _count(
-    crew: Crew,
-    ground: Ground,
-    ledger: Ledger,
-    motion: FloatArray,
-    leaning: float,
-    push_of_all: float,
-    is_held: bool,
+    ground: Ground, ledger: Ledger, motion: FloatArray, leaning: float, push_of_all: float, is_held: bool
 ) -> None:
-    """What happens how much in this step."""
-    totals, pushers, block = ledger.totals[0], crew.pushers, ground.blocks[0]
+    """What happens to the block in this step."""
+    totals = ledger.totals[0]
+    totals.yaw_max = max(totals.yaw_max, abs(motion[0, 2]))
+    if leaning > 0.0:
+        totals.n_leaning += leaning
+        totals.leaning_share += 1.0
+        totals.leaning_most = max(totals.leaning_most, leaning)
+        is_at_rest = abs(motion[0, 3]) < ground.approach * 0.01
+        if push_of_all > ground.blocks[0].floor_static or not is_at_rest:
+            totals.strong_share += 1.0
+            if is_held and is_at_rest:
+                totals.jammed_share += 1.0
+
+
+@inlined
+def settle_crew(
+    host: Host, rig: Rig, crew: Crew, ground: Ground, ledger: Ledger, keys: NDArray[np.uint64], step: int
+) -> None:
+    """After a step: what each pusher is about, what its drive did and drag took, and whether it has felt a bump.
+
+    The engine steps a body with some mass M' and force (see `crew.act`), of which thrust and slope are known; the
+    rest of the force, and -(M' - M) dv, is the drag's impulse. Likewise for turning.
+    """
+    totals, dt, before, motion = ledger.totals[0], rig.dt, host.before, host.motion
     ahead_of = motion[0, 0] + ground.front_reach
-    for i in range(len(pushers)):
-        p = pushers[i]
+    drive, heading, gravity, drag = 0.0, 0.0, 0.0, 0.0
+    for i in range(len(crew.pushers)):
+        p = crew.pushers[i]
         if p.touches != 0:
             if p.touches & TOUCHES_WALL:
                 totals.n_at_wall += 1.0
@@ -498,30 +515,6 @@ def _count(
                 totals.n_halted += 1.0
             elif p.mode == _FAILED:
                 totals.n_failed += 1.0
-    totals.yaw_max = max(totals.yaw_max, abs(motion[0, 2]))
-    if leaning > 0.0:
-        totals.n_leaning += leaning
-        totals.leaning_share += 1.0
-        totals.leaning_most = max(totals.leaning_most, leaning)
-        is_at_rest = abs(motion[0, 3]) < ground.approach * 0.01
-        if push_of_all > block.floor_static or not is_at_rest:
-            totals.strong_share += 1.0
-            if is_held and is_at_rest:
-                totals.jammed_share += 1.0
-
-
-@inlined
-def balance_crew(host: Host, rig: Rig, crew: Crew, ledger: Ledger) -> None:
-    """Work of the drives, and what drag took, in the step that has just been made.
-
-    The engine steps a body with some mass M' and force (see `crew.drive`), of which thrust and slope are known; the
-    rest of the force, and -(M' - M) dv, is the drag's impulse. Likewise for turning.
-    """
-    totals, pushers, dt = ledger.totals[0], crew.pushers, rig.dt
-    before, motion = host.before, host.motion
-    drive, heading, gravity, drag = 0.0, 0.0, 0.0, 0.0
-    for i in range(len(pushers)):
-        p = pushers[i]
         vx, vy, wx, wy = before[i + 1, 3], before[i + 1, 4], motion[i + 1, 3], motion[i + 1, 4]
         mx, my = 0.5 * (vx + wx), 0.5 * (vy + wy)
         extra = p.step_mass - p.mass
@@ -538,6 +531,7 @@ def balance_crew(host: Host, rig: Rig, crew: Crew, ledger: Ledger) -> None:
             drag += ((p.drive_torque - p.torque) * dt + (p.step_moment - p.moment) * (after - spin)) * middle
         elif p.contact_turn != 0.0:
             heading -= p.contact_turn * motion[i + 1, 5]
+        feel(rig, p, keys, i, step)
     totals.drive += drive
     totals.heading += heading
     totals.gravity += gravity

@@ -29,15 +29,15 @@ from swarmpush.dynamics.build import (
     unit_deviates,
 )
 from swarmpush.dynamics.chipmunk import LAYOUT_IS_KNOWN, address, face_body, note_pairs, order_body, read_place
-from swarmpush.dynamics.crew import TOUCHES_BLOCK, Mode, Rig, drive, feel, new_crew, react
+from swarmpush.dynamics.crew import TOUCHES_BLOCK, Mode, Rig, act, new_crew
 from swarmpush.dynamics.host import Host, keep_state, lend, read_state
 from swarmpush.dynamics.ledger import (
-    balance_crew,
     close_visits,
     enter_body,
     enter_contacts,
     most_visits,
     new_ledger,
+    settle_crew,
 )
 from swarmpush.dynamics.loop import Limits, Task
 from swarmpush.dynamics.ranging import Surroundings
@@ -257,10 +257,20 @@ def _before(host: Host, task: Task, standing: IntArray, step: int, is_answered: 
         for i in range(len(pushers)):
             if standing[i] == _TIED:
                 pushers[i].touches |= TOUCHES_BLOCK  # what it tows meets the whole thrust, as what it touches does
-    n_asking = react(host, rig, task.crew, task.program, task.senses, task.keys, task.around, step, is_answered)
+    n_asking = act(
+        host,
+        rig,
+        task.crew,
+        task.program,
+        task.senses,
+        task.keys,
+        task.around,
+        task.ground.inertia,
+        step,
+        is_answered,
+    )
     if n_asking > 0:
         return n_asking
-    drive_crew(host, rig, task.crew, task.ground.inertia, task.keys, step)
     for k in range(len(host.bodies)):
         if 0 < k <= len(pushers):
             # the engine lets gravity act on the mass with which it steps; the weight is among the orders already
@@ -274,9 +284,6 @@ def _before(host: Host, task: Task, standing: IntArray, step: int, is_answered: 
             orders[k, 0] = host.motion[k, 5]
     keep_state(host)
     return 0
-
-
-drive_crew = drive  # the argument of `attach` has the shorter name
 
 
 @inlined
@@ -308,8 +315,7 @@ def _after(host: Host, task: Task, walls: IntArray, step: int) -> int:
     read_state(host)
     enter_contacts(host, task.rig, task.crew, ground, ledger, n_pairs, step)
     balance_blocks(host, ground, task.rig.dt)
-    balance_crew(host, task.rig, task.crew, ledger)
-    feel(task.rig, task.crew, task.keys, step)
+    settle_crew(host, task.rig, task.crew, ground, ledger, task.keys, step)
     close_visits(ledger, step)
     return _FETCH if ledger.n_log[0] + ledger.slots.size >= len(ledger.log) else _DONE
 
