@@ -32,6 +32,7 @@ from swarmpush.dynamics.chipmunk import LAYOUT_IS_KNOWN, address, face_body, not
 from swarmpush.dynamics.crew import TOUCHES_BLOCK, Mode, Rig, act, new_crew
 from swarmpush.dynamics.host import Host, keep_state, lend, read_state
 from swarmpush.dynamics.ledger import (
+    SLOTS,
     close_visits,
     enter_body,
     enter_contacts,
@@ -364,6 +365,8 @@ class Crew:
         self._host = self._host._replace(floor_load=np.zeros((len(self._task.ground.blocks), 2)))
         for body in moving:
             self._take_in(body)
+            if body.space:
+                space.reindex_shapes_for_body(body)  # where it has been put since its shapes were added
         self._take_in(space.static_body)
         self._look_round()
 
@@ -449,7 +452,10 @@ class Crew:
             keys=keys,
             ground=ground,
             ledger=new_ledger(
-                np.zeros(self._n_rows + len(self._walls), dtype=np.int64), self._n_rows, 64 + 24 * self._n_rows, 4096
+                np.zeros(self._n_rows + len(self._walls), dtype=np.int64),
+                self._n_rows,
+                64 + 24 * self._n_rows,
+                max(4096, 4 * SLOTS * self._n_rows),  # all open visits may end in one step
             ),
             path=new_path(1, n, len(blocks) - 1),
             limits=Limits(np.zeros((0, 4)), math.inf, math.inf, math.inf, 2**62, 1),
@@ -609,15 +615,23 @@ class Crew:
         ahead = pymunk.Vec2d(math.cos(heading), math.sin(heading))
         start, filter_ = body.local_to_world((outline.x, outline.y)), _solid(body)[0].filter
 
-        def is_other(shape: pymunk.Shape | None) -> bool:
-            return shape is not None and shape.body is not body and not shape.sensor
-
-        # a disc that overlaps something already is not seen to hit it
-        for touched in self.space.point_query(start, outline.half_width, filter_):
-            if is_other(touched.shape) and touched.gradient.dot(ahead) < -TOUCHING:
-                return 0.0
-        hits = self.space.segment_query(start, start + ahead * most, outline.half_width, filter_)
-        return most * min((hit.alpha for hit in hits if is_other(hit.shape)), default=1.0)
+        end, width = start + ahead * most, outline.half_width
+        # the space's own query along a line leaves out shapes whose boxes only the disc's side would meet
+        swept = pymunk.BB(
+            min(start.x, end.x) - width,
+            min(start.y, end.y) - width,
+            max(start.x, end.x) + width,
+            max(start.y, end.y) + width,
+        )
+        run = most
+        for shape in self.space.bb_query(swept, filter_):
+            if shape.body is body or shape.sensor:
+                continue
+            hit = shape.segment_query(start, end, width)
+            # what it touches already, and runs along or away from, is not in the way
+            if hit and (hit.alpha > 0.0 or hit.normal.dot(ahead) < -TOUCHING):
+                run = min(run, most * hit.alpha)
+        return run
 
     # ---- what has been recorded ----
 

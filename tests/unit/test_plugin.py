@@ -412,6 +412,24 @@ def test_a_log_longer_than_its_buffer_is_whole(monkeypatch: pytest.MonkeyPatch) 
     assert same(crew, expected)
 
 
+def test_visits_of_a_large_heap_may_all_end_at_once() -> None:
+    """Six hundred pairs that part in one step all come into the log, more than one body's share of it each."""
+    space = new_space()
+    pairs = []
+    for k in range(600):
+        one, other = add_disc(space, 0.0, 1.0 * k), add_disc(space, 0.0799, 1.0 * k)
+        one.velocity = 0.01, 0.0
+        pairs.append((one, other))
+    crew = attach(space, dt=DT)
+    crew.step(2)
+    for one, other in pairs:
+        one.position, other.position = (-1.0, one.position.y), (1.0, other.position.y)
+    crew.step(10)
+    assert len(crew.visits) == 600
+    ledger = crew._task.ledger
+    assert len(ledger.log) > ledger.slots.size
+
+
 def test_overlap_is_measured_where_a_static_body_is_now() -> None:
     """A static body that has been moved, or turned, is where it stands when it is touched."""
     space = new_space()
@@ -532,11 +550,30 @@ def test_ranges_in_an_l_shaped_room() -> None:
     assert look_once(math.pi / 4) == pytest.approx(corner.length - 0.04)
 
 
+def test_a_range_ends_at_what_only_the_flank_would_touch() -> None:
+    """A post and a pusher beside the line ahead are met by the disc's side; those beyond its side are not."""
+    for aside, is_met in ((0.05, True), (-0.05, True), (0.091, False)):
+
+        def post(space: pymunk.Space, body: pymunk.Body, aside: float = aside) -> None:
+            space.add(pymunk.Circle(space.static_body, 0.05, (1.5, 0.5 + aside)))
+
+        def neighbour(space: pymunk.Space, body: pymunk.Body, aside: float = aside) -> None:
+            late = add_disc(space, 9.0, 9.0, radius=0.05)
+            late.position = 1.5, 0.5 + aside  # put there after its shape was added
+
+        free = 3.0 - 0.5 - 0.04
+        expected = 1.0 - math.sqrt(0.09**2 - aside**2) if is_met else free
+        assert look_once(0.0, prepare=post) == pytest.approx(expected)
+        assert look_once(0.0, prepare=neighbour) == pytest.approx(expected)
+
+
 def test_a_range_ahead_of_something_touched_is_none() -> None:
     """A pusher that touches a wall has no way into it, and all the way along it and off it."""
     at_wall = (0.039, 0.5)  # a millimetre too deep, as after a bump
     assert look_once(math.pi, at_wall) == 0.0
     assert look_once(math.pi - 0.5, at_wall) == 0.0
+    space_beside = pymunk.Vec2d(1.0, 0.0).rotated(math.pi / 2 - 1e-9)
+    assert look_once(space_beside.angle, at_wall) > 1.0
     assert look_once(0.0, at_wall) == pytest.approx(3.0 - 0.039 - 0.04)
     assert look_once(math.pi / 2, at_wall) == pytest.approx(2.0 - 0.5 - 0.04)
 
