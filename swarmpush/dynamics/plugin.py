@@ -141,12 +141,22 @@ def attach(
         A `Crew`: call its `step` in place of `space.step`. Until `detach`, the mass of a pusher in touch or on a joint
         (and the moment of a free heading) holds the drag of one step, a held heading has an infinite moment and sets
         the body's angle, no pair's impulse is carried over from an earlier touch (`collision_persistence` is 1), and
-        nothing falls asleep. A pusher's own `velocity_func` must call `Body.update_velocity`, or it is not driven.
+        nothing falls asleep by itself; do not put a pusher to sleep. A pusher's own `velocity_func` must call
+        `Body.update_velocity`, or it is not driven. Masses and moments that are set meanwhile are lost at `detach`.
 
     Raises:
         ValueError: when the arguments do not fit together.
         RoutineError: when the routine cannot be carried out in a space.
         RuntimeError: when the space has a crew already, or this build of the engine keeps its bodies in an unknown way.
+
+    >>> space = pymunk.Space()
+    >>> space.gravity = 0.0, -10.0
+    >>> ball = pymunk.Body(2.0, 1.0)
+    >>> space.add(ball, pymunk.Circle(ball, 0.1))
+    >>> with attach(space, dt=0.01, watch={"ball": ball}) as crew:
+    ...     crew.step(100)
+    >>> float(crew.books["else_y_Ns"][0].round(9))
+    -20.0
     """
     if not LAYOUT_IS_KNOWN:
         raise RuntimeError(
@@ -199,6 +209,8 @@ def _check(
         raise ValueError("a pusher cannot be watched as well; its visits are logged anyway")
     if any(not _solid(body) for body in pushers):
         raise ValueError("a pusher has no shape that could touch anything")
+    if drive and drive.heading == "free" and any(math.isinf(body.moment) for body in pushers):
+        raise ValueError("a free heading needs bodies with a finite moment")
     if errors.mass_spread > 0.0:
         raise ValueError("errors cannot have a mass_spread: the pushers' masses are those of the bodies")
     if drive and math.isinf(drive.turn_rate) and not all(_is_disc(body) for body in pushers):
@@ -249,7 +261,7 @@ _DONE, _FETCH, _FULL = 0, 1, 2  # what comes next: another step, a fetch of the 
 def _before(host: Host, task: Task, standing: IntArray, step: int, is_answered: bool, faces: bool) -> int:
     """Decisions and orders before a step; returns how many pushers wait for an answer.
 
-    faces: whether the bodies' angles are only set, as discs turn without rubbing on what they touch.
+    faces: whether the bodies' angles are only set, as discs turn without rubbing on what they touch; not on a joint.
     """
     host, task = borrowed(host), borrowed(task)
     rig, pushers, orders = task.rig, task.crew.pushers, host.orders
@@ -277,10 +289,12 @@ def _before(host: Host, task: Task, standing: IntArray, step: int, is_answered: 
             # the engine lets gravity act on the mass with which it steps; the weight is among the orders already
             orders[k, 1] -= pushers[k - 1].step_mass * rig.pull_x
             orders[k, 2] -= pushers[k - 1].step_mass * rig.pull_y
+            if faces and standing[k - 1] == _TIED:
+                orders[k, 0] = (pushers[k - 1].heading - host.motion[k, 2]) / rig.dt  # its joints must feel it turn
+            elif faces and standing[k - 1] == _FREE:
+                face_body(host.bodies[k], pushers[k - 1].heading)
             if standing[k - 1] != _GONE:
                 order_body(host.bodies[k], orders, k)
-                if faces:
-                    face_body(host.bodies[k], pushers[k - 1].heading - orders[k, 0] * rig.dt)
         else:
             orders[k, 0] = host.motion[k, 5]
     keep_state(host)

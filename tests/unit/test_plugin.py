@@ -483,6 +483,26 @@ def test_a_pusher_tows_with_its_whole_thrust() -> None:
     assert crew.books["else_x_Ns"].iloc[0] == pytest.approx(1000.0 * barge.velocity.x, rel=1e-9)
 
 
+def test_a_hitch_turns_with_its_pusher() -> None:
+    """A joint at the rim of a disc that turns is swung round at the disc's turning rate, without coming apart."""
+    space = new_space()
+    tug, trailer = add_disc(space, 0.0, 0.0), add_disc(space, -0.12, 0.0)
+    hitch = pymunk.PivotJoint(tug, trailer, (-0.06, 0.0), (0.06, 0.0))
+    hitch.collide_bodies = False
+    space.add(hitch)
+    acts = [{"act": "turn", "angle": 1.5}, {"act": "run"}]
+    drive = Drive(1.0, 0.3, turn_rate=2.0)
+    crew = attach(space, dt=DT, pushers=[tug], routine=[{"name": "only", "acts": acts}], drive=drive)
+    for _ in range(10):
+        crew.step(60)
+        assert tug.angular_velocity == pytest.approx(2.0)
+        assert tug.angle == pytest.approx(crew.pushers["heading_rad"].iloc[0])
+        apart = tug.local_to_world((-0.06, 0.0)) - trailer.local_to_world((0.06, 0.0))
+        assert apart.length < 1e-4
+    crew.step(400)
+    assert tug.angle == pytest.approx(1.5)
+
+
 def test_bars_push_with_their_noses() -> None:
     """A bar with a centre of mass off its origin does what the same bar drawn about its centre does."""
     tables = []
@@ -764,6 +784,29 @@ def test_threads_sleepers_damping_and_own_functions() -> None:
     assert totals(crew, "crate") == pytest.approx(momentum(crate), abs=ROUNDING)
 
 
+def test_contacts_that_a_callback_calls_off_are_none() -> None:
+    """What a pre_solve callback lets pass is neither logged nor felt, and what it changes in a contact is what acts."""
+    space = new_space()
+    pusher = add_disc(space, 0.0, 0.0)
+    ghost, post = (pymunk.Circle(space.static_body, 0.1, (x, 0.0)) for x in (0.5, 1.2))
+    ghost.collision_type, post.collision_type = 1, 2
+    space.add(ghost, post)
+
+    def let_pass(arbiter: pymunk.Arbiter, space: pymunk.Space, data: Any) -> None:
+        arbiter.process_collision = False
+
+    def bounce(arbiter: pymunk.Arbiter, space: pymunk.Space, data: Any) -> None:
+        arbiter.restitution = 1.0
+
+    space.on_collision(1, None, pre_solve=let_pass)
+    space.on_collision(2, None, pre_solve=bounce)
+    crew = attach(space, dt=DT, pushers=[pusher], routine=HALT, drive=CART)
+    crew.step(6000)
+    visit = crew.visits.iloc[0]
+    assert visit["x_m"] == pytest.approx(1.2 - 0.14, abs=1e-3)
+    assert visit["impact_Ns"] == pytest.approx(2 * 0.2 * 0.3, rel=1e-2)
+
+
 def test_attaching_in_the_middle_of_a_contact() -> None:
     """A crew attached to bodies that touch, and to a space in motion, logs from there on and keeps its books."""
     space, watched = busy_space()
@@ -818,7 +861,7 @@ def test_detaching_leaves_the_space_as_it_was(heading: Any) -> None:
     space = new_space()
     add_round_tank(space)
     pushers = add_ring(space, 5)
-    pushers[0].mass, pushers[1].moment = 0.1 + 0.2, math.inf
+    pushers[0].mass, pushers[1].moment = 0.1 + 0.2, math.inf if heading == "held" else 1e-4 / 3
     space.collision_persistence, space.sleep_time_threshold = 7, 0.3
     before = [(b.mass, b.moment) for b in pushers]
     drive = Drive(1.0, 0.3, heading=heading, turn_drag=1e-3, turn_rate=5.0)
@@ -878,6 +921,10 @@ def test_a_refusal_changes_nothing() -> None:
         ({"watch": "named body"}, "no body can be called 'body 2'"),
         ({"watch": "kinematic"}, "watched body 'k' is not dynamic"),
         ({"units": Units(0.0, 1.0, 1.0)}, "unit of length is 0.0"),
+        (
+            {"drive": Drive(1.0, 0.3, heading="free", turn_drag=1e-3, turn_rate=3.0), "pushers": "rigid"},
+            "finite moment",
+        ),
         ({"errors": Errors(mass_spread=0.1)}, "mass_spread"),
         (
             {
@@ -893,11 +940,13 @@ def test_refusals(change: dict[str, Any], sentence: str) -> None:
     """What does not fit together is refused in one clear sentence."""
     space, other = new_space(), new_space()
     disc, box = add_disc(space, 0.0, 0.0), add_box(space, 1.0, 0.0, (0.1, 0.1))
+    rigid = add_disc(space, 2.0, 0.0)
+    rigid.moment = math.inf
     kinematic, bare = pymunk.Body(body_type=pymunk.Body.KINEMATIC), pymunk.Body(1.0, 1.0)
     space.add(kinematic, bare)
     chosen = {
         "twice": [disc, disc], "elsewhere": [add_disc(other, 0.0, 0.0)], "kinematic": [kinematic], "box": [box],
-        "bare": [bare],
+        "bare": [bare], "rigid": [rigid],
     }  # fmt: skip
     watched = {
         "pusher": {"p": disc}, "twins": {"a": box, "b": box}, "named wall": {"wall": box},
