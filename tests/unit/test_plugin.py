@@ -17,6 +17,8 @@ import pytest
 import swarmpush
 from swarmpush import Drive, Units, attach
 from swarmpush.dynamics.asking import Situation
+from swarmpush.dynamics.host import list_pairs
+from swarmpush.dynamics.ledger import _sort_pairs
 from swarmpush.dynamics.plugin import Crew
 from swarmpush.dynamics.steps import choose_step
 from swarmpush.problems import RoutineError
@@ -850,6 +852,31 @@ def test_same_seed_same_tables() -> None:
     assert len(first.visits) > 20
     assert same(first, second)
     assert not same(first, other)
+
+
+def test_pairs_of_one_partner_are_entered_in_an_order_of_their_own() -> None:
+    """A comb stands on its five teeth: however the engine lists these pairs, they are summed up in the same order."""
+    space = new_space()
+    space.gravity = 0.0, -9.81
+    add_walls(space, (-1.0, 0.0), (1.0, 0.0), (1.0, 1.0), (-1.0, 1.0))
+    comb = pymunk.Body(1.0, math.inf)
+    comb.position = 0.0, 0.02
+    space.add(comb, *(pymunk.Circle(comb, 0.02, (0.1 * k, 0.0)) for k in (2, 0, 4, 1, 3)))
+    crew = attach(space, dt=DT)
+    crew.step(100)
+    host, ledger = crew._host, crew._task.ledger
+    n, orders = int(list_pairs(host)), []
+    for _ in range(2):
+        _sort_pairs(host, ledger, 0, n)
+        at, listed = int(ledger.first[0]), []
+        while at >= 0:
+            listed.append(int(host.pairs[2 + at]))
+            at = int(ledger.following[at])
+        orders.append(listed)
+        ledger.first[:] = -1
+        host.pairs[2 : 2 + n] = host.pairs[2 : 2 + n][::-1].copy()
+    assert len(orders[0]) == n == 5
+    assert orders[0] == orders[1]
 
 
 # ---- attaching and detaching ----------------------------------------------------------------------------------------
