@@ -149,6 +149,11 @@ class Pushers(_Table):
         return self.stall_force / self.free_speed
 
     @property
+    def comeback_time(self) -> float:
+        """Time to regain its speed twice and cross its radius, s; a pusher that is back sooner has rebounded."""
+        return 2 * self.relaxation_time + self.radius / self.free_speed
+
+    @property
     def is_disc(self) -> bool:
         """Whether the outline is round."""
         return self.nose == 0.0 and self.trunk == 0.0

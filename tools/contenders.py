@@ -9,19 +9,29 @@ import time
 import tomllib
 from typing import Any
 
+SPARE = 64  # numbers: the engine reallocates a buffer that is nearly used up, which would free NumPy's memory
 RESET = 10  # steps after which the bare space is put back on the compiled loop's course
 
 
 def wide_corridor(n_pushers: int) -> Any:
-    """The service passage four times as wide, with room for 256 carts behind the crate and a goal out of reach."""
+    """A wide service passage with as much floor per cart, whatever their number, and a goal out of reach.
+
+    With 64 carts it is four times as wide as the demo; length and width grow with the root of the number.
+    """
     from swarmpush.demos import demo
     from swarmpush.loading import from_tables
 
     tables = tomllib.loads(demo("service_passage").read_text(encoding="utf-8"))
-    tables["channel"] = {"length": 10.0, "width": 1.28}
-    tables["block"] = {"length": 0.25, "width": 1.26, "mass": 2.1, "rear_at": 4.0}  # as heavy per area
+    k = math.sqrt(n_pushers / 64)
+    tables["channel"] = {"length": 10.0 * k, "width": 1.28 * k}
+    tables["block"] = {
+        "length": 0.25,
+        "width": 1.28 * k - 0.02,
+        "mass": 2.1 * k,
+        "rear_at": 4.0 * k,
+    }  # as heavy per area
     tables["pushers"]["count"] = n_pushers
-    tables["goal"]["travel"] = 5.0
+    tables["goal"]["travel"] = 5.0 * k
     return from_tables(tables)
 
 
@@ -46,8 +56,15 @@ class Ours:
             self._task.ledger.n_log[0] = 0  # as if the log had been fetched
 
     def state(self) -> Any:
-        """Positions, angles and velocities, as one group of numbers per body."""
+        """(n, 6) positions, angles and velocities of all bodies."""
+        self.space.read_plainly()
         return self.space.host.motion.copy()
+
+    def state_with_walls(self) -> Any:
+        """The same as one row of numbers, with those of the walls, which all stand at the origin, and room to spare."""
+        import numpy as np
+
+        return np.append(self.state().ravel(), np.zeros(6 * len(self.space.walls) + SPARE))
 
     def n_touches(self) -> int:
         """Pairs of bodies in touch in the last step, by pymunk's own account."""
@@ -124,7 +141,7 @@ class Bare:
         step, dt = self._space.step, self._dt
         buffer = batch.Buffer()
         for _ in range(n // RESET):
-            buffer.set_float_buf(self._twin.state())
+            buffer.set_float_buf(self._twin.state_with_walls())
             batch.set_space_bodies(self._space, self._fields, buffer)
             start = time.perf_counter()
             for _ in range(RESET):

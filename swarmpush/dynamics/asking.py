@@ -36,7 +36,8 @@ class Situation(NamedTuple):
     """What a pusher knows at a decision moment, with its sensors' errors.
 
     pusher: number from 0. time_s. heading_rad: its own heading. contact: what it has bumped into last: "none",
-    "wall", "block" or "pusher". bearing_rad: direction of the touched surface's inward normal from its heading on.
+    "wall", "block" or "pusher"; in a space of the user's own a wall is a static body, and a block any other that is no
+    pusher. bearing_rad: direction of the touched surface's inward normal from its heading on.
     range_m: last range gauged, 0 before the first. seen: whether the last look saw its face. declared: whether it holds
     itself for lost. notebook: a dictionary of its own, kept from one moment to the next.
     """

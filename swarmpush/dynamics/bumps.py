@@ -1,8 +1,10 @@
 """From visits to bumps, strikes and laps: pure functions of the visit table.
 
 A pusher that rebounds a little and comes back at once makes several visits, yet bumps into the surface once.
-Consecutive visits of a pusher to one surface are therefore one bump; a bump on the rear face is a strike; and a lap
-is a run of bumps on the surfaces of a planned lap, from one strike to the strike that closes it.
+Consecutive visits of a pusher to one surface are therefore one bump, and so are visits with little time between
+them, whatever it has touched meanwhile: squeezed between the block and a neighbour it rattles at a rate that says more
+of the time step than of the rig. A bump on the rear face is a strike; and a lap is a run of bumps on the surfaces of a
+planned lap, from one strike to the strike that closes it.
 """
 
 from __future__ import annotations
@@ -18,11 +20,12 @@ from swarmpush.kinematics.laps import IN_THE_OPEN
 LAP_COLUMNS = {"pusher": np.int64, "t_start_s": np.float64, "t_end_s": np.float64, "n_strikes": np.int64}
 
 
-def find_bumps(visits: pd.DataFrame) -> pd.DataFrame:
+def find_bumps(visits: pd.DataFrame, apart_s: float = 0.0) -> pd.DataFrame:
     """Gather visits into bumps.
 
     Arguments:
         visits: the table of a `Run`.
+        apart_s: a pusher that is back at a surface within this time has not bumped into it anew.
 
     Returns:
         One row per bump in order of pusher and time: pusher, surface ("pusher" for another pusher), t_on_s, t_off_s,
@@ -35,33 +38,40 @@ def find_bumps(visits: pd.DataFrame) -> pd.DataFrame:
     seconds = between.assign(pusher=between["other_pusher"], x_m=np.nan, y_m=np.nan, heading_rad=np.nan)
     both = pd.concat([touches, seconds], ignore_index=True) if len(seconds) else touches
     both = both.sort_values(["pusher", "t_on_s"], kind="stable")
-    pusher, surface = both["pusher"].to_numpy(), both["surface"].to_numpy()
-    if not len(both):
-        starts = np.zeros(0, dtype=np.int64)
-    else:
-        is_new = np.ones(len(both), dtype=bool)
-        is_new[1:] = (pusher[1:] != pusher[:-1]) | (surface[1:] != surface[:-1])
-        starts = np.flatnonzero(is_new)
-
-    def total(column: str) -> np.ndarray:
-        return np.add.reduceat(both[column].to_numpy(), starts) if len(starts) else np.zeros(0)
-
-    ends = np.append(starts[1:], len(both))[: len(starts)] - 1  # none at all when nobody bumped into anything
-    first = both.iloc[starts]
+    number = _bump_numbers(both, apart_s)
+    first = both.iloc[np.unique(number, return_index=True)[1]]
+    ends = both["t_off_s"].groupby(number).max()
+    sums = both[["impact_Ns", "lean_Ns"]].groupby(number).sum()
     return pd.DataFrame(
         {
             "pusher": first["pusher"].to_numpy(),
             "surface": first["surface"].to_numpy(),
             "t_on_s": first["t_on_s"].to_numpy(),
-            "t_off_s": both["t_off_s"].to_numpy()[ends],
-            "impact_Ns": total("impact_Ns"),
-            "lean_Ns": total("lean_Ns"),
+            "t_off_s": ends.to_numpy(),
+            "impact_Ns": sums["impact_Ns"].to_numpy(),
+            "lean_Ns": sums["lean_Ns"].to_numpy(),
             "x_m": first["x_m"].to_numpy(),
             "y_m": first["y_m"].to_numpy(),
             "approach_m_s": first["approach_m_s"].to_numpy(),
             "heading_rad": first["heading_rad"].to_numpy(),
         }
     )
+
+
+def _bump_numbers(touches: pd.DataFrame, apart_s: float) -> np.ndarray:
+    """Number of the bump to which each touch belongs; touches in order of pusher and time."""
+    numbers = np.zeros(len(touches), dtype=np.int64)
+    latest: dict[tuple[int, str], tuple[int, float]] = {}  # by pusher and surface: number and end of the last bump
+    before, n_bumps = None, 0
+    columns = (touches[name].to_numpy() for name in ("pusher", "surface", "t_on_s", "t_off_s"))
+    for k, (pusher, surface, t_on, t_off) in enumerate(zip(*columns, strict=True)):
+        place = pusher, surface
+        number, end = latest.get(place, (-1, -np.inf))
+        if number < 0 or (before != place and t_on - end >= apart_s):
+            number, end, n_bumps = n_bumps, -np.inf, n_bumps + 1
+        latest[place] = number, max(end, t_off)
+        numbers[k], before = number, place
+    return numbers
 
 
 def find_completed_laps(bumps: pd.DataFrame, cycles: Iterable[tuple[str, ...]]) -> pd.DataFrame:

@@ -229,6 +229,19 @@ def read_body(body: int, motion: FloatArray, k: int) -> None:
 
 
 @inlined
+def read_place(body: int) -> tuple[float, float]:
+    """Where a body's centre of mass is: the point from which contact points are measured."""
+    b = _floats_at(body)
+    return b[_X], b[_X + 1]
+
+
+@inlined
+def face_body(body: int, angle: float) -> None:
+    """Give a body another angle, which its shapes take over when the next step moves them."""
+    _floats_at(body)[_ANGLE] = angle
+
+
+@inlined
 def weigh_body(body: int, mass: float, moment: float) -> None:
     """Give a body another mass, and another moment of inertia unless it is 0."""
     b = _floats_at(body)

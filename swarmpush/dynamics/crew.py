@@ -216,7 +216,7 @@ def _ends_leg(rig: Rig, p: Any, vx: float, vy: float, now: float) -> bool:
 
 
 @inlined
-def react(
+def act(
     host: Host,
     rig: Rig,
     crew: Crew,
@@ -224,137 +224,145 @@ def react(
     senses: Senses,
     keys: NDArray[np.uint64],
     around: Surroundings,
+    inertia: FloatArray,
     step: int,
     is_answered: bool,
 ) -> int:
-    """Let those decide whose latency, turn or leg is over; returns how many must ask outside compiled code.
+    """Let the pushers decide, and give their orders for this step; returns how many must first ask outside.
 
-    is_answered: this is the second call in a step, for those who have asked.
+    is_answered: this is another call in a step, for those who have asked. All in one loop, as a large crew does not
+    fit the processor's first cache.
     """
-    now = step * rig.dt
-    n_asking = 0
-    motion, pushers = host.motion, crew.pushers
-    for i in range(len(pushers)):
-        p = pushers[i]
+    now, n_asking = step * rig.dt, 0
+    is_noise_due = rig.diffusion > 0.0 and step % rig.noise_steps == 0
+    fade = math.exp(-rig.fade_rate * now) if rig.fade_rate > 0.0 else 1.0
+    for i in range(len(crew.pushers)):
+        p = crew.pushers[i]
         if is_answered:
-            is_over = p.asks != 0
+            if p.asks == 0:
+                continue
+            is_over = True
         else:
-            if rig.heading_is_free:
-                p.heading = motion[i + 1, 2]
-                p.ux, p.uy = math.cos(p.heading), math.sin(p.heading)
-            if now >= p.fails_at:
-                p.mode = _FAILED
-            is_over = (p.mode == _REACT and now >= p.until - 1e-9) or (p.mode == _TURN and p.to_turn == 0.0)
-            if p.to_go < np.inf or p.leg_ends < np.inf:
-                is_over |= _ends_leg(rig, p, motion[i + 1, 3], motion[i + 1, 4], now)
-        if is_over:
-            n_asking += _carry_out(host, rig, crew, program, senses, keys, around, i, now)
+            is_over = _is_over(rig, p, host.motion, i, now)
+        if is_over and _carry_out(host, rig, crew, program, senses, keys, around, i, now) == 1:
+            n_asking += 1
+            continue
+        deviate = normal(keys[i, _HEADING], step // rig.noise_steps) if is_noise_due else 0.0
+        _drive(host, rig, p, inertia, i, fade, is_noise_due, deviate)
     return n_asking
 
 
 @inlined
-def drive(host: Host, rig: Rig, crew: Crew, inertia: FloatArray, keys: NDArray[np.uint64], step: int) -> None:
-    """The orders of this step: turning, heading noise, thrust, drag and slope; and the masses to step with.
+def _is_over(rig: Rig, p: Any, motion: FloatArray, i: int, now: float) -> bool:
+    """Whether pusher i's latency, turn or leg is over, so that it decides anew."""
+    if rig.heading_is_free:
+        p.heading = motion[i + 1, 2]
+        p.ux, p.uy = math.cos(p.heading), math.sin(p.heading)
+    if now >= p.fails_at:
+        p.mode = _FAILED
+    if p.mode == _RUN and p.to_go == np.inf:
+        return False
+    is_over = (p.mode == _REACT and now >= p.until - 1e-9) or (p.mode == _TURN and p.to_turn == 0.0)
+    if p.to_go < np.inf or p.leg_ends < np.inf:
+        is_over |= _ends_leg(rig, p, motion[i + 1, 3], motion[i + 1, 4], now)
+    return bool(is_over)
+
+
+@inlined
+def _drive(
+    host: Host, rig: Rig, p: Any, inertia: FloatArray, i: int, fade: float, is_noise_due: bool, deviate: float
+) -> None:
+    """The orders of pusher i: turning, heading noise, thrust, drag and slope; and the mass to step with.
 
     A pusher that touches nothing is stepped with its own mass and with that force under which a step ends where linear
     drag and a constant force would have led it (exponential relaxation), so an impact meets the bare mass. One in touch
     is stepped with the `effective_mass`, under which it presses with exactly its force at rest.
     """
-    dt = rig.dt
-    is_noise_due = rig.diffusion > 0.0 and step % rig.noise_steps == 0
-    fade = math.exp(-rig.fade_rate * step * dt) if rig.fade_rate > 0.0 else 1.0
-    motion, orders, pushers = host.motion, host.orders, crew.pushers
-    for i in range(len(pushers)):
-        p = pushers[i]
-        vx, vy = motion[i + 1, 3], motion[i + 1, 4]
-        turned = 0.0  # by its own drive
-        thrust = p.stall * fade
-        if p.mode == _TURN:
-            most = rig.turn_rate * dt
-            turned = min(max(p.to_turn, -most), most)
-            p.to_turn -= turned
-            thrust *= rig.drive_while_turning
-        elif p.mode == _STOP or p.mode == _FAILED:
-            thrust = 0.0
-        along_rest, across_rest, turn_rest = 1.0, 1.0, 1.0
-        mass, moment = p.held_mass, p.held_moment
-        if p.touches == 0:
-            along_rest, across_rest, turn_rest = p.along_rest, p.across_rest, p.turn_rest
-            mass, moment = p.mass, p.moment
-        p.touches = 0
-        if mass != p.step_mass:
-            p.step_mass, p.step_moment = mass, moment
-            weigh_body(host.bodies[i + 1], mass, moment)
-            inertia[i + 1, 2] = 1.0 / mass
-            if moment > 0.0:
-                inertia[i + 1, 3] = 1.0 / moment
-        spin, torque = turned / dt, 0.0
-        if rig.heading_is_free:
+    dt, motion, orders = rig.dt, host.motion, host.orders
+    vx, vy = motion[i + 1, 3], motion[i + 1, 4]
+    turned = 0.0  # by its own drive
+    thrust = p.stall * fade
+    if p.mode == _TURN:
+        most = rig.turn_rate * dt
+        turned = min(max(p.to_turn, -most), most)
+        p.to_turn -= turned
+        thrust *= rig.drive_while_turning
+    elif p.mode == _STOP or p.mode == _FAILED:
+        thrust = 0.0
+    along_rest, across_rest, turn_rest = 1.0, 1.0, 1.0
+    mass, moment = p.held_mass, p.held_moment
+    if p.touches == 0:
+        along_rest, across_rest, turn_rest = p.along_rest, p.across_rest, p.turn_rest
+        mass, moment = p.mass, p.moment
+    p.touches = 0
+    if mass != p.step_mass:
+        p.step_mass, p.step_moment = mass, moment
+        weigh_body(host.bodies[i + 1], mass, moment)
+        inertia[i + 1, 2] = 1.0 / mass
+        if moment > 0.0:
+            inertia[i + 1, 3] = 1.0 / moment
+    spin, torque = turned / dt, 0.0
+    if rig.heading_is_free:
+        if is_noise_due:
+            p.noise = rig.diffusion * deviate / math.sqrt(rig.noise_steps * dt)
+        if thrust > 0.0:
+            spin += p.drift + p.noise
+        arm = rig.contact_arm * (p.ux * p.contact_y - p.uy * p.contact_x) / dt
+        p.drive_torque = rig.turn_drag * spin + arm
+        spin = motion[i + 1, 5]
+        torque = (p.drive_torque - rig.turn_drag * spin) * turn_rest
+    else:
+        if thrust > 0.0 and p.mode != _TURN:
             if is_noise_due:
-                deviate = normal(keys[i, _HEADING], step // rig.noise_steps)
-                p.noise = rig.diffusion * deviate / math.sqrt(rig.noise_steps * dt)
-            if thrust > 0.0:
-                spin += p.drift + p.noise
-            arm = rig.contact_arm * (p.ux * p.contact_y - p.uy * p.contact_x) / dt
-            p.drive_torque = rig.turn_drag * spin + arm
-            spin = motion[i + 1, 5]
-            torque = (p.drive_torque - rig.turn_drag * spin) * turn_rest
-        else:
-            if thrust > 0.0 and p.mode != _TURN:
-                if is_noise_due:
-                    spread = rig.diffusion * math.sqrt(rig.noise_steps * dt)
-                    turned = spread * normal(keys[i, _HEADING], step // rig.noise_steps)
-                turned += p.drift * dt
-            if turned != 0.0:
-                p.heading += turned
-                p.ux, p.uy = math.cos(p.heading), math.sin(p.heading)
-                if rig.follows:
-                    spin = turned / dt
-        across = vy * p.ux - vx * p.uy
-        along = vx * p.ux + vy * p.uy
-        push = (thrust - p.drag * along + p.mass * (rig.pull_x * p.ux + rig.pull_y * p.uy)) * along_rest
-        shove = (p.mass * (rig.pull_y * p.ux - rig.pull_x * p.uy) - p.side_drag * across) * across_rest
-        p.thrust = thrust
-        p.force_x = push * p.ux - shove * p.uy
-        p.force_y = push * p.uy + shove * p.ux
-        p.torque = torque
-        orders[i + 1, 0] = spin
-        orders[i + 1, 1] = p.force_x
-        orders[i + 1, 2] = p.force_y
-        orders[i + 1, 3] = torque
-        p.hardest = -1.0
-        p.contact_x = p.contact_y = p.contact_turn = 0.0
+                turned = rig.diffusion * math.sqrt(rig.noise_steps * dt) * deviate
+            turned += p.drift * dt
+        if turned != 0.0:
+            p.heading += turned
+            p.ux, p.uy = math.cos(p.heading), math.sin(p.heading)
+            if rig.follows:
+                spin = turned / dt
+    across = vy * p.ux - vx * p.uy
+    along = vx * p.ux + vy * p.uy
+    push = (thrust - p.drag * along + p.mass * (rig.pull_x * p.ux + rig.pull_y * p.uy)) * along_rest
+    shove = (p.mass * (rig.pull_y * p.ux - rig.pull_x * p.uy) - p.side_drag * across) * across_rest
+    p.thrust = thrust
+    p.force_x = push * p.ux - shove * p.uy
+    p.force_y = push * p.uy + shove * p.ux
+    p.torque = torque
+    orders[i + 1, 0] = spin
+    orders[i + 1, 1] = p.force_x
+    orders[i + 1, 2] = p.force_y
+    orders[i + 1, 3] = torque
+    p.hardest = -1.0
+    p.contact_x = p.contact_y = p.contact_turn = 0.0
 
 
 @inlined
-def feel(rig: Rig, crew: Crew, keys: NDArray[np.uint64], step: int) -> None:
-    """After the contacts are read: which pushers have felt a bump."""
+def feel(rig: Rig, p: Any, keys: NDArray[np.uint64], i: int, step: int) -> None:
+    """After the contacts are read: whether pusher i has felt a bump."""
+    if p.mode != _RUN and p.mode != _SLIDE:
+        return
     now = (step + 1) * rig.dt
-    pushers = crew.pushers
-    for i in range(len(pushers)):
-        p = pushers[i]
-        if p.mode != _RUN and p.mode != _SLIDE:
-            continue
-        if rig.false_bumps > 0.0:
-            if p.next_false < 0.0:
-                p.next_false = now - math.log(uniform(keys[i, _FALSE], p.n_false)) / rig.false_bumps
-                p.n_false += 1
-            if now >= p.next_false:
-                p.next_false = -1.0
-                p.mode, p.until = _REACT, now + rig.latency
-                p.percept_kind, p.percept_normal = _WALL, p.heading + math.pi
-                continue
-        if p.touched_at != step:
-            p.pressed = 0.0
-            if step - p.touched_at > GAP_STEPS:
-                p.has_reacted = 0
-            continue
-        p.pressed += p.hardest
-        if p.pressed <= 0.0 or p.pressed < rig.bump_threshold or now < p.until:
-            continue
-        p.n_bumps += 1
-        if rig.missed_bumps > 0.0 and uniform(keys[i, _MISSED], p.n_bumps) < rig.missed_bumps:
-            p.until = now + rig.retry
-            continue
-        p.mode, p.until, p.has_reacted = _REACT, now + rig.latency, 1
-        p.percept_kind, p.percept_normal = p.step_kind, math.atan2(p.step_ny, p.step_nx)
+    if rig.false_bumps > 0.0:
+        if p.next_false < 0.0:
+            p.next_false = now - math.log(uniform(keys[i, _FALSE], p.n_false)) / rig.false_bumps
+            p.n_false += 1
+        if now >= p.next_false:
+            p.next_false = -1.0
+            p.mode, p.until = _REACT, now + rig.latency
+            p.percept_kind, p.percept_normal = _WALL, p.heading + math.pi
+            return
+    if p.touched_at != step:
+        p.pressed = 0.0
+        if step - p.touched_at > GAP_STEPS:
+            p.has_reacted = 0
+        return
+    p.pressed += p.hardest
+    if p.pressed <= 0.0 or p.pressed < rig.bump_threshold or now < p.until:
+        return
+    p.n_bumps += 1
+    if rig.missed_bumps > 0.0 and uniform(keys[i, _MISSED], p.n_bumps) < rig.missed_bumps:
+        p.until = now + rig.retry
+        return
+    p.mode, p.until, p.has_reacted = _REACT, now + rig.latency, 1
+    p.percept_kind, p.percept_normal = p.step_kind, math.atan2(p.step_ny, p.step_nx)

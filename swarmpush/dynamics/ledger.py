@@ -20,13 +20,14 @@ from numpy.typing import NDArray
 from swarmpush.compiled import inlined
 from swarmpush.dynamics.blocks import Ground
 from swarmpush.dynamics.chipmunk import pair_bodies, pair_normal, pair_point
-from swarmpush.dynamics.crew import GAP_STEPS, TOUCHES_BLOCK, TOUCHES_PUSHER, TOUCHES_WALL, Crew, Mode, Rig
+from swarmpush.dynamics.crew import GAP_STEPS, TOUCHES_BLOCK, TOUCHES_PUSHER, TOUCHES_WALL, Crew, Mode, Rig, feel
 from swarmpush.dynamics.host import Host
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
-SLOTS = 12  # open visits per body: six equal discs can touch one, two walls, the block, and some just parted
+SLOTS = 12  # open visits per body: six equal discs can touch one, two walls, the block, and some just parted; a space
+# of unknown contents may need more
 
 
 # A visit. owner, partner: 0 block, then pushers from 1, then further blocks, then walls; partner -1: a free slot.
@@ -86,7 +87,7 @@ class Ledger(NamedTuple):
 
     known, entities: hash table from bodies' addresses to what they are (see `VISIT`). first, following: lists of a
     step's pairs by owner; partners: of each pair; senses: 1 where the engine's first body is the owner, else -1.
-    slots: (n_moving, SLOTS) open visits. n_open: how many. log: finished visits; n_log[0]: how many. totals: one
+    slots: (n_moving, n_slots) open visits. n_open: how many. log: finished visits; n_log[0]: how many. totals: one
     record.
     """
 
@@ -110,7 +111,7 @@ def new_ledger(addresses: IntArray, n_moving: int, n_pairs: int, capacity: int) 
     """An empty ledger.
 
     Arguments:
-        addresses: of all bodies in the order of `VISIT`, the moving ones first.
+        addresses: of all bodies in the order of `VISIT`, the moving ones first; 0 for a body still to come.
         n_moving: how many of them move.
         n_pairs: most pairs that a step can have.
         capacity: rows of finished visits that are kept before they must be fetched.
@@ -118,10 +119,8 @@ def new_ledger(addresses: IntArray, n_moving: int, n_pairs: int, capacity: int) 
     size = 1 << max(4, int(4 * len(addresses)).bit_length())
     known, entities = np.zeros(size, dtype=np.int64), np.full(size, -1, dtype=np.int64)
     for entity, address in enumerate(addresses.tolist()):
-        at = _home(address, size)
-        while known[at] != 0:
-            at = (at + 1) & (size - 1)
-        known[at], entities[at] = address, entity
+        if address:
+            enter_body(known, entities, address, entity)
     slots = np.zeros((n_moving, SLOTS), dtype=VISIT)
     slots["partner"] = -1
     return Ledger(
@@ -139,8 +138,44 @@ def new_ledger(addresses: IntArray, n_moving: int, n_pairs: int, capacity: int) 
     )
 
 
+def enter_body(known: IntArray, entities: IntArray, address: int, entity: int) -> None:
+    """Let the ledger know a body by its address."""
+    at = _home(address, len(known))
+    while known[at] != 0:
+        at = (at + 1) & (len(known) - 1)
+    known[at], entities[at] = address, entity
+
+
 def _home(address: int, size: int) -> int:
     return ((address * int(_MIX)) & 0xFFFFFFFFFFFFFFFF) >> (65 - size.bit_length())
+
+
+@inlined
+def _shift(known: IntArray) -> int:
+    """By how many bits a mixed address is shifted to give its home in the table."""
+    shift, size = 65, len(known)
+    while size > 0:
+        size >>= 1
+        shift -= 1
+    return shift
+
+
+@inlined
+def most_visits(host: Host, ledger: Ledger, n_pairs: int) -> int:
+    """Most visits that any body can have open after this step: no fewer than it will have, and seldom more."""
+    most = 0
+    for owner in range(len(ledger.n_open)):
+        most = max(most, ledger.n_open[owner])
+    if n_pairs + most <= ledger.slots.shape[1]:
+        return n_pairs + most
+    shift, fresh = _shift(ledger.known), ledger.n_open.copy()
+    for pair in range(n_pairs):
+        for body in pair_bodies(host.pairs[2 + pair]):
+            entity = _entity(ledger.known, ledger.entities, shift, body)
+            if 0 <= entity < len(fresh):
+                fresh[entity] += 1
+                most = max(most, fresh[entity])
+    return most
 
 
 @inlined
@@ -158,7 +193,7 @@ def _entity(known: IntArray, entities: IntArray, shift: int, address: int) -> in
 def _slot(slots: NDArray[np.void], n_open: IntArray, owner: int, partner: int) -> int:
     """The open visit of owner and partner, or a fresh slot; -1 if the table is full."""
     free = -1
-    for k in range(SLOTS):
+    for k in range(slots.shape[1]):
         found = slots[owner, k].partner
         if found == partner:
             return k
@@ -184,7 +219,7 @@ def close_visits(ledger: Ledger, step: int) -> None:
     for owner in range(len(n_open)):
         if n_open[owner] == 0:
             continue
-        for k in range(SLOTS):
+        for k in range(slots.shape[1]):
             visit = slots[owner, k]
             if visit.partner >= 0 and visit.last_step < step - GAP_STEPS:
                 log[n_log[0]] = visit
@@ -211,6 +246,21 @@ def _feel(
 
 
 @inlined
+def _precedes(pair: int, other: int) -> bool:
+    """Which of two pairs of the same two bodies comes first: by normal, then by point. Bodies of several shapes have
+    several pairs, and the engine lists them in order of addresses."""
+    nx, ny, _ = pair_normal(pair)
+    mx, my, _ = pair_normal(other)
+    if nx != mx:
+        return bool(nx < mx)
+    if ny != my:
+        return bool(ny < my)
+    px, py = pair_point(pair, 0)[:2]
+    qx, qy = pair_point(other, 0)[:2]
+    return bool(px < qx if px != qx else py < qy)
+
+
+@inlined
 def _sort_pairs(host: Host, ledger: Ledger, n_pushers: int, n_pairs: int) -> None:
     """Lay the step's pairs into lists by owner, in the order of their partners.
 
@@ -219,11 +269,7 @@ def _sort_pairs(host: Host, ledger: Ledger, n_pushers: int, n_pairs: int) -> Non
     known, entities, first = ledger.known, ledger.entities, ledger.first
     following, partners, senses = ledger.following, ledger.partners, ledger.senses
     pairs = host.pairs
-    shift = 65
-    size = len(known)
-    while size > 0:
-        size >>= 1
-        shift -= 1
+    shift = _shift(known)
     for pair in range(min(n_pairs, len(partners))):
         body_a, body_b = pair_bodies(pairs[2 + pair])
         a = _entity(known, entities, shift, body_a)
@@ -237,15 +283,16 @@ def _sort_pairs(host: Host, ledger: Ledger, n_pushers: int, n_pairs: int) -> Non
         if owner >= len(first):
             continue
         partners[pair], senses[pair] = partner, sense
-        at = first[owner]
-        if at < 0 or partners[at] > partner:
-            following[pair] = at
+        before, at = -1, first[owner]
+        while at >= 0 and (
+            partners[at] < partner or (partners[at] == partner and not _precedes(pairs[2 + pair], pairs[2 + at]))
+        ):
+            before, at = at, following[at]
+        following[pair] = at
+        if before < 0:
             first[owner] = pair
         else:
-            while following[at] >= 0 and partners[following[at]] <= partner:
-                at = following[at]
-            following[pair] = following[at]
-            following[at] = pair
+            following[before] = pair
 
 
 @inlined
@@ -408,7 +455,7 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ground: Ground, ledger: Led
             if partner == 0 and visit.face == REAR and lean > ground.lean_force * dt:
                 leaning += 1.0
                 push_of_all += lean
-    _count(crew, ground, ledger, motion, leaning, push_of_all / dt, wall_below and wall_above)
+    _count(ground, ledger, motion, leaning, push_of_all / dt, wall_below and wall_above)
 
 
 @inlined
@@ -424,19 +471,36 @@ def _face(sides: FloatArray, first: int, n: int, nx: float, ny: float) -> int:
 
 @inlined
 def _count(
-    crew: Crew,
-    ground: Ground,
-    ledger: Ledger,
-    motion: FloatArray,
-    leaning: float,
-    push_of_all: float,
-    is_held: bool,
+    ground: Ground, ledger: Ledger, motion: FloatArray, leaning: float, push_of_all: float, is_held: bool
 ) -> None:
-    """What happens how much in this step."""
-    totals, pushers, block = ledger.totals[0], crew.pushers, ground.blocks[0]
+    """What happens to the block in this step."""
+    totals = ledger.totals[0]
+    totals.yaw_max = max(totals.yaw_max, abs(motion[0, 2]))
+    if leaning > 0.0:
+        totals.n_leaning += leaning
+        totals.leaning_share += 1.0
+        totals.leaning_most = max(totals.leaning_most, leaning)
+        is_at_rest = abs(motion[0, 3]) < ground.approach * 0.01
+        if push_of_all > ground.blocks[0].floor_static or not is_at_rest:
+            totals.strong_share += 1.0
+            if is_held and is_at_rest:
+                totals.jammed_share += 1.0
+
+
+@inlined
+def settle_crew(
+    host: Host, rig: Rig, crew: Crew, ground: Ground, ledger: Ledger, keys: NDArray[np.uint64], step: int
+) -> None:
+    """After a step: what each pusher is about, what its drive did and drag took, and whether it has felt a bump.
+
+    The engine steps a body with some mass M' and force (see `crew.act`), of which thrust and slope are known; the
+    rest of the force, and -(M' - M) dv, is the drag's impulse. Likewise for turning.
+    """
+    totals, dt, before, motion = ledger.totals[0], rig.dt, host.before, host.motion
     ahead_of = motion[0, 0] + ground.front_reach
-    for i in range(len(pushers)):
-        p = pushers[i]
+    drive, heading, gravity, drag = 0.0, 0.0, 0.0, 0.0
+    for i in range(len(crew.pushers)):
+        p = crew.pushers[i]
         if p.touches != 0:
             if p.touches & TOUCHES_WALL:
                 totals.n_at_wall += 1.0
@@ -451,30 +515,6 @@ def _count(
                 totals.n_halted += 1.0
             elif p.mode == _FAILED:
                 totals.n_failed += 1.0
-    totals.yaw_max = max(totals.yaw_max, abs(motion[0, 2]))
-    if leaning > 0.0:
-        totals.n_leaning += leaning
-        totals.leaning_share += 1.0
-        totals.leaning_most = max(totals.leaning_most, leaning)
-        is_at_rest = abs(motion[0, 3]) < ground.approach * 0.01
-        if push_of_all > block.floor_static or not is_at_rest:
-            totals.strong_share += 1.0
-            if is_held and is_at_rest:
-                totals.jammed_share += 1.0
-
-
-@inlined
-def balance_crew(host: Host, rig: Rig, crew: Crew, ledger: Ledger) -> None:
-    """Work of the drives, and what drag took, in the step that has just been made.
-
-    The engine steps a body with some mass M' and force (see `crew.drive`), of which thrust and slope are known; the
-    rest of the force, and -(M' - M) dv, is the drag's impulse. Likewise for turning.
-    """
-    totals, pushers, dt = ledger.totals[0], crew.pushers, rig.dt
-    before, motion = host.before, host.motion
-    drive, heading, gravity, drag = 0.0, 0.0, 0.0, 0.0
-    for i in range(len(pushers)):
-        p = pushers[i]
         vx, vy, wx, wy = before[i + 1, 3], before[i + 1, 4], motion[i + 1, 3], motion[i + 1, 4]
         mx, my = 0.5 * (vx + wx), 0.5 * (vy + wy)
         extra = p.step_mass - p.mass
@@ -491,6 +531,7 @@ def balance_crew(host: Host, rig: Rig, crew: Crew, ledger: Ledger) -> None:
             drag += ((p.drive_torque - p.torque) * dt + (p.step_moment - p.moment) * (after - spin)) * middle
         elif p.contact_turn != 0.0:
             heading -= p.contact_turn * motion[i + 1, 5]
+        feel(rig, p, keys, i, step)
     totals.drive += drive
     totals.heading += heading
     totals.gravity += gravity

@@ -15,9 +15,9 @@ from numpy.typing import NDArray
 
 from swarmpush.compiled import borrowed, compiled, inlined
 from swarmpush.dynamics.blocks import Ground, balance_blocks, order_blocks
-from swarmpush.dynamics.crew import Crew, Rig, drive, feel, react
+from swarmpush.dynamics.crew import Crew, Rig, act
 from swarmpush.dynamics.host import Host, HostSpace, read_state, take_step
-from swarmpush.dynamics.ledger import SERIES, SLOTS, Ledger, balance_crew, close_visits, enter_contacts
+from swarmpush.dynamics.ledger import SERIES, SLOTS, Ledger, close_visits, enter_contacts, settle_crew
 from swarmpush.dynamics.ranging import Surroundings
 from swarmpush.program import Program, Senses
 
@@ -163,9 +163,9 @@ def _before(host: Host, task: Task, step: int, is_answered: bool) -> int:
             _sample(host, task, step)
         if ending != _NOT_YET:
             return ending
-    if react(host, rig, task.crew, task.program, task.senses, task.keys, task.around, step, is_answered) > 0:
+    inertia = task.ground.inertia
+    if act(host, rig, task.crew, task.program, task.senses, task.keys, task.around, inertia, step, is_answered) > 0:
         return _ASKED
-    drive(host, rig, task.crew, task.ground.inertia, task.keys, step)
     order_blocks(host, task.ground, rig.dt)
     return _NOT_YET
 
@@ -180,8 +180,7 @@ def _after(host: Host, task: Task, n_pairs: int, step: int) -> bool:
     totals.gravity += gravity
     totals.drag += drag
     totals.floor += floor
-    balance_crew(host, rig, crew, ledger)
-    feel(rig, crew, task.keys, step)
+    settle_crew(host, rig, crew, task.ground, ledger, task.keys, step)
     close_visits(ledger, step)
     return bool(ledger.n_log[0] + SLOTS * len(ledger.n_open) >= len(ledger.log))
 

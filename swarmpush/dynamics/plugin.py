@@ -6,7 +6,8 @@ import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from types import TracebackType
-from typing import Any, Literal, Self
+from typing import Any, Literal, NamedTuple, Self
+from weakref import WeakSet
 
 import numpy as np
 import pandas as pd
@@ -14,7 +15,7 @@ import pymunk
 from numpy.typing import NDArray
 from pydantic import ValidationError
 
-from swarmpush.compiled import borrowed, compiled
+from swarmpush.compiled import borrowed, compiled, inlined
 from swarmpush.draws import Purpose, stream_keys, uniform
 from swarmpush.dynamics import tables
 from swarmpush.dynamics.asking import Asker, Decide
@@ -27,10 +28,18 @@ from swarmpush.dynamics.build import (
     prepare_masses,
     unit_deviates,
 )
-from swarmpush.dynamics.chipmunk import LAYOUT_IS_KNOWN, address, order_body
-from swarmpush.dynamics.crew import Mode, Rig, drive, feel, new_crew, react
-from swarmpush.dynamics.host import Host, keep_state, lend, list_pairs, read_state
-from swarmpush.dynamics.ledger import SLOTS, balance_crew, close_visits, enter_contacts, new_ledger
+from swarmpush.dynamics.chipmunk import LAYOUT_IS_KNOWN, address, face_body, note_pairs, order_body, read_place
+from swarmpush.dynamics.crew import TOUCHES_BLOCK, Mode, Rig, act, new_crew
+from swarmpush.dynamics.host import Host, keep_state, lend, read_state
+from swarmpush.dynamics.ledger import (
+    SLOTS,
+    close_visits,
+    enter_body,
+    enter_contacts,
+    most_visits,
+    new_ledger,
+    settle_crew,
+)
 from swarmpush.dynamics.loop import Limits, Task
 from swarmpush.dynamics.ranging import Surroundings
 from swarmpush.dynamics.steps import NOISE_INTERVAL, Units
@@ -40,13 +49,23 @@ from swarmpush.program import PC, Command, Senses, compile_routine, in_units, no
 from swarmpush.routine import Routine, Sight
 from swarmpush.scenario import Errors
 
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
+SPARE = 128  # bodies, and static bodies, that may be added to a space while a crew is attached
+TOUCHING = 1e-6  # cosine to the surface's normal below which a pusher runs along what it touches, not into it
+
 
 @dataclass(frozen=True)
 class Drive:
     """What drives a pusher, in SI units; the keys mean what they mean in a scenario's table `pushers`.
 
-    stall_force: push at standstill, N. free_speed: at which it is used up, m/s. reach: from its centre to its nose, m;
-    what is farther away than that and not touched yet is a range. turn_drag: needed with a free heading, N m s.
+    stall_force: push at standstill, N. free_speed: at which it is used up, m/s. sideways_drag: drag across the heading
+    over drag along it. turn_drag: needed with a free heading, N m s. turn_rate: rad/s; infinite only for discs.
+    bump_threshold: N s. bumper_arc: rad. latency: s.
+
+    Raises:
+        ValueError: when a value is out of its range.
     """
 
     stall_force: float
@@ -61,8 +80,29 @@ class Drive:
     bumper_arc: float = 2 * math.pi
     latency: float = 0.0
 
+    def __post_init__(self) -> None:
+        for name in ("stall_force", "free_speed", "sideways_drag"):
+            if not 0.0 < getattr(self, name) < math.inf:
+                raise ValueError(f"{name} = {getattr(self, name)}; it must be more than 0 and finite")
+        for name in ("turn_drag", "bump_threshold", "latency"):
+            if not 0.0 <= getattr(self, name) < math.inf:
+                raise ValueError(f"{name} = {getattr(self, name)}; it must be 0 or more and finite")
+        if not math.isfinite(self.contact_arm):
+            raise ValueError(f"contact_arm = {self.contact_arm}; it must be finite")
+        if not self.turn_rate > 0.0:
+            raise ValueError(f"turn_rate = {self.turn_rate}; it must be more than 0")
+        if not 0.0 <= self.drive_while_turning <= 1.0:
+            raise ValueError(f"drive_while_turning = {self.drive_while_turning}; it must be from 0 to 1")
+        if not 0.0 < self.bumper_arc <= 2 * math.pi:
+            raise ValueError(f"bumper_arc = {self.bumper_arc}; it must be more than 0 and at most 2 pi")
+        if self.heading not in ("held", "free"):
+            raise ValueError(f"heading = {self.heading!r}; it must be 'held' or 'free'")
+        if self.heading == "free" and not (self.turn_drag > 0.0 and math.isfinite(self.turn_rate)):
+            raise ValueError("a free heading needs a turn_drag and a finite turn_rate")
+
 
 SI = Units(1.0, 1.0, 1.0)
+_ATTACHED: WeakSet[pymunk.Space] = WeakSet()
 
 
 def attach(
@@ -80,33 +120,53 @@ def attach(
     """Let bodies of a space behave as pushers, and log every contact.
 
     Arguments:
-        space: any space; its bodies, shapes, joints, callbacks, gravity and damping stay the user's own.
-        dt: time step with which the space will be stepped, in its own unit of time.
-        pushers: dynamic bodies of the space; their present angles are their headings. None: only the ledger works.
+        space: any space; its bodies, shapes, joints, callbacks, gravity and damping stay the user's own. Bodies, joints
+            and shapes may come and go while the crew is attached, up to `SPARE` new bodies and as many static ones.
+        dt: time step with which the space will be stepped, in its own unit of time; fixed until `detach`. A pusher
+            should run no farther in it than a hundredth of its radius.
+        pushers: dynamic bodies of the space; their present angles are their headings, and the x axis of a body points
+            ahead. None: only the ledger works.
         routine: what they do: a `Routine`, a list of stages as in a scenario file, or a Python function
-            (see `asking.Asker`). It cannot look for faces, which only a scenario has.
-        drive: what drives them.
-        watch: names of bodies to keep momentum books of. All other bodies are partners in visits as well.
+            (see `asking.Asker`). It cannot look for faces, which only a scenario has. A static body is a "wall" to it,
+            a pusher a "pusher", all else a "block".
+        drive: what drives them. Half a percent of its free speed is the approach above which a touch is an impact (5
+            mm/s without a drive).
+        watch: names of dynamic bodies to keep momentum books of; their masses must stay as they are. All other bodies
+            are partners in visits as well.
         units: one of the space's units in m, s and kg.
-        errors: of the pushers, in SI units; none unless given.
+        errors: of the pushers, in SI units; none unless given. There is no spread of masses, which are the bodies' own.
         seed: of all random draws.
 
     Returns:
-        A `Crew`: call its `step` in place of `space.step`. Until `detach`, the mass of a pusher in touch (and the
-        moment of a free heading) holds the drag of one step, a held heading has an infinite moment, no pair's impulse
-        is carried over from an earlier touch (`collision_persistence` is 1), and nothing falls asleep.
+        A `Crew`: call its `step` in place of `space.step`. Until `detach`, the mass of a pusher in touch or on a joint
+        (and the moment of a free heading) holds the drag of one step, a held heading has an infinite moment and sets
+        the body's angle, no pair's impulse is carried over from an earlier touch (`collision_persistence` is 1), and
+        nothing falls asleep by itself; do not put a pusher to sleep. A pusher's own `velocity_func` must call
+        `Body.update_velocity`, or it is not driven. Masses and moments that are set meanwhile are lost at `detach`.
 
     Raises:
         ValueError: when the arguments do not fit together.
-        RuntimeError: when this build of the engine keeps its bodies in an unknown way.
+        RoutineError: when the routine cannot be carried out in a space.
+        RuntimeError: when the space has a crew already, or this build of the engine keeps its bodies in an unknown way.
+
+    >>> space = pymunk.Space()
+    >>> space.gravity = 0.0, -10.0
+    >>> ball = pymunk.Body(2.0, 1.0)
+    >>> space.add(ball, pymunk.Circle(ball, 0.1))
+    >>> with attach(space, dt=0.01, watch={"ball": ball}) as crew:
+    ...     crew.step(100)
+    >>> float(crew.books["else_y_Ns"][0].round(9))
+    -20.0
     """
     if not LAYOUT_IS_KNOWN:
         raise RuntimeError(
             "this build of pymunk keeps its bodies in an unknown way; use one that pyproject.toml allows"
         )
-    watched = dict(watch or {})
-    _check(space, dt, pushers, routine, drive, watched)
-    return Crew(space, dt, list(pushers), routine, drive or Drive(1.0, 1.0), watched, units, errors or Errors(), seed)
+    if space in _ATTACHED:
+        raise RuntimeError("the space has a crew already; detach it first, or give one crew all the pushers")
+    watched, listed, errors = dict(watch or {}), list(pushers), errors or Errors()
+    _check(space, dt, listed, routine, drive, watched, units, errors)
+    return Crew(space, dt, listed, routine, drive or Drive(1.0, 1.0), watched, units, errors, seed)
 
 
 def _check(
@@ -116,13 +176,25 @@ def _check(
     routine: object,
     drive: Drive | None,
     watched: Mapping[str, pymunk.Body],
+    units: Units,
+    errors: Errors,
 ) -> None:
     if not (math.isfinite(dt) and dt > 0.0):
         raise ValueError(f"dt = {dt}; it must be more than 0")
+    for name in ("length", "time", "mass"):
+        if not 0.0 < getattr(units, name) < math.inf:
+            raise ValueError(f"the unit of {name} is {getattr(units, name)}; it must be more than 0")
     if pushers and (routine is None or drive is None):
         raise ValueError("pushers need a routine and a drive")
+    if routine is not None and not pushers:
+        raise ValueError("there is a routine, but no pusher to carry it out")
     if len(set(pushers)) < len(pushers):
         raise ValueError("a body is listed twice among the pushers")
+    if len(set(watched.values())) < len(watched):
+        raise ValueError("a body is watched under two names")
+    for name in watched:
+        if name in ("pusher", "wall") or name.startswith("body "):
+            raise ValueError(f"no body can be called {name!r}: other bodies are called so")
     for kind, body in [
         *(("pusher", body) for body in pushers),
         *((f"watched body {n!r}", b) for n, b in watched.items()),
@@ -131,50 +203,136 @@ def _check(
             raise ValueError(f"a {kind} is not in the space; add it first")
         if body.body_type != pymunk.Body.DYNAMIC:
             raise ValueError(f"a {kind} is not dynamic; only dynamic bodies have momentum")
+        if not body.mass > 0.0:
+            raise ValueError(f"a {kind} has no mass")
     if set(pushers) & set(watched.values()):
         raise ValueError("a pusher cannot be watched as well; its visits are logged anyway")
-    if drive is None:
-        return
-    if not (drive.stall_force > 0.0 and drive.free_speed > 0.0):
-        raise ValueError("stall_force and free_speed must be more than 0")
-    if drive.heading == "free" and not (drive.turn_drag > 0.0 and math.isfinite(drive.turn_rate)):
-        raise ValueError("a free heading needs a turn_drag and a finite turn_rate")
-    if math.isinf(drive.turn_rate) and any(not isinstance(s, pymunk.Circle) for b in pushers for s in b.shapes):
-        raise ValueError("a pusher that is no disc needs a finite turn_rate: it cannot turn at once")
+    if any(not _solid(body) for body in pushers):
+        raise ValueError("a pusher has no shape that could touch anything")
+    if drive and drive.heading == "free" and any(math.isinf(body.moment) for body in pushers):
+        raise ValueError("a free heading needs bodies with a finite moment")
+    if errors.mass_spread > 0.0:
+        raise ValueError("errors cannot have a mass_spread: the pushers' masses are those of the bodies")
+    if drive and math.isinf(drive.turn_rate) and not all(_is_disc(body) for body in pushers):
+        raise ValueError("a pusher that is no disc about its centre needs a finite turn_rate: it cannot turn at once")
+
+
+def _solid(body: pymunk.Body) -> list[pymunk.Shape]:
+    return [shape for shape in body.shapes if not shape.sensor]
+
+
+def _is_disc(body: pymunk.Body) -> bool:
+    return all(isinstance(s, pymunk.Circle) and s.offset == body.center_of_gravity for s in _solid(body))
+
+
+class _Outline(NamedTuple):
+    """A pusher's outline in its own frame, x ahead: half its width, and where a disc so wide just reaches its nose."""
+
+    half_width: float
+    x: float
+    y: float
+
+
+def _outline(body: pymunk.Body) -> _Outline:
+    left, right, nose = -math.inf, math.inf, -math.inf
+    for shape in _solid(body):
+        corners: Sequence[tuple[float, float]]
+        if isinstance(shape, pymunk.Circle):
+            corners = [shape.offset]
+        elif isinstance(shape, pymunk.Segment):
+            corners = [shape.a, shape.b]
+        else:
+            assert isinstance(shape, pymunk.Poly)
+            corners = shape.get_vertices()
+        radius = shape.radius
+        right, left = min(right, *(y - radius for _, y in corners)), max(left, *(y + radius for _, y in corners))
+        nose = max(nose, *(x + radius for x, _ in corners))
+    half = 0.5 * (left - right)
+    return _Outline(half, nose - half, 0.5 * (left + right))
+
+
+_FREE, _TIED, _GONE = 0, 1, 2  # how a pusher stands in its space: by itself, on a joint, or no longer
+
+
+_DONE, _FETCH, _FULL = 0, 1, 2  # what comes next: another step, a fetch of the log, or the same again with more room
 
 
 @compiled
-def _before(host: Host, task: Task, step: int, is_answered: bool) -> int:
-    """Decisions and orders before a step; returns how many pushers wait for an answer."""
+def _before(host: Host, task: Task, standing: IntArray, step: int, is_answered: bool, faces: bool) -> int:
+    """Decisions and orders before a step; returns how many pushers wait for an answer.
+
+    faces: whether the bodies' angles are only set, as discs turn without rubbing on what they touch; not on a joint.
+    """
     host, task = borrowed(host), borrowed(task)
+    rig, pushers, orders = task.rig, task.crew.pushers, host.orders
     if not is_answered:
-        read_state(host)
-    n_asking = react(host, task.rig, task.crew, task.program, task.senses, task.keys, task.around, step, is_answered)
-    if n_asking == 0:
-        drive_crew(host, task.rig, task.crew, task.ground.inertia, task.keys, step)
-        for k in range(len(host.bodies)):
-            if 0 < k <= len(task.crew.pushers):
-                order_body(host.bodies[k], host.orders, k)
-            else:
-                host.orders[k, 0] = host.motion[k, 5]
-        keep_state(host)
-    return n_asking
+        _enter_kicks(host, task)
+        for i in range(len(pushers)):
+            if standing[i] == _TIED:
+                pushers[i].touches |= TOUCHES_BLOCK  # what it tows meets the whole thrust, as what it touches does
+    n_asking = act(
+        host,
+        rig,
+        task.crew,
+        task.program,
+        task.senses,
+        task.keys,
+        task.around,
+        task.ground.inertia,
+        step,
+        is_answered,
+    )
+    if n_asking > 0:
+        return n_asking
+    for k in range(len(host.bodies)):
+        if 0 < k <= len(pushers):
+            # the engine lets gravity act on the mass with which it steps; the weight is among the orders already
+            orders[k, 1] -= pushers[k - 1].step_mass * rig.pull_x
+            orders[k, 2] -= pushers[k - 1].step_mass * rig.pull_y
+            if faces and standing[k - 1] == _TIED:
+                orders[k, 0] = (pushers[k - 1].heading - host.motion[k, 2]) / rig.dt  # its joints must feel it turn
+            elif faces and standing[k - 1] == _FREE:
+                face_body(host.bodies[k], pushers[k - 1].heading)
+            if standing[k - 1] != _GONE:
+                order_body(host.bodies[k], orders, k)
+        else:
+            orders[k, 0] = host.motion[k, 5]
+    keep_state(host)
+    return 0
 
 
-drive_crew = drive  # the argument of `attach` has the shorter name
+@inlined
+def _enter_kicks(host: Host, task: Task) -> None:
+    """Read the bodies' state, and enter what has changed since the last step was over."""
+    before, motion, blocks = host.before, host.motion, task.ground.blocks
+    for k in range(len(motion)):
+        for c in range(3, 6):
+            before[k, c] = motion[k, c]
+    read_state(host)
+    for k in range(len(blocks)):
+        b = blocks[k]
+        m = b.entity
+        b.ground_x += b.mass * (motion[m, 3] - before[m, 3])
+        b.ground_y += b.mass * (motion[m, 4] - before[m, 4])
+        b.ground_turn += b.moment * (motion[m, 5] - before[m, 5])
 
 
 @compiled
-def _after(host: Host, task: Task, n_pairs: int, step: int) -> bool:
-    """Ledger, books and bumpers after a step; True if the log must be fetched."""
+def _after(host: Host, task: Task, walls: IntArray, step: int) -> int:
+    """Ledger, books and bumpers after a step."""
     host, task = borrowed(host), borrowed(task)
+    ledger, ground = task.ledger, task.ground
+    n_pairs = note_pairs(host.each_pair, host.space, host.visitor, host.pairs)
+    if n_pairs > len(ledger.partners) or most_visits(host, ledger, n_pairs) > ledger.slots.shape[1]:
+        return _FULL
+    for k in range(len(walls)):
+        ground.wall_x[k], ground.wall_y[k] = read_place(walls[k])
     read_state(host)
-    enter_contacts(host, task.rig, task.crew, task.ground, task.ledger, n_pairs, step)
-    balance_blocks(host, task.ground, task.rig.dt)
-    balance_crew(host, task.rig, task.crew, task.ledger)
-    feel(task.rig, task.crew, task.keys, step)
-    close_visits(task.ledger, step)
-    return bool(task.ledger.n_log[0] + SLOTS * len(task.ledger.n_open) >= len(task.ledger.log))
+    enter_contacts(host, task.rig, task.crew, ground, ledger, n_pairs, step)
+    balance_blocks(host, ground, task.rig.dt)
+    settle_crew(host, task.rig, task.crew, ground, ledger, task.keys, step)
+    close_visits(ledger, step)
+    return _FETCH if ledger.n_log[0] + ledger.slots.size >= len(ledger.log) else _DONE
 
 
 class Crew:
@@ -192,33 +350,58 @@ class Crew:
         errors: Errors,
         seed: int,
     ) -> None:
-        self.space, self.dt, self.units, self._bodies = space, dt, units, pushers
-        self._watched = watched
-        named = {body: name for name, body in watched.items()}
-        others = [b for b in space.bodies if b.body_type != pymunk.Body.STATIC and b not in set(pushers)]
-        others.sort(key=lambda body: body not in named)  # watched ones first
-        self._stand_in = pymunk.Body(1.0, 1.0)  # takes the block's place in a world without one
-        blocks = others or [self._stand_in]
-        static = [space.static_body, *(b for b in space.bodies if b.body_type == pymunk.Body.STATIC)]
-        self._partners = [blocks[0], *pushers, *blocks[1:], *static]
-        named |= dict.fromkeys(pushers, "pusher")
-        self._names = [_name(body, named, k) for k, body in enumerate(self._partners)]
-        self._blocks, self._step, self._log, self._is_attached = blocks, 0, VisitLog(), True
+        self.space, self.units = space, units
+        self._bodies, self._watched = pushers, watched
+        self._step, self._log, self._is_attached, self._is_asking = 0, VisitLog(), True, False
         self._asker: Asker | None = None
+        self._outlines = [_outline(body) for body in pushers]
+        self._faces = drive.heading == "held" and all(_is_disc(body) for body in pushers)
+
+        others = [b for b in space.bodies if b.body_type != pymunk.Body.STATIC and b not in set(pushers)]
+        self._stand_in = pymunk.Body(1.0, 1.0)  # takes the place of bodies still to come, and of a missing first one
+        first, *more = others or [self._stand_in]
+        moving = [first, *pushers, *more]
+        self._n_rows = len(moving) + SPARE
+        self._moving = moving + [self._stand_in] * SPARE
+        fixed = sum(body.body_type == pymunk.Body.STATIC for body in space.bodies) + 1
+        self._walls = np.zeros(fixed + SPARE, dtype=np.int64)
+        self._n_moving, self._n_walls, self._n_unnamed = 0, 0, 0
+        self._names = [""] * (self._n_rows + len(self._walls))
+        self._numbers: dict[pymunk.Body, int] = {}
+        self._known_names = dict.fromkeys(pushers, "pusher") | {body: name for name, body in watched.items()}
+        self._seen: tuple[dict[pymunk.Body, None], dict[pymunk.Constraint, None]] = {}, {}
+        self._standing = np.zeros(len(pushers), dtype=np.int64)
+
         self._before_us = (space.collision_persistence, space.sleep_time_threshold)
         self._inertia_before = [(body.mass, body.moment) for body in pushers]
-        self._task = self._build(routine, drive, errors, seed)
+        self._task = self._build(dt, routine, drive, errors, seed)
+        self._host = lend(space, self._moving, ())
+        self._host = self._host._replace(floor_load=np.zeros((len(self._task.ground.blocks), 2)))
+        for body in moving:
+            self._take_in(body)
+            if body.space:
+                space.reindex_shapes_for_body(body)  # where it has been put since its shapes were added
+        self._take_in(space.static_body)
+        self._look_round()
+
+        _ATTACHED.add(space)
+        if drive.heading == "held":
+            for body in pushers:
+                body.moment = math.inf
         space.collision_persistence, space.sleep_time_threshold = 1, math.inf
-        for body in [*pushers, *others]:
-            if body.body_type == pymunk.Body.DYNAMIC:
+        for body in moving:
+            if body.space and body.body_type == pymunk.Body.DYNAMIC:
                 body.activate()
-        moving = self._partners[: len(blocks) + len(pushers)]
-        self._host = lend(space, moving, ())
 
     def _build(
-        self, routine: Routine | Sequence[Mapping[str, Any]] | Decide | None, drive: Drive, e: Errors, seed: int
+        self,
+        dt: float,
+        routine: Routine | Sequence[Mapping[str, Any]] | Decide | None,
+        drive: Drive,
+        e: Errors,
+        seed: int,
     ) -> Task:
-        u, dt, n = self.units, self.dt, len(self._bodies)
+        u, n = self.units, len(self._bodies)
         keys = stream_keys(seed, n)
         crew = new_crew(np.array([body.angle for body in self._bodies]))
         units = crew.pushers
@@ -231,14 +414,11 @@ class Crew:
         if e.dropout > 0.0:
             units["fails_at"] = [-math.log(uniform(key, 0)) / (e.dropout * u.time) for key in keys[:, Purpose.DROPOUT]]
         is_free, turn_drag = drive.heading == "free", drive.turn_drag / u.turn_drag
-        for k, body in enumerate(self._bodies):
-            if is_free:
-                units[k]["moment"] = body.moment
-            else:
-                body.moment = math.inf
+        if is_free:
+            units["moment"] = [body.moment if math.isfinite(body.moment) else 0.0 for body in self._bodies]
         prepare_masses(units, turn_drag, dt)
         speed = drive.free_speed / u.speed
-        crossing = _size(self._bodies) / speed
+        crossing = min((outline.half_width for outline in self._outlines), default=1.0) / speed
         rig = Rig(
             dt=dt,
             drive_while_turning=drive.drive_while_turning,
@@ -252,29 +432,23 @@ class Crew:
             diffusion=e.heading_diffusion * math.sqrt(u.time),
             noise_steps=max(1, round(NOISE_INTERVAL * crossing / dt)),
             heading_is_free=is_free,
-            follows=True,
+            follows=not self._faces,
             turn_drag=turn_drag,
             contact_arm=drive.contact_arm / u.length,
             fade_rate=u.time / e.fade_time if e.fade_time else 0.0,
             pull_x=0.0,
             pull_y=0.0,
         )
-        n_blocks, n_moving = len(self._blocks), len(self._blocks) + n
-        fixed = self._partners[n_moving:]
-        blocks = np.zeros(n_blocks, dtype=BLOCK_STATE)
-        for k, body in enumerate(self._blocks):
-            block = blocks[k]
-            block["entity"] = k and n + k
-            if body.body_type == pymunk.Body.DYNAMIC:
-                block["mass"] = block["step_mass"] = body.mass
-                block["moment"] = block["step_moment"] = body.moment if math.isfinite(body.moment) else 0.0
+        blocks = np.zeros(self._n_rows - n, dtype=BLOCK_STATE)
+        blocks["entity"] = np.arange(len(blocks)) + n
+        blocks["entity"][0] = 0
         ground = Ground(
             blocks=blocks,
             sides=np.zeros((1, 2)),
             inertia=np.concatenate([inverse_inertia(rows) for rows in (blocks[:1], units, blocks[1:])]),
-            wall_x=np.array([body.position.x for body in fixed]),
-            wall_y=np.array([body.position.y for body in fixed]),
-            has_floor=True,
+            wall_x=np.zeros(len(self._walls)),
+            wall_y=np.zeros(len(self._walls)),
+            has_floor=True,  # so that what contacts do not explain is entered as the ground's
             pull_x=0.0,
             pull_y=0.0,
             front_reach=math.inf,
@@ -282,31 +456,22 @@ class Crew:
             approach=APPROACH * speed,
         )
         program = self._program(routine, crew.memory)
-        nothing = np.zeros((0, 8))
+        nothing, no_arcs, none = np.zeros((0, 8)), np.zeros((0, 3)), np.zeros(0, dtype=np.int64)
         return Task(
             rig=rig,
             crew=crew,
             program=program,
             senses=Senses(e.turn_bias, e.turn_sd, e.bearing_step, e.bearing_sd, e.range_sd / u.length, e.missed_sights),
-            around=Surroundings(
-                nothing,
-                np.zeros((0, 3)),
-                nothing,
-                np.zeros((0, 3)),
-                np.zeros(0, dtype=np.int64),
-                1.0,
-                0,
-                is_unknown=True,
-            ),
+            around=Surroundings(nothing, no_arcs, nothing, no_arcs, none, 1.0, 0, is_unknown=True),
             keys=keys,
             ground=ground,
             ledger=new_ledger(
-                np.array([address(body._body) for body in self._partners]),
-                n_moving,
-                64 + 24 * n_moving,
-                4096 * (1 + n_moving),
+                np.zeros(self._n_rows + len(self._walls), dtype=np.int64),
+                self._n_rows,
+                64 + 24 * self._n_rows,
+                max(4096, 4 * SLOTS * self._n_rows),  # all open visits may end in one step
             ),
-            path=new_path(1, n, n_blocks - 1),
+            path=new_path(1, n, len(blocks) - 1),
             limits=Limits(np.zeros((0, 4)), math.inf, math.inf, math.inf, 2**62, 1),
         )
 
@@ -325,30 +490,127 @@ class Crew:
                 routine = Routine.model_validate({"stages": routine})
             except ValidationError as error:
                 first = error.errors(include_url=False)[0]
-                place = ".".join(str(part) for part in first["loc"])
-                raise RoutineError(f"routine: {place}: {first['msg']}") from None
+                place = ".".join(("routine", *(str(part) for part in first["loc"])))
+                raise RoutineError(f"{place}: {first['msg'].removeprefix('Value error, ')}") from None
         if any(isinstance(act, Sight) for stage in routine.stages for act in stage.acts):
             raise RoutineError("the act sight looks for a face of a scenario, and this space has none")
         return in_units(compile_routine(routine), u.length, u.time)
 
+    # ---- bodies that come and go ----
+
+    def _look_round(self) -> None:
+        """Take note of bodies and joints that have been added or removed."""
+        bodies, joints = self._seen
+        if self.space.bodies == bodies.keys() and self.space.constraints == joints.keys():
+            return
+        self._seen = dict.fromkeys(self.space.bodies), dict.fromkeys(self.space.constraints)
+        for body in self._seen[0]:
+            if body not in self._numbers:
+                self._take_in(body)
+        for k, body in enumerate(self._bodies):
+            is_tied = any(joint in self._seen[1] for joint in body.constraints)
+            self._standing[k] = _GONE if body.space is not self.space else _TIED if is_tied else _FREE
+
+    def _take_in(self, body: pymunk.Body) -> None:
+        """Give a body its number and name. The number is its row in the buffers, or follows them for a static body."""
+        ledger, is_wall = self._task.ledger, body.body_type == pymunk.Body.STATIC
+        if (self._n_walls == len(self._walls)) if is_wall else (self._n_moving == self._n_rows):
+            raise RuntimeError(f"more than {SPARE} bodies were added since the crew was attached; attach it anew")
+        if is_wall:
+            number = self._n_rows + self._n_walls
+            self._walls[self._n_walls] = address(body._body)
+            self._n_walls += 1
+        else:
+            number = self._n_moving
+            self._n_moving += 1
+            if not 0 < number <= len(self._bodies):
+                self._set_block(body, number)
+            self._moving[number] = body  # which keeps it alive, and so its address its own
+            self._host.bodies[number] = address(body._body)
+            self._host.motion[number] = *body.position, body.angle, *body.velocity, body.angular_velocity
+        self._numbers[body] = number
+        self._names[number] = self._name(body)
+        enter_body(ledger.known, ledger.entities, address(body._body), number)
+
+    def _set_block(self, body: pymunk.Body, number: int) -> None:
+        """What the ledger must know of a body that moves and is no pusher; one that cannot be moved has no mass."""
+        ground = self._task.ground
+        block = ground.blocks[max(number - len(self._bodies), 0) : max(number - len(self._bodies), 0) + 1]
+        if body.body_type == pymunk.Body.DYNAMIC:
+            block["mass"] = block["step_mass"] = body.mass
+            block["moment"] = block["step_moment"] = body.moment if math.isfinite(body.moment) else 0.0
+        ground.inertia[number] = inverse_inertia(block)[0]
+
+    def _name(self, body: pymunk.Body) -> str:
+        if body in self._known_names:
+            return self._known_names[body]
+        if body.body_type == pymunk.Body.STATIC:
+            return "wall"
+        if body is self._stand_in:
+            return ""
+        self._n_unnamed += 1
+        return f"body {self._n_unnamed}"
+
+    def _make_room(self) -> None:
+        """Room for as many pairs as there are in touch, and for more open visits of one body."""
+        host, ledger = self._host, self._task.ledger
+        n_pairs = int(host.pairs[0])
+        if n_pairs > len(ledger.partners):
+            pairs = np.zeros(2 + 2 * n_pairs, dtype=np.int64)
+            pairs[1] = 2 * n_pairs
+            self._host = host._replace(pairs=pairs)
+            ledger = ledger._replace(
+                following=np.zeros(2 * n_pairs, dtype=np.int64),
+                partners=np.zeros(2 * n_pairs, dtype=np.int64),
+                senses=np.zeros(2 * n_pairs),
+            )
+        else:
+            self._log.fetch(ledger)
+            fresh = np.zeros_like(ledger.slots)
+            fresh["partner"] = -1
+            slots = np.concatenate([ledger.slots, fresh], axis=1)
+            ledger = ledger._replace(slots=slots, log=np.zeros(4 * slots.size, dtype=slots.dtype))
+        self._task = self._task._replace(ledger=ledger)
+
+    # ---- stepping ----
+
     def step(self, n: int = 1) -> None:
         """Step the space `n` times.
 
+        Not logged is a contact in a step at whose end a callback takes one of its shapes out of the space; what it gave
+        a watched body then counts among all else.
+
         Raises:
-            RuntimeError: after `detach`.
-            RoutineError: when a Python routine gives an answer that cannot be carried out.
+            RuntimeError: after `detach`, or when too many bodies have been added.
+            RoutineError: when a Python routine gives an answer that cannot be carried out. The space has not been
+                stepped then; the next call asks the pushers that waited once more. So it is with the function's own
+                exceptions.
         """
-        if not self._is_attached:
-            raise RuntimeError("the crew has been detached; attach it again")
         for _ in range(n):
-            n_asking = _before(self._host, self._task, self._step, False)
-            while n_asking:
+            if not self._is_attached:
+                raise RuntimeError("the crew has been detached; attach it again")
+            self._look_round()
+            pull = self.space.gravity
+            if pull != (self._task.rig.pull_x, self._task.rig.pull_y):
+                self._task = self._task._replace(rig=self._task.rig._replace(pull_x=pull[0], pull_y=pull[1]))
+            if not self._is_asking:
+                self._is_asking = self._order(False) > 0
+            while self._is_asking:
                 self._answer()
-                n_asking = _before(self._host, self._task, self._step, True)
+                self._is_asking = self._order(True) > 0
             self.space.step(self.dt)
-            if _after(self._host, self._task, list_pairs(self._host), self._step):
-                self._log.fetch(self._task.ledger)
+            while (outcome := self._enter()) != _DONE:
+                if outcome == _FETCH:
+                    self._log.fetch(self._task.ledger)
+                    break
+                self._make_room()
             self._step += 1
+
+    def _order(self, is_answered: bool) -> int:
+        return _before(self._host, self._task, self._standing, self._step, is_answered, self._faces)
+
+    def _enter(self) -> int:
+        return _after(self._host, self._task, self._walls[: self._n_walls], self._step)
 
     def _answer(self) -> None:
         task = self._task
@@ -357,17 +619,40 @@ class Crew:
         for i in np.flatnonzero(task.crew.pushers["asks"] == int(Command.GAUGE)):
             memory, notes = task.crew.memory[i], task.crew.notes[i]
             most = float(task.program[memory[PC] - 1]["value"])
-            run = self._clear_run(self._bodies[i], float(task.crew.pushers[i]["heading"]), most)
+            run = self._clear_run(int(i), float(task.crew.pushers[i]["heading"]), most)
             note_range(task.senses, task.keys[i], memory, notes, run, most)
 
-    def _clear_run(self, body: pymunk.Body, heading: float, most: float) -> float:
-        """How far a disc as wide as the pusher could run before it touches something, in the space's unit."""
+    def _clear_run(self, i: int, heading: float, most: float) -> float:
+        """How far a disc as wide as pusher i, its front at the pusher's nose, could run before it touches something,
+        in the space's unit of length."""
+        body, outline = self._bodies[i], self._outlines[i]
         ahead = pymunk.Vec2d(math.cos(heading), math.sin(heading))
-        hits = self.space.segment_query(
-            body.position, body.position + ahead * most, _size([body]), pymunk.ShapeFilter()
+        start, filter_ = body.local_to_world((outline.x, outline.y)), _solid(body)[0].filter
+
+        end, width = start + ahead * most, outline.half_width
+        # the space's own query along a line leaves out shapes whose boxes only the disc's side would meet
+        swept = pymunk.BB(
+            min(start.x, end.x) - width,
+            min(start.y, end.y) - width,
+            max(start.x, end.x) + width,
+            max(start.y, end.y) + width,
         )
-        shares = [hit.alpha for hit in hits if hit.shape and hit.shape.body is not body and not hit.shape.sensor]
-        return most * min(shares, default=1.0)
+        run = most
+        for shape in self.space.bb_query(swept, filter_):
+            if shape.body is body or shape.sensor:
+                continue
+            hit = shape.segment_query(start, end, width)
+            # what it touches already, and runs along or away from, is not in the way
+            if hit and (hit.alpha > 0.0 or hit.normal.dot(ahead) < -TOUCHING):
+                run = min(run, most * hit.alpha)
+        return run
+
+    # ---- what has been recorded ----
+
+    @property
+    def dt(self) -> float:
+        """Time step, in the space's own unit of time."""
+        return self._task.rig.dt
 
     @property
     def time_s(self) -> float:
@@ -377,43 +662,47 @@ class Crew:
     @property
     def visits(self) -> pd.DataFrame:
         """Every contact so far, as in `Run.visits`; surface is the partner's name, and of the block's travel nothing is
-        said. A name is the one given in `watch`, "pusher", "wall", or "body" with a number for all else."""
-        task = self._task
-        rows = tables.in_order(self._log.rows(task.ledger))
-        names = np.array(self._names, dtype=object)[rows["partner"]]
-        n = len(self._bodies)
-        table = tables.visit_table(rows, names, n, len(self._host.motion), 0.0, self.dt * self.units.time, self.units)
-        table.insert(1, "owner", np.array(self._names, dtype=object)[rows["owner"]])
+        said. A name is the one given in `watch`, "pusher", "wall" for a static body, or "body" with a number for all
+        else; the owner has a column of its own. x_m, y_m are the place of the owner's centre of mass."""
+        rows = tables.in_order(self._log.rows(self._task.ledger))
+        names = np.array(self._names, dtype=object)
+        n, step_s = len(self._bodies), self.dt * self.units.time
+        table = tables.visit_table(rows, names[rows["partner"]], n, self._n_rows, 0.0, step_s, self.units)
+        table.insert(1, "owner", names[rows["owner"]])
         return table.drop(columns=["block_dx_m", "block_dx_next_m"])
 
     @property
     def books(self) -> pd.DataFrame:
-        """Momentum account of each watched body since the crew was attached.
+        """Momentum account of each watched body since the crew was attached; the four add up to its change of momentum.
 
         One row per body: name, then impulses in N s by pushers, by other bodies, by walls and by all else (gravity,
-        joints, damping, the user's own forces), each in x and y, and about the centre of mass in N m s ("turn").
+        joints, damping, the user's own forces and changes of velocity), each in x and y, and about the centre of mass
+        in N m s ("turn").
         """
         u, rows = self.units, []
         by = {"pushers": "pushers", "bodies": "blocks", "walls": "walls", "else": "ground"}
         for name, body in self._watched.items():
-            block = self._task.ground.blocks[self._blocks.index(body)]
+            block = self._task.ground.blocks[max(self._numbers[body] - len(self._bodies), 0)]
             row: dict[str, Any] = {"name": name}
             for shown, column in by.items():
                 row[f"{shown}_x_Ns"] = float(block[f"{column}_x"]) * u.impulse
                 row[f"{shown}_y_Ns"] = float(block[f"{column}_y"]) * u.impulse
                 row[f"{shown}_turn_Nms"] = float(block[f"{column}_turn"]) * u.turn_impulse
+            if block["moment"] == 0.0:  # what keeps it from turning gives the opposite of all else
+                row["else_turn_Nms"] = 0.0 - sum(row[f"{shown}_turn_Nms"] for shown in list(by)[:3])
             rows.append(row)
         return pd.DataFrame(rows)
 
     @property
     def pushers(self) -> pd.DataFrame:
-        """Where the pushers are: pusher, x_m, y_m, heading_rad, mode."""
+        """Where the pushers are: pusher, x_m, y_m of the centre of mass, heading_rad, mode."""
         u, states = self.units, self._task.crew.pushers
+        places = [body.local_to_world(body.center_of_gravity) for body in self._bodies]
         return pd.DataFrame(
             {
                 "pusher": np.arange(len(states)),
-                "x_m": [body.position.x * u.length for body in self._bodies],
-                "y_m": [body.position.y * u.length for body in self._bodies],
+                "x_m": [place.x * u.length for place in places],
+                "y_m": [place.y * u.length for place in places],
                 "heading_rad": np.remainder(states["heading"] + np.pi, 2 * np.pi) - np.pi,
                 "mode": [Mode(mode).name.lower() for mode in states["mode"]],
             }
@@ -424,9 +713,11 @@ class Crew:
         if not self._is_attached:
             return
         self._is_attached = False
+        _ATTACHED.discard(self.space)
         self.space.collision_persistence, self.space.sleep_time_threshold = self._before_us
         for body, (mass, moment) in zip(self._bodies, self._inertia_before, strict=True):
-            body.mass, body.moment = mass, moment
+            if body.body_type == pymunk.Body.DYNAMIC:
+                body.mass, body.moment = mass, moment
 
     def __enter__(self) -> Self:
         return self
@@ -435,26 +726,3 @@ class Crew:
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
         self.detach()
-
-
-def _name(body: pymunk.Body, named: Mapping[pymunk.Body, str], number: int) -> str:
-    if body in named:
-        return named[body]
-    if body.body_type == pymunk.Body.STATIC:
-        return "wall"
-    return f"body {number}"
-
-
-def _size(bodies: Sequence[pymunk.Body]) -> float:
-    """Radius of the smallest pusher: that of its disc, or half its width."""
-    sizes = [
-        shape.radius if isinstance(shape, pymunk.Circle) else 0.5 * min(_extent(shape))
-        for b in bodies
-        for shape in b.shapes
-    ]
-    return min(sizes, default=1.0)
-
-
-def _extent(shape: pymunk.Shape) -> tuple[float, float]:
-    box = shape.cache_bb()
-    return box.right - box.left, box.top - box.bottom

@@ -223,13 +223,14 @@ def load_run(folder: Path, cycles: tuple[tuple[str, ...], ...] = ()) -> Run:
         OSError, KeyError, ValueError: when the folder does not hold a run.
     """
     text = json.loads((folder / "run.json").read_text(encoding="utf-8"))
+    scenario = from_tables(text["scenario"], str(folder / "run.json"))
     visits, block, pushers = (pd.read_parquet(folder / f"{name}.parquet") for name in TABLES)
-    bumps = find_bumps(visits)
+    bumps = find_bumps(visits, scenario.pushers.comeback_time)
     numerics = dict(text["numerics"])
     overlap = numerics.pop("overlap_max_m")
     books: dict[str, Any] = {k: tuple(v) if isinstance(v, list) else v for k, v in text["books"].items()}
     return Run(
-        scenario=from_tables(text["scenario"], str(folder / "run.json")),
+        scenario=scenario,
         seed=text["provenance"]["seed"],
         steps=StepSettings(**numerics),
         ended=text["ended"],

@@ -135,7 +135,7 @@ def _record(
     visits = tables.visit_table(visited, on, s.pushers.count, len(motion), float(motion[0, 0]), steps.dt_s, u)
     block = tables.block_table(task.path, steps.dt_s, u)
     covered = np.hypot(np.diff(block["x_m"]), np.diff(block["y_m"])).sum() / u.length
-    bumps = find_bumps(visits)
+    bumps = find_bumps(visits, s.pushers.comeback_time)
     return Run(
         scenario=s,
         seed=seed,

@@ -60,6 +60,17 @@ def test_repeated_visits_to_one_surface_are_one_bump() -> None:
     assert (first["x_m"], first["y_m"]) == (10.0, 20.0)
 
 
+def test_rattling_is_one_bump() -> None:
+    """A pusher that is back at a surface at once has bumped once, whatever it has touched meanwhile."""
+    table = visits(*sequence(0, "r1r1rt"), (0, "rear", 9.0))
+    for apart, surfaces in ((0.0, 7), (1.4, 7), (1.6, 4)):  # visits to the same surface are 1.5 s apart
+        bumps = find_bumps(table, apart)
+        assert len(surfaces_of(bumps, 0)) == surfaces
+        assert bumps["impact_Ns"].sum() == 9.0  # the neighbour's two as well
+    assert surfaces_of(bumps, 0) == ["rear", "pusher", "top", "rear"]
+    assert bumps["t_off_s"].iloc[0] == 4.5
+
+
 def test_pushers_do_not_run_into_one_bump() -> None:
     """The last bump of one pusher and the first of the next are two, on the same surface as well."""
     bumps = find_bumps(visits((0, "rear", 0.0), (1, "rear", 1.0), (0, "top", 2.0), (1, "rear", 3.0)))
