@@ -313,12 +313,12 @@ class Numerics(_Table):
     """Solver settings; everything has a default that follows from the scenario."""
 
     step: Time | None = Field(default=None, gt=0, description="time step; default: from the shortest thing to resolve")
-    iterations: Whole = Field(
-        default=10,
+    iterations: Whole | None = Field(
+        default=None,
         ge=1,
         le=1000,
-        description="of the contact solver per step; n pushers that lean one behind another need some 3 n^2 to hold "
-        "exactly at the static threshold",
+        description="of the contact solver per step; default: 10, or 40 per further block of a train. n pushers that "
+        "lean one behind another need some 3 n^2 to hold exactly at the static threshold",
     )
 
 

@@ -15,6 +15,9 @@ TRAVEL_PER_STEP = 0.008  # radii: how far a pusher may run per step; the overlap
 OVERDAMPED = 0.02  # relaxation time in units of radius / speed below which there is no coasting to resolve
 STEPS_PER_RELAXATION = 20  # the mass seen by an impact is then right within 2.5 %, see `effective_mass`
 STEPS_PER_LATENCY = 8
+SIDEWAYS = 0.1  # radius / speed: within this a pusher in touch gains its speed, however large the drag across
+ITERATIONS = 10  # of the contact solver
+ITERATIONS_PER_BLOCK = 40  # of a train: with fewer, a row held by static friction lets go too early
 SLOP_TO_TRAVEL = 1.5  # allowed overlap over travel per step: an impact stays below it, so nothing is pushed apart
 TURN_PER_STEP = math.radians(5.0)
 NOISE_INTERVAL = 0.1  # radius / speed: the heading noise is a random walk with steps of this length
@@ -106,6 +109,8 @@ def choose_step(s: Scenario) -> StepSettings:
     limits = {"travel per step": TRAVEL_PER_STEP * crossing}
     if p.relaxation_time > OVERDAMPED * crossing:
         limits["relaxation time"] = p.relaxation_time / STEPS_PER_RELAXATION
+    if p.sideways_drag > 1.0:
+        limits["sideways drag"] = max(p.relaxation_time, SIDEWAYS * crossing) / p.sideways_drag
     if p.latency > 0.0:
         limits["latency"] = max(p.latency / STEPS_PER_LATENCY, 1e-4 * crossing)
     if math.isfinite(p.turn_rate):
@@ -124,7 +129,7 @@ def choose_step(s: Scenario) -> StepSettings:
     return StepSettings(
         dt_s=dt,
         slop_m=slop,
-        iterations=s.numerics.iterations,
+        iterations=s.numerics.iterations or max(ITERATIONS, ITERATIONS_PER_BLOCK * len(s.train)),
         sample_steps=max(1, round(interval / dt)),
         noise_steps=max(1, round(NOISE_INTERVAL * crossing / dt)),
         because=because,

@@ -167,7 +167,6 @@ def test_impact_where_walls_are_near() -> None:
     assert hit["impact_Ns"] == pytest.approx(met, rel=0.03)  # the step rule allows x/2 = 1/40 too much mass
 
 
-@pytest.mark.xfail(strict=True, reason="in touch the engine steps with a mass of at least the drag across times step")
 def test_a_pusher_hard_to_shove_sideways_gains_speed_at_once() -> None:
     """A light pusher in touch is up to speed at once, however large its drag across (force balance)."""
     s = rig(

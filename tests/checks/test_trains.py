@@ -108,7 +108,6 @@ def test_a_row_holds_with_static_friction(n: int) -> None:
     assert abs(swarmpush.simulate(s, cycles=()).travel_m) < 1e-7
 
 
-@pytest.mark.xfail(strict=True, reason="with the default iterations the solver's rest sets a long row going too early")
 def test_a_row_holds_with_default_iterations() -> None:
     """A row of four at rest holds up to four times the static friction with the default settings as well."""
     assert abs(swarmpush.simulate(leaning(0.95, 4, STICKY), cycles=()).travel_m) < 1e-7
