@@ -159,10 +159,12 @@ def _wear(s: Scenario) -> Iterator[Regime]:
 
 
 def _channel(s: Scenario) -> Iterator[Regime]:
-    width = s.channel.width / (2 * s.pushers.radius)
+    p = s.pushers
+    width = s.channel.width / (2 * p.reach)
     text = "pushers can hardly pass each other" if width < 3 else "room to pass"
-    yield Regime("width", "channel width / pusher diameter", width, text, width < 3 and s.pushers.count > 1)
-    packing = s.pushers.count * math.pi * s.pushers.radius**2 / max(s.block.rear_at * s.channel.width, 1e-300)
+    yield Regime("width", "channel width / pusher's largest extent", width, text, width < 3 and s.pushers.count > 1)
+    area = math.pi * p.radius**2 + 2 * p.radius * (p.nose + p.trunk) + p.nose * p.trunk
+    packing = p.count * area / max(s.block.rear_at * s.channel.width, 1e-300)
     text = "pushers meet often" if packing > 0.03 else "meetings are rare"
     yield Regime("crowding", "crew area / area behind the block", packing, text, packing > 0.03)
     if is_plain(s):

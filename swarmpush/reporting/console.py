@@ -132,13 +132,13 @@ def _plan_facts(plan: Plan) -> dict[str, str]:
 
 def _force_words(plan: Plan) -> str:
     force, n = plan.force, len(plan.scenario.blocks)
-    what, them = ("block", "it") if n == 1 else (f"{n} blocks", "them")
+    what = "the block" if n == 1 else f"the {n} blocks"
     slope = ""
     if force.slope_N != 0.0:
         slope = f", the slope pulls {for_people(abs(force.slope_N), 'N')} {'back' if force.slope_N > 0.0 else 'ahead'}"
     return (
-        f"one pusher {for_people(force.stall_N, 'N')}, the floor holds the {what} with "
-        f"{for_people(force.floor_friction_N, 'N')}{slope}: {force.pushers_to_move:.2f} pushers to move {them} "
+        f"one pusher {for_people(force.stall_N, 'N')}, the floor holds {what} with "
+        f"{for_people(force.floor_friction_N, 'N')}{slope}: {force.pushers_to_move:.2f} pushers to move {what} "
         f"({force.pushers_to_move_low:.2f} with half the friction, {force.pushers_to_move_high:.2f} with twice), "
         f"of {plan.scenario.pushers.count}"
     )

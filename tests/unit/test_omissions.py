@@ -156,6 +156,15 @@ def test_what_is_left_out_is_said(tables: dict[str, Any], word: str, number: str
     assert number not in numbers(passage())
 
 
+def test_bars_take_more_room_than_discs() -> None:
+    """44 mm x 15 mm in 120 mm: 120/44.18 from corner to corner; twelve of 629 mm2 on 400 mm x 120 mm."""
+    s = load(demo("bristle_tray"))
+    found = {regime.name: regime.value for regime in regimes(s, (), travel())}
+    assert found["width"] == pytest.approx(120 / (12 + math.hypot(32, 3)), rel=EXACTLY)
+    area = math.pi * 6**2 + 12 * 35 + 3 * 32
+    assert found["crowding"] == pytest.approx(12 * area / (400 * 120), rel=EXACTLY)
+
+
 def test_a_centre_off_the_middle_is_said() -> None:
     """A centre of mass or of friction that is given gets a sentence."""
     assert any("off the middle" in sentence for sentence in left_out(passage(block={"centre_of_mass": [0.1, 0.05]})))
