@@ -1,7 +1,7 @@
 """What one strike does to the block: impact, catching up, pushing on, sliding out.
 
 All laws are one-dimensional, along the normal of the struck face; the pusher keeps its heading. The block starts at
-rest, and further blocks of a train are left out. A sloping table lightens the block on the floor by the slope's cosines
+rest, and further blocks of a train are left out. A sloping table lightens the block on the floor by the slope's cosine
 and pulls it, and whoever pushes it, down by the sine: a steady force that adds to the floor's. Sources are named with
 each law.
 """
@@ -34,8 +34,14 @@ class Strike(NamedTuple):
 
 
 def normal_force(s: Scenario, mass: float) -> float:
-    """How hard a mass presses on the dry floor, N: m g times the cosines of both slopes; 0 without a floor."""
-    return mass * s.floor.gravity * math.cos(s.channel.slope) * math.cos(s.channel.cross_slope) if s.floor else 0.0
+    """How hard a mass presses on the dry floor, N: m g sqrt(1 - sin(slope)^2 - sin(cross slope)^2); 0 without a floor.
+
+    Each slope is the rise of an axis of the channel, so these sines are gravity's parts along two directions at right
+    angles in the table, and what is left of its square is the part into the floor. With one slope it is the cosine.
+    """
+    if s.floor is None:
+        return 0.0
+    return mass * s.floor.gravity * math.sqrt(1 - math.sin(s.channel.slope) ** 2 - math.sin(s.channel.cross_slope) ** 2)
 
 
 def slope_pull(s: Scenario, mass: float) -> float:

@@ -118,8 +118,8 @@ def book_rows(run: Run) -> list[tuple[str, str]]:
     """What the books leave over, and how far bodies overlapped."""
     books = run.books
     return [
-        ("residual", f"{books.residual_rel:.1e} of all contact impulse on the blocks"),
-        ("residual about the centres", f"{books.residual_turn_rel:.1e} of all moments of contact impulse"),
+        ("residual", f"{books.residual_rel:.1e} of all impulses on the blocks"),
+        ("residual about the centres", f"{books.residual_turn_rel:.1e} of the moments of all impulses"),
         ("displacement without velocity", f"{books.phantom_share:.1e} of the block's way"),
         ("deepest overlap", for_people(run.overlap_max_m, "m")),
     ]

@@ -61,6 +61,9 @@ def test_force_on_a_cross_slope() -> None:
     level, tilted = push_force(passage()), push_force(passage(channel={"cross_slope": 0.3}))
     assert tilted.pushers_to_move == pytest.approx(level.pushers_to_move * math.cos(0.3), rel=EXACTLY)
     assert tilted.slope_N == 0.0
+    both = push_force(passage(channel={"slope": 0.3, "cross_slope": 0.3}))
+    weight = 0.5 * 9.81 * math.sqrt(1 - 2 * 0.2955202**2)  # gravity's other two parts are sin(0.3) each
+    assert both.floor_friction_N == pytest.approx(0.35 * weight, rel=FOUR_DIGITS)
 
 
 def test_too_steep_to_climb_and_steep_enough_to_slide() -> None:
