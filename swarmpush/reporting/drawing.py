@@ -120,8 +120,9 @@ def draw_rig(axes: Axes, plan: Plan, scale: float, *, has_ends: bool) -> tuple[f
             axes.axhline(y, color=INK, lw=2.5)
     for post in posts:
         axes.add_patch(Polygon(post, facecolor=QUIET, edgecolor=INK, lw=1.2, ls="-" if has_ends else "--", zorder=2))
-    for k, block in enumerate(blocks):
-        _draw_block(axes, block, "block" if k == 0 else f"block {k + 1}")
+    for k, (block, corners) in enumerate(zip(s.blocks, blocks, strict=True)):
+        has_marks = block.centre_of_mass is not None or block.centre_of_friction is not None
+        _draw_block(axes, corners, "block" if k == 0 else f"block {k + 1}", height=0.78 if has_marks else 0.5)
     _draw_centres(axes, s, scale)
     lap = plan.main_lap
     back = float(lap.hits[:, 0].min()) / scale if lap is not None else rear - 3 * width
@@ -137,11 +138,11 @@ def draw_rig(axes: Axes, plan: Plan, scale: float, *, has_ends: bool) -> tuple[f
     return reach, min(front + 0.5 * width, length + 0.1 * width)
 
 
-def _draw_block(axes: Axes, corners: np.ndarray, name: str) -> None:
-    """A block with its name, a little above the middle where its centres may be marked."""
+def _draw_block(axes: Axes, corners: np.ndarray, name: str, *, height: float = 0.5) -> None:
+    """A block with its name at a share of its extent across."""
     axes.add_patch(Polygon(corners, facecolor=PALE, edgecolor=INK, lw=1.2, zorder=2))
     low, high = corners.min(axis=0), corners.max(axis=0)
-    x, y = 0.5 * (low[0] + high[0]), low[1] + 0.78 * (high[1] - low[1])
+    x, y = 0.5 * (low[0] + high[0]), low[1] + height * (high[1] - low[1])
     axes.text(x, y, name, ha="center", va="center", color=INK, zorder=3)
 
 
