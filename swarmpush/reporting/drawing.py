@@ -147,7 +147,10 @@ def _draw_block(axes: Axes, corners: np.ndarray, name: str, *, height: float = 0
 
 
 def end_of_run(run: Run) -> Figure:
-    """Where blocks and pushers were when the run ended, to scale; the blocks' starting places are dashed."""
+    """Where blocks and pushers were when the run ended, to scale; the blocks' starting places are dashed.
+
+    Of a long channel only the stretch from the hindmost body to the foremost is shown, and some way beyond.
+    """
     s = run.scenario
     scale, prefix = prefix_for(s.channel.width)
     figure, axes = plt.subplots(figsize=(8.4, 3.4))
@@ -172,7 +175,13 @@ def end_of_run(run: Run) -> Figure:
         axes.plot(*np.array([(x, y), (x + ahead[0], y + ahead[1])]).T / scale, color=colour, lw=1.0, zorder=5)
     corners = np.array(channel_corners(s)) / scale
     margin = 0.04 * s.channel.width / scale
-    axes.set_xlim(corners[:, 0].min() - margin, corners[:, 0].max() + margin)
+    outlines = [patch for patch in axes.patches if isinstance(patch, Polygon) and patch.get_zorder() > 1.5]
+    bodies = np.vstack([patch.get_xy() for patch in outlines])
+    around = s.channel.width / scale
+    axes.set_xlim(
+        max(corners[:, 0].min() - margin, bodies[:, 0].min() - around),
+        min(corners[:, 0].max() + margin, bodies[:, 0].max() + around),
+    )
     axes.set_ylim(corners[:, 1].min() - margin, corners[:, 1].max() + margin)
     axes.set_aspect("equal")
     axes.set_xlabel(f"along the channel, {prefix}m")
