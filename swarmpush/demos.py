@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from pathlib import Path
 
-DEMOS = ("service_passage", "vibration_duct", "gel_channel", "loading_bay")
+DEMOS = ("service_passage", "vibration_duct", "gel_channel", "loading_bay", "bristle_tray")
 
 
 def demo(name: str) -> Path:

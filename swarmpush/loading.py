@@ -407,11 +407,12 @@ def _overlaps(s: Scenario) -> Iterator[Problem]:
 
 
 def _region_misfits(s: Scenario) -> Iterator[Problem]:
-    """Every part of the region open to a pusher's centre must touch the block's surroundings."""
-    from shapely import Polygon
+    """Every part of the region open to a pusher's centre must touch the surroundings of a block."""
+    from shapely import Polygon, union_all
 
     region = free_region(s)
-    reach = Polygon(block_corners(s)).buffer(1.001 * s.pushers.radius, quad_segs=ARC_SIDES // 4)
+    blocks = union_all([Polygon(block_corners(s, block)) for block in s.blocks])
+    reach = blocks.buffer(1.001 * s.pushers.radius, quad_segs=ARC_SIDES // 4)
     for part in getattr(region, "geoms", [region]):
         if part.is_empty:
             yield Problem("pushers.radius", "no pusher fits the channel anywhere; make it smaller")

@@ -23,7 +23,7 @@ from pydantic import BaseModel
 from pydantic.fields import FieldInfo
 from pydantic_core import PydanticUndefined
 
-from swarmpush import routine
+from swarmpush import routine, scenario
 from swarmpush.quantities import Quantity
 from swarmpush.scenario import Scenario
 
@@ -84,10 +84,20 @@ def draw_pictures(results: Path) -> None:
 
 def reference() -> str:
     """All tables and keys of a scenario file, from the model itself."""
-    parts = []
+    parts: list[str] = []
+    shown: dict[type[BaseModel], str] = {}
     for name, field in Scenario.model_fields.items():
-        models = [model for model in _models(field.annotation) if model is not routine.Routine]
-        parts += [f"**[{name}]** {_first(model)}\n\n{_key_table(model)}" for model in models]
+        is_list = get_origin(field.annotation) is tuple
+        for model in _models(field.annotation):
+            if model is routine.Routine:
+                continue
+            if model in shown:  # keys of a table that stands above
+                words = field.description or ""
+                parts.append(f"**[[{name}]]** {words[:1].upper()}{words[1:]}. Keys as in [{shown[model]}].")
+                continue
+            shown[model] = name
+            heading = f"[[{name}]]" if is_list else f"[{name}]"
+            parts.append(f"**{heading}** {_first(model)}\n\n{_key_table(model)}")
     acts = [model for model in _models(routine.Act) if model is not routine.Branch]
     parts.append(f"**[[routine.stages]]** {_first(routine.Stage)}\n\n{_key_table(routine.Stage)}")
     parts += [f'**act = "{_tag(act)}"** {_first(act)}\n\n{_key_table(act)}' for act in acts]
@@ -124,6 +134,8 @@ def _key_table(model: type[BaseModel]) -> str:
 
 
 def _kind(field: FieldInfo) -> str:
+    if points := _points(field):
+        return points
     if quantity := _quantity(field):
         return "ratio" if quantity.si_unit == "1" else quantity.si_unit
     if get_origin(field.annotation) is Literal:
@@ -138,6 +150,21 @@ def _kind(field: FieldInfo) -> str:
     return next((word for kind, word in kinds.items() if field.annotation is kind or kind in plain), "text")
 
 
+def _points(field: FieldInfo) -> str:
+    """What a key that holds places consists of; empty for any other."""
+
+    def holds(annotation: Any, kind: Any) -> bool:
+        return annotation == kind or any(holds(part, kind) for part in get_args(annotation))
+
+    if not holds(field.annotation, scenario.Point):
+        return ""
+    corners = [*field.metadata, field.annotation, *get_args(field.annotation)]
+    is_outline = any(holds(part, tuple[scenario.Point, ...]) for part in corners)
+    if is_outline and get_origin(field.annotation) is tuple:
+        return "list of lists of [x, y] in m"
+    return "list of [x, y] in m" if is_outline else "[x, y] in m"
+
+
 def _quantity(field: FieldInfo) -> Quantity | None:
     marks = [mark for part in _parts(field.annotation) for mark in getattr(part, "__metadata__", ())]
     return next((mark for mark in (*field.metadata, *marks) if isinstance(mark, Quantity)), None)
@@ -150,7 +177,7 @@ def _parts(annotation: Any) -> tuple[Any, ...]:
 def _default(field: FieldInfo) -> str:
     if field.default is PydanticUndefined:
         return "required"
-    if field.default is None:
+    if field.default is None or field.default == ():
         return ""
     if isinstance(field.default, float):
         return _number(field.default, field)

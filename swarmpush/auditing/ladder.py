@@ -28,8 +28,19 @@ def _turns_at_once(s: Scenario) -> Scenario:
     return s.replace(pushers={"turn_rate": math.inf, "bump_threshold": 0.0, "bumper_arc": 2 * math.pi})
 
 
+def _are_discs_on_course(s: Scenario) -> Scenario:
+    # comes after the turning rate, because neither a bar nor a free heading can turn at once
+    held = {"nose": 0.0, "trunk": 0.0, "yaw_inertia": None, "heading": "held", "turn_drag": None, "contact_arm": 0.0}
+    return s if s.pushers.is_disc and s.pushers.heading == "held" else s.replace(pushers=held)
+
+
+def _is_one_block(s: Scenario) -> Scenario:
+    return s.model_copy(update={"train": ()})
+
+
 def _holds_yaw(s: Scenario) -> Scenario:
-    return s.replace(block={"yaw": "held"})
+    held = s.replace(block={"yaw": "held"})
+    return held.model_copy(update={"train": tuple(block.model_copy(update={"yaw": "held"}) for block in s.train)})
 
 
 def _makes_no_errors(s: Scenario) -> Scenario:
@@ -43,6 +54,8 @@ def _pass_each_other(s: Scenario) -> Scenario:
 # in the order in which the rungs are climbed
 ASSUMPTIONS = (
     Assumption("turning", "turning time and deaf bumpers", "pushers feel every touch and turn at once", _turns_at_once),
+    Assumption("shape", "bars and free headings", "pushers are discs that hold their heading", _are_discs_on_course),
+    Assumption("train", "further blocks of the train", "there is one block only", _is_one_block),
     Assumption("yaw", "yaw of the block", "the block does not turn", _holds_yaw),
     Assumption("errors", "errors and unit spread", "headings, turns and units are exact", _makes_no_errors),
     Assumption("crowding", "crowding", "pushers do not get in each other's way", _pass_each_other),

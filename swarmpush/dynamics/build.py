@@ -151,7 +151,7 @@ def _crew(s: Scenario, u: Units, dt: float, keys: NDArray[np.uint64], starts: ND
 
 
 def prepare_masses(units: NDArray[np.void], turn_drag: float, dt: float) -> None:
-    """What `crew.drive` steps pushers with, in touch and not, from their masses, moments and drags."""
+    """What `crew.act` steps pushers with, in touch and not, from their masses, moments and drags."""
     for unit in units:
         unit["held_mass"] = step_mass(unit["mass"], unit["drag"], unit["side_drag"], dt)
         unit["along_rest"] = relaxed(unit["drag"] * dt / unit["mass"])

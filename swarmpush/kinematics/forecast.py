@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from swarmpush.kinematics.laps import Lap
-from swarmpush.kinematics.nudge import impact_impulse, static_friction
+from swarmpush.kinematics.nudge import impact_impulse, normal_force, slope_pull, static_friction
 from swarmpush.kinematics.strikes import Strikes
 from swarmpush.kinematics.teams import CrewPush, crew_push, strikes_of
 from swarmpush.kinematics.visits import follow_visits
@@ -23,13 +23,18 @@ FRICTION_RANGE = (0.5, 2.0)  # handbook values of one pair of materials differ b
 
 @dataclass(frozen=True)
 class PushForce:
-    """Thrust against the dry floor: what one pusher can do, what the floor holds, how many must lean together.
+    """Thrust against floor and slope: what one pusher can do, what holds the blocks, how many must lean together.
 
-    pushers_to_move_low, pushers_to_move_high: the same with half and with twice the friction coefficient.
+    stall_N: thrust of one pusher at rest. floor_friction_N, slope_N: what the dry floor holds and what pulls the blocks
+    away from the goal, all blocks of a train together. climb_N: slope's pull on one pusher, which its thrust must carry
+    besides. pushers_to_move: infinite where a pusher cannot carry itself, 0 where the blocks slide to the goal by
+    themselves. pushers_to_move_low, pushers_to_move_high: the same with half and with twice the friction coefficient.
     """
 
     stall_N: float
     floor_friction_N: float
+    slope_N: float
+    climb_N: float
     pushers_to_move: float
     pushers_to_move_low: float
     pushers_to_move_high: float
@@ -64,11 +69,22 @@ class TravelForecast:
 
 
 def push_force(s: Scenario) -> PushForce:
-    """The force margin. Source: Coulomb's law; pushers_to_move = mu_s m g / stall force."""
-    friction = static_friction(s)
-    needed = friction / s.pushers.stall_force
-    low, high = (factor * needed for factor in FRICTION_RANGE)
-    return PushForce(s.pushers.stall_force, friction, needed, low, high)
+    """The force margin: pushers_to_move = (mu_s M g cos + M g sin)/(F - m g sin), M being the mass of all blocks.
+
+    Source: Coulomb's law and the balance of forces along the slope, for pushers that head straight for the goal.
+    (Worked out here.)
+    """
+    mass = sum(block.mass for block in s.blocks)
+    friction = s.floor.static_friction * normal_force(s, mass) if s.floor else 0.0
+    pull, climb = slope_pull(s, mass), slope_pull(s, s.pushers.mass)
+    left = s.pushers.stall_force - climb
+
+    def needed(factor: float) -> float:
+        holds = max(0.0, factor * friction + pull)
+        return holds / left if left > 0.0 else math.inf if holds > 0.0 else 0.0
+
+    low, high = map(needed, FRICTION_RANGE)
+    return PushForce(s.pushers.stall_force, friction, pull, climb, needed(1.0), low, high)
 
 
 def forecast(s: Scenario, laps: tuple[Lap, ...], strikes: Strikes) -> TravelForecast:
@@ -79,7 +95,8 @@ def forecast(s: Scenario, laps: tuple[Lap, ...], strikes: Strikes) -> TravelFore
     """
     rear, front = follow_visits(s)
     n = s.pushers.count
-    forwards, backwards = crew_push(s, rear), crew_push(s, front)
+    downhill = s.replace(channel={"slope": -s.channel.slope})  # a push on the front face is one the other way
+    forwards, backwards = crew_push(s, rear), crew_push(downhill, front)
     rate = n * rear.strike_rate_1_s
     if math.isinf(forwards.total + backwards.total):  # a nudge never ends, and the more frequent strikes win
         back_rate = n * front.strike_rate_1_s

@@ -1,7 +1,9 @@
 """What one strike does to the block: impact, catching up, pushing on, sliding out.
 
 All laws are one-dimensional, along the normal of the struck face; the pusher keeps its heading. The block starts at
-rest. Sources are named with each law.
+rest, and further blocks of a train are left out. A sloping table lightens the block on the floor by the slope's cosine
+and pulls it, and whoever pushes it, down by the sine: a steady force that adds to the floor's. Sources are named with
+each law.
 """
 
 from __future__ import annotations
@@ -31,19 +33,44 @@ class Strike(NamedTuple):
     kept: float = 1.0
 
 
+def normal_force(s: Scenario, mass: float) -> float:
+    """How hard a mass presses on the dry floor, N: m g sqrt(1 - sin(slope)^2 - sin(cross slope)^2); 0 without a floor.
+
+    Each slope is the rise of an axis of the channel, so these sines are gravity's parts along two directions at right
+    angles in the table, and what is left of its square is the part into the floor. With one slope it is the cosine.
+    """
+    if s.floor is None:
+        return 0.0
+    return mass * s.floor.gravity * math.sqrt(1 - math.sin(s.channel.slope) ** 2 - math.sin(s.channel.cross_slope) ** 2)
+
+
+def slope_pull(s: Scenario, mass: float) -> float:
+    """Force down the slope on a mass, N: m g sin(slope), positive where the table rises towards the goal."""
+    return mass * s.gravity * math.sin(s.channel.slope)
+
+
 def static_friction(s: Scenario) -> float:
     """Largest force the dry floor holds before the block slides, N."""
-    return s.floor.static_friction * s.block.mass * s.floor.gravity if s.floor else 0.0
+    return s.floor.static_friction * normal_force(s, s.block.mass) if s.floor else 0.0
 
 
-def kinetic_friction(s: Scenario) -> float:
-    """Force of the dry floor on the sliding block, N."""
-    return s.floor.kinetic_friction * s.block.mass * s.floor.gravity if s.floor else 0.0
+def static_hold(s: Scenario) -> float:
+    """What must be overcome to set the block going towards the goal, N: static friction and the slope's pull.
+
+    Less than 0 where the block slides down to the goal by itself.
+    """
+    return static_friction(s) + slope_pull(s, s.block.mass)
+
+
+def kinetic_hold(s: Scenario) -> float:
+    """What brakes the block while it slides towards the goal, N: kinetic friction and the slope's pull."""
+    friction = s.floor.kinetic_friction * normal_force(s, s.block.mass) if s.floor else 0.0
+    return friction + slope_pull(s, s.block.mass)
 
 
 def block_drag(s: Scenario) -> float:
-    """Drag of the fluid on the block, N s/m; 0 without one."""
-    return s.fluid.block_drag if s.fluid else 0.0
+    """Drag of the fluid on the block in its channel, along its length, N s/m; 0 without one."""
+    return s.fluid.drag_along if s.fluid else 0.0
 
 
 def impact_impulse(s: Scenario, approach_m_s: float) -> float:
@@ -80,25 +107,27 @@ def slide_out(mass: float, speed: float, friction: float, drag: float) -> float:
 def impact_nudge(s: Scenario, approach_m_s: float) -> float:
     """Slide after one impact at the given normal speed and nothing else, in m; see `slide_out`."""
     speed = impact_impulse(s, approach_m_s) / s.block.mass
-    return slide_out(s.block.mass, speed, kinetic_friction(s), block_drag(s))
+    return slide_out(s.block.mass, speed, kinetic_hold(s), block_drag(s))
 
 
 def lean_speed(s: Scenario, push_cosine: float, pushers: int = 1) -> float:
-    """Speed of the block while k pushers lean on it, in m/s: max(0, k F cos a - f)/(k g_p + g_b).
+    """Speed of the block while k pushers lean on it, in m/s: max(0, k (F cos a - w) - f)/(k g_p + g_b).
 
-    F falls with speed along the linear force-speed line, which is the pusher's drag g_p = F/v0; f is the kinetic
-    friction, and nothing moves below the static one. Source: force balance without inertia.
+    F falls with speed along the linear force-speed line, which is the pusher's drag g_p = F/v0; w is the slope's pull
+    on a pusher; f is what brakes the sliding block, and nothing moves below what holds it at rest. Source: force
+    balance without inertia.
 
     Arguments:
         push_cosine: cosine of heading against normal. pushers: how many lean alike.
     """
-    return _lean(s, pushers * s.pushers.stall_force * push_cosine, pushers)
+    push = s.pushers.stall_force * push_cosine - slope_pull(s, s.pushers.mass)
+    return _lean(s, pushers * push, pushers)
 
 
 def _lean(s: Scenario, push: float, pushers: int = 1) -> float:
-    if push <= static_friction(s):
+    if push <= static_hold(s):
         return 0.0
-    return max(0.0, push - kinetic_friction(s)) / (pushers * s.pushers.drag + block_drag(s))
+    return max(0.0, push - kinetic_hold(s)) / (pushers * s.pushers.drag + block_drag(s))
 
 
 def strike_nudge(s: Scenario, strike: Strike, *, others: int = 0, others_push_N: float = 0.0) -> float:
@@ -107,7 +136,7 @@ def strike_nudge(s: Scenario, strike: Strike, *, others: int = 0, others_push_N:
     Arguments:
         s: the scenario. strike: how the pusher arrives and leaves.
         others: pushers that lean on the block all the while (law auto). others_push_N: their thrust together, less than
-            the floor's kinetic friction, or 0.
+            what brakes the sliding block, or 0.
     """
     match s.forecast.law:
         case "given":
@@ -133,7 +162,7 @@ def _push_on(s: Scenario, strike: Strike, others: int, others_push: float) -> fl
     the block rests.
     """
     p, m, big = s.pushers, s.pushers.mass, s.block.mass
-    friction, drag = kinetic_friction(s) - others_push, block_drag(s)
+    friction, drag = kinetic_hold(s) - others_push, block_drag(s)
     own, speed, way, time_left = strike.approach_m_s, 0.0, 0.0, strike.push_s
     for _ in range(_MOST_BOUNCES):
         parting = s.contacts.pusher_block.restitution * (own - speed)
@@ -153,7 +182,7 @@ def _push_on(s: Scenario, strike: Strike, others: int, others_push: float) -> fl
     mass, total_drag = big + (1 + others) * m, drag + (1 + others) * p.drag
     for push, time in ((strike.push_N, time_left), (strike.turning_N, strike.turning_s)):
         force = strike.kept * push - friction
-        if speed <= 0.0 and strike.kept * push + others_push <= static_friction(s):
+        if speed <= 0.0 and strike.kept * push + others_push <= static_hold(s):
             continue
         step, speed = _driven(mass, total_drag, force, speed, time)
         way += step

@@ -14,6 +14,7 @@ from swarmpush.kinematics.forecast import PushForce, TravelForecast, forecast, p
 from swarmpush.kinematics.lap_loss import MOST_LEGS, LapsKept, laps_kept
 from swarmpush.kinematics.laps import N_STARTS, Capture, Lap, find_laps
 from swarmpush.kinematics.noise_budget import NoiseBudget, noise_budget
+from swarmpush.kinematics.omissions import left_out
 from swarmpush.kinematics.regimes import Regime, regimes
 from swarmpush.kinematics.strikes import count_strikes, point_path
 from swarmpush.routine import Device
@@ -30,7 +31,7 @@ class Plan:
     force: thrust against floor friction. regime: dimensionless numbers. travel: the forecast for the block.
     laps_to_drift_out: mean, per lap in `laps`, by theory. laps_to_drift_out_mc: by following pushers, for the first
     `N_LAPS_FOLLOWED` of them. noise_budget: what the main lap tolerates; None without a lap. kit: hardware the routine
-    needs. path_m: see `point_path`.
+    needs. left_out: in sentences, what the scenario holds that all this leaves out. path_m: see `point_path`.
     """
 
     scenario: Scenario
@@ -43,6 +44,7 @@ class Plan:
     laps_to_drift_out_mc: tuple[LapsKept, ...]
     noise_budget: NoiseBudget | None
     kit: tuple[Device, ...]
+    left_out: tuple[str, ...]
     path_m: NDArray[np.float64]
 
     @property
@@ -84,6 +86,7 @@ class Plan:
                 "forecast": self.travel,
                 "noise_budget": self.noise_budget,
                 "kit": self.kit,
+                "left_out": self.left_out,
                 "provenance": provenance(self.scenario),
             }
         )
@@ -119,5 +122,6 @@ def plan(s: Scenario, *, n_starts: int = N_STARTS) -> Plan:
         laps_to_drift_out_mc=tuple(laps_kept(s, lap, most_legs=MOST_LEGS // len(followed)) for lap in followed),
         noise_budget=noise_budget(s, lap=laps[0]) if laps else None,
         kit=s.routine.kit(),
+        left_out=left_out(s),
         path_m=point_path(s),
     )

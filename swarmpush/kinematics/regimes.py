@@ -13,6 +13,9 @@ from swarmpush.geometry import block_corners, channel_corners, is_plain, post_co
 from swarmpush.kinematics.drift import laps_to_drift_out
 from swarmpush.kinematics.forecast import PushForce, TravelForecast, push_force
 from swarmpush.kinematics.laps import Lap
+from swarmpush.kinematics.nudge import normal_force, slope_pull
+from swarmpush.kinematics.omissions import climb_share, fade_left, failures_expected
+from swarmpush.quantities import for_people
 from swarmpush.scenario import Scenario
 
 
@@ -29,7 +32,7 @@ class Regime:
 
 def regimes(s: Scenario, laps: tuple[Lap, ...], travel: TravelForecast) -> tuple[Regime, ...]:
     """The numbers that apply to a scenario, in the order in which a plan usually breaks."""
-    found = [*_motion(s), *_force(s, travel), *_channel(s)]
+    found = [*_motion(s), *_shape(s), *_force(s, travel), *_slopes(s), *_wear(s), *_channel(s)]
     if laps:
         found += [*_turning(s, laps[0]), *_errors(s, laps[0])]
     return tuple(found)
@@ -51,17 +54,45 @@ def _motion(s: Scenario) -> Iterator[Regime]:
         yield Regime("Reynolds number", "rho v d / eta", reynolds, text, reynolds >= 0.1)
 
 
+def _shape(s: Scenario) -> Iterator[Regime]:
+    """What a disc that holds its heading stands for.
+
+    A stall force at the end of the outline's reach R turns a free heading at F R/turn drag; in the time R/v0 that the
+    pusher takes to run as far, by F R^2/(turn drag v0). (Worked out here, without inertia.)
+    """
+    p = s.pushers
+    if not p.is_disc:
+        bar = p.reach / p.radius
+        text = "the plan takes the bar for a disc of this radius"
+        yield Regime("bar", "reach / r", bar, text + ("" if bar < 1.2 else ", and it reaches much farther"), bar >= 1.2)
+    if p.heading == "free":
+        turned = p.drag * p.reach**2 / p.turning_drag
+        text = (
+            f"a push off the centre turns it by some {turned:.2g} rad in the time it runs its reach; the plan holds it"
+        )
+        yield Regime("free heading", "F R^2 / (turn drag v)", turned, text, turned > 0.1)
+
+
 def _force(s: Scenario, travel: TravelForecast) -> Iterator[Regime]:
     force = push_force(s)
-    if force.floor_friction_N > 0.0:
+    if force.pushers_to_move > 0.0:
         needed = force.pushers_to_move
+        if s.train:
+            share = (
+                force.floor_friction_N / (s.floor.static_friction * normal_force(s, s.block.mass)) if s.floor else 1.0
+            )
+            text = (
+                f"{len(s.blocks)} blocks in a row hold {share:.2g} times what the first does; the nudge is that of one"
+            )
+            yield Regime("train", "friction of all / of the first", share, text, share > 1.0 + s.trial.tolerance)
         if needed > s.pushers.count:
             text = "the whole crew leaning together cannot move the block; only impacts can"
         elif needed > 1.0:
             text = f"{math.ceil(needed)} pushers must lean at the same time to move the block"
         else:
             text = "one leaning pusher moves the block: held pushing adds to the planned nudges"
-        yield Regime("floor hold", "mu m g / stall force", needed, text, needed > 1.0 or s.pushers.latency > 0)
+        formula = "(mu cos + sin) M g / (F - m g sin)" if s.channel.slope else "mu m g / stall force"
+        yield Regime("floor hold", formula, needed, text, needed > 1.0 or s.pushers.latency > 0)
         yield _force_margin(s.pushers.count, force)
     if travel.nudge_m > 0.0:
         slide = travel.nudge_m / s.pushers.radius
@@ -76,14 +107,64 @@ def _force_margin(crew: int, force: PushForce) -> Regime:
     text = f"from half to twice the friction it takes {low:.2g} to {high:.2g} leaning together, of {crew}"
     if high > crew >= force.pushers_to_move:
         text += "; at twice the friction the crew cannot"
-    return Regime("force margin", "n stall force / (mu m g)", margin, text, high > crew)
+    return Regime("force margin", "crew / pushers to move the block", margin, text, high > crew)
+
+
+def _slopes(s: Scenario) -> Iterator[Regime]:
+    """Gravity along the table against thrust and against the floor: m g sin/F, and tan(slope)/mu_s for the block."""
+    if s.floor is None:
+        return
+    for name, angle in (("slope", s.channel.slope), ("cross slope", s.channel.cross_slope)):
+        if angle == 0.0:
+            continue
+        share = (
+            climb_share(s) if name == "slope" else s.pushers.mass * s.gravity * math.sin(angle) / s.pushers.stall_force
+        )
+        if abs(share) >= 1.0:
+            text = (
+                "no pusher can drive against it"
+                if name == "cross slope" or share > 0.0
+                else "pushers cannot drive back"
+            )
+        else:
+            text = f"gravity takes or gives {abs(share):.1%} of a pusher's thrust along it, and as much of its speed"
+        yield Regime(name, "m g sin / stall force", share, text, abs(share) > s.trial.tolerance / 2)
+    pull, holds = slope_pull(s, 1.0), s.floor.static_friction * normal_force(s, 1.0)
+    if s.channel.slope != 0.0:
+        ratio = abs(pull) / holds if holds > 0.0 else math.inf
+        way = "back" if pull > 0.0 else "to the goal"
+        text = f"the floor holds the block on the slope with {1.0 - ratio:.0%} to spare"
+        text = text if ratio < 1.0 else f"the block slides {way} by itself"
+        yield Regime("slide down", "tan(slope) / mu", ratio, text, ratio >= 1.0)
+
+
+def _wear(s: Scenario) -> Iterator[Regime]:
+    """What a run takes from the crew. A fading crew overcomes the floor until fade time x ln(crew/pushers to move)."""
+    e, limit = s.errors, s.goal.time_limit
+    if e.fade_time is not None:
+        text = f"{fade_left(s):.0%} of the thrust is left at the time limit; the plan counts on all of it"
+        needed = push_force(s).pushers_to_move
+        if 0.0 < needed < s.pushers.count:
+            end = e.fade_time * math.log(s.pushers.count / needed)
+            text += f"; after {for_people(end, 's')} the whole crew cannot move the block" if end < limit else ""
+        yield Regime(
+            "fading", "time limit / fade time", limit / e.fade_time, text, fade_left(s) < 1.0 - s.trial.tolerance
+        )
+    if e.dropout > 0.0:
+        failed = failures_expected(s)
+        text = (
+            f"of {s.pushers.count} pushers so many are expected to fail within the time limit, and then lie in the way"
+        )
+        yield Regime("failures", "n (1 - exp(-dropout T))", failed, text, failed > s.trial.tolerance * s.pushers.count)
 
 
 def _channel(s: Scenario) -> Iterator[Regime]:
-    width = s.channel.width / (2 * s.pushers.radius)
+    p = s.pushers
+    width = s.channel.width / (2 * p.reach)
     text = "pushers can hardly pass each other" if width < 3 else "room to pass"
-    yield Regime("width", "channel width / pusher diameter", width, text, width < 3 and s.pushers.count > 1)
-    packing = s.pushers.count * math.pi * s.pushers.radius**2 / max(s.block.rear_at * s.channel.width, 1e-300)
+    yield Regime("width", "channel width / pusher's largest extent", width, text, width < 3 and s.pushers.count > 1)
+    area = math.pi * p.radius**2 + 2 * p.radius * (p.nose + p.trunk) + p.nose * p.trunk
+    packing = p.count * area / max(s.block.rear_at * s.channel.width, 1e-300)
     text = "pushers meet often" if packing > 0.03 else "meetings are rare"
     yield Regime("crowding", "crew area / area behind the block", packing, text, packing > 0.03)
     if is_plain(s):

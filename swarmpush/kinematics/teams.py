@@ -17,8 +17,9 @@ from swarmpush.kinematics.nudge import (
     block_drag,
     impact_impulse,
     impact_nudge,
-    kinetic_friction,
-    static_friction,
+    kinetic_hold,
+    slope_pull,
+    static_hold,
     strike_nudge,
 )
 from swarmpush.kinematics.visits import Visits
@@ -73,11 +74,12 @@ def strikes_of(s: Scenario, visits: Visits, most: int = N_STRIKES) -> list[Strik
     rows = rows[:: max(1, len(rows) // most)][:most]
     cosine, force = np.cos(visits.incidence_rad[rows]), s.pushers.stall_force
     turning = np.minimum(visits.turning_s[rows], visits.leaning_s[rows])
+    pull = slope_pull(s, s.pushers.mass)
     columns = (
         cosine * s.pushers.free_speed,
-        cosine * force,
+        cosine * force - pull,
         visits.leaning_s[rows] - turning,
-        visits.turning_cosine[rows] * force * s.pushers.drive_while_turning,
+        visits.turning_cosine[rows] * force * s.pushers.drive_while_turning - pull,
         turning,
         np.full(len(rows), kept_by_walls(s, visits.incidence_rad[visits.is_strike])),
     )
@@ -89,8 +91,9 @@ def crew_push(s: Scenario, visits: Visits) -> CrewPush:
 
     Leaning: k pushers with the thrusts F_i along the normal move the block at w = max(0, sum F_i - f)/(k g_p + g_b)
     (force balance without inertia), averaged over teams of k of the visits seen, and over the binomial probability
-    that k of n lean. f is the kinetic friction: the strike by which a team becomes complete has broken the static one.
-    With law lean nothing has, and the sum must exceed the static friction.
+    that k of n lean. On a slope its pull on a pusher is taken off F_i and that on the block is in f. f is what brakes
+    the sliding block: the strike by which a team becomes complete has broken the static friction. With law lean nothing
+    has, and the sum must exceed what holds the block at rest.
 
     Strikes: each adds what its nudge is beyond w times its leaning time, averaged over the binomial number j of others
     that lean meanwhile; see `_beyond_leaning`. (Derived here.)
@@ -104,7 +107,7 @@ def crew_push(s: Scenario, visits: Visits) -> CrewPush:
     thrust, chance = _thrusts(s, visits), binomial(s.pushers.count, visits.leaning_share)
     teams = _teams(thrust, visits.leaning_s, max(1, len(chance) - 1))
     speeds = _team_speeds(s, teams)
-    enough = float(chance @ (teams > static_friction(s)).mean(axis=0)[: len(chance)])
+    enough = float(chance @ (teams > static_hold(s)).mean(axis=0)[: len(chance)])
     total = float(chance @ speeds[: len(chance)])
     if s.forecast.law == "lean":
         single = s.pushers.count * visits.leaning_share * float(speeds[1])
@@ -123,7 +126,7 @@ def _beyond_leaning(s: Scenario, strikes: list[Strike], others: int, thrust: flo
     others alone move the block, an impact of impulse J adds J over all drag.
     """
     push = others * thrust
-    if others > 0 and push >= kinetic_friction(s):
+    if others > 0 and push >= kinetic_hold(s):
         drag = block_drag(s) + (others + 1) * s.pushers.drag
         approaches = [(max(0.0, x.approach_m_s - speeds[others]), x.kept) for x in strikes]
         return _mean([kept * impact_impulse(s, float(approach)) / drag for approach, kept in approaches])
@@ -148,7 +151,8 @@ def _thrusts(s: Scenario, visits: Visits) -> FloatArray:
     part = np.divide(turning, visits.leaning_s, out=np.zeros(len(turning)), where=visits.leaning_s > 0.0)
     away = visits.turning_cosine * s.pushers.drive_while_turning
     cosine: FloatArray = (1.0 - part) * np.cos(visits.incidence_rad) + part * away
-    return cosine * s.pushers.stall_force * kept_by_walls(s, visits.incidence_rad[visits.is_strike])
+    thrust = cosine * s.pushers.stall_force - slope_pull(s, s.pushers.mass)
+    return thrust * kept_by_walls(s, visits.incidence_rad[visits.is_strike])
 
 
 def _teams(thrust: FloatArray, weight: FloatArray, most: int) -> FloatArray:
@@ -162,8 +166,8 @@ def _teams(thrust: FloatArray, weight: FloatArray, most: int) -> FloatArray:
 
 def _team_speeds(s: Scenario, team: FloatArray) -> FloatArray:
     """(k + 1,) mean speed of the block under 0, 1, ... k leaning pushers, m/s."""
-    friction = kinetic_friction(s)
-    threshold = static_friction(s) if s.forecast.law == "lean" else friction
+    friction = kinetic_hold(s)
+    threshold = static_hold(s) if s.forecast.law == "lean" else friction
     net = np.where(team > threshold, team - friction, 0.0).mean(axis=0)
     speeds: FloatArray = np.zeros(len(net))
     speeds[1:] = net[1:] / (np.arange(1, len(net)) * s.pushers.drag + block_drag(s))

@@ -16,7 +16,8 @@ from swarmpush.kinematics.lap_loss import LapsKept
 from swarmpush.kinematics.noise_budget import Limit, NoiseBudget
 from swarmpush.kinematics.planning import Plan
 from swarmpush.quantities import for_people
-from swarmpush.reporting.wording import CAUSES, finding_row, interval, mean_and_error, number, rung_row
+from swarmpush.reporting.run_words import book_rows, cause_rows, energy_rows, run_answer, state_rows
+from swarmpush.reporting.wording import finding_row, interval, mean_and_error, number, rung_row
 
 _COLOURS = {"holds": "green", "strained": "yellow", "fails": "red", "undecided": "bright_black"}
 _EFFECT_COLOURS = {"small": "green", "large": "red", "untold": "bright_black"}
@@ -63,11 +64,13 @@ def show_plan(plan: Plan) -> None:
 def _plan_answer(plan: Plan) -> str:
     s, travel = plan.scenario, plan.travel
     if math.isfinite(travel.time_to_goal_s):
+        by = f"{travel.strikes_to_goal:.0f} strikes of {for_people(travel.nudge_m, 'm')}"
+        if travel.strikes_to_goal < 1.0:
+            by = f"pushers that lean on it for {travel.leaning_share:.0%} of their time"
         lead = "In time" if travel.time_to_goal_s <= s.goal.time_limit else "Too late"
         return (
             f"{lead}: the plan promises {for_people(s.goal.travel, 'm')} in {for_people(travel.time_to_goal_s, 's')} "
-            f"(limit {for_people(s.goal.time_limit, 's')}), at {for_people(travel.block_speed_m_s, 'm/s')} by "
-            f"{travel.strikes_to_goal:.0f} strikes of {for_people(travel.nudge_m, 'm')}."
+            f"(limit {for_people(s.goal.time_limit, 's')}), at {for_people(travel.block_speed_m_s, 'm/s')} by {by}."
         )
     if travel.block_speed_m_s < 0.0:
         back = for_people(-travel.block_speed_m_s, "m/s")
@@ -117,16 +120,28 @@ def _plan_facts(plan: Plan) -> dict[str, str]:
     shares = {"caught by a lap": capture.captured, **capture.lost, "no closed lap within the budget": capture.undecided}
     facts = {"starts": ", ".join(f"{share:.0%} {what}" for what, share in shares.items() if share >= 0.005)}
     if force.floor_friction_N > 0.0:
-        facts["force"] = (
-            f"one pusher {for_people(force.stall_N, 'N')}, floor holds {for_people(force.floor_friction_N, 'N')}: "
-            f"{force.pushers_to_move:.2f} pushers to move the block ({force.pushers_to_move_low:.2f} with half the "
-            f"friction, {force.pushers_to_move_high:.2f} with twice), of {plan.scenario.pushers.count}"
-        )
+        facts["force"] = _force_words(plan)
     if plan.noise_budget:
         facts["noise"] = _noise_words(plan.noise_budget)
     facts["forecast"] = plan.travel.basis
+    if plan.left_out:
+        facts["left out"] = "; ".join(plan.left_out)
     facts["kit"] = ", ".join(plan.kit)
     return facts
+
+
+def _force_words(plan: Plan) -> str:
+    force, n = plan.force, len(plan.scenario.blocks)
+    what = "the block" if n == 1 else f"the {n} blocks"
+    slope = ""
+    if force.slope_N != 0.0:
+        slope = f", the slope pulls {for_people(abs(force.slope_N), 'N')} {'back' if force.slope_N > 0.0 else 'ahead'}"
+    return (
+        f"one pusher {for_people(force.stall_N, 'N')}, the floor holds {what} with "
+        f"{for_people(force.floor_friction_N, 'N')}{slope}: {force.pushers_to_move:.2f} pushers to move {what} "
+        f"({force.pushers_to_move_low:.2f} with half the friction, {force.pushers_to_move_high:.2f} with twice), "
+        f"of {plan.scenario.pushers.count}"
+    )
 
 
 def _noise_words(budget: NoiseBudget) -> str:
@@ -147,12 +162,8 @@ def _noise_words(budget: NoiseBudget) -> str:
 
 def show_run(run: Run) -> None:
     """One run."""
-    s, strikes, books = run.scenario, run.strikes, run.books
-    _head(
-        s.about.name,
-        f"The block covered {for_people(run.travel_m, 'm')} of {for_people(s.goal.travel, 'm')} in "
-        f"{for_people(run.duration_s, 's')} ({for_people(run.speed_m_s, 'm/s')}); ended with: {run.ended}.",
-    )
+    strikes = run.strikes
+    _head(run.scenario.about.name, run_answer(run))
     table = _table("measure", "value", right=("value",))
     table.add_row("visits", str(len(run.visits)))
     table.add_row("strikes on the rear face", str(len(strikes)))
@@ -160,12 +171,23 @@ def show_run(run: Run) -> None:
     table.add_row("lean impulse per strike", number(strikes["lean_Ns"].mean(), "N s"))
     table.add_row("completed laps", f"{len(run.laps)} ({run.lock_share:.0%} of the pushers' time)")
     table.add_row("largest yaw of the block", for_people(run.yaw_max_rad, "rad"))
-    table.add_row("books: residual", f"{books.residual_rel:.1e} of all contact impulse")
-    table.add_row("books: displacement without velocity", f"{books.phantom_share:.1e} of the block's way")
-    for name, share in run.causes.items():
-        if share > 0.0:
-            table.add_row(CAUSES[name], f"{share:.1%}")
     _console.print(table)
+    _console.print()
+    columns = ("share", "first", "last", "longest", "spells")
+    table = _table("what kept the crew from pushing", *columns, right=columns)
+    for row in cause_rows(run):
+        table.add_row(row["name"], *(row[column] for column in columns))
+    _console.print(table)
+    for title, rows in (
+        ("a pusher's time", state_rows(run)),
+        ("energy", energy_rows(run)),
+        ("books", book_rows(run)),
+    ):
+        _console.print()
+        table = _table(title, "")
+        for row_name, text in rows:
+            table.add_row(row_name, text)
+        _console.print(table)
     _caution()
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import io
+import math
 from collections.abc import Callable
 from itertools import pairwise
 from typing import Any
@@ -15,13 +16,19 @@ import matplotlib.pyplot as plt
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
-from matplotlib.patches import Circle, Polygon
+from matplotlib.patches import Polygon
+from matplotlib.ticker import MaxNLocator
 
 from swarmpush.auditing.audit import Audit
 from swarmpush.dynamics.run import Run
-from swarmpush.geometry import block_corners, channel_corners, post_corners
+from swarmpush.dynamics.states import STATES
+from swarmpush.geometry import block_corners, channel_corners, outward_normal, post_corners
+from swarmpush.kinematics.forecast import push_force
 from swarmpush.kinematics.planning import Plan
 from swarmpush.quantities import prefix_for
+from swarmpush.reporting.run_words import energy_parts, state_shares
+from swarmpush.reporting.wording import STATE_WORDS
+from swarmpush.scenario import Pushers, Scenario
 
 PLANNED, MEASURED, QUIET, GOOD, BAD = "#b3261e", "#1f4e79", "#9aa5b1", "#2e7d32", "#b3261e"
 INK, AXIS, PALE = "#22303c", "#5f6b76", "#e3e7eb"
@@ -37,6 +44,8 @@ STYLE: dict[Any, Any] = {
     "svg.fonttype": "none",
     "svg.hashsalt": "swarmpush",  # the same figure gives the same file
 }
+STATE_COLOURS = dict(zip(STATES, ("#22303c", "#8a5a00", "#2e7d32", "#b3261e", "#c9d1d9"), strict=True))
+BINS = 80  # of a run's time in which shares of states are averaged for the picture
 MAX_LEGS = 150  # runs from bump to bump drawn behind the lap
 
 
@@ -89,17 +98,17 @@ def lap_over_runs(plan: Plan, run: Run) -> Figure:
 
 
 def draw_rig(axes: Axes, plan: Plan, scale: float, *, has_ends: bool) -> tuple[float, float]:
-    """Walls, posts, block and one pusher, to scale; returns the stretch of the channel worth showing.
+    """Walls, posts, blocks with their centres, and one pusher, to scale; returns the stretch worth showing.
 
     Without ends a straight corridor goes on for ever, as it looks from a block that moves; any other channel moves past
     such a block, so that its outline at the start is only hinted at.
     """
     s = plan.scenario
-    width, rear, front = s.channel.width / scale, s.block.rear_at / scale, s.block_front_at / scale
-    length = s.channel.length / scale
-    walls, posts, block = (
+    width, rear, length = s.channel.width / scale, s.block.rear_at / scale, s.channel.length / scale
+    front = max(block.rear_at + block.length for block in s.blocks) / scale
+    walls, posts, blocks = (
         [np.array(corners) / scale for corners in outlines]
-        for outlines in ((channel_corners(s),), post_corners(s), (block_corners(s),))
+        for outlines in ((channel_corners(s),), post_corners(s), [block_corners(s, block) for block in s.blocks])
     )
     if has_ends or s.channel.outline or posts:
         outline = Polygon(walls[0], fill=False, edgecolor=INK, lw=2.5)
@@ -111,18 +120,102 @@ def draw_rig(axes: Axes, plan: Plan, scale: float, *, has_ends: bool) -> tuple[f
             axes.axhline(y, color=INK, lw=2.5)
     for post in posts:
         axes.add_patch(Polygon(post, facecolor=QUIET, edgecolor=INK, lw=1.2, ls="-" if has_ends else "--", zorder=2))
-    axes.add_patch(Polygon(block[0], facecolor=PALE, edgecolor=INK, lw=1.2, zorder=2))
-    x, y = (0.5 * (block[0].min(axis=0) + block[0].max(axis=0))).tolist()
-    axes.text(x, y, "block", ha="center", va="center", color=INK, zorder=3)
+    for k, (block, corners) in enumerate(zip(s.blocks, blocks, strict=True)):
+        has_marks = block.centre_of_mass is not None or block.centre_of_friction is not None
+        _draw_block(axes, corners, "block" if k == 0 else f"block {k + 1}", height=0.78 if has_marks else 0.5)
+    _draw_centres(axes, s, scale)
     lap = plan.main_lap
     back = float(lap.hits[:, 0].min()) / scale if lap is not None else rear - 3 * width
-    radius = s.pushers.radius / scale
-    middle = block[0][:2].mean(axis=0)  # of the rear face
-    x, y = (lap.hits[0, :2] / scale).tolist() if lap is not None else (middle[0] - radius, middle[1])
-    axes.add_patch(Circle((x, y), radius, facecolor="white", edgecolor=MEASURED, lw=1.2, zorder=4))
+    radius, normal = s.pushers.radius / scale, np.array(outward_normal(block_corners(s), 0))
+    place, heading = blocks[0][:2].mean(axis=0), math.atan2(-normal[1], -normal[0])  # in the middle of the rear face
+    if lap is not None:
+        place, heading = lap.hits[0, :2] / scale - radius * normal, float(lap.hits[0, 2])
+    shape = pusher_shape(s.pushers, heading) / scale
+    shape += place - float((shape @ normal).min()) * normal  # it just touches the face
+    axes.add_patch(Polygon(shape, facecolor="white", edgecolor=MEASURED, lw=1.2, zorder=4))
     axes.set_ylim(-0.06 * width, 1.06 * width)
     reach = max(min(back - 2 * radius, rear - 2 * width), rear - 6 * width, -0.1 * width if has_ends else -0.5 * width)
     return reach, min(front + 0.5 * width, length + 0.1 * width)
+
+
+def _draw_block(axes: Axes, corners: np.ndarray, name: str, *, height: float = 0.5) -> None:
+    """A block with its name at a share of its extent across."""
+    axes.add_patch(Polygon(corners, facecolor=PALE, edgecolor=INK, lw=1.2, zorder=2))
+    low, high = corners.min(axis=0), corners.max(axis=0)
+    x, y = 0.5 * (low[0] + high[0]), low[1] + height * (high[1] - low[1])
+    axes.text(x, y, name, ha="center", va="center", color=INK, zorder=3)
+
+
+def end_of_run(run: Run) -> Figure:
+    """Where blocks and pushers were when the run ended, to scale; the blocks' starting places are dashed.
+
+    Of a long channel only the stretch from the hindmost body to the foremost is shown, and some way beyond.
+    """
+    s = run.scenario
+    scale, prefix = prefix_for(s.channel.width)
+    figure, axes = plt.subplots(figsize=(8.4, 3.4))
+    for fixed in (channel_corners(s), *post_corners(s)):
+        face = "none" if fixed == channel_corners(s) else QUIET
+        axes.add_patch(Polygon(np.array(fixed) / scale, facecolor=face, edgecolor=INK, lw=2.0, zorder=1))
+    first, last = run.block.iloc[0], run.block.iloc[-1]
+    for k, block in enumerate(s.blocks):
+        tail = f"_{k + 1}" if k else ""
+        at, to = (np.array([row[f"x{tail}_m"], row[f"y{tail}_m"]]) for row in (first, last))
+        corners = np.array(block_corners(s, block))
+        axes.add_patch(Polygon(corners / scale, fill=False, edgecolor=QUIET, lw=1.0, ls="--", zorder=2))
+        name = str(k + 1) if s.train else "block"
+        _draw_block(axes, (_turned(corners - at, float(last[f"yaw{tail}_rad"])) + to) / scale, name)
+    crew = run.pushers.iloc[-s.pushers.count :]
+    for x, y, heading, mode in zip(crew["x_m"], crew["y_m"], crew["heading_rad"], crew["mode"], strict=True):
+        outline = (pusher_shape(s.pushers, heading) + np.array([x, y])) / scale
+        colour = INK if mode in ("stop", "failed") else MEASURED
+        axes.add_patch(Polygon(outline, facecolor="white", edgecolor=colour, lw=1.0, zorder=4))
+        tip = s.pushers.trunk / 2 + 0.8 * s.pushers.radius
+        ahead = tip * np.array([math.cos(heading), math.sin(heading)])
+        axes.plot(*np.array([(x, y), (x + ahead[0], y + ahead[1])]).T / scale, color=colour, lw=1.0, zorder=5)
+    corners = np.array(channel_corners(s)) / scale
+    margin = 0.04 * s.channel.width / scale
+    outlines = [patch for patch in axes.patches if isinstance(patch, Polygon) and patch.get_zorder() > 1.5]
+    bodies = np.vstack([patch.get_xy() for patch in outlines])
+    around = s.channel.width / scale
+    axes.set_xlim(
+        max(corners[:, 0].min() - margin, bodies[:, 0].min() - around),
+        min(corners[:, 0].max() + margin, bodies[:, 0].max() + around),
+    )
+    axes.set_ylim(corners[:, 1].min() - margin, corners[:, 1].max() + margin)
+    axes.set_aspect("equal")
+    axes.set_xlabel(f"along the channel, {prefix}m")
+    axes.set_ylabel(f"across, {prefix}m")
+    return figure
+
+
+def _turned(points: np.ndarray, angle: float) -> np.ndarray:
+    """Points turned about the origin, counter-clockwise."""
+    c, s = math.cos(angle), math.sin(angle)
+    return np.asarray(points @ np.array([[c, s], [-s, c]]))
+
+
+def pusher_shape(p: Pushers, heading: float) -> np.ndarray:
+    """(n, 2) outline of a pusher about its centre, m: a circle, or a bar with rounded corners along its heading."""
+    ahead, aside = p.trunk / 2, p.nose / 2
+    corners = np.repeat([(ahead, aside), (-ahead, aside), (-ahead, -aside), (ahead, -aside)], 25, axis=0)
+    angles = np.concatenate([np.linspace(k, k + 1, 25) for k in range(4)]) * math.pi / 2
+    outline = corners + p.radius * np.column_stack([np.cos(angles), np.sin(angles)])
+    return _turned(outline, heading)
+
+
+def _draw_centres(axes: Axes, s: Scenario, scale: float) -> None:
+    """Where a block's mass and the floor's friction act, as far as the scenario says so."""
+    marks = {"centre_of_mass": ("o", "centre of mass"), "centre_of_friction": ("X", "centre of friction")}
+    for key, (marker, label) in marks.items():
+        points = [
+            (block.rear_at + at[0], s.channel.width / 2 + block.offset + at[1])
+            for block in s.blocks
+            if (at := getattr(block, key)) is not None
+        ]
+        if points:
+            x, y = (np.array(points) / scale).T
+            axes.plot(x, y, ls="", marker=marker, ms=6, color=INK, mfc="white", zorder=4, label=label)
 
 
 def _draw_legs(axes: Axes, run: Run, scale: float) -> None:
@@ -193,11 +286,15 @@ def block_path(run: Run, planned_speed_m_s: float | None = None, ends: Any = Non
     figure, axes = plt.subplots(figsize=(8.4, 2.6))
     travel = (run.block["x_m"] - run.block["x_m"].iloc[0]) / scale
     axes.axhline(s.goal.travel / scale, color=INK, lw=1, ls="--")
-    axes.text(0.0, s.goal.travel / scale, " goal", va="bottom", color=INK, fontsize=8)
+    shown = run.duration_s if ends is None else max(run.duration_s, float(ends["duration_s"].max()))
     if planned_speed_m_s:
-        last = min(s.goal.time_limit, s.goal.travel / planned_speed_m_s)
+        last = min(s.goal.time_limit, s.goal.travel / planned_speed_m_s) if planned_speed_m_s > 0.0 else shown
+        shown = max(shown, last)
         axes.plot([0.0, last], [0.0, planned_speed_m_s * last / scale], color=PLANNED, lw=1.8, label="planned")
     axes.plot(run.block["t_s"], travel, color=MEASURED, lw=1.4, label=f"run with seed {run.seed}")
+    for k in range(2, len(s.blocks) + 1):
+        x = run.block[f"x_{k}_m"]
+        axes.plot(run.block["t_s"], (x - x.iloc[0]) / scale, color=QUIET, lw=1.0, ls="--", label=f"block {k}")
     if ends is not None:
         axes.plot(
             ends["duration_s"],
@@ -208,7 +305,9 @@ def block_path(run: Run, planned_speed_m_s: float | None = None, ends: Any = Non
             mfc="white",
             label="end of each run",
         )
-    axes.set_xlim(0.0, s.goal.time_limit * 1.02)
+    shown = max(shown * 1.05, 1e-12)
+    axes.text(shown, s.goal.travel / scale, "goal ", ha="right", va="bottom", color=INK, fontsize=8)
+    axes.set_xlim(0.0, shown)
     axes.set_xlabel("time, s")
     axes.set_ylabel(f"block travel, {prefix}m")
     axes.legend(frameon=False, fontsize=8, loc="best")
@@ -220,17 +319,105 @@ def books(run: Run) -> Figure:
     account = run.books
     entries = [
         ("pushers", account.pushers[0]),
+        ("further blocks", account.blocks[0]),
         ("channel walls", account.walls[0]),
         ("floor", account.floor[0]),
         ("fluid drag", account.drag[0]),
+        ("slope", account.slope[0]),
         ("change of momentum", account.change[0]),
     ]
+    # what the scenario does not have gets no line
+    entries = [(name, value) for name, value in entries if value != 0.0 or name in ("pushers", "change of momentum")]
+    return _account(entries, "impulse on the block along the channel", "N s")
+
+
+def energy(run: Run) -> Figure:
+    """Where the work of a run came from and where it went."""
+    return _account(energy_parts(run), "energy put in (right) and taken out (left)", "J")
+
+
+def _account(entries: list[tuple[str, float]], what: str, unit: str) -> Figure:
+    """Bars to either side of zero, one below the other."""
     scale, prefix = prefix_for(max(abs(value) for _, value in entries))
-    figure, axes = plt.subplots(figsize=(8.4, 1.9))
+    figure, axes = plt.subplots(figsize=(8.4, 0.6 + 0.27 * len(entries)))
     for k, (_, value) in enumerate(entries):
         axes.barh(k, value / scale, height=0.55, color=GOOD if value >= 0 else BAD, alpha=0.8)
     axes.axvline(0.0, color=INK, lw=0.8)
     axes.set_yticks(range(len(entries)), [name for name, _ in entries])
     axes.invert_yaxis()
-    axes.set_xlabel(f"impulse on the block along the channel, {prefix}N s")
+    axes.set_xlabel(f"{what}, {prefix}{unit}")
+    return figure
+
+
+def pushers_needed(run: Run, t_s: np.ndarray) -> np.ndarray:
+    """How many at full thrust the blocks at rest need before they move, at each time; more as the thrust fades."""
+    s, force = run.scenario, push_force(run.scenario)
+    holds = force.pushers_to_move * (force.stall_N - force.climb_N) if force.stall_N > force.climb_N else math.inf
+    thrust = (
+        force.stall_N * np.exp(-t_s / s.errors.fade_time) if s.errors.fade_time else np.full(len(t_s), force.stall_N)
+    )
+    left = np.maximum(thrust - force.climb_N, 0.0)
+    with np.errstate(divide="ignore"):
+        return np.asarray(np.where(left > 0.0, holds / left, math.inf))
+
+
+def is_floor_shown(run: Run) -> bool:
+    """Whether the picture of leaning has a line for what the floor needs."""
+    needed = push_force(run.scenario).pushers_to_move
+    return 0.0 < needed <= 2.0 * run.scenario.pushers.count
+
+
+def leaning(run: Run) -> Figure:
+    """How many pushers lean on the rear face at once: mean and most between rows of the path, and how many it takes."""
+    block = run.block
+    t = block["t_s"].to_numpy()
+    figure, axes = plt.subplots(figsize=(8.4, 2.2))
+    most = block["n_leaning_most"].to_numpy()
+    axes.fill_between(t, most, step="pre", color=MEASURED, alpha=0.2, lw=0, label="most at once")
+    axes.plot(t, _rolling(block["n_leaning"].to_numpy()), color=MEASURED, lw=1.2, label="mean")
+    top = max(1.0, float(most.max()))
+    if is_floor_shown(run):
+        needed = pushers_needed(run, t)
+        top = max(top, min(float(needed[np.isfinite(needed)].max(initial=0.0)), 1.5 * top, run.scenario.pushers.count))
+        top = max(top, float(needed[0]))
+        axes.plot(
+            t, needed, color=PLANNED, lw=1.4, ls="--", label="needed to move the block" + "s" * bool(run.scenario.train)
+        )
+    axes.set_ylim(0.0, 1.1 * top)
+    axes.set_xlim(0.0, max(float(t[-1]), 1e-12))
+    axes.yaxis.set_major_locator(MaxNLocator(integer=True))
+    axes.set_xlabel("time, s")
+    axes.set_ylabel("pushers leaning")
+    axes.legend(frameon=False, fontsize=8, loc="lower right", bbox_to_anchor=(1.0, 1.0), ncols=3)
+    return figure
+
+
+def _rolling(values: np.ndarray) -> np.ndarray:
+    """Mean over an eightieth of the run about each row."""
+    width = max(1, len(values) // BINS)
+    weights = np.ones(width)
+    return np.asarray(
+        np.convolve(values, weights, mode="same") / np.convolve(np.ones(len(values)), weights, mode="same")
+    )
+
+
+def states(run: Run) -> Figure:
+    """What the crew is about over time, as stacked shares."""
+    shares = state_shares(run)
+    order = ("locked", "lost", "held at a wall", "ahead", "idle")  # what serves the purpose lies at the bottom
+    found = [name for name in order if (shares[name] > 0.0).any()]
+    figure, axes = plt.subplots(figsize=(8.4, 2.4))
+    axes.stackplot(
+        shares.index,
+        *(100.0 * _rolling(shares[name].to_numpy()) for name in found),
+        colors=[STATE_COLOURS[name] for name in found],
+        labels=[STATE_WORDS[name] for name in found],
+        alpha=0.85,
+        lw=0,
+    )
+    axes.set_xlim(0.0, max(float(shares.index[-1]), 1e-12))
+    axes.set_ylim(0.0, 100.0)
+    axes.set_xlabel("time, s")
+    axes.set_ylabel("share of the crew, %")
+    axes.legend(frameon=False, fontsize=8, loc="lower left", bbox_to_anchor=(0.0, 1.0), ncols=3)
     return figure

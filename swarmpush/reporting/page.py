@@ -15,7 +15,8 @@ from swarmpush.output import provenance, write_text
 from swarmpush.quantities import for_people
 from swarmpush.reporting import drawing
 from swarmpush.reporting.drawing import as_svg
-from swarmpush.reporting.wording import CAUSES, finding_row, interval, number, rung_row
+from swarmpush.reporting.run_words import book_rows, cause_rows, energy_rows, run_answer, state_rows
+from swarmpush.reporting.wording import finding_row, interval, number, rung_row
 
 
 def report(result: Audit | Run, path: str | Path) -> Path:
@@ -62,31 +63,30 @@ def load_result(folder: Path) -> Audit | Run:
 def _run_content(run: Run, planned: Plan, ends: Any = None) -> dict[str, Any]:
     s = run.scenario
     travel = planned.travel
-    arrived = "The block arrived" if run.has_arrived else "The block did not arrive"
-    answer = (
-        f"{arrived}: it covered {for_people(run.travel_m, 'm')} of {for_people(s.goal.travel, 'm')} in "
-        f"{for_people(run.duration_s, 's')}; the run ended with: {run.ended}."
-    )
     return {
         "name": s.about.name,
         "kind": "run",
         "note": s.about.note,
-        "answer": answer,
+        "answer": run_answer(run),
         "lap_words": _lap_words(planned, run),
+        "left_out": "; ".join(planned.left_out),
+        "has_needed": drawing.is_floor_shown(run),
         "ladder": [],
         "verdicts": [],
         "pictures": {
             "lap": as_svg(drawing.lap_over_runs, planned, run),
+            "end": as_svg(drawing.end_of_run, run),
             "path": as_svg(drawing.block_path, run, travel.block_speed_m_s, ends),
             "impulses": as_svg(drawing.impulses, run, travel.strike_impulse_Ns),
             "books": as_svg(drawing.books, run),
+            "energy": as_svg(drawing.energy, run),
+            "leaning": as_svg(drawing.leaning, run),
+            "states": as_svg(drawing.states, run),
         },
-        "books": [
-            ("residual", f"{run.books.residual_rel:.1e} of all contact impulse on the block"),
-            ("displacement without velocity", f"{run.books.phantom_share:.1e} of the block's way"),
-            ("deepest overlap", for_people(run.overlap_max_m, "m")),
-        ],
-        "causes": [(CAUSES[name], f"{share:.1%}") for name, share in run.causes.items()],
+        "books": book_rows(run),
+        "energy": energy_rows(run),
+        "causes": cause_rows(run),
+        "states": state_rows(run),
         "regimes": [
             {
                 "name": r.name,

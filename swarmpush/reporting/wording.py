@@ -23,6 +23,30 @@ CAUSES = {
     "block_jammed_between_walls": "time in which both walls held the block against enough push",
 }
 
+# the same as the reason why a block did not arrive
+REASONS = {
+    "ahead_of_block": "{share} of the crew's time ahead of the block",
+    "held_at_wall": "{share} of the crew's time held at a wall",
+    "in_no_lap": "{share} of the crew's time behind the block and in no lap",
+    "touching_wall": "{share} of the crew's time in touch with a wall",
+    "touching_pusher": "{share} of the crew's time in touch with one another",
+    "turning": "{share} of the crew's time spent turning",
+    "halted": "{share} of the crew's time halted",
+    "dropped_out": "{share} of the crew's time lost by dropping out",
+    "leaning_too_weak_for_floor": "in {share} of the time those leaning could not overcome the floor",
+    "block_jammed_between_walls": "in {share} of the time both walls held the block against enough push",
+}
+AT_THE_BLOCK = ("leaning_too_weak_for_floor", "block_jammed_between_walls")  # between thrust and motion
+TELLS_LITTLE = ("touching_wall", "turning", "in_no_lap")  # as a reason: parts of any good lap, and the lack of one
+
+STATE_WORDS = {
+    "idle": "idle: halted or dropped out",
+    "ahead": "ahead of the block",
+    "locked": "in a lap of the plan",
+    "held at a wall": "held at a wall",
+    "lost": "in no lap: on the way to one, or out of it",
+}
+
 
 def number(value: float, unit: str) -> str:
     """A number with its unit; shares as percent."""

@@ -12,7 +12,7 @@ from swarmpush.auditing.audit import audit, replicate_seeds
 from swarmpush.auditing.ladder import ASSUMPTIONS, climb
 from swarmpush.demos import demo
 from swarmpush.kinematics.planning import plan
-from swarmpush.loading import load
+from swarmpush.loading import from_tables, load
 from swarmpush.scenario import Errors, Scenario
 from swarmpush.starts import draw_starts
 
@@ -22,6 +22,22 @@ DEMOS = ("service_passage", "vibration_duct", "gel_channel")
 @pytest.fixture(params=DEMOS)
 def s(request: pytest.FixtureRequest) -> Scenario:
     return load(demo(request.param))
+
+
+def test_rungs_of_bars_and_trains() -> None:
+    """Bars become discs on course and a train one block below their rungs, and every rung is a valid scenario."""
+    s = load(demo("bristle_tray"))
+    rungs = climb(s)
+    assert [rung.key for rung in rungs] == ["bodies", "turning", "shape", "train", "yaw", "errors", "crowding"]
+    for rung in rungs:
+        assert from_tables(rung.scenario.to_tables(), rung.key) == rung.scenario
+    discs, bars, train = (rung.scenario for rung in rungs[1:4])
+    assert discs.pushers.is_disc
+    assert discs.pushers.heading == "held"
+    assert bars.pushers == s.pushers.model_copy(update={"pass_through": True})
+    assert bars.train == ()
+    assert [block.yaw for block in train.train] == ["held"]
+    assert rungs[4].scenario.train == s.train
 
 
 def test_rungs_of_the_demos(s: Scenario) -> None:

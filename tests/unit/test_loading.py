@@ -629,6 +629,23 @@ def test_the_schema_rejects_what_the_loader_rejects(validator: jsonschema.Draft2
         assert problems(changed)
 
 
+def test_the_schema_knows_trains_and_points(validator: jsonschema.Draft202012Validator) -> None:
+    """A train is a list of blocks, and a point has two lengths with or without a unit; nothing else passes."""
+    tables = tomllib.loads(DEMO.with_name("bristle_tray.toml").read_text(encoding="utf-8"))
+    assert validator.is_valid(tables)
+    for change in (
+        lambda t: t.update(train=t["train"][0]),
+        lambda t: t["train"][0].pop("mass"),
+        lambda t: t["block"].update(centre_of_mass=["30 mm"]),
+        lambda t: t["block"].update(centre_of_mass=["30 mm", "4 mm", "0 mm"]),
+        lambda t: t["pushers"].update(heading="loose"),
+    ):
+        changed = copy.deepcopy(tables)
+        change(changed)
+        assert not validator.is_valid(changed)
+        assert problems(changed)
+
+
 def test_the_schema_explains(validator: jsonschema.Draft202012Validator) -> None:
     """Quantities carry their unit and an example in the schema, and their own description."""
     radius = validator.schema["$defs"]["Pushers"]["properties"]["radius"]

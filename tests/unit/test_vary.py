@@ -56,6 +56,34 @@ def test_one_key_is_changed(key: str, value: float | str, si: Any) -> None:
     assert value_at(changed, key) == expected
 
 
+@pytest.mark.parametrize(
+    ("key", "value", "si"),
+    [
+        ("channel.slope", "1 deg", math.radians(1)),
+        ("train[1].mass", "5 g", 5e-3),
+        ("block.centre_of_mass[2]", "-3 mm", -3e-3),
+        ("errors.fade_time", "1 min", 60.0),
+        ("errors.dropout", "0.6 1/min", 0.01),
+        ("pushers.contact_arm", "2 mm", 2e-3),
+    ],
+)
+def test_keys_of_trains_points_and_wear(key: str, value: str, si: float) -> None:
+    """Keys in a list of tables, in a point and of things left out before are changed alone, and their unit is known."""
+    s = load(demo("bristle_tray"))
+    changed = with_value(s, key, value)
+    assert value_at(changed, key) == pytest.approx(si, rel=ROUNDING)
+    assert changes(s.to_tables(), changed.to_tables()) == {key: pytest.approx(si, rel=ROUNDING)}
+    assert changed.digest() != s.digest()
+    assert unit_at(s, key) in ("rad", "kg", "m", "s", "1/s")
+
+
+def test_a_range_of_a_block_of_the_train() -> None:
+    """A range may run along a key of the train."""
+    key, values = parse_range(load(demo("bristle_tray")), "train[1].mass=5 g:10 g:2")
+    assert key == "train[1].mass"
+    assert values == pytest.approx([5e-3, 10e-3], rel=ROUNDING)
+
+
 def test_the_own_value_changes_nothing() -> None:
     """Setting keys to what they are gives the same scenario, for every demo."""
     for name in DEMOS:
