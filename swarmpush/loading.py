@@ -403,11 +403,12 @@ def _overlaps(s: Scenario) -> Iterator[Problem]:
 
 
 def _region_misfits(s: Scenario) -> Iterator[Problem]:
-    """Every part of the region open to a pusher's centre must touch the block's surroundings."""
-    from shapely import Polygon
+    """Every part of the region open to a pusher's centre must touch a block's surroundings."""
+    from shapely import Polygon, union_all
 
     region = free_region(s)
-    reach = Polygon(block_corners(s)).buffer(1.001 * s.pushers.radius, quad_segs=ARC_SIDES // 4)
+    blocks = union_all([Polygon(block_corners(s, block)) for block in s.blocks])
+    reach = blocks.buffer(1.001 * s.pushers.radius, quad_segs=ARC_SIDES // 4)
     for part in getattr(region, "geoms", [region]):
         if part.is_empty:
             yield Problem("pushers.radius", "no pusher fits the channel anywhere; make it smaller")
@@ -562,7 +563,8 @@ def _obstacles(s: Scenario) -> list[tuple[str, str, Callable[[float, float], flo
 
     keep = f"its centre must keep {_metre(s.pushers.radius)} from every wall"
     posts = {f"channel.posts[{k + 1}]": Polygon(corners) for k, corners in enumerate(post_corners(s))}
-    things = posts | {"the block": Polygon(block_corners(s))}
+    train = {f"train[{k + 1}]": Polygon(block_corners(s, block)) for k, block in enumerate(s.train)}
+    things = posts | {"the block": Polygon(block_corners(s))} | train
     return [
         ("a wall", f"; {keep}", to_wall),
         *((name, "", lambda x, y, thing=thing: thing.distance(Point(x, y))) for name, thing in things.items()),
