@@ -15,6 +15,7 @@ Exit code: 0 when all runs were sound, else 1.
 from __future__ import annotations
 
 import argparse
+import contextlib
 import json
 import subprocess
 import sys
@@ -116,13 +117,18 @@ class Worker:
         if line:
             result: Result = json.loads(line)
             return result
-        code, self._process = process.wait(), None
-        return {"seed": seed, "faults": [f"the process died with exit code {code}"], "ended": "crash"}
+        return {"seed": seed, "faults": [f"the process died with exit code {self.close()}"], "ended": "crash"}
 
-    def close(self) -> None:
-        if self._process and self._process.stdin:
-            self._process.stdin.close()
-            self._process.wait()
+    def close(self) -> int:
+        """Let the process end, if there is one; returns its exit code."""
+        process, self._process = self._process, None
+        if process is None:
+            return 0
+        for pipe in (process.stdin, process.stdout):
+            with contextlib.suppress(OSError):  # a dead process cannot be sent what is still in the pipe
+                if pipe:
+                    pipe.close()
+        return process.wait()
 
 
 def soak(first: int, n: int, seconds: float, limit: float, n_workers: int) -> Iterator[Result]:
@@ -207,7 +213,10 @@ def main() -> int:
     for result in soak(options.first, options.scenarios, options.seconds, options.limit, options.workers):
         results.append(result)
         if result["faults"]:
-            print(f"seed {result['seed']}: {'; '.join(result['faults'])}; saved as {save(result, options.folder)}")
+            print(
+                f"seed {result['seed']}: {'; '.join(result['faults'])}; saved as {save(result, options.folder)}",
+                flush=True,
+            )
     report(results, time.monotonic() - begin)
     return 1 if any(result["faults"] for result in results) else 0
 
