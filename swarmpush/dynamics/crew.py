@@ -300,7 +300,15 @@ def drive(host: Host, rig: Rig, crew: Crew, inertia: FloatArray, keys: NDArray[n
             spin = motion[i + 1, 5]
             torque = (p.drive_torque - rig.turn_drag * spin) * turn_rest
         else:
-            if thrust > 0.0 and p.mode != _TURN:
+            if rig.follows:
+                # spread over the interval: all of it in one step would hit what the bar touches the harder, the
+                # shorter the step
+                if is_noise_due:
+                    deviate = normal(keys[i, _HEADING], step // rig.noise_steps)
+                    p.noise = rig.diffusion * deviate / math.sqrt(rig.noise_steps * dt)
+                if thrust > 0.0 and p.mode != _TURN:
+                    turned += (p.drift + p.noise) * dt
+            elif thrust > 0.0 and p.mode != _TURN:
                 if is_noise_due:
                     spread = rig.diffusion * math.sqrt(rig.noise_steps * dt)
                     turned = spread * normal(keys[i, _HEADING], step // rig.noise_steps)

@@ -7,6 +7,7 @@ import os
 import subprocess
 import sys
 from collections.abc import Callable
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -19,6 +20,7 @@ from swarmpush.dynamics.chipmunk import MOTION, ORDERS
 from swarmpush.dynamics.host import Host, HostSpace, host_disagreement
 from swarmpush.dynamics.loop import Task, advance, advance_plainly
 from swarmpush.dynamics.run import Run
+from swarmpush.dynamics.steps import choose_step
 from swarmpush.dynamics.world import simulate
 from swarmpush.loading import load
 from swarmpush.scenario import Scenario
@@ -249,3 +251,26 @@ def test_guards_of_the_plain_loop(monkeypatch: pytest.MonkeyPatch) -> None:
     run = simulate(passage(has_train=False), seed=2, cycles=())
     assert run.ended == GUARDS["jump"][1]
     assert np.isfinite(run.pushers["x_m"]).all()
+
+
+# ---- heading noise of bars ----------------------------------------------------------------------------------------
+
+
+def test_heading_noise_of_a_bar_is_spread_over_time() -> None:
+    """A held bar's heading wanders as far as stated, but in no step faster than its noise of one interval allows."""
+    diffusion, n, seconds = 0.2, 40, 2.0
+    s = load(demo("service_passage"))
+    steps = choose_step(s)
+    s = s.replace(
+        pushers={"count": n, "radius": 0.01, "nose": 0.02, "pass_through": True},
+        channel={"length": 50.0, "width": 40.0}, block={"rear_at": 40.0}, start={"heading": 0.0},
+        errors={"heading_diffusion": diffusion, "speed_spread": 0.0, "turn_sd": 0.0, "missed_bumps": 0.0},
+        goal={"time_limit": seconds}, trial={"sample_every": steps.dt_s},
+    )  # fmt: skip
+    run = simulate(s, seed=4, steps=replace(steps, sample_steps=1), cycles=())
+    assert not len(run.visits)
+    heading = run.pushers["heading_rad"].to_numpy().reshape(-1, n)
+    fastest = np.abs(np.diff(heading, axis=0)).max() / steps.dt_s
+    interval = steps.noise_steps * steps.dt_s
+    assert fastest < 5.0 * diffusion / math.sqrt(interval)  # five standard deviations
+    assert heading[-1].std() == pytest.approx(diffusion * math.sqrt(seconds), rel=4 / math.sqrt(2 * n))
