@@ -29,6 +29,7 @@ from swarmpush.program import (
 from swarmpush.routine import BRANCHES, Act, Tally
 
 MAX_ACTS = 16  # in one answer
+MAX_KNOWN = 1000  # answers remembered, so that they are checked once; most routines give a few again and again
 MAX_ANSWERS = 100  # to one pusher at one moment: by then the function is going round in circles
 
 
@@ -75,6 +76,7 @@ class Asker:
         self.program, self.begins = asking_program(n_pushers, MAX_ACTS)
         self._notebooks: list[dict[str, Any]] = [{} for _ in range(n_pushers)]
         self._asked_at = [(-1, 0)] * n_pushers
+        self._known: dict[tuple[Any, ...], Program] = {}  # answers that have been checked
 
     def answer_all(self, task: Task, step: int) -> None:
         """Ask the function about all pushers that wait, in order of their numbers."""
@@ -95,9 +97,14 @@ class Asker:
                 f"pusher {i} was given {MAX_ANSWERS} answers at {situation.time_s:.6g} s that take no time; "
                 "an answer must end with run, advance, slide or halt sooner or later"
             )
+        try:
+            rows = self._compiled(self._decide(situation))
+        except Exception as error:
+            error.add_note(f"pusher {i} was asking its routine at {situation.time_s:.6g} s")
+            raise
         begin = int(self.begins[i])
-        rows = in_units(self._compiled(self._decide(situation), begin), self._length, self._time)
         self.program[begin + 1 : begin + 1 + len(rows)] = rows
+        self.program["go"][begin + len(rows)] = begin  # back to asking
         task.crew.memory[i, PC] = begin + 1
 
     def _situation(self, task: Task, i: int, step: int) -> Situation:
@@ -115,11 +122,25 @@ class Asker:
             notebook=self._notebooks[i],
         )
 
-    def _compiled(self, answer: Answer, back_to: int) -> Program:
-        listed = list(answer) if isinstance(answer, Sequence) else [answer]
+    def _compiled(self, answer: Answer) -> Program:
+        is_list = isinstance(answer, Sequence) and not isinstance(answer, str)
+        listed = tuple(answer) if is_list else (answer,)
         if not 0 < len(listed) <= MAX_ACTS:
             raise RoutineError(f"the routine gave {len(listed)} acts; an answer has 1 to {MAX_ACTS}")
-        return compile_acts([self._checked(act) for act in listed], self._surfaces, back_to)
+        try:
+            key = tuple(frozenset(act.items()) if isinstance(act, Mapping) else act for act in listed)
+            known = self._known.get(key)
+        except TypeError:  # some value is not hashable, so it is none that an act can have
+            return self._instructions(listed)
+        if known is None:
+            if len(self._known) >= MAX_KNOWN:
+                self._known.clear()
+            known = self._known[key] = self._instructions(listed)
+        return known
+
+    def _instructions(self, listed: Sequence[Any]) -> Program:
+        checked = [self._checked(act) for act in listed]
+        return in_units(compile_acts(checked, self._surfaces, 0), self._length, self._time)
 
     def _checked(self, act: Any) -> Act:
         try:

@@ -48,8 +48,10 @@ BLOCK_STATE = np.dtype(
         ("ground_x", "f8"), ("ground_y", "f8"), ("ground_turn", "f8"),
         ("liquid_x", "f8"), ("liquid_y", "f8"), ("liquid_turn", "f8"),
         ("weight_x", "f8"), ("weight_y", "f8"),
-        ("gross", "f8"),  # sums of the sizes of all contact impulses, and of their moments
+        ("gross", "f8"),  # sums of the sizes of all contact impulses, and of the two parts of each one's moment
         ("gross_turn", "f8"),
+        ("steady", "f8"),  # sums of the sizes of what floor, drag and slope gave, and of its moments
+        ("steady_turn", "f8"),
         ("residual", "f8"),  # sums over steps of the sizes of what does not balance
         ("residual_turn", "f8"),
         ("phantom", "f8"),  # sum of the sizes of displacements that no velocity explains
@@ -198,6 +200,8 @@ def balance_blocks(host: Host, ground: Ground, dt: float) -> tuple[float, float,
         left_x = b.mass * dvx - drag_x - weight_x - b.step_x
         left_y = b.mass * dvy - drag_y - weight_y - b.step_y
         joint_x, joint_y = left_x - b.floor_x * dt, left_y - b.floor_y * dt
+        steady = math.hypot(drag_x, drag_y) + math.hypot(weight_x, weight_y) + math.hypot(left_x, left_y)
+        b.steady += steady
         joint = load[k, 0] if ground.has_floor else 0.0
         b.residual += abs(math.hypot(joint_x, joint_y) - joint)
         drag_turn, left_turn, torque = 0.0, 0.0, 0.0
@@ -209,7 +213,7 @@ def balance_blocks(host: Host, ground: Ground, dt: float) -> tuple[float, float,
             twist = left_turn - b.floor_turn * dt - (fx * joint_y - fy * joint_x)
             torque = abs(twist)
             b.residual_turn += abs(abs(twist) - (load[k, 1] if ground.has_floor else 0.0))
-            b.gross_turn += abs(b.step_turn)
+            b.steady_turn += abs(drag_turn) + abs(left_turn) + (abs(fx) + abs(fy)) * steady
             drag -= drag_turn * mspin
             b.liquid_turn += drag_turn
         if b.passed_on > 0.0:

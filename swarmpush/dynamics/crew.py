@@ -109,7 +109,7 @@ PUSHER_STATE = np.dtype(
         ("n_bumps", "i8"),  # bumps felt or missed so far
         ("next_false", "f8"),  # time of the next false bump, and
         ("n_false", "i8"),  # how many there were
-        ("noise", "f8"),  # random turning rate of a free heading
+        ("noise", "f8"),  # random turning rate in the present interval
         ("thrust", "f8"),  # in this step
         ("force_x", "f8"),  # drive, drag and slope in this step
         ("force_y", "f8"),
@@ -302,9 +302,9 @@ def _drive(
         if moment > 0.0:
             inertia[i + 1, 3] = 1.0 / moment
     spin, torque = turned / dt, 0.0
+    if is_noise_due:
+        p.noise = rig.diffusion * deviate / math.sqrt(rig.noise_steps * dt)
     if rig.heading_is_free:
-        if is_noise_due:
-            p.noise = rig.diffusion * deviate / math.sqrt(rig.noise_steps * dt)
         if thrust > 0.0:
             spin += p.drift + p.noise
         arm = rig.contact_arm * (p.ux * p.contact_y - p.uy * p.contact_x) / dt
@@ -313,9 +313,13 @@ def _drive(
         torque = (p.drive_torque - rig.turn_drag * spin) * turn_rest
     else:
         if thrust > 0.0 and p.mode != _TURN:
-            if is_noise_due:
-                turned = rig.diffusion * math.sqrt(rig.noise_steps * dt) * deviate
-            turned += p.drift * dt
+            turned = p.drift * dt
+            if rig.follows:
+                # spread over its interval: all of it in one step would hit what a bar touches the harder, the shorter
+                # the step
+                turned += p.noise * dt
+            elif is_noise_due:
+                turned += p.noise * rig.noise_steps * dt
         if turned != 0.0:
             p.heading += turned
             p.ux, p.uy = math.cos(p.heading), math.sin(p.heading)

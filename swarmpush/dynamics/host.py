@@ -264,20 +264,30 @@ class HostSpace:
 
 
 _PAIR_FIELDS = batch.ArbiterFields.CONTACT_COUNT | batch.ArbiterFields.TOTAL_IMPULSE | batch.ArbiterFields.NORMAL
+_PAIR_FIELDS |= batch.ArbiterFields.POINT_A_1 | batch.ArbiterFields.POINT_B_1
+_PAIR_FIELDS |= batch.ArbiterFields.POINT_A_2 | batch.ArbiterFields.POINT_B_2
 
 
 @compiled
 def _contact_rows(host: Host, n_pairs: int) -> FloatArray:
-    """(n, 5) impulse on the first body, the normal out of it, and the contact points of each pair in touch."""
-    rows = np.zeros((n_pairs, 5))
+    """(n, 9) of each pair in touch: impulse on the first body, the normal out of it, the places on the first body and
+    on the second, summed over the contact points, and how many points there are."""
+    rows, bodies = np.zeros((n_pairs, 9)), np.zeros((2, MOTION))
     for pair in range(n_pairs):
         at = host.pairs[2 + pair]
+        first, second = chipmunk.pair_bodies(at)
+        chipmunk.read_body(first, bodies, 0)
+        chipmunk.read_body(second, bodies, 1)
         nx, ny, count = chipmunk.pair_normal(at)
-        rows[pair, 2], rows[pair, 3], rows[pair, 4] = nx, ny, count
+        rows[pair, 2], rows[pair, 3], rows[pair, 8] = nx, ny, count
         for k in range(count):
-            _, _, _, _, jn, jt = chipmunk.pair_point(at, k)
+            ax, ay, bx, by, jn, jt = chipmunk.pair_point(at, k)
             rows[pair, 0] -= jn * nx - jt * ny
             rows[pair, 1] -= jn * ny + jt * nx
+            rows[pair, 4] += bodies[0, 0] + ax
+            rows[pair, 5] += bodies[0, 1] + ay
+            rows[pair, 6] += bodies[1, 0] + bx
+            rows[pair, 7] += bodies[1, 1] + by
     return rows
 
 
@@ -286,10 +296,16 @@ def _step_fast(host: Host, dt: float) -> int:
     return take_step(host, dt)
 
 
+@compiled
+def _weigh(host: Host, k: int, mass: float, moment: float) -> None:
+    chipmunk.weigh_body(host.bodies[k], mass, moment)
+
+
 def host_disagreement(n_steps: int = 60) -> str:
     """What the compiled way to the engine does otherwise than pymunk's public interface; "" if nothing.
 
-    Two equal little spaces, in which discs and a bar press a plate over a floor, are stepped in the two ways.
+    Two equal little spaces, in which discs and a bar press a plate over a floor, are stepped in the two ways;
+    half-way the plate becomes heavier.
     """
     if not chipmunk.LAYOUT_IS_KNOWN:
         return "layout of a body"
@@ -299,8 +315,13 @@ def host_disagreement(n_steps: int = 60) -> str:
     for step in range(n_steps):
         for space in (fast, plain):
             space.host.orders[:] = 0.0
-            space.host.orders[1:4] = (0.3, 1.0, 0.1, 0.0), (0.0, 2.0, -0.1, 0.0), (0.1, 1.0, 0.3, 0.0)
+            space.host.orders[:4] = (
+                (0.0, 0.1, 0.2, 0.3), (0.3, 1.0, 0.1, 0.0), (0.0, 2.0, -0.1, 0.4), (0.1, 1.0, 0.3, -0.2)
+            )  # fmt: skip
             space.host.floor_cap[:] = 1.5, 0.5
+        if step == n_steps // 2:
+            _weigh(fast.host, 0, 2.5, 3.5)
+            plain.block.mass, plain.block.moment = 2.5, 3.5
         if step == 0:
             plain.read_plainly()
             fast.host.motion[:] = plain.host.motion
@@ -323,8 +344,9 @@ def _public_rows(space: HostSpace) -> FloatArray:
     buffer = batch.Buffer()
     batch.get_space_arbiters(space.space, _PAIR_FIELDS, buffer)
     counts = np.frombuffer(buffer.int_buf(), dtype=np.int64)
-    floats = np.frombuffer(buffer.float_buf(), dtype=np.float64).reshape(-1, 4)
-    return np.column_stack([floats, counts])[counts > 0]
+    floats = np.frombuffer(buffer.float_buf(), dtype=np.float64).reshape(-1, 12)
+    places = floats[:, 4:8] * (counts > 0)[:, None] + floats[:, 8:] * (counts > 1)[:, None]
+    return np.column_stack([floats[:, :4], places, counts])[counts > 0]
 
 
 def _sorted(rows: FloatArray) -> FloatArray:

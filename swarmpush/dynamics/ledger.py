@@ -323,7 +323,7 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ground: Ground, ledger: Led
             moves = partner < n_moving
             # everything below is what the partner gets; rx, ry and qx, qy lead to the point from either centre
             jx, jy, owner_turn, partner_turn, lost, overlap = 0.0, 0.0, 0.0, 0.0, 0.0, -np.inf
-            rx, ry, qx, qy = 0.0, 0.0, 0.0, 0.0
+            rx, ry, qx, qy, owner_gross, partner_gross = 0.0, 0.0, 0.0, 0.0, 0.0, 0.0
             for point in range(n_points):
                 ax, ay, bx, by, jn, jt = pair_point(at, point)
                 if sense > 0.0:
@@ -334,11 +334,13 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ground: Ground, ledger: Led
                 px, py = nx * jn - ny * jt, ny * jn + nx * jt
                 jx, jy = jx + px, jy + py
                 owner_turn -= rx * py - ry * px
+                owner_gross += abs(rx * py) + abs(ry * px)
                 ux = 0.5 * (before[owner, 3] + motion[owner, 3] - (before[owner, 5] + motion[owner, 5]) * ry)
                 uy = 0.5 * (before[owner, 4] + motion[owner, 4] + (before[owner, 5] + motion[owner, 5]) * rx)
                 gap = -(rx * nx + ry * ny) - motion[owner, 0] * nx - motion[owner, 1] * ny
                 if moves:
                     partner_turn += qx * py - qy * px
+                    partner_gross += abs(qx * py) + abs(qy * px)
                     ux -= 0.5 * (
                         before[partner, 3] + motion[partner, 3] - (before[partner, 5] + motion[partner, 5]) * qy
                     )
@@ -369,6 +371,7 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ground: Ground, ledger: Led
                 block.step_x -= jx
                 block.step_y -= jy
                 block.gross += math.hypot(jx, jy)
+                block.gross_turn += owner_gross
                 if moves:
                     block.is_pushed = 1
                     block.blocks_x -= jx
@@ -398,6 +401,7 @@ def enter_contacts(host: Host, rig: Rig, crew: Crew, ground: Ground, ledger: Led
                 block.step_y += jy
                 block.step_turn += partner_turn
                 block.gross += math.hypot(jx, jy)
+                block.gross_turn += partner_gross
                 block.is_pushed = 1
                 kind = 2
                 c, s = math.cos(motion[partner, 2]), math.sin(motion[partner, 2])

@@ -141,8 +141,11 @@ def _ending(host: Host, task: Task, step: int, is_sample: bool) -> int:
             return _JUMPED if vx * vx + vy * vy >= most else _ESCAPED
         if is_sample and not _is_inside(limits.outline, x, y):
             return _ESCAPED
-    if not math.isfinite(motion[0, 0] + motion[0, 1] + motion[0, 2]):
-        return _NOT_A_NUMBER
+    blocks = task.ground.blocks
+    for k in range(len(blocks)):
+        m = blocks[k].entity
+        if not math.isfinite(motion[m, 0] + motion[m, 1] + motion[m, 2] + motion[m, 3] + motion[m, 4] + motion[m, 5]):
+            return _NOT_A_NUMBER
     if task.ledger.totals[0].overlap_max > MAX_OVERLAP:
         return _OVERLAP
     if motion[0, 0] >= limits.goal_x:

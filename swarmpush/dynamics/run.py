@@ -30,10 +30,10 @@ class Books:
     pushers, blocks, walls, floor, drag, slope: impulse on the block by each; blocks are the further ones of a train.
     change: of its momentum. about_centre: the same account of angular momentum about its centre of mass, in N m s,
     by name. gross: sum of the sizes of all contact impulses on it. residual_rel: what does not balance, summed over
-    all steps and blocks, over their `gross`; residual_turn_rel: the same about the centres. floor is what the balance
-    leaves for it, and the residuals compare its size with the floor's own force while the block slides and with
-    the impulses that its joints report by themselves. phantom_m, phantom_share: displacement that no velocity
-    explains, summed by size, and over the distance the block covered; lower is better for both.
+    all steps and blocks, over the sizes of all impulses on them; residual_turn_rel: the same about the centres. floor
+    is what the balance leaves for it, and the residuals compare its size with the floor's own force while the block
+    slides and with the impulses that its joints report by themselves. phantom_m, phantom_share: displacement that no
+    velocity explains, summed by size, and over the distance the block covered; lower is better for both.
     """
 
     pushers: tuple[float, float]

@@ -8,6 +8,7 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from swarmpush.dynamics.blocks import BLOCK_STATE
 from swarmpush.dynamics.crew import Mode
 from swarmpush.dynamics.ledger import ENERGY, SERIES
 from swarmpush.dynamics.loop import Path, Task
@@ -121,9 +122,7 @@ def pusher_table(path: Path, dt_s: float, u: Units) -> pd.DataFrame:
 def books(task: Task, motion: NDArray[np.float64], distance: float, u: Units) -> Books:
     """The struck block's account. motion: see `Host`; distance: covered by the block; both in engine units."""
     block, velocity = task.ground.blocks[0], motion[0, 3:]
-    residual = float(sum(b["residual"] for b in task.ground.blocks))
-    twist = float(sum(b["residual_turn"] for b in task.ground.blocks))
-    gross, gross_turn = (float(sum(b[name] for b in task.ground.blocks)) for name in ("gross", "gross_turn"))
+    total = {name: float(task.ground.blocks[name].sum()) for name in BLOCK_STATE.names or ()}
     by = {"pushers": "pushers", "blocks": "blocks", "walls": "walls", "floor": "ground", "drag": "liquid"}
 
     def pair(name: str) -> tuple[float, float]:
@@ -138,8 +137,8 @@ def books(task: Task, motion: NDArray[np.float64], distance: float, u: Units) ->
             "change": float(block["moment"] * velocity[2]) * u.turn_impulse,
         },
         gross=float(block["gross"]) * u.impulse,
-        residual_rel=_share(residual, gross),
-        residual_turn_rel=_share(twist, gross_turn),
+        residual_rel=_share(total["residual"], total["gross"] + total["steady"]),
+        residual_turn_rel=_share(total["residual_turn"], total["gross_turn"] + total["steady_turn"]),
         phantom_m=float(block["phantom"]) * u.length,
         phantom_share=_share(float(block["phantom"]), distance),
     )

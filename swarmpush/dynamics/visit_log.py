@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import tempfile
+import weakref
 from typing import IO
 
 import numpy as np
@@ -35,7 +36,9 @@ class VisitLog:
         self._parts.append(ledger.log[:n].copy())
         self._n_held += n
         if self._n_held > self._kept:
-            self._file = self._file or tempfile.TemporaryFile()  # noqa: SIM115 - it lives as long as the log
+            if self._file is None:
+                self._file = tempfile.TemporaryFile()  # noqa: SIM115 - it lives as long as the log
+                weakref.finalize(self, self._file.close)
             for part in self._parts:
                 self._file.write(part.tobytes())
             self._parts, self._n_held = [], 0

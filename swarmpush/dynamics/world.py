@@ -67,7 +67,7 @@ def simulate(
         steps: solver settings; chosen from the scenario unless given.
         cycles: surfaces of the laps to recognise; those of the plan unless given.
         decide: a Python function that stands in for the scenario's routine; see `asking.Asker` for what it is given and
-            what it answers. It is called at decision moments only, some ten microseconds each beside its own time.
+            what it answers. It is called at decision moments only, some 40 microseconds each beside its own time.
         progress: called now and then with the share of the time limit that is done, 0 to 1.
 
     Returns:

@@ -1,4 +1,4 @@
-"""What holds in both worlds for any scenario: mirror images, other units, balanced books, and no crash."""
+"""What holds in both worlds for any scenario: mirror images and other units; and that any one can be planned."""
 
 from __future__ import annotations
 
@@ -13,9 +13,8 @@ from hypothesis import strategies as st
 from pydantic import BaseModel
 
 from swarmpush.demos import demo
-from swarmpush.dynamics.run import Run
 from swarmpush.dynamics.steps import choose_step
-from swarmpush.dynamics.world import ENDINGS, simulate
+from swarmpush.dynamics.world import simulate
 from swarmpush.kinematics.laps import find_laps
 from swarmpush.kinematics.planning import plan
 from swarmpush.loading import from_tables, load
@@ -303,41 +302,6 @@ any_acts = st.lists(
     min_size=1,
     max_size=3,
 )
-
-BALANCED = 1e-9  # relative to the sum of all impulses; rounding leaves 1e-15 and more in long runs
-N_STEPS = 1500
-
-
-@steady(25)
-@given(small_scenarios())
-def test_any_scenario_runs_and_balances(s: Scenario) -> None:
-    """A valid scenario never crashes the body world, its books balance, and its tables hold together."""
-    s = s.replace(goal={"time_limit": N_STEPS * choose_step(s).dt_s})
-    run = simulate(s, cycles=())
-    assert run.ended in ENDINGS.values()
-    assert run.books.residual_rel < BALANCED
-    books = run.books
-    total = np.array([books.pushers, books.walls, books.floor, books.drag]).sum(axis=0)
-    assert total == pytest.approx(books.change, abs=max(BALANCED * books.gross, 1e-300))
-    _holds_together(run)
-
-
-def _holds_together(run: Run) -> None:
-    s, visits = run.scenario, run.visits
-    assert np.isfinite(run.block.to_numpy()).all()
-    assert np.isfinite(run.pushers[["x_m", "y_m", "heading_rad"]].to_numpy()).all()
-    assert (visits["t_off_s"] > visits["t_on_s"]).all()
-    assert (visits["t_off_s"] <= run.duration_s * (1 + 1e-9)).all()
-    assert (visits["impact_Ns"] >= 0.0).all()
-    assert (visits["lean_Ns"] >= -1e-12 * visits["impact_Ns"]).all()
-    assert set(visits["pusher"]) <= set(range(-1, s.pushers.count))
-    assert not s.pushers.pass_through or not (visits["partner"] == "pusher").any()
-    assert s.block.yaw == "free" or run.yaw_max_rad == 0.0
-    if run.ended in ("time", "goal"):
-        r = s.pushers.radius
-        inside = run.pushers["x_m"].between(0.5 * r, s.channel.length - 0.5 * r)
-        inside &= run.pushers["y_m"].between(0.5 * r, s.channel.width - 0.5 * r)
-        assert inside.all()
 
 
 @steady(25)

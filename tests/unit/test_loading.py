@@ -595,6 +595,20 @@ def test_pushers_that_pass_through_may_start_together(tables: Tables) -> None:
     assert from_tables(tables).pushers.pass_through
 
 
+@pytest.mark.parametrize("gap", [0.0, 0.15])
+def test_a_train_may_close_the_channel(gap: float, tables: Tables) -> None:
+    """Two blocks that no pusher can pass are admitted, although who starts ahead never gets to the first."""
+    tables["train"] = [tables["block"] | {"rear_at": 1.45 + gap}]
+    assert len(from_tables(tables).blocks) == 2
+
+
+def test_nobody_starts_in_a_train(tables: Tables) -> None:
+    """A pusher that is placed in a further block is refused as one in the first is."""
+    tables["train"] = [tables["block"] | {"rear_at": 1.6}]
+    set_start(tables, (1.7, 0.16), (0.1, 0.16))
+    assert problems(tables) == {"start.placed[1]": "(1.7, 0.16) m puts the pusher into train[1]"}
+
+
 # ---- the exported schema -------------------------------------------------------------------------------------
 
 
