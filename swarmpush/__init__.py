@@ -17,7 +17,9 @@ if TYPE_CHECKING:
     from swarmpush.auditing.audit import Audit, audit
     from swarmpush.auditing.converge import Convergence, converge
     from swarmpush.demos import demo
-    from swarmpush.dynamics.plugin import Crew, Drive, attach
+    from swarmpush.dynamics.attached import Crew
+    from swarmpush.dynamics.drive import Drive
+    from swarmpush.dynamics.plugin import attach
     from swarmpush.dynamics.run import Run
     from swarmpush.dynamics.steps import Units
     from swarmpush.dynamics.world import simulate
@@ -56,8 +58,8 @@ __all__ = [
 
 _HOME = {
     "Audit": "swarmpush.auditing.audit",
-    "Crew": "swarmpush.dynamics.plugin",
-    "Drive": "swarmpush.dynamics.plugin",
+    "Crew": "swarmpush.dynamics.attached",
+    "Drive": "swarmpush.dynamics.drive",
     "Convergence": "swarmpush.auditing.converge",
     "Plan": "swarmpush.kinematics.planning",
     "Run": "swarmpush.dynamics.run",

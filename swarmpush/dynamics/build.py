@@ -15,7 +15,7 @@ from swarmpush.dynamics.crew import Crew, Rig, new_crew
 from swarmpush.dynamics.host import BLOCK, PUSHER, WALL, Footing, HostSpace, Hull
 from swarmpush.dynamics.ledger import SERIES, SLOTS, new_ledger
 from swarmpush.dynamics.loop import Limits, Path, Task
-from swarmpush.dynamics.patch import about, centre, friction_arm, gyration_squared, rounded_gyration_squared
+from swarmpush.dynamics.patch import about, centre, friction_arm, gyration_squared
 from swarmpush.dynamics.ranging import surroundings
 from swarmpush.dynamics.steps import StepSettings, Units, effective_mass, engine_units, relaxed
 from swarmpush.geometry import (
@@ -30,7 +30,7 @@ from swarmpush.geometry import (
 )
 from swarmpush.kinematics.boundary import surface_names
 from swarmpush.program import Senses, compile_routine, in_units
-from swarmpush.scenario import Block, Pushers, Scenario
+from swarmpush.scenario import Block, Pushers, Scenario, rounded_gyration_squared
 from swarmpush.starts import draw_starts
 
 MISSED_BUMP_RETRY = 4.0  # radius / free speed: a pusher that goes on pressing feels a missed bump this much later
@@ -171,12 +171,20 @@ def step_mass(mass: float, drag: float, side_drag: float, dt: float) -> float:
     return max(effective_mass(mass, drag, dt), side_drag * dt)
 
 
+def step_turn(turn_rate: float, dt: float) -> float:
+    """Angle of one step's turning at the full rate; 0 when pushers turn at once."""
+    return turn_rate * dt if math.isfinite(turn_rate) else 0.0
+
+
 def _rig(s: Scenario, u: Units, steps: StepSettings) -> Rig:
     p, e = s.pushers, s.errors
+    turned = step_turn(p.turn_rate * u.time, steps.dt_s / u.time)
     return Rig(
         dt=steps.dt_s / u.time,
         drive_while_turning=p.drive_while_turning,
         turn_rate=p.turn_rate * u.time,
+        turn_cos=math.cos(turned),
+        turn_sin=math.sin(turned),
         bump_threshold=p.bump_threshold / u.impulse,
         half_arc=p.bumper_arc / 2,
         latency=p.latency / u.time,

@@ -45,14 +45,17 @@ _WALL = 1
 class Rig(NamedTuple):
     """Constants of the crew, in engine units.
 
-    What differs from unit to unit is in `PUSHER_STATE`. heading_is_free: whether contacts turn pushers. follows:
-    whether a held heading must turn the body with it, as it does not look alike from all sides. turn_drag, contact_arm:
-    of a free heading. fade_rate: of the thrust. pull_x, pull_y: acceleration down the slope of the table.
+    What differs from unit to unit is in `PUSHER_STATE`. turn_cos, turn_sin: of the angle of a step's turning.
+    heading_is_free: whether contacts turn pushers. follows: whether a held heading must turn the body with it, as it
+    does not look alike from all sides. turn_drag, contact_arm: of a free heading. fade_rate: of the thrust. pull_x,
+    pull_y: acceleration down the slope of the table.
     """
 
     dt: float
     drive_while_turning: float
     turn_rate: float
+    turn_cos: float
+    turn_sin: float
     bump_threshold: float
     half_arc: float
     latency: float
@@ -322,7 +325,11 @@ def _drive(
                 turned += p.noise * rig.noise_steps * dt
         if turned != 0.0:
             p.heading += turned
-            p.ux, p.uy = math.cos(p.heading), math.sin(p.heading)
+            if p.mode == _TURN and p.to_turn != 0.0:  # less costly than sine and cosine, which end the turn
+                s = rig.turn_sin if turned > 0.0 else -rig.turn_sin
+                p.ux, p.uy = p.ux * rig.turn_cos - p.uy * s, p.uy * rig.turn_cos + p.ux * s
+            else:
+                p.ux, p.uy = math.cos(p.heading), math.sin(p.heading)
             if rig.follows:
                 spin = turned / dt
     across = vy * p.ux - vx * p.uy

@@ -73,13 +73,11 @@ def read_state(host: Host) -> None:
 
 
 @inlined
-def keep_state(host: Host) -> None:
-    """Copy `host.motion`, with the spins that are ordered, to `host.before`."""
-    before, motion, orders = host.before, host.motion, host.orders
-    for k in range(len(motion)):
-        for c in range(MOTION - 1):
-            before[k, c] = motion[k, c]
-        before[k, MOTION - 1] = orders[k, 0]
+def keep_state(host: Host, k: int) -> None:
+    """Copy row k of `host.motion`, with the spin that is ordered, to `host.before`."""
+    for c in range(MOTION - 1):
+        host.before[k, c] = host.motion[k, c]
+    host.before[k, MOTION - 1] = host.orders[k, 0]
 
 
 @inlined
@@ -89,13 +87,19 @@ def take_step(host: Host, dt: float) -> int:
     pivots, gears = host.pivots, host.gears
     for k in range(len(bodies)):
         chipmunk.order_body(bodies[k], orders, k)
+        keep_state(host, k)
     for k in range(len(pivots)):
         chipmunk.call_with_float(host.set_max_force, pivots[k], cap[k, 0])
         chipmunk.call_with_float(host.set_max_force, gears[k], cap[k, 1])
-    keep_state(host)
     chipmunk.call_with_float(host.step, host.space, dt)
     read_state(host)
     return chipmunk.note_pairs(host.each_pair, host.space, host.visitor, host.pairs)
+
+
+@compiled
+def _keep_all(host: Host) -> None:
+    for k in range(len(host.motion)):
+        keep_state(host, k)
 
 
 @compiled
@@ -257,7 +261,7 @@ class HostSpace:
         for k, joints in enumerate(self._floor):
             for joint, cap in zip(joints, self.host.floor_cap[k].tolist(), strict=True):
                 joint.max_force = cap
-        keep_state(self.host)
+        _keep_all(self.host)
         self.space.step(dt)
         self.read_plainly()
         return int(list_pairs(self.host))

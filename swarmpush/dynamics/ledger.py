@@ -210,18 +210,16 @@ def _slot(slots: NDArray[np.void], n_open: IntArray, owner: int, partner: int) -
 @inlined
 def close_visits(ledger: Ledger, step: int) -> None:
     """Move visits that have ended before `step` to the log."""
-    slots, n_open, log, n_log = (
-        ledger.slots,
-        ledger.n_open,
-        ledger.log,
-        ledger.n_log,
-    )
+    slots, n_open, log, n_log = ledger.slots, ledger.n_open, ledger.log, ledger.n_log
     for owner in range(len(n_open)):
-        if n_open[owner] == 0:
-            continue
-        for k in range(slots.shape[1]):
+        to_see, k = n_open[owner], 0
+        while to_see > 0:
             visit = slots[owner, k]
-            if visit.partner >= 0 and visit.last_step < step - GAP_STEPS:
+            k += 1
+            if visit.partner < 0:
+                continue
+            to_see -= 1
+            if visit.last_step < step - GAP_STEPS:
                 log[n_log[0]] = visit
                 n_log[0] += 1
                 n_open[owner] -= 1
@@ -295,167 +293,212 @@ def _sort_pairs(host: Host, ledger: Ledger, n_pushers: int, n_pairs: int) -> Non
             following[before] = pair
 
 
+class _Touch(NamedTuple):
+    """One pair in touch in one step, as the owner of the visit has it.
+
+    nx, ny: unit normal from owner to partner. jx, jy: impulse on the partner. owner_turn, partner_turn: its moments on
+    either about the centre of mass, and owner_gross, partner_gross: the sizes of their parts. owner_arm, partner_arm:
+    of the normal about either centre. approach: normal speed before the step. lost: energy. overlap: deepest.
+    """
+
+    nx: float
+    ny: float
+    jx: float
+    jy: float
+    owner_turn: float
+    partner_turn: float
+    owner_gross: float
+    partner_gross: float
+    owner_arm: float
+    partner_arm: float
+    approach: float
+    lost: float
+    overlap: float
+
+
+@inlined
+def _measure(host: Host, ground: Ground, at: int, sense: float, owner: int, partner: int) -> _Touch:
+    """The pair that the engine keeps at an address."""
+    before, motion = host.before, host.motion
+    moves = partner < len(motion)
+    nx, ny, n_points = pair_normal(at)
+    nx, ny = sense * nx, sense * ny
+    jx, jy, owner_turn, partner_turn, owner_gross, partner_gross = 0.0, 0.0, 0.0, 0.0, 0.0, 0.0
+    lost, overlap, rx, ry, qx, qy = 0.0, -np.inf, 0.0, 0.0, 0.0, 0.0
+    for point in range(n_points):
+        ax, ay, bx, by, jn, jt = pair_point(at, point)
+        if sense > 0.0:  # rx, ry and qx, qy lead to the point from the owner's centre and from the partner's
+            rx, ry, qx, qy = ax, ay, bx, by
+        else:
+            rx, ry, qx, qy = bx, by, ax, ay
+        # turned round, the impulse on the other one has the same parts along normal and tangent
+        px, py = nx * jn - ny * jt, ny * jn + nx * jt
+        jx, jy = jx + px, jy + py
+        owner_turn -= rx * py - ry * px
+        owner_gross += abs(rx * py) + abs(ry * px)
+        ux = before[owner, 3] + motion[owner, 3] - (before[owner, 5] + motion[owner, 5]) * ry
+        uy = before[owner, 4] + motion[owner, 4] + (before[owner, 5] + motion[owner, 5]) * rx
+        gap = -(rx * nx + ry * ny) - motion[owner, 0] * nx - motion[owner, 1] * ny
+        if moves:
+            partner_turn += qx * py - qy * px
+            partner_gross += abs(qx * py) + abs(qy * px)
+            ux -= before[partner, 3] + motion[partner, 3] - (before[partner, 5] + motion[partner, 5]) * qy
+            uy -= before[partner, 4] + motion[partner, 4] + (before[partner, 5] + motion[partner, 5]) * qx
+            gap += (motion[partner, 0] + qx) * nx + (motion[partner, 1] + qy) * ny
+        else:
+            wall = partner - len(motion)
+            gap += (ground.wall_x[wall] + qx) * nx + (ground.wall_y[wall] + qy) * ny
+        lost += 0.5 * (px * ux + py * uy)
+        overlap = max(overlap, -gap)
+    owner_arm, partner_arm = rx * ny - ry * nx, qx * ny - qy * nx
+    approach = before[owner, 3] * nx + before[owner, 4] * ny + before[owner, 5] * owner_arm
+    if moves:
+        approach -= before[partner, 3] * nx + before[partner, 4] * ny + before[partner, 5] * partner_arm
+    return _Touch(
+        nx, ny, jx, jy, owner_turn, partner_turn, owner_gross, partner_gross, owner_arm, partner_arm, approach, lost,
+        overlap,
+    )  # fmt: skip
+
+
+_BY_PUSHER, _BY_BLOCK, _BY_WALL = 0, 1, 2
+
+
+@inlined
+def _enter_on_block(block: Any, by: int, jx: float, jy: float, turn: float, gross_turn: float) -> None:
+    """Enter an impulse and its moment on a block into its books."""
+    block.step_x += jx
+    block.step_y += jy
+    block.step_turn += turn
+    block.gross += math.sqrt(jx * jx + jy * jy)
+    block.gross_turn += gross_turn
+    if by == _BY_WALL:
+        block.walls_x += jx
+        block.walls_y += jy
+        block.walls_turn += turn
+        return
+    block.is_pushed = 1
+    if by == _BY_PUSHER:
+        block.pushers_x += jx
+        block.pushers_y += jy
+        block.pushers_turn += turn
+    else:
+        block.blocks_x += jx
+        block.blocks_y += jy
+        block.blocks_turn += turn
+
+
+@inlined
+def _enter_on_pusher(p: Any, touches: int, jx: float, jy: float, turn: float) -> None:
+    """Let a pusher take note of an impulse on its body, and of what it touches."""
+    p.touches |= touches
+    p.contact_x += jx
+    p.contact_y += jy
+    p.contact_turn += turn
+
+
+@inlined
+def _impact_share(
+    ground: Ground, owner: int, partner: int, owner_arm: float, partner_arm: float
+) -> tuple[float, float]:
+    """Of the push that stops two approaching bodies: the share that the bare masses have in it; and of how much the
+    bodies as stepped give way, the partner's share."""
+    inertia = ground.inertia
+    bare = inertia[owner, 0] + inertia[owner, 1] * owner_arm * owner_arm
+    stepped = inertia[owner, 2] + inertia[owner, 3] * owner_arm * owner_arm
+    yields = 0.0
+    if partner < len(inertia):
+        bare += inertia[partner, 0] + inertia[partner, 1] * partner_arm * partner_arm
+        yields = inertia[partner, 2] + inertia[partner, 3] * partner_arm * partner_arm
+        stepped += yields
+    return stepped / bare, yields / stepped
+
+
 @inlined
 def enter_contacts(host: Host, rig: Rig, crew: Crew, ground: Ground, ledger: Ledger, n_pairs: int, step: int) -> None:
     """Enter the contacts of this step: visits, bumpers, and the impulses on blocks and pushers."""
-    n = len(crew.pushers)
+    n, n_moving = len(crew.pushers), len(host.motion)
     before, motion, totals, dt = host.before, host.motion, ledger.totals[0], rig.dt
-    pairs, pushers, blocks = host.pairs, crew.pushers, ground.blocks
-    first, following, partners = ledger.first, ledger.following, ledger.partners
-    senses, slots, n_open = ledger.senses, ledger.slots, ledger.n_open
-    inertia, sides = ground.inertia, ground.sides
-    wall_x, wall_y = ground.wall_x, ground.wall_y
-    n_moving = len(motion)
+    pushers, blocks, following = crew.pushers, ground.blocks, ledger.following
     _sort_pairs(host, ledger, n, n_pairs)
     leaning, push_of_all, wall_below, wall_above = 0.0, 0.0, False, False
     for owner in range(n_moving):
-        pair = first[owner]
-        first[owner] = -1
+        pair = ledger.first[owner]
+        ledger.first[owner] = -1
         while pair >= 0:
-            at, partner, sense = pairs[2 + pair], partners[pair], senses[pair]
-            nx, ny, n_points = pair_normal(at)
-            nx, ny = sense * nx, sense * ny  # from owner to partner
+            at, partner, sense = host.pairs[2 + pair], ledger.partners[pair], ledger.senses[pair]
             pair = following[pair]
-            k = _slot(slots, n_open, owner, partner)
+            k = _slot(ledger.slots, ledger.n_open, owner, partner)
             if k < 0:
                 continue
-            visit = slots[owner, k]
-            moves = partner < n_moving
-            # everything below is what the partner gets; rx, ry and qx, qy lead to the point from either centre
-            jx, jy, owner_turn, partner_turn, lost, overlap = 0.0, 0.0, 0.0, 0.0, 0.0, -np.inf
-            rx, ry, qx, qy, owner_gross, partner_gross = 0.0, 0.0, 0.0, 0.0, 0.0, 0.0
-            for point in range(n_points):
-                ax, ay, bx, by, jn, jt = pair_point(at, point)
-                if sense > 0.0:
-                    rx, ry, qx, qy = ax, ay, bx, by
-                else:
-                    rx, ry, qx, qy = bx, by, ax, ay
-                # turned round, the impulse on the other one has the same parts along normal and tangent
-                px, py = nx * jn - ny * jt, ny * jn + nx * jt
-                jx, jy = jx + px, jy + py
-                owner_turn -= rx * py - ry * px
-                owner_gross += abs(rx * py) + abs(ry * px)
-                ux = 0.5 * (before[owner, 3] + motion[owner, 3] - (before[owner, 5] + motion[owner, 5]) * ry)
-                uy = 0.5 * (before[owner, 4] + motion[owner, 4] + (before[owner, 5] + motion[owner, 5]) * rx)
-                gap = -(rx * nx + ry * ny) - motion[owner, 0] * nx - motion[owner, 1] * ny
-                if moves:
-                    partner_turn += qx * py - qy * px
-                    partner_gross += abs(qx * py) + abs(qy * px)
-                    ux -= 0.5 * (
-                        before[partner, 3] + motion[partner, 3] - (before[partner, 5] + motion[partner, 5]) * qy
-                    )
-                    uy -= 0.5 * (
-                        before[partner, 4] + motion[partner, 4] + (before[partner, 5] + motion[partner, 5]) * qx
-                    )
-                    gap += (motion[partner, 0] + qx) * nx + (motion[partner, 1] + qy) * ny
-                else:
-                    gap += qx * nx + qy * ny + wall_x[partner - n_moving] * nx
-                    gap += wall_y[partner - n_moving] * ny
-                lost += px * ux + py * uy
-                overlap = max(overlap, -gap)
+            visit = ledger.slots[owner, k]
+            touch = _measure(host, ground, at, sense, owner, partner)
+            nx, ny, jx, jy, lost = touch.nx, touch.ny, touch.jx, touch.jy, touch.lost
             push = max(jx * nx + jy * ny, 0.0)
-            approach = (before[owner, 3] - before[owner, 5] * ry) * nx + (before[owner, 4] + before[owner, 5] * rx) * ny
-            if moves:
-                approach -= (before[partner, 3] - before[partner, 5] * qy) * nx
-                approach -= (before[partner, 4] + before[partner, 5] * qx) * ny
-            drive, face, kind = 0.0, 0, 1
-            if 0 < owner <= n:
-                p = pushers[owner - 1]
-                drive = (p.force_x * nx + p.force_y * ny) * dt
-                p.contact_x -= jx
-                p.contact_y -= jy
-                p.contact_turn += owner_turn
-            else:
-                block = blocks[owner if owner == 0 else owner - n]
-                block.step_turn += owner_turn
-                block.step_x -= jx
-                block.step_y -= jy
-                block.gross += math.hypot(jx, jy)
-                block.gross_turn += owner_gross
-                if moves:
-                    block.is_pushed = 1
-                    block.blocks_x -= jx
-                    block.blocks_y -= jy
-                    block.blocks_turn += owner_turn
-                    totals.block_block += lost
-                else:
-                    block.walls_x -= jx
-                    block.walls_y -= jy
-                    block.walls_turn += owner_turn
-                    totals.block_wall += lost
-                    if owner == 0:
-                        wall_above |= ny > 0.5
-                        wall_below |= ny < -0.5
-            if 0 < partner <= n:
+            is_pusher, meets_pusher, meets_block = 0 < owner <= n, 0 < partner <= n, False
+            drive = 0.0
+            if meets_pusher:
                 p = pushers[partner - 1]
-                drive -= (p.force_x * nx + p.force_y * ny) * dt
-                p.contact_x += jx
-                p.contact_y += jy
-                p.contact_turn += partner_turn
-                p.touches |= TOUCHES_PUSHER
+                drive = -(p.force_x * nx + p.force_y * ny) * dt
+                _enter_on_pusher(p, TOUCHES_PUSHER, jx, jy, touch.partner_turn)
                 _feel(rig, pushers, partner - 1, 3, -nx, -ny, push, step)
-                kind = 3
-            elif moves:
+                totals.pusher_pusher += lost
+            elif partner < n_moving:
+                meets_block = True
                 block = blocks[partner if partner == 0 else partner - n]
-                block.step_x += jx
-                block.step_y += jy
-                block.step_turn += partner_turn
-                block.gross += math.hypot(jx, jy)
-                block.gross_turn += partner_gross
-                block.is_pushed = 1
-                kind = 2
-                c, s = math.cos(motion[partner, 2]), math.sin(motion[partner, 2])
-                face = _face(sides, block.first_side, block.n_sides, c * nx + s * ny, c * ny - s * nx)
-                if 0 < owner <= n:
-                    block.pushers_x += jx
-                    block.pushers_y += jy
-                    block.pushers_turn += partner_turn
-                else:
-                    block.blocks_x += jx
-                    block.blocks_y += jy
-                    block.blocks_turn += partner_turn
-            if 0 < owner <= n:
-                _feel(rig, pushers, owner - 1, kind, nx, ny, push, step)
-                if kind == 1:
-                    pushers[owner - 1].touches |= TOUCHES_WALL
-                    totals.pusher_wall += lost
-                elif kind == 2:
-                    pushers[owner - 1].touches |= TOUCHES_BLOCK
+                by = _BY_PUSHER if is_pusher else _BY_BLOCK
+                _enter_on_block(block, by, jx, jy, touch.partner_turn, touch.partner_gross)
+                if is_pusher:
                     totals.pusher_block += lost
                 else:
-                    pushers[owner - 1].touches |= TOUCHES_PUSHER
-                    totals.pusher_pusher += lost
+                    totals.block_block += lost
+            elif is_pusher:
+                totals.pusher_wall += lost
+            else:
+                totals.block_wall += lost
+                if owner == 0:
+                    wall_above |= ny > 0.5
+                    wall_below |= ny < -0.5
+            if is_pusher:
+                p = pushers[owner - 1]
+                drive += (p.force_x * nx + p.force_y * ny) * dt
+                touches, kind = (
+                    (TOUCHES_PUSHER, 3) if meets_pusher else (TOUCHES_BLOCK, 2) if meets_block else (TOUCHES_WALL, 1)
+                )
+                _enter_on_pusher(p, touches, -jx, -jy, touch.owner_turn)
+                _feel(rig, pushers, owner - 1, kind, nx, ny, push, step)
+            else:
+                block = blocks[owner if owner == 0 else owner - n]
+                by = _BY_BLOCK if meets_block else _BY_WALL
+                _enter_on_block(block, by, -jx, -jy, touch.owner_turn, touch.owner_gross)
+            lean = push
+            if touch.approach > ground.approach:
+                share, passed_on = _impact_share(ground, owner, partner, touch.owner_arm, touch.partner_arm)
+                lean -= max(push - max(drive, 0.0), 0.0) * share
+                if visit.first_step < 0 and meets_block:
+                    speed = abs(before[partner, 3]) + abs(before[partner, 4]) + abs(before[partner, 5])
+                    if speed < ground.approach * 0.01:
+                        block = blocks[partner if partner == 0 else partner - n]
+                        block.passed_on = max(block.passed_on, passed_on)
             if visit.first_step < 0:
                 visit.first_step = step
-                visit.approach = approach
-                visit.speed = math.hypot(before[owner, 3], before[owner, 4])
+                visit.approach = touch.approach
+                visit.speed = math.sqrt(before[owner, 3] * before[owner, 3] + before[owner, 4] * before[owner, 4])
                 visit.x, visit.y = motion[owner, 0], motion[owner, 1]
                 visit.block_x_on = before[0, 0]
-                visit.face = face
-                visit.heading = pushers[owner - 1].heading if 0 < owner <= n else before[owner, 2]
-            lean = push
-            if approach > ground.approach:
-                owner_arm, partner_arm = rx * ny - ry * nx, qx * ny - qy * nx
-                bare = inertia[owner, 0] + inertia[owner, 1] * owner_arm * owner_arm
-                stepped = inertia[owner, 2] + inertia[owner, 3] * owner_arm * owner_arm
-                if moves:
-                    bare += inertia[partner, 0] + inertia[partner, 1] * partner_arm * partner_arm
-                    stepped += inertia[partner, 2] + inertia[partner, 3] * partner_arm * partner_arm
-                lean -= max(push - max(drive, 0.0), 0.0) * stepped / bare
-                if visit.last_step < 0 and kind == 2:
-                    speed = math.hypot(before[partner, 3], before[partner, 4])
-                    if max(speed, abs(before[partner, 5])) < ground.approach * 0.01:
-                        yields = inertia[partner, 2] + inertia[partner, 3] * partner_arm * partner_arm
-                        block = blocks[partner if partner == 0 else partner - n]
-                        block.passed_on = max(block.passed_on, yields / stepped)
+                visit.face = 0
+                if meets_block:
+                    block = blocks[partner if partner == 0 else partner - n]
+                    c, s = math.cos(motion[partner, 2]), math.sin(motion[partner, 2])
+                    visit.face = _face(ground.sides, block.first_side, block.n_sides, c * nx + s * ny, c * ny - s * nx)
+                visit.heading = pushers[owner - 1].heading if is_pusher else before[owner, 2]
             visit.impact += push - lean
             visit.lean += lean
             visit.tangential += jx * ny - jy * nx
             visit.energy += lost
             visit.last_step = step
             visit.block_x_off = before[0, 0]
-            visit.overlap = max(visit.overlap, overlap)
-            totals.overlap_max = max(totals.overlap_max, overlap)
+            visit.overlap = max(visit.overlap, touch.overlap)
+            totals.overlap_max = max(totals.overlap_max, touch.overlap)
             if partner == 0 and visit.face == REAR and lean > ground.lean_force * dt:
                 leaning += 1.0
                 push_of_all += lean

@@ -57,22 +57,6 @@ def friction_arm(corners: Corners) -> float:
     return total / signed_area(corners)
 
 
-def rounded_gyration_squared(length: float, width: float, radius: float) -> float:
-    """Moment of inertia over mass of a uniform rectangle about its centre, m2, after it is rounded off with a radius.
-
-    Put together from two crossing rectangles and four quarter discs (any textbook of mechanics); 0 by 0 gives a disc.
-
-    >>> rounded_gyration_squared(0.0, 0.0, 2.0)
-    2.0
-    """
-    a, b, r = length, width, radius
-    area = math.pi * r**2 + b * (a + 2 * r) + 2 * a * r
-    corners = math.pi * r**2 * (a**2 + b**2) / 4 + 4 * (a + b) * r**3 / 3 + math.pi * r**4 / 2
-    along = b * (a + 2 * r) * ((a + 2 * r) ** 2 + b**2) / 12
-    flanks = 2 * a * r * ((a**2 + r**2) / 12 + ((b + r) / 2) ** 2)
-    return (corners + along + flanks) / area
-
-
 def _primitive(tangent: float) -> float:
     secant = math.hypot(1.0, tangent)
     return secant * tangent + math.asinh(tangent)

@@ -11,9 +11,8 @@ from rigs import PUSH_ON, pair, placed, rig
 from scipy.integrate import dblquad, solve_ivp
 
 import swarmpush
-from swarmpush.dynamics.patch import rounded_gyration_squared
 from swarmpush.dynamics.run import Run
-from swarmpush.scenario import Scenario
+from swarmpush.scenario import Scenario, rounded_gyration_squared
 from swarmpush.starts import draw_starts
 
 # ---- moment of inertia ----------------------------------------------------------------------------------------------

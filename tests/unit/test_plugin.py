@@ -17,9 +17,9 @@ import pytest
 import swarmpush
 from swarmpush import Drive, Units, attach
 from swarmpush.dynamics.asking import Situation
+from swarmpush.dynamics.attached import Crew
 from swarmpush.dynamics.host import list_pairs
 from swarmpush.dynamics.ledger import _sort_pairs
-from swarmpush.dynamics.plugin import Crew
 from swarmpush.dynamics.steps import choose_step
 from swarmpush.problems import RoutineError
 from swarmpush.routine import Routine

@@ -9,7 +9,8 @@ import numpy as np
 import pytest
 
 from swarmpush.demos import demo
-from swarmpush.loading import MAX_PACKING, load
+from swarmpush.loading import load
+from swarmpush.misfits import MAX_PACKING
 from swarmpush.problems import ScenarioError
 from swarmpush.scenario import FixedStart, Scenario
 from swarmpush.starts import draw_starts, room_for_starts
