@@ -13,7 +13,7 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from swarmpush.dynamics.bumps import find_bumps, find_completed_laps
-from swarmpush.dynamics.states import STATES, failures, pusher_states
+from swarmpush.dynamics.states import STATES, Tables, failures, pusher_states
 from swarmpush.dynamics.steps import StepSettings
 from swarmpush.kinematics.boundary import REAR
 from swarmpush.loading import from_tables
@@ -118,12 +118,13 @@ class Run:
     @cached_property
     def states(self) -> NDArray[np.object_]:
         """What each pusher is about at each row of `pushers`; see `states.pusher_states`."""
-        return pusher_states(self)
+        tables = Tables(self.visits, self.block, self.pushers, self.bumps, self.laps)
+        return pusher_states(self.scenario, tables)
 
     @cached_property
     def failures(self) -> pd.DataFrame:
         """What kept the crew from pushing, with times; see `states.failures`."""
-        return failures(self)
+        return failures(self.block, self.states, self.scenario.pushers.count)
 
     @property
     def causes(self) -> dict[str, float]:

@@ -3,14 +3,13 @@
 from __future__ import annotations
 
 import math
-from typing import TYPE_CHECKING
+from typing import NamedTuple
 
 import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
-if TYPE_CHECKING:
-    from swarmpush.dynamics.run import Run
+from swarmpush.scenario import Scenario
 
 FloatArray = NDArray[np.float64]
 
@@ -19,19 +18,29 @@ STATES = ("idle", "ahead", "locked", "held at a wall", "lost")
 HELD_TURNS = 3.0  # times the longest reaction and half turn: touching a wall for longer, a pusher is held there
 
 
-def pusher_states(run: Run) -> NDArray[np.object_]:
+class Tables(NamedTuple):
+    """The tables of a `Run` that states are told from."""
+
+    visits: pd.DataFrame
+    block: pd.DataFrame
+    pushers: pd.DataFrame
+    bumps: pd.DataFrame
+    laps: pd.DataFrame
+
+
+def pusher_states(s: Scenario, run: Tables) -> NDArray[np.object_]:
     """The state of each pusher at each row of `run.pushers`.
 
     idle: halted or failed. ahead: beyond the block's front. locked: in a lap of the plan that it completes. held at a
     wall: touching one for longer than it could need to turn away, and not sliding along it on purpose. lost: none of
     these, so it is on its way to a lap or out of one.
     """
-    s, table = run.scenario, run.pushers
+    table = run.pushers
     t, pusher = table["t_s"].to_numpy(), table["pusher"].to_numpy()
     mode = table["mode"].to_numpy()
     moved = run.block["x_m"].to_numpy() - run.block["x_m"].iloc[0]
     front = s.block_front_at + np.repeat(moved, s.pushers.count)
-    walls = run.bumps[~run.bumps["surface"].isin(["pusher", *_block_sides(run)])]
+    walls = run.bumps[~run.bumps["surface"].isin(["pusher", *_block_sides(run.visits)])]
     patience = HELD_TURNS * (
         s.pushers.latency + math.pi / s.pushers.turn_rate + s.pushers.radius / s.pushers.free_speed
     )
@@ -47,8 +56,8 @@ def pusher_states(run: Run) -> NDArray[np.object_]:
     return np.asarray(np.select(conditions, list(STATES[:-1]), default=STATES[-1]).astype(object))
 
 
-def _block_sides(run: Run) -> list[str]:
-    return list(run.visits.loc[run.visits["partner"] == "block", "surface"].unique())
+def _block_sides(visits: pd.DataFrame) -> list[str]:
+    return list(visits.loc[visits["partner"] == "block", "surface"].unique())
 
 
 def _within(pusher: FloatArray, t: FloatArray, owner: pd.Series, start: pd.Series, end: pd.Series) -> NDArray[np.bool_]:
@@ -63,16 +72,18 @@ def _within(pusher: FloatArray, t: FloatArray, owner: pd.Series, start: pd.Serie
     return is_within
 
 
-def failures(run: Run) -> pd.DataFrame:
+def failures(block: pd.DataFrame, states: NDArray[np.object_], n: int) -> pd.DataFrame:
     """What kept the crew from pushing, and when.
+
+    Arguments:
+        block: the table of a `Run`. states: from `pusher_states`. n: size of the crew.
 
     Returns:
         One row per cause: cause; share (of the crew's time, or of all time for what happens to the block, 0 to 1);
         t_first_s, t_last_s: when it first and last happened, to within a row of the path (NaN: never); spells: how
         often it set in; longest_s: its longest spell.
     """
-    block, n = run.block, run.scenario.pushers.count
-    state = run.states.reshape(-1, n)
+    state = states.reshape(-1, n)
     t = block["t_s"].to_numpy()
     lasted = np.diff(t, prepend=0.0)
     shares = {

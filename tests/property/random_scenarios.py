@@ -12,7 +12,8 @@ from random import Random
 from typing import Any, TypeVar
 
 from swarmpush.kinematics.boundary import surface_names
-from swarmpush.loading import MAX_TRAVEL, from_tables
+from swarmpush.loading import from_tables
+from swarmpush.misfits import MAX_TRAVEL
 from swarmpush.problems import ScenarioError
 from swarmpush.scenario import Scenario
 from swarmpush.starts import draw_starts
