@@ -9,7 +9,7 @@ from enum import StrEnum
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
-from scipy import stats
+from scipy import special
 
 
 class Verdict(StrEnum):
@@ -84,7 +84,7 @@ def mean_interval(
     # the mean of equal values is that value, which a sum may miss by a rounding
     mean = float(known[0] if is_equal else known.mean())
     spread = 0.0 if is_equal else float(known.std(ddof=1))
-    t = float(stats.t.ppf(0.5 + confidence / 2.0, n - 1))
+    t = float(special.stdtrit(n - 1, 0.5 + confidence / 2.0))
     half = max(t * spread / math.sqrt(n), resolution / 2.0, float(np.finfo(np.float64).eps) * abs(mean))
     low, high = mean - half, mean + half
     if is_equal and math.isfinite(least):
@@ -160,7 +160,7 @@ def score_limits(share: ArrayLike, n: ArrayLike, confidence: float) -> tuple[NDA
     """
     _check_confidence(confidence)
     p, size = np.asarray(share, dtype=np.float64), np.asarray(n, dtype=np.float64)
-    z2 = float(stats.norm.ppf(0.5 + confidence / 2.0)) ** 2
+    z2 = float(special.ndtri(0.5 + confidence / 2.0)) ** 2
     shrink = 1.0 / (1.0 + z2 / size)
     centre = (p + z2 / (2.0 * size)) * shrink
     half = shrink * np.sqrt(z2 * (p * (1.0 - p) / size + z2 / (4.0 * size * size)))
@@ -276,7 +276,7 @@ def runs_to_show(share: float, confidence: float) -> int:
     >>> runs_to_show(0.9, 0.95)
     35
     """
-    z = float(stats.norm.ppf(0.5 + confidence / 2.0))
+    z = float(special.ndtri(0.5 + confidence / 2.0))
     return math.ceil(z * z * share / (1.0 - share))
 
 
@@ -317,7 +317,7 @@ def runs_to_decide(
         )
     if share_now == demanded:
         return None
-    z, y = (float(stats.norm.ppf(p)) for p in (0.5 + confidence / 2.0, power))
+    z, y = (float(special.ndtri(p)) for p in (0.5 + confidence / 2.0, power))
 
     def is_enough(n: int) -> bool:
         chance = z * math.sqrt(n * demanded * (1.0 - demanded)) + y * math.sqrt(

@@ -11,7 +11,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
-from scipy import stats
+from scipy import special, stats
 
 from swarmpush.auditing.statistics import Estimate, score_limits, unseen_share
 
@@ -184,7 +184,7 @@ def restricted_mean(times_s: ArrayLike, is_censored: ArrayLike, horizon_s: float
     if variance == 0.0:
         unseen = unseen_share(n_known, confidence)
         return Estimate(mean, mean - unseen * mean, mean + unseen * (horizon_s - mean), n_known)
-    half = float(stats.t.ppf(0.5 + confidence / 2.0, n_known - 1)) * math.sqrt(variance)
+    half = float(special.stdtrit(n_known - 1, 0.5 + confidence / 2.0)) * math.sqrt(variance)
     return Estimate(mean, max(0.0, mean - half), min(horizon_s, mean + half), n_known)
 
 
