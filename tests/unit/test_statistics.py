@@ -12,12 +12,9 @@ from swarmpush.auditing.statistics import (
     Verdict,
     judge,
     mean_interval,
-    paired_interval,
-    paired_share_interval,
     runs_to_decide,
     runs_to_show,
     score_limits,
-    share_difference,
     share_interval,
     unseen_share,
 )
@@ -91,9 +88,6 @@ def test_confidence_out_of_range(confidence: float) -> None:
         lambda: share_interval(1, 2, confidence),
         lambda: score_limits(0.5, 2, confidence),
         lambda: unseen_share(2, confidence),
-        lambda: paired_interval([1.0, 2.0], [0.0, 0.0], confidence),
-        lambda: share_difference(1, 2, 1, 2, confidence),
-        lambda: paired_share_interval([1, 0], [0, 0], confidence),
         lambda: runs_to_decide(0.9, 0, 0.8, confidence),
     ):
         with pytest.raises(ValueError, match="confidence"):
@@ -121,56 +115,6 @@ def test_score_limits_are_those_of_shares() -> None:
     for k, (successes, trials) in enumerate(zip((0, 3, 12, 5), n, strict=True)):
         found = share_interval(successes, int(trials), 0.9)
         assert (low[k], high[k]) == (found.low, found.high)
-
-
-def test_paired_interval_drops_what_pairs_share() -> None:
-    """The interval is that of the differences; a pair with an undefined value is left out."""
-    base = np.array([10.0, 20.0, 35.0, 50.0])
-    found = paired_interval([11.0, 22.0, 38.0, math.nan], base, 0.95)
-    assert found == mean_interval([1.0, 2.0, 3.0], 0.95)
-    assert paired_interval(base, base, 0.95) == Estimate(0.0, 0.0, 0.0, 4)
-    assert paired_interval([], [], 0.95).n == 0
-    with pytest.raises(ValueError, match="alike"):
-        paired_interval([1.0, 2.0], [1.0], 0.95)
-
-
-def test_paired_shares_by_hand() -> None:
-    """The limits come from the shares of pairs that gained and lost; swapping the two turns the interval round."""
-    one, two = [1, 1, 1, 0, 0, 1, 0, 0, 0, 0], [0, 0, 0, 1, 0, 1, 0, 0, 0, 0]
-    found, other = paired_share_interval(one, two, 0.95), paired_share_interval(two, one, 0.95)
-    gained, lost = share_interval(3, 10, 0.95), share_interval(1, 10, 0.95)
-    a, b = 0.3 - gained.low, lost.high - 0.1
-    correlation = -math.sqrt(0.3 * 0.1 / (0.7 * 0.9))
-    assert found.mean == pytest.approx(0.2)
-    assert found.low == pytest.approx(0.2 - math.sqrt(a * a + b * b - 2 * correlation * a * b))
-    assert (other.mean, other.low, other.high) == pytest.approx((-found.mean, -found.high, -found.low))
-    assert gained.low - lost.high < found.low < 0.2 - max(a, b)  # inside of what any correlation could give
-
-
-def test_paired_shares_at_the_ends() -> None:
-    """No change leaves the score interval's room, all changing reaches 1, nothing known -1 to 1, NaN drops a pair."""
-    none = paired_share_interval([False] * 12, [False] * 12, 0.95)
-    assert (none.mean, none.high) == (0.0, pytest.approx(share_interval(0, 12, 0.95).high))
-    every = paired_share_interval([1.0] * 12, [0.0] * 12, 0.95)
-    assert (every.mean, every.high) == (1.0, 1.0)
-    assert 0.0 < every.low < 1.0
-    nothing = paired_share_interval([math.nan], [1.0], 0.95)
-    assert math.isnan(nothing.mean)
-    assert (nothing.low, nothing.high, nothing.n) == (-1.0, 1.0, 0)
-    assert paired_share_interval([1.0, math.nan, 0.0], [1.0, 1.0, 0.0], 0.95).n == 2
-    with pytest.raises(ValueError, match="0 or 1"):
-        paired_share_interval([0.5], [1.0], 0.95)
-    with pytest.raises(ValueError, match="alike"):
-        paired_share_interval([1, 0], [1], 0.95)
-
-
-def test_share_difference_at_the_ends() -> None:
-    """Without trials on one side anything is possible; equal certain shares still leave room."""
-    nothing = share_difference(0, 0, 3, 4, 0.95)
-    assert math.isnan(nothing.mean)
-    assert (nothing.low, nothing.high, nothing.n) == (-1.0, 1.0, 4)
-    alike = share_difference(10, 10, 10, 10, 0.95)
-    assert (alike.mean, alike.high) == (0.0, pytest.approx(share_interval(0, 10, 0.95).high))
 
 
 def test_runs_to_decide_by_hand() -> None:
