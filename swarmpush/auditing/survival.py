@@ -56,7 +56,8 @@ def survival_curve(times_s: ArrayLike, is_censored: ArrayLike, confidence: float
 
     The interval is Wilson's for as many uncensored runs as would give the same standard error. Without censoring it is
     the score interval of the share. Where the share is 0 or 1 Greenwood's error vanishes though nothing is certain; the
-    number of runs is there the number at risk over the share before. A log-log interval would be undefined there.
+    number of runs is there the number at risk over the share before. A log-log interval would be undefined there, and
+    covers less for few runs: 92 % in place of 95 % for 12 runs when a fifth have arrived.
 
     Arguments:
         times_s: (n,) s, time to goal, or time at which the run timed out or broke off.
@@ -123,7 +124,7 @@ def share_at(curve: SurvivalCurve, time_s: float) -> Estimate:
 
 
 def median_time(curve: SurvivalCurve) -> Estimate:
-    """Time by which half of the runs have arrived, s, with its interval; infinite where the curve stays above a half.
+    """First time by which half of the runs have arrived, s, with its interval; infinite where fewer arrived.
 
     The interval holds all times at which a half lies in the interval of the share, and times later than all runs.
 

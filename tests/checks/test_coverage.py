@@ -239,6 +239,22 @@ def test_share_under_way(n: int) -> None:
     assert max(found) <= 0.985  # early on few have arrived, and 12 runs can only give a few shares
 
 
+def test_a_log_log_interval_would_fall_short() -> None:
+    """Early on and for 12 runs the common log-log interval covers about 92 %, as it has no width before an arrival."""
+    time_s, z = 0.25, 1.959964
+
+    def estimate(rng: Rng) -> Estimate:
+        curve = random_curve(rng, 12)
+        row = int(np.searchsorted(curve.times_s, time_s, side="right")) - 1
+        share = float(curve.share[row]) if row >= 0 else 1.0
+        if share in (0.0, 1.0):
+            return Estimate(share, share, share, 12)
+        spread = z * float(curve.standard_error[row]) / (share * math.log(share))
+        return Estimate(share, share ** math.exp(-spread), share ** math.exp(spread), 12)
+
+    assert coverage(estimate, math.exp(-time_s), 1500) == pytest.approx(0.92, abs=0.02)
+
+
 @pytest.mark.parametrize("n", [12, 48])
 def test_median_time(n: int) -> None:
     """The median time to goal is covered under 30 % censoring."""

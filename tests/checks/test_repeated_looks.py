@@ -14,7 +14,7 @@ from swarmpush.auditing.looks import confidence_at, looks
 from swarmpush.auditing.statistics import Verdict, judge, mean_interval, score_limits
 
 CONFIDENCE = 0.95
-N_REPEATS = 4000
+N_REPEATS = 3000
 # four standard errors of a rate of 5 % over the repeats; the draws are fixed
 CHANCE = 4 * math.sqrt(0.05 * 0.95 / N_REPEATS)
 SIZES = looks(12, 96)

@@ -64,6 +64,8 @@ def test_equal_values_between_limits_leave_room_for_rarer_ones() -> None:
     middle = mean_interval([0.5] * 12, 0.95, limits=(0.0, 1.0))
     assert middle.high - 0.5 == pytest.approx(0.5 - middle.low) == pytest.approx(0.5 * unseen_share(12, 0.95))
     assert mean_interval([1.0], 0.95, limits=(0.0, 1.0)) == Estimate(1.0, 0.0, 1.0, 1)
+    nearly = [0.5, 0.5001, 0.5]
+    assert mean_interval(nearly, 0.95, limits=(0.0, 1.0)) == mean_interval(nearly, 0.95)  # their spread tells
     clipped = mean_interval([0.2, 0.9, 1.0], 0.95, limits=(0.0, 1.0))
     assert (clipped.low, clipped.high) == (0.0, 1.0)
     with pytest.raises(ValueError, match="must be in 0 to 1"):
