@@ -70,7 +70,7 @@ def mean_interval(
         raise ValueError(f"resolution {resolution} given; it must not be negative")
     known = np.asarray(values, dtype=np.float64)
     known = known[np.isfinite(known)]
-    least, largest = limits
+    least, largest = map(float, limits)
     n = len(known)
     if n == 0:
         return Estimate(math.nan, math.nan, math.nan, 0)
