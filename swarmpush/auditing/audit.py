@@ -104,6 +104,11 @@ class Audit:
             text += f", and what costs most is {worst.adds} ({for_people(cost.mean, 'm/s')})"
         return text + "."
 
+    def _repr_html_(self) -> str:
+        from swarmpush.reporting.notebook import audit_html
+
+        return audit_html(self)
+
     def to_dict(self, files: dict[str, str] | None = None) -> dict[str, Any]:
         """The audit as plain values for JSON; undefined values are None."""
         result: dict[str, Any] = plain(
