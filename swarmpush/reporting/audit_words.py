@@ -27,11 +27,15 @@ def cost_sentences(audit: Audit) -> list[str]:
     told = []
     for adds, cost in sorted(costs, key=lambda entry: entry[1].mean)[:N_COSTS]:
         span = interval(Estimate(-cost.mean, -cost.high, -cost.low, cost.n), "m/s")
-        share = f", {share_of(-cost.mean / promise)} of the planned speed" if 0.0 < promise < math.inf else ""
+        share = _of_promise(-cost.mean / promise) if 0.0 < promise < math.inf else ""
         chance = "; chance alone could explain it" if cost.high >= 0.0 else ""
         name = adds[:1].upper() + adds[1:]
         told.append(f"{name}: {number(-cost.mean, 'm/s')} slower ({span}){share}{chance}.")
     return told
+
+
+def _of_promise(share: float) -> str:
+    return f", {share:.0f} times the planned speed" if share >= 10.0 else f", {share_of(share)} of the planned speed"
 
 
 def arrival_rows(audit: Audit) -> list[dict[str, str]]:

@@ -51,6 +51,7 @@ STYLE: dict[Any, Any] = {
 }
 STATE_COLOURS = dict(zip(STATES, ("#000000", ORANGE, GREEN, VERMILION, "#c9d1d9"), strict=True))
 BINS = 80  # of a run's time in which shares of states are averaged for the picture
+MOST_BEYOND = 2.0  # lengths of the bars by which the ladder's picture is made longer to show the speed needed
 MAX_LEGS = 150  # runs from bump to bump drawn behind the lap
 
 
@@ -259,7 +260,8 @@ def ladder(audit: Audit) -> Figure:
     """A waterfall of block speed from geometry down to the scenario as given.
 
     Every bar begins at the speed of the rung above it. Whiskers are the paired cost's interval; on the last bar, that
-    of the speed itself. Names stand above the bars, so that the picture is narrow enough for a telephone.
+    of the speed itself. They run out of the picture where they are much longer than the bars; the numbers stand above
+    the bars anyway. So do names, so that the picture is narrow enough for a telephone.
     """
     first, *rungs = audit.ladder
     last = audit.ladder[-1]
@@ -303,13 +305,33 @@ def ladder(audit: Audit) -> Figure:
             end = (start + change) / scale
             axes.plot([end, end], [k + 0.18, k + 0.82], color=AXIS, lw=0.8, ls=":")
     axes.axvline(0.0, color=AXIS, lw=0.8)
-    axes.axvline(needed / scale, color=INK, ls="--", lw=1)
-    axes.text(needed / scale, -0.62, "needed", ha="center", va="bottom", color=INK, fontsize=8)
+    low, high = _shown_speeds(rows, needed)
+    axes.set_xlim(low / scale, high / scale)
+    if needed <= high:
+        axes.axvline(needed / scale, color=INK, ls="--", lw=1)
+        axes.text(needed / scale, -0.62, "needed", ha="center", va="bottom", color=INK, fontsize=8)
+    else:
+        words = f"needed: {number(needed, 'm/s')}, beyond this edge \N{RIGHTWARDS ARROW}"
+        axes.text(high / scale, -0.62, words, ha="right", va="bottom", color=INK, fontsize=8)
     axes.set_ylim(len(rows) - 0.6, -0.62)
     axes.set_yticks([])
     axes.spines["left"].set_visible(False)
     axes.set_xlabel(f"block speed, {prefix}m/s")
     return figure
+
+
+def _shown_speeds(rows: list[tuple[str, float, float, str, Estimate | None]], needed: float) -> tuple[float, float]:
+    """The stretch of speeds worth showing: all bars; whiskers and the speed needed as far as bars remain legible."""
+    ends = [end for _, start, change, *_ in rows for end in (start, start + change) if math.isfinite(end)]
+    tips = [start + tip for _, start, _, _, spread in rows if spread for tip in (spread.low, spread.high)]
+    tips = [tip for tip in tips if math.isfinite(tip)]
+    low, high = min(0.0, *ends), max(0.0, *ends)
+    length = high - low or needed
+    wanted = [needed] if needed <= high + MOST_BEYOND * length else []
+    left = max(min([low, *tips]), low - length)
+    right = max([min(max([high, *tips]), high + length), *wanted])
+    margin = 0.03 * (right - left)
+    return left - margin if left < 0.0 else 0.0, right + margin
 
 
 def impulses(run: Run, planned_Ns: float | None = None) -> Figure:

@@ -6,10 +6,12 @@ import html
 import io
 import math
 import re
+from collections.abc import Iterator
 from dataclasses import dataclass, replace
 from html.parser import HTMLParser
 from pathlib import Path
 
+import matplotlib.pyplot as plt
 import numpy as np
 import pandas as pd
 import pytest
@@ -26,6 +28,12 @@ from swarmpush.reporting.page import page
 UNITS = r"_(m|s|m_s|rad|Ns|J|share|pushers)$"
 WORDS = {"rung", "adds", "n_runs", "line", "body", "when", "mode", "pusher", "part"}  # columns of names and counts
 DIGITS = 1e-8  # relative: data are written with nine digits
+
+
+@pytest.fixture(autouse=True)
+def _no_figures_left() -> Iterator[None]:
+    yield
+    plt.close("all")
 
 
 def csv(path: Path, key: str) -> pd.DataFrame:
@@ -106,6 +114,27 @@ def made(result: Audit, *costs: tuple[str, float, float, float]) -> Audit:
     return replace(result, ladder=(result.ladder[0], *rungs))
 
 
+def shown_span(audit: Audit) -> tuple[float, float, float]:
+    """Ends of the ladder's axis, and the length of all bars together, all in the picture's unit."""
+    axes = ladder(audit).axes[0]
+    ends = [end for bar in axes.patches for end in (bar.get_x(), bar.get_x() + bar.get_width())]
+    return (*axes.get_xlim(), max(ends) - min(ends))
+
+
+def test_the_waterfall_stays_legible(result: Audit) -> None:
+    """Endless whiskers and a goal far beyond all speeds do not squeeze the bars; what is needed is then said."""
+    wild = made(result, ("wild", -1e-4, -1.0, 1.0), ("single", -1e-4, -math.inf, math.inf))
+    low, high, bars = shown_span(wild)
+    assert (high - low) < 5.0 * bars
+    assert low < 0.0
+    far = replace(wild, scenario=result.scenario.replace(goal={"travel": 10.0}))
+    low, high, bars = shown_span(far)
+    assert (high - low) < 5.0 * bars
+    assert any("beyond this edge" in text.get_text() for text in ladder(far).axes[0].texts)
+    near = replace(wild, scenario=result.scenario.replace(goal={"travel": 0.0015}))
+    assert any(text.get_text() == "needed" for text in ladder(near).axes[0].texts)
+
+
 def test_the_largest_costs_in_words(result: Audit) -> None:
     """Three costs, the largest first, gains left out, and chance named where the interval holds nought."""
     audit = made(
@@ -119,6 +148,7 @@ def test_the_largest_costs_in_words(result: Audit) -> None:
     told = audit_words.cost_sentences(audit)
     assert [sentence.split(":")[0] for sentence in told] == ["Large", "Doubtful", "Small"]
     assert "300 µm/s slower (200 to 400 µm/s)" in told[0]
+    assert told[0].endswith(f"{3e-4 / audit.plan.travel.block_speed_m_s:.0%} of the planned speed.")
     assert ["chance" in sentence for sentence in told] == [False, True, False]
     assert audit_words.cost_sentences(made(result, ("gain", 5e-4, 4e-4, 6e-4))) == []
     assert "No rung of the ladder slows the block." in page(made(result, ("gain", 5e-4, 4e-4, 6e-4)))

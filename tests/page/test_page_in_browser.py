@@ -4,11 +4,16 @@ from __future__ import annotations
 
 import re
 from collections.abc import Iterator
+from dataclasses import replace
 from itertools import pairwise
 from pathlib import Path
 from typing import Any, NamedTuple
 
 import pytest
+
+import swarmpush
+from swarmpush import Audit
+from swarmpush.auditing.ladder import ASSUMPTIONS
 
 PHONE, LAPTOP = (390, 844), (1366, 768)
 PAPER = (680, 1000)  # A4 less margins of 15 mm, at 96 px per inch
@@ -82,10 +87,17 @@ def phone(browser: Any, path: Path) -> Iterator[Shown]:
     yield from opened(browser, path, PHONE, is_mobile=True, has_touch=True)
 
 
-@pytest.fixture
-def audit_on_laptop(browser: Any, audit_page: Path) -> Iterator[Shown]:
-    """The audit's report on a laptop."""
-    yield from opened(browser, audit_page, LAPTOP)
+@pytest.fixture(params=["short", "long"])
+def audit_on_laptop(
+    browser: Any, audit_page: Path, result: Audit, request: pytest.FixtureRequest, tmp_path: Path
+) -> Iterator[Shown]:
+    """The audit's report on a laptop, with the rungs of the scenario and with as many as there can be."""
+    path = audit_page
+    if request.param == "long":
+        first, *rungs = result.ladder
+        ladder = (first, *(rungs * 2)[: len(ASSUMPTIONS)], rungs[-1])
+        path = swarmpush.report(replace(result, ladder=ladder), tmp_path / "report.html")
+    yield from opened(browser, path, LAPTOP)
 
 
 def assert_fits(page: Any) -> None:
