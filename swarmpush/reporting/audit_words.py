@@ -7,7 +7,7 @@ from collections.abc import Mapping
 from dataclasses import fields, is_dataclass
 from typing import Any
 
-from swarmpush.auditing.audit import Audit, RungResult
+from swarmpush.auditing.audit import Audit
 from swarmpush.auditing.statistics import Estimate, mean_interval
 from swarmpush.demos import DEMOS, demo
 from swarmpush.dynamics.run import Run
@@ -124,14 +124,52 @@ def step_words(run: Run) -> str:
     return f"{for_people(steps.dt_s, 's')}, set by {steps.because}; {steps.iterations} solver iterations"
 
 
+def compared_words(audit: Audit) -> str:
+    """With which rung each one is compared, in a sentence."""
+    pairs = zip(audit.ladder[1:], audit.ladder, strict=False)
+    others = [rung.adds for rung, above in pairs if getattr(rung, "against", "") not in ("", above.rung)]
+    own = f"; for {' and '.join(others)} to geometry" if others else ""
+    return (
+        "Each rung makes one more thing real, with the same random numbers; its cost is the paired difference to the "
+        f"rung above it{own}."
+    )
+
+
 def restored_rows(audit: Audit) -> list[dict[str, str]]:
-    """The scenario as given but for one assumption, which holds again; nothing where the audit has no such runs."""
-    return [rung_row(rung) | {"name": f"without {rung.adds}"} for rung in _several(getattr(audit, "restored", None))]
+    """The scenario as given but for one assumption, which holds again, the largest gain first; or nothing."""
+    found = [(_change(one, "gain_m_s"), one) for one in _several(getattr(audit, "restored", None))]
+    return [
+        _compared(one, getattr(one, "statement", None) or f"without {one.adds}", gain)
+        for gain, one in sorted(found, key=lambda entry: -entry[0].mean)
+    ]
 
 
 def baseline_rows(audit: Audit) -> list[dict[str, str]]:
-    """What the crew is compared with; nothing where the audit has no such runs."""
-    return [rung_row(rung) | {"name": rung.adds} for rung in _several(getattr(audit, "baseline", None))]
+    """What the crew is compared with, and the lead of the scenario as given; or nothing."""
+    rows = []
+    for one in _several(getattr(audit, "baseline", None)):
+        lead = getattr(one, "lead_m_s", None)
+        if lead is None:  # a difference to the scenario as given is a lead with the other sign
+            cost = one.cost_m_s
+            lead = Estimate(-cost.mean, -cost.high, -cost.low, cost.n)
+        rows.append(_compared(one, getattr(one, "adds", "the same crew bouncing at random"), lead))
+    return rows
+
+
+def _change(one: Any, name: str) -> Estimate:
+    change: Estimate = getattr(one, name, None) or one.cost_m_s
+    return change
+
+
+def _compared(one: Any, name: str, change: Estimate) -> dict[str, str]:
+    arrival = one.arrival
+    return {
+        "name": name,
+        "speed": number(one.block_speed_m_s.mean, "m/s"),
+        "cost": signed(change.mean, "m/s"),
+        "interval": interval(change, "m/s"),
+        "arrived": f"{round(arrival.mean * arrival.n)} of {arrival.n}" if arrival else "",
+    }
 
 
 def demand_rows(audit: Audit) -> list[tuple[str, str]]:
@@ -192,8 +230,7 @@ def scenario_word(s: Scenario) -> str:
 
 def ladder_rows(audit: Audit) -> list[dict[str, str]]:
     """The rungs as text, those below geometry with a signed cost."""
-    return [rung_row(rung) | {"cost": _cost(rung)} for rung in audit.ladder]
-
-
-def _cost(rung: RungResult) -> str:
-    return "" if rung.cost_m_s is None else signed(rung.cost_m_s.mean, "m/s")
+    return [
+        rung_row(rung) | {"cost": "" if rung.cost_m_s is None else signed(rung.cost_m_s.mean, "m/s")}
+        for rung in audit.ladder
+    ]

@@ -259,9 +259,10 @@ def _draw_legs(axes: Axes, run: Run, scale: float) -> None:
 def ladder(audit: Audit) -> Figure:
     """A waterfall of block speed from geometry down to the scenario as given.
 
-    Every bar begins at the speed of the rung above it. Whiskers are the paired cost's interval; on the last bar, that
-    of the speed itself. They run out of the picture where they are much longer than the bars; the numbers stand above
-    the bars anyway. So do names, so that the picture is narrow enough for a telephone.
+    Every bar begins at the speed of the rung that it is compared with, mostly the one above it. Whiskers are the paired
+    cost's interval; on the last bar, that of the speed itself. They run out of the picture where they are much longer
+    than the bars; the numbers stand above the bars anyway. So do names, so that the picture is narrow enough for a
+    telephone.
     """
     first, *rungs = audit.ladder
     last = audit.ladder[-1]
@@ -272,9 +273,13 @@ def ladder(audit: Audit) -> Figure:
     promise = first.block_speed_m_s.mean
     rows: list[tuple[str, float, float, str, Estimate | None]]
     rows = [(f"geometry alone: {number(promise, 'm/s')}", 0.0, promise, PLANNED, None)]
-    for rung, before in zip(rungs, speeds, strict=False):
+    places = {rung.rung: k for k, rung in enumerate(audit.ladder)}
+    bases = [0]
+    for k, rung in enumerate(rungs):
         cost = rung.cost_m_s
         assert cost is not None
+        bases.append(places.get(getattr(rung, "against", ""), k))
+        before = speeds[bases[-1]]
         is_loss = cost.mean < 0.0
         label = f"+ {rung.adds}: {signed(cost.mean, 'm/s')} ({interval(cost, 'm/s')})"
         rows.append((label, before, cost.mean, BAD if is_loss else GOOD, cost))
@@ -301,9 +306,8 @@ def ladder(audit: Audit) -> Figure:
         if spread is not None and math.isfinite(spread.high - spread.low):
             reach = [[(spread.mean - spread.low) / scale], [(spread.high - spread.mean) / scale]]
             axes.errorbar((start + change) / scale, k, xerr=reach, color=INK, capsize=3, lw=1.2)
-        if k + 2 < len(rows):
-            end = (start + change) / scale
-            axes.plot([end, end], [k + 0.18, k + 0.82], color=AXIS, lw=0.8, ls=":")
+        if 0 < k < len(rows) - 1:
+            axes.plot([start / scale] * 2, [bases[k] + 0.18, k - 0.18], color=AXIS, lw=0.8, ls=":", zorder=0.5)
     axes.axvline(0.0, color=AXIS, lw=0.8)
     low, high = _shown_speeds(rows, needed)
     axes.set_xlim(low / scale, high / scale)

@@ -10,6 +10,7 @@ from collections.abc import Iterator
 from dataclasses import dataclass, replace
 from html.parser import HTMLParser
 from pathlib import Path
+from types import SimpleNamespace
 
 import matplotlib.pyplot as plt
 import numpy as np
@@ -94,14 +95,16 @@ def test_a_file_in_the_way(run: Run, tmp_path: Path) -> None:
 
 
 def test_the_waterfall_goes_down_from_geometry(result: Audit) -> None:
-    """Each bar begins where the one above it ends, the last one is the speed of the scenario as given."""
+    """Each bar begins where the rung ends that it is compared with; the last is the speed of the scenario as given."""
     axes = ladder(result).axes[0]
     spans = [(bar.get_x(), bar.get_x() + bar.get_width()) for bar in axes.patches]
     speeds = [rung.block_speed_m_s.mean for rung in result.ladder]
     assert len(spans) == len(speeds) + 1
     ends = np.array([span[1] for span in spans[:-1]])
     starts = np.array([span[0] for span in spans[1:-1]])
-    np.testing.assert_allclose(starts, ends[:-1], rtol=1e-9, atol=1e-12)
+    names = [rung.rung for rung in result.ladder]
+    against = [getattr(rung, "against", "") or names[k] for k, rung in enumerate(result.ladder[1:])]
+    np.testing.assert_allclose(starts, [ends[names.index(name)] for name in against], rtol=1e-9, atol=1e-12)
     np.testing.assert_allclose(ends / ends[0], np.array(speeds) / speeds[0], rtol=1e-9, atol=1e-12)
     assert spans[-1] == pytest.approx((0.0, ends[-1]))
     assert len(axes.containers) >= len(speeds)  # whiskers, on all but the promise
@@ -112,6 +115,18 @@ def made(result: Audit, *costs: tuple[str, float, float, float]) -> Audit:
     rungs = [RungResult(adds, adds, Estimate(1e-3, 1e-3, 1e-3, 3), Estimate(c, low, high, 3), Estimate(0, 0, 1, 3))
              for adds, c, low, high in costs]  # fmt: skip
     return replace(result, ladder=(result.ladder[0], *rungs))
+
+
+def test_a_rung_beside_the_others(result: Audit) -> None:
+    """A rung that names another one than the rung above begins at that one's speed, and the page says so."""
+    first, second, third, *_ = result.ladder
+    beside = SimpleNamespace(**vars(third) | {"against": first.rung})
+    audit = replace(result, ladder=(first, second, beside))
+    bar = ladder(audit).axes[0].patches[2]
+    promise = ladder(audit).axes[0].patches[0].get_width()
+    assert bar.get_x() == pytest.approx(promise)
+    assert audit_words.compared_words(audit).endswith(f"; for {third.adds} to geometry.")
+    assert audit_words.compared_words(replace(result, ladder=(first, second))).endswith("rung above it.")
 
 
 def shown_span(audit: Audit) -> tuple[float, float, float]:
@@ -172,11 +187,23 @@ def test_parts_that_an_audit_may_have(result: Audit) -> None:
     assert not any(heading in text for heading in headings)
     (rung,) = made(result, ("<i>crowds</i>", -3e-4, -4e-4, -2e-4)).ladder[1:]
     full = replace(result)
-    for name, value in {"restored": (rung,), "baseline": rung, "demands": (Demand("<b>arrival", 0.8),)}.items():
+    granted = SimpleNamespace(
+        statement="nobody <i>errs</i>",
+        block_speed_m_s=rung.block_speed_m_s,
+        gain_m_s=Estimate(5e-4, 4e-4, 6e-4, 3),
+        arrival=rung.arrival,
+    )
+    parts = (rung, granted)
+    for name, value in {"restored": parts, "baseline": rung, "demands": (Demand("<b>arrival", 0.8),)}.items():
         object.__setattr__(full, name, value)
     text = page(full)
     for heading in headings:
         assert heading in text
+    assert [row["cost"] for row in audit_words.restored_rows(full)] == ["+500 µm/s", "-300 µm/s"]
+    assert [row["cost"] for row in audit_words.baseline_rows(full)] == [
+        "+300 µm/s"
+    ]  # the lead of the scenario as given
+    assert "nobody &lt;i&gt;errs&lt;/i&gt;" in text
     assert "without &lt;i&gt;crowds&lt;/i&gt;" in text
     assert "&lt;b&gt;arrival" in text
     assert "share needed: 0.8" in text
