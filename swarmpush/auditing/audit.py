@@ -82,6 +82,11 @@ class Audit:
         """The runs of the scenario as given."""
         return self.replicates[self.replicates["rung"] == climb(self.scenario)[-1].key]
 
+    def _repr_html_(self) -> str:
+        from swarmpush.reporting.notebook import audit_html
+
+        return audit_html(self)
+
     @property
     def answer(self) -> str:
         """Whether the block arrives, in one sentence."""
@@ -103,11 +108,6 @@ class Audit:
             assert cost is not None
             text += f", and what costs most is {worst.adds} ({for_people(cost.mean, 'm/s')})"
         return text + "."
-
-    def _repr_html_(self) -> str:
-        from swarmpush.reporting.notebook import audit_html
-
-        return audit_html(self)
 
     def to_dict(self, files: dict[str, str] | None = None) -> dict[str, Any]:
         """The audit as plain values for JSON; undefined values are None."""
