@@ -128,7 +128,7 @@ def compared_words(audit: Audit) -> str:
     """With which rung each one is compared, in a sentence."""
     pairs = zip(audit.ladder[1:], audit.ladder, strict=False)
     others = [rung.adds for rung, above in pairs if getattr(rung, "against", "") not in ("", above.rung)]
-    own = f"; for {' and '.join(others)} to geometry" if others else ""
+    own = f"; for {' and '.join(others)} it is the one to geometry" if others else ""
     return (
         "Each rung makes one more thing real, with the same random numbers; its cost is the paired difference to the "
         f"rung above it{own}."

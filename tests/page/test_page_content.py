@@ -125,7 +125,7 @@ def test_a_rung_beside_the_others(result: Audit) -> None:
     bar = ladder(audit).axes[0].patches[2]
     promise = ladder(audit).axes[0].patches[0].get_width()
     assert bar.get_x() == pytest.approx(promise)
-    assert audit_words.compared_words(audit).endswith(f"; for {third.adds} to geometry.")
+    assert audit_words.compared_words(audit).endswith(f"; for {third.adds} it is the one to geometry.")
     assert audit_words.compared_words(replace(result, ladder=(first, second))).endswith("rung above it.")
 
 
