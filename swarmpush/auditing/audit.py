@@ -82,6 +82,11 @@ class Audit:
         """The runs of the scenario as given."""
         return self.replicates[self.replicates["rung"] == climb(self.scenario)[-1].key]
 
+    def _repr_html_(self) -> str:
+        from swarmpush.reporting.notebook import audit_html
+
+        return audit_html(self)
+
     @property
     def answer(self) -> str:
         """Whether the block arrives, in one sentence."""

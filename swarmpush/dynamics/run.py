@@ -175,6 +175,11 @@ class Run:
             **{f"cause_{name}": share for name, share in self.causes.items()},
         }
 
+    def _repr_html_(self) -> str:
+        from swarmpush.reporting.notebook import run_html
+
+        return run_html(self)
+
     def to_dict(self, files: dict[str, str] | None = None) -> dict[str, Any]:
         """The run as plain values for JSON; undefined values are None."""
         strikes = self.strikes

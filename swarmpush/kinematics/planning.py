@@ -52,6 +52,11 @@ class Plan:
         """The lap that most starts fall into; None when there is none."""
         return self.laps[0] if self.laps else None
 
+    def _repr_html_(self) -> str:
+        from swarmpush.reporting.notebook import plan_html
+
+        return plan_html(self)
+
     def to_dict(self) -> dict[str, Any]:
         """The plan as plain values for JSON; infinite values are None."""
         from swarmpush.output import plain, provenance

@@ -12,10 +12,9 @@ from swarmpush.auditing.audit import Audit
 from swarmpush.auditing.converge import Convergence
 from swarmpush.cautions import CAUTIONS
 from swarmpush.dynamics.run import Run
-from swarmpush.kinematics.lap_loss import LapsKept
-from swarmpush.kinematics.noise_budget import Limit, NoiseBudget
 from swarmpush.kinematics.planning import Plan
 from swarmpush.quantities import for_people
+from swarmpush.reporting.plan_words import count, followed, plan_answer, plan_facts
 from swarmpush.reporting.run_words import book_rows, cause_rows, energy_rows, run_answer, state_rows
 from swarmpush.reporting.wording import finding_row, interval, mean_and_error, number, rung_row
 
@@ -43,13 +42,13 @@ def _plain(text: str) -> str:
 
 def show_plan(plan: Plan) -> None:
     """The point world's answer: laps and what they survive, starts, force, forecast, risks, hardware."""
-    _head(plan.scenario.about.name, _plan_answer(plan))
+    _head(plan.scenario.about.name, plan_answer(plan))
     if plan.laps:
         _show_laps(plan)
     facts = Table(box=None, padding=(0, 2, 0, 0), show_header=False)
     facts.add_column(style="bold", no_wrap=True)
     facts.add_column()
-    for name, text in _plan_facts(plan).items():
+    for name, text in plan_facts(plan).items():
         facts.add_row(name, _plain(text))
     _console.print(facts)
     _console.print()
@@ -59,23 +58,6 @@ def show_plan(plan: Plan) -> None:
         table.add_row(regime.name, f"{regime.value:.3g}", risk + _plain(regime.meaning))
     _console.print(table)
     _caution()
-
-
-def _plan_answer(plan: Plan) -> str:
-    s, travel = plan.scenario, plan.travel
-    if math.isfinite(travel.time_to_goal_s):
-        by = f"{travel.strikes_to_goal:.0f} strikes of {for_people(travel.nudge_m, 'm')}"
-        if travel.strikes_to_goal < 1.0:
-            by = f"pushers that lean on it for {travel.leaning_share:.0%} of their time"
-        lead = "In time" if travel.time_to_goal_s <= s.goal.time_limit else "Too late"
-        return (
-            f"{lead}: the plan promises {for_people(s.goal.travel, 'm')} in {for_people(travel.time_to_goal_s, 's')} "
-            f"(limit {for_people(s.goal.time_limit, 's')}), at {for_people(travel.block_speed_m_s, 'm/s')} by {by}."
-        )
-    if travel.block_speed_m_s < 0.0:
-        back = for_people(-travel.block_speed_m_s, "m/s")
-        return f"No arrival: strikes on the front drive the block back at {back}."
-    return "No arrival: no strike moves the block."
 
 
 def _show_laps(plan: Plan) -> None:
@@ -88,7 +70,7 @@ def _show_laps(plan: Plan) -> None:
             for_people(lap.time_s, "s"),
             ", ".join(f"{m.real:.3f}" if abs(m.imag) < 1e-12 else f"{m:.3f}" for m in lap.multipliers),
             f"{for_people(low, 'rad')} to {for_people(high, 'rad')}",
-            f"{_count(theory)} by theory" + "".join(map(_followed, plan.laps_to_drift_out_mc[k : k + 1])),
+            f"{count(theory)} by theory" + "".join(map(followed, plan.laps_to_drift_out_mc[k : k + 1])),
         )
     _console.print(table)
     for k, lap in enumerate(plan.laps):
@@ -100,64 +82,6 @@ def _show_laps(plan: Plan) -> None:
             f"{plan.scenario.trial.confidence:.0%} interval"
         )
     _console.print()
-
-
-def _followed(kept: LapsKept) -> str:
-    if kept.n == 0:
-        return ""
-    return f"\n{_count(kept.mean)} followed\n({_count(kept.low)} to {_count(kept.high)})"
-
-
-def _count(laps: float) -> str:
-    if not math.isfinite(laps):
-        return "-" if math.isnan(laps) else "ever"
-    return f"{laps:.0f}" if laps >= 100.0 else f"{laps:.2g}"
-
-
-def _plan_facts(plan: Plan) -> dict[str, str]:
-    """What a plan says in a sentence each, by name."""
-    capture, force = plan.capture, plan.force
-    shares = {"caught by a lap": capture.captured, **capture.lost, "no closed lap within the budget": capture.undecided}
-    facts = {"starts": ", ".join(f"{share:.0%} {what}" for what, share in shares.items() if share >= 0.005)}
-    if force.floor_friction_N > 0.0:
-        facts["force"] = _force_words(plan)
-    if plan.noise_budget:
-        facts["noise"] = _noise_words(plan.noise_budget)
-    facts["forecast"] = plan.travel.basis
-    if plan.left_out:
-        facts["left out"] = "; ".join(plan.left_out)
-    facts["kit"] = ", ".join(plan.kit)
-    return facts
-
-
-def _force_words(plan: Plan) -> str:
-    force, n = plan.force, len(plan.scenario.blocks)
-    what = "the block" if n == 1 else f"the {n} blocks"
-    slope = ""
-    if force.slope_N != 0.0:
-        slope = f", the slope pulls {for_people(abs(force.slope_N), 'N')} {'back' if force.slope_N > 0.0 else 'ahead'}"
-    return (
-        f"one pusher {for_people(force.stall_N, 'N')}, the floor holds {what} with "
-        f"{for_people(force.floor_friction_N, 'N')}{slope}: {force.pushers_to_move:.2f} pushers to move {what} "
-        f"({force.pushers_to_move_low:.2f} with half the friction, {force.pushers_to_move_high:.2f} with twice), "
-        f"of {plan.scenario.pushers.count}"
-    )
-
-
-def _noise_words(budget: NoiseBudget) -> str:
-    def limit(what: str, x: Limit, unit: str) -> str:
-        if x.value == 0.0:
-            return f"no {what} at all (here {for_people(x.given, 'rad')}{unit})"
-        if math.isinf(x.value):
-            return f"any {what}"
-        low, high, given = (for_people(value, "rad") for value in (x.low, x.high, x.given))
-        return f"a {what} up to {for_people(x.value, 'rad')}{unit} ({low} to {high}; here {given})"
-
-    turn = limit("turn error", budget.turn_sd_rad, "")
-    diffusion = limit("heading diffusion", budget.heading_diffusion_rad_per_sqrt_s, "/sqrt(s)")
-    if budget.turn_sd_rad.value == budget.heading_diffusion_rad_per_sqrt_s.value == 0.0:
-        return f"without turn error or heading diffusion less than {budget.share:.0%} keep lap 1 for {budget.laps} laps"
-    return f"{budget.share:.0%} of the pushers keep lap 1 for {budget.laps} laps with {turn}, or with {diffusion}"
 
 
 def show_run(run: Run) -> None:

@@ -20,6 +20,7 @@ from matplotlib.patches import Polygon
 from matplotlib.ticker import MaxNLocator
 
 from swarmpush.auditing.audit import Audit
+from swarmpush.auditing.statistics import Estimate
 from swarmpush.dynamics.run import Run
 from swarmpush.dynamics.states import STATES
 from swarmpush.geometry import block_corners, channel_corners, outward_normal, post_corners
@@ -27,10 +28,14 @@ from swarmpush.kinematics.forecast import push_force
 from swarmpush.kinematics.planning import Plan
 from swarmpush.quantities import prefix_for
 from swarmpush.reporting.run_words import energy_parts, state_shares
-from swarmpush.reporting.wording import STATE_WORDS
+from swarmpush.reporting.wording import STATE_WORDS, interval, number, signed
 from swarmpush.scenario import Pushers, Scenario
 
-PLANNED, MEASURED, QUIET, GOOD, BAD = "#b3261e", "#1f4e79", "#9aa5b1", "#2e7d32", "#b3261e"
+# The colours are those of M. Okabe and K. Ito, "Color Universal Design" (2008), which remain distinct with the common
+# kinds of colour blindness; greys are for what is not compared.
+ORANGE, SKY, GREEN, YELLOW = "#E69F00", "#56B4E9", "#009E73", "#F0E442"
+BLUE, VERMILION, PURPLE = "#0072B2", "#D55E00", "#CC79A7"
+PLANNED, MEASURED, QUIET, GOOD, BAD = VERMILION, BLUE, "#9aa5b1", GREEN, ORANGE
 INK, AXIS, PALE = "#22303c", "#5f6b76", "#e3e7eb"
 STYLE: dict[Any, Any] = {
     "font.family": "DejaVu Sans",
@@ -44,8 +49,9 @@ STYLE: dict[Any, Any] = {
     "svg.fonttype": "none",
     "svg.hashsalt": "swarmpush",  # the same figure gives the same file
 }
-STATE_COLOURS = dict(zip(STATES, ("#22303c", "#8a5a00", "#2e7d32", "#b3261e", "#c9d1d9"), strict=True))
+STATE_COLOURS = dict(zip(STATES, ("#000000", ORANGE, GREEN, VERMILION, "#c9d1d9"), strict=True))
 BINS = 80  # of a run's time in which shares of states are averaged for the picture
+MOST_BEYOND = 2.0  # lengths of the bars by which the ladder's picture is made longer to show the speed needed
 MAX_LEGS = 150  # runs from bump to bump drawn behind the lap
 
 
@@ -218,47 +224,118 @@ def _draw_centres(axes: Axes, s: Scenario, scale: float) -> None:
             axes.plot(x, y, ls="", marker=marker, ms=6, color=INK, mfc="white", zorder=4, label=label)
 
 
-def _draw_legs(axes: Axes, run: Run, scale: float) -> None:
-    """Straight lines from bump to bump, shifted by how far the block has come: completed laps and all else."""
+def bump_legs(run: Run) -> list[tuple[str, np.ndarray]]:
+    """Straight lines from bump to bump, shifted by how far the block has come: other runs, and completed laps.
+
+    Returns:
+        name and an (n, 2, 2) array of first and last points, m, for each of the two.
+    """
     bumps = run.bumps
     shift = np.interp(bumps["t_on_s"], run.block["t_s"], run.block["x_m"] - run.block["x_m"].iloc[0])
-    x, y = (bumps["x_m"].to_numpy() - shift) / scale, bumps["y_m"].to_numpy() / scale
+    places = np.column_stack([bumps["x_m"].to_numpy() - shift, bumps["y_m"].to_numpy()])
     t, pusher = bumps["t_on_s"].to_numpy(), bumps["pusher"].to_numpy()
+    x = places[:, 0]
     same = np.flatnonzero((pusher[1:] == pusher[:-1]) & np.isfinite(x[1:]) & np.isfinite(x[:-1]))
     in_lap = np.zeros(len(same), dtype=bool)
     for lap in run.laps.itertuples():
         in_lap |= (pusher[same] == lap.pusher) & (t[same] >= lap.t_start_s) & (t[same + 1] <= lap.t_end_s)
-    for chosen, colour, width, label in (
-        (same[~in_lap][-MAX_LEGS:], QUIET, 0.5, "other runs from bump to bump"),
-        (same[in_lap][-MAX_LEGS:], MEASURED, 0.7, "completed laps"),
-    ):
-        if len(chosen):
-            gap = np.full(len(chosen), np.nan)
-            xs = np.column_stack([x[chosen], x[chosen + 1], gap]).ravel()
-            ys = np.column_stack([y[chosen], y[chosen + 1], gap]).ravel()
-            axes.plot(xs, ys, color=colour, lw=width, alpha=0.8, zorder=1 + (label == "completed laps"), label=label)
+    return [
+        (name, np.stack([places[chosen], places[chosen + 1]], axis=1))
+        for name, chosen in (
+            ("other runs from bump to bump", same[~in_lap][-MAX_LEGS:]),
+            ("completed laps", same[in_lap][-MAX_LEGS:]),
+        )
+    ]
+
+
+def _draw_legs(axes: Axes, run: Run, scale: float) -> None:
+    for k, (name, legs) in enumerate(bump_legs(run)):
+        if len(legs):
+            gaps = np.full((len(legs), 1, 2), np.nan)
+            points = np.concatenate([legs / scale, gaps], axis=1).reshape(-1, 2)
+            axes.plot(*points.T, color=(QUIET, MEASURED)[k], lw=(0.5, 0.7)[k], alpha=0.8, zorder=1 + k, label=name)
 
 
 def ladder(audit: Audit) -> Figure:
-    """Block speed on each rung, with intervals, against the speed that the goal demands."""
-    rungs = audit.ladder
+    """A waterfall of block speed from geometry down to the scenario as given.
+
+    Every bar begins at the speed of the rung that it is compared with, mostly the one above it. Whiskers are the paired
+    cost's interval; on the last bar, that of the speed itself. They run out of the picture where they are much longer
+    than the bars; the numbers stand above the bars anyway. So do names, so that the picture is narrow enough for a
+    telephone.
+    """
+    first, *rungs = audit.ladder
+    last = audit.ladder[-1]
     needed = audit.scenario.goal.travel / audit.scenario.goal.time_limit
-    scale, prefix = prefix_for(max(needed, *(r.block_speed_m_s.mean for r in rungs)))
-    figure, axes = plt.subplots(figsize=(8.4, 0.55 + 0.42 * len(rungs)))
+    speeds = [rung.block_speed_m_s.mean for rung in audit.ladder]
+    scale, prefix = prefix_for(max(abs(speed) for speed in (needed, *speeds) if math.isfinite(speed)))
+    figure, axes = plt.subplots(figsize=(5.8, 0.5 + 0.37 * (len(rungs) + 2)))
+    promise = first.block_speed_m_s.mean
+    rows: list[tuple[str, float, float, str, Estimate | None]]
+    rows = [(f"geometry alone: {number(promise, 'm/s')}", 0.0, promise, PLANNED, None)]
+    places = {rung.rung: k for k, rung in enumerate(audit.ladder)}
+    bases = [0]
     for k, rung in enumerate(rungs):
-        speed = rung.block_speed_m_s
-        colour = PLANNED if k == 0 else MEASURED
-        axes.barh(k, speed.mean / scale, height=0.55, color=colour, alpha=0.85)
-        if k:
-            reach = [[(speed.mean - speed.low) / scale], [(speed.high - speed.mean) / scale]]
-            axes.errorbar(speed.mean / scale, k, xerr=reach, color=INK, capsize=3, lw=1.2)
-    axes.axvline(needed / scale, color=INK, ls="--", lw=1)
-    axes.text(needed / scale, -0.62, "needed", ha="center", va="bottom", color=INK, fontsize=8)
-    names = ["geometry alone", *(f"+ {rung.adds}" for rung in rungs[1:])]
-    axes.set_yticks(range(len(rungs)), names)
-    axes.invert_yaxis()
+        cost = rung.cost_m_s
+        assert cost is not None
+        bases.append(places.get(getattr(rung, "against", ""), k))
+        before = speeds[bases[-1]]
+        is_loss = cost.mean < 0.0
+        label = f"+ {rung.adds}: {signed(cost.mean, 'm/s')} ({interval(cost, 'm/s')})"
+        rows.append((label, before, cost.mean, BAD if is_loss else GOOD, cost))
+    label = f"the scenario as given: {number(last.block_speed_m_s.mean, 'm/s')}"
+    rows.append((label, 0.0, last.block_speed_m_s.mean, MEASURED, last.block_speed_m_s))
+    for k, (label, start, change, colour, spread) in enumerate(rows):
+        axes.annotate(
+            label,
+            (0.0, k - 0.22),
+            (2, 0),
+            xycoords=axes.get_yaxis_transform(),
+            textcoords="offset points",
+            va="bottom",
+            color=INK,
+            fontsize=8.5,
+            bbox={"facecolor": "white", "edgecolor": "none", "pad": 0.5},
+        )
+        if not math.isfinite(start + change):
+            continue
+        hatch = "////" if colour is GOOD and spread is not None else None  # a gain differs from a loss without colour
+        axes.barh(
+            k, change / scale, left=start / scale, height=0.36, color=colour, hatch=hatch, edgecolor="white", lw=0
+        )
+        if spread is not None and math.isfinite(spread.high - spread.low):
+            reach = [[(spread.mean - spread.low) / scale], [(spread.high - spread.mean) / scale]]
+            axes.errorbar((start + change) / scale, k, xerr=reach, color=INK, capsize=3, lw=1.2)
+        if 0 < k < len(rows) - 1:
+            axes.plot([start / scale] * 2, [bases[k] + 0.18, k - 0.18], color=AXIS, lw=0.8, ls=":", zorder=0.5)
+    axes.axvline(0.0, color=AXIS, lw=0.8)
+    low, high = _shown_speeds(rows, needed)
+    axes.set_xlim(low / scale, high / scale)
+    if needed <= high:
+        axes.axvline(needed / scale, color=INK, ls="--", lw=1)
+        axes.text(needed / scale, -0.62, "needed", ha="center", va="bottom", color=INK, fontsize=8)
+    else:
+        words = f"needed: {number(needed, 'm/s')}, beyond this edge \N{RIGHTWARDS ARROW}"
+        axes.text(high / scale, -0.62, words, ha="right", va="bottom", color=INK, fontsize=8)
+    axes.set_ylim(len(rows) - 0.6, -0.62)
+    axes.set_yticks([])
+    axes.spines["left"].set_visible(False)
     axes.set_xlabel(f"block speed, {prefix}m/s")
     return figure
+
+
+def _shown_speeds(rows: list[tuple[str, float, float, str, Estimate | None]], needed: float) -> tuple[float, float]:
+    """The stretch of speeds worth showing: all bars; whiskers and the speed needed as far as bars remain legible."""
+    ends = [end for _, start, change, *_ in rows for end in (start, start + change) if math.isfinite(end)]
+    tips = [start + tip for _, start, _, _, spread in rows if spread for tip in (spread.low, spread.high)]
+    tips = [tip for tip in tips if math.isfinite(tip)]
+    low, high = min(0.0, *ends), max(0.0, *ends)
+    length = high - low or needed
+    wanted = [needed] if needed <= high + MOST_BEYOND * length else []
+    left = max(min([low, *tips]), low - length)
+    right = max([min(max([high, *tips]), high + length), *wanted])
+    margin = 0.03 * (right - left)
+    return left - margin if left < 0.0 else 0.0, right + margin
 
 
 def impulses(run: Run, planned_Ns: float | None = None) -> Figure:
@@ -314,8 +391,8 @@ def block_path(run: Run, planned_speed_m_s: float | None = None, ends: Any = Non
     return figure
 
 
-def books(run: Run) -> Figure:
-    """Impulse on the block along the channel, by giver."""
+def book_entries(run: Run) -> list[tuple[str, float]]:
+    """Impulse on the block along the channel by giver, N s, and the change of its momentum."""
     account = run.books
     entries = [
         ("pushers", account.pushers[0]),
@@ -327,8 +404,12 @@ def books(run: Run) -> Figure:
         ("change of momentum", account.change[0]),
     ]
     # what the scenario does not have gets no line
-    entries = [(name, value) for name, value in entries if value != 0.0 or name in ("pushers", "change of momentum")]
-    return _account(entries, "impulse on the block along the channel", "N s")
+    return [(name, value) for name, value in entries if value != 0.0 or name in ("pushers", "change of momentum")]
+
+
+def books(run: Run) -> Figure:
+    """Impulse on the block along the channel, by giver."""
+    return _account(book_entries(run), "impulse on the block along the channel", "N s")
 
 
 def energy(run: Run) -> Figure:
@@ -374,7 +455,7 @@ def leaning(run: Run) -> Figure:
     figure, axes = plt.subplots(figsize=(8.4, 2.2))
     most = block["n_leaning_most"].to_numpy()
     axes.fill_between(t, most, step="pre", color=MEASURED, alpha=0.2, lw=0, label="most at once")
-    axes.plot(t, _rolling(block["n_leaning"].to_numpy()), color=MEASURED, lw=1.2, label="mean")
+    axes.plot(t, rolling(block["n_leaning"].to_numpy()), color=MEASURED, lw=1.2, label="mean")
     top = max(1.0, float(most.max()))
     if is_floor_shown(run):
         needed = pushers_needed(run, t)
@@ -392,7 +473,7 @@ def leaning(run: Run) -> Figure:
     return figure
 
 
-def _rolling(values: np.ndarray) -> np.ndarray:
+def rolling(values: np.ndarray) -> np.ndarray:
     """Mean over an eightieth of the run about each row."""
     width = max(1, len(values) // BINS)
     weights = np.ones(width)
@@ -409,7 +490,7 @@ def states(run: Run) -> Figure:
     figure, axes = plt.subplots(figsize=(8.4, 2.4))
     axes.stackplot(
         shares.index,
-        *(100.0 * _rolling(shares[name].to_numpy()) for name in found),
+        *(100.0 * rolling(shares[name].to_numpy()) for name in found),
         colors=[STATE_COLOURS[name] for name in found],
         labels=[STATE_WORDS[name] for name in found],
         alpha=0.85,

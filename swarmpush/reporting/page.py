@@ -1,4 +1,4 @@
-"""The report: one HTML file that needs nothing else."""
+"""The report: one HTML file that needs nothing else, with the data of its figures beside it."""
 
 from __future__ import annotations
 
@@ -11,38 +11,59 @@ from swarmpush.auditing.audit import Audit, load_audit
 from swarmpush.cautions import CAUTIONS
 from swarmpush.dynamics.run import Run, load_run
 from swarmpush.kinematics.planning import Plan, plan
-from swarmpush.output import provenance, write_text
+from swarmpush.output import OutputError, provenance, write_text
 from swarmpush.quantities import for_people
 from swarmpush.reporting import drawing
-from swarmpush.reporting.drawing import as_svg
-from swarmpush.reporting.run_words import book_rows, cause_rows, energy_rows, run_answer, state_rows
-from swarmpush.reporting.wording import finding_row, interval, number, rung_row
+from swarmpush.reporting.audit_words import (
+    arrival_rows,
+    audited_cause_rows,
+    baseline_rows,
+    command_of,
+    compared_words,
+    cost_sentences,
+    demand_rows,
+    ladder_rows,
+    numeric_rows,
+    restored_rows,
+    step_words,
+)
+from swarmpush.reporting.figure_data import as_csv
+from swarmpush.reporting.figures import FOLDER, audit_exhibits, run_exhibits
+from swarmpush.reporting.plan_words import force_words, noise_words, plan_answer
+from swarmpush.reporting.run_words import book_rows, cause_rows, energy_rows, main_reason, run_answer, state_rows
+from swarmpush.reporting.wording import finding_row
 
 
 def report(result: Audit | Run, path: str | Path) -> Path:
-    """Write a report of an audit or of a single run.
+    """Write a report of an audit or of a single run, and beside it the data of its figures.
 
     Arguments:
-        result: what to report. path: the HTML file to write; replaced if it is there.
+        result: what to report. path: the HTML file to write; replaced if it is there. The folder `figures` beside it
+            is made if need be, and gets a CSV file for each figure.
 
     Returns:
         The path.
 
     Raises:
-        OutputError: when it cannot be written.
+        OutputError: when something cannot be written.
     """
     path = Path(path)
-    write_text(path, page(result))
+    content = _content(result)
+    text = _render(content)
+    folder = path.parent / FOLDER
+    try:
+        folder.mkdir(exist_ok=True)
+    except OSError as error:
+        raise OutputError(f"{folder} cannot be made ({error.strerror}); write the report to another folder") from None
+    for exhibit in content["figures"].values():
+        write_text(path.parent / exhibit.file, as_csv(exhibit.data))
+    write_text(path, text)
     return path
 
 
 def page(result: Audit | Run) -> str:
-    """The report as HTML text."""
-    content = _audit_content(result) if isinstance(result, Audit) else _run_content(result, plan(result.scenario))
-    environment = Environment(
-        loader=PackageLoader("swarmpush.reporting", "."), autoescape=True, undefined=StrictUndefined
-    )
-    return environment.get_template("page.html.jinja").render(content)
+    """The report as HTML text; its links to the figures' data lead to files that only `report` writes."""
+    return _render(_content(result))
 
 
 def load_result(folder: Path) -> Audit | Run:
@@ -60,30 +81,42 @@ def load_result(folder: Path) -> Audit | Run:
     return load_audit(folder)
 
 
-def _run_content(run: Run, planned: Plan, ends: Any = None) -> dict[str, Any]:
+def _render(content: dict[str, Any]) -> str:
+    environment = Environment(
+        loader=PackageLoader("swarmpush.reporting", "."),
+        autoescape=True,
+        undefined=StrictUndefined,
+        trim_blocks=True,
+        lstrip_blocks=True,
+    )
+    return environment.get_template("page.html.jinja").render(content)
+
+
+def _content(result: Audit | Run) -> dict[str, Any]:
+    if isinstance(result, Audit):
+        return _audit_content(result)
+    planned = plan(result.scenario)
+    return _run_content(result, planned) | {"figures": run_exhibits(result, planned)}
+
+
+def _run_content(run: Run, planned: Plan) -> dict[str, Any]:
     s = run.scenario
-    travel = planned.travel
+    budget = planned.noise_budget
     return {
         "name": s.about.name,
         "kind": "run",
         "note": s.about.note,
         "answer": run_answer(run),
         "lap_words": _lap_words(planned, run),
-        "left_out": "; ".join(planned.left_out),
+        "force_words": force_words(planned) if planned.force.floor_friction_N > 0.0 else "",
+        "noise_words": noise_words(budget) if budget else "",
+        "left_out": planned.left_out,
         "has_needed": drawing.is_floor_shown(run),
-        "ladder": [],
-        "verdicts": [],
-        "pictures": {
-            "lap": as_svg(drawing.lap_over_runs, planned, run),
-            "end": as_svg(drawing.end_of_run, run),
-            "path": as_svg(drawing.block_path, run, travel.block_speed_m_s, ends),
-            "impulses": as_svg(drawing.impulses, run, travel.strike_impulse_Ns),
-            "books": as_svg(drawing.books, run),
-            "energy": as_svg(drawing.energy, run),
-            "leaning": as_svg(drawing.leaning, run),
-            "states": as_svg(drawing.states, run),
-        },
-        "books": book_rows(run),
+        "plan_answer": plan_answer(planned),
+        "basis": planned.travel.basis,
+        "is_audit": False,
+        "reason": "" if run.has_arrived else main_reason(run),
+        "books": [("time step", step_words(run)), *book_rows(run)],
         "energy": energy_rows(run),
         "causes": cause_rows(run),
         "states": state_rows(run),
@@ -98,28 +131,34 @@ def _run_content(run: Run, planned: Plan, ends: Any = None) -> dict[str, Any]:
             for r in planned.regime
         ],
         "provenance": _provenance(run),
+        "command": command_of(run),
         "cautions": CAUTIONS,
     }
 
 
 def _audit_content(audit: Audit) -> dict[str, Any]:
-    s = audit.scenario
-    change = audit.numerics.change_m_s
-    content = _run_content(audit.sample, audit.plan, audit.as_given)
-    content["pictures"]["ladder"] = as_svg(drawing.ladder, audit)
-    content["books"][0] = ("largest residual of all runs", f"{audit.numerics.residual_rel:.1e} of all contact impulse")
-    content["provenance"].insert(
-        1,
-        (
-            "half the step changes the speed by",
-            f"{number(change.mean, 'm/s')} ({interval(change, 'm/s')}, {change.n} pairs; chance included)",
-        ),
-    )
+    s, run = audit.scenario, audit.sample
+    content = _run_content(run, audit.plan)
+    seeds = ", ".join(str(seed) for seed in audit.as_given["seed"])
+    of_seeds = [("seed of the audit", str(s.trial.seed)), ("seeds of its runs", seeds)]
     return content | {
         "kind": "audit",
+        "is_audit": True,
+        "figures": audit_exhibits(audit),
         "answer": audit.answer,
-        "ladder": [rung_row(r) for r in audit.ladder],
+        "costs": cost_sentences(audit),
+        "ladder": ladder_rows(audit),
+        "compared": compared_words(audit),
+        "restored": restored_rows(audit),
+        "baseline": baseline_rows(audit),
+        "demands": demand_rows(audit),
         "verdicts": [finding_row(f) for f in audit.verdicts],
+        "arrival": arrival_rows(audit),
+        "causes": audited_cause_rows(audit),
+        "numerics": numeric_rows(audit),
+        "books": book_rows(run),
+        "provenance": of_seeds + content["provenance"],
+        "command": command_of(audit),
         "n_runs": audit.arrival.n,
         "confidence": f"{s.trial.confidence:.0%}",
         "tolerance": f"{s.trial.tolerance:.0%}",
@@ -141,11 +180,10 @@ def _lap_words(planned: Plan, run: Run) -> str:
 
 def _provenance(run: Run) -> list[tuple[str, str]]:
     origin = provenance(run.scenario, seed=run.seed)
-    steps = run.steps
     return [
-        ("time step", f"{for_people(steps.dt_s, 's')}, set by {steps.because}; {steps.iterations} solver iterations"),
-        ("contact laws", "Newton's restitution and Coulomb's friction for each pair of surfaces"),
-        ("seed of the run shown", str(origin["seed"])),
         ("scenario hash", origin["scenario_hash"]),
+        ("seed of the run shown", str(origin["seed"])),
+        ("contact laws", "Newton's restitution and Coulomb's friction for each pair of surfaces"),
         ("versions", ", ".join(f"{name} {number}" for name, number in origin["versions"].items())),
+        ("platform", origin["platform"]),
     ]

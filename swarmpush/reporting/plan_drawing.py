@@ -22,12 +22,23 @@ from swarmpush.kinematics.laps import BUDGET
 from swarmpush.kinematics.planning import Plan
 from swarmpush.kinematics.settling import ATTRACTING, NEUTRAL, REPELLING, short_name
 from swarmpush.quantities import prefix_for
-from swarmpush.reporting.drawing import AXIS, GOOD, INK, MEASURED, PALE, PLANNED, QUIET, draw_rig
+from swarmpush.reporting.drawing import (
+    AXIS,
+    GOOD,
+    INK,
+    MEASURED,
+    ORANGE,
+    PALE,
+    PLANNED,
+    PURPLE,
+    QUIET,
+    draw_rig,
+)
 from swarmpush.vary import column_of, unit_at, value_at
 
-OCHRE, SAND, CREAM = "#8a5a00", "#e2c36b", "#fff8e6"  # as in the report
-LAP_COLOURS = (PLANNED, MEASURED, GOOD, OCHRE)
-OTHER_LAPS = SAND
+CREAM = "#fff8e6"
+LAP_COLOURS = (PLANNED, MEASURED, GOOD, PURPLE)
+OTHER_LAPS = ORANGE
 FATE_COLOURS = {
     FATE_WORDS[Fate.NEVER_REACHES_REAR]: PALE,
     FATE_WORDS[Fate.LEAVES_REAR_FOR_GOOD]: QUIET,

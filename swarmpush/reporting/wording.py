@@ -59,6 +59,16 @@ def number(value: float, unit: str) -> str:
     return for_people(value, unit)
 
 
+def signed(value: float, unit: str) -> str:
+    """A difference with its sign.
+
+    >>> signed(-3.36e-4, "m/s"), signed(2e-3, "m/s")
+    ('-336 µm/s', '+2 mm/s')
+    """
+    text = number(value, unit)
+    return f"+{text}" if value > 0.0 and math.isfinite(value) else text
+
+
 def interval(estimate: Estimate, unit: str) -> str:
     """The confidence interval of an estimate, both ends with the same prefix."""
     low, high = estimate.low, estimate.high

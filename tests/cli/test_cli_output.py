@@ -22,10 +22,19 @@ def test_plan_writes_its_files(planned: Saved) -> None:
     assert files["plan.png"].startswith(b"\x89PNG\r\n")
 
 
+FIGURES = {"lap", "end", "path", "impulses", "books", "energy", "leaning", "states"}
+
+
+def figures(*names: str) -> set[str]:
+    """The tables beside a report."""
+    return {f"figures/{name}.csv" for name in (*FIGURES, *names)}
+
+
 def test_run_writes_its_files(ran: Saved) -> None:
-    """A run leaves its tables under the names that it printed, its summary and a report."""
+    """A run leaves its tables under the names that it printed, its summary, a report and the data of its figures."""
     run = ran.outcome.json()
-    assert contents(ran.folder).keys() == {"run.json", "report.html", *run["files"].values()}
+    names = {name.replace("\\", "/") for name in contents(ran.folder)}
+    assert names == {"run.json", "report.html", *run["files"].values(), *figures()}
     summary = json.loads((ran.folder / "run.json").read_text(encoding="utf-8"))
     assert summary.pop("scenario")["about"]["name"] == "Service passage"
     assert summary == run
@@ -36,7 +45,8 @@ def test_audit_writes_its_files(audited: Saved) -> None:
     """An audit leaves its runs as a table, one run in full, the JSON that it printed and a report; no journal."""
     sample = {f"sample/{name}" for name in ("run.json", "visits.parquet", "block.parquet", "pushers.parquet")}
     files = contents(audited.folder)
-    assert {name.replace("\\", "/") for name in files} == {"audit.json", "replicates.parquet", "report.html", *sample}
+    names = {name.replace("\\", "/") for name in files}
+    assert names == {"audit.json", "replicates.parquet", "report.html", *sample, *figures("ladder")}
     audit = audited.outcome.json()
     saved = json.loads(files["audit.json"])
     assert audit.pop("files") == saved.pop("files") | {"folder": str(audited.folder), "report": "report.html"}
