@@ -30,6 +30,12 @@ if TYPE_CHECKING:
 BAD_INPUT, NOT_MET, INTERRUPTED = 2, 3, 130
 RESULTS = Path("results")  # where results of many runs go when no folder is named
 JOURNAL = "unfinished.jsonl"
+_REQUIRE_HELP = (
+    "exit with 3 unless this is met; may be repeated. NAME>=NUMBER or NAME<=NUMBER, in SI units or with a unit, judged "
+    'by the doubtful end of the interval, the low end for >=: "arrival>=0.9", "block_speed>=100 um/s"; names: '
+    f'{", ".join(MEASURES)}. CLAIM=VERDICT, or a CLAIM alone that must hold: "lock=holds", "arrival"; claims: '
+    f"{', '.join(CLAIMS)}; verdicts: {', '.join(VERDICTS)}"
+)
 
 app = typer.Typer(
     help="Does a crowd of blind pushers really move the block along the channel? Say so before parts are made.",
@@ -209,10 +215,7 @@ def audit(
         list[str] | None,
         typer.Option(
             metavar="DEMAND",
-            help="exit with 3 unless this is met; may be repeated. NAME>=NUMBER or NAME<=NUMBER, in SI units or with a "
-            'unit, by the interval\'s doubtful end: "arrival>=0.9", "block_speed>=100 um/s"; names: '
-            f'{", ".join(MEASURES)}. CLAIM=VERDICT, or a CLAIM alone that must hold: "lock=holds", "arrival"; '
-            f"claims: {', '.join(CLAIMS)}; verdicts: {', '.join(VERDICTS)}",
+            help=_REQUIRE_HELP,
         ),
     ] = None,
     as_json: AsJson = False,
