@@ -273,7 +273,7 @@ def _originals(scenarios: dict[str, Scenario]) -> dict[str, str]:
 
 
 def conclude(planned: Plan, replicates: pd.DataFrame, sample: Run) -> Audit:
-    """Ladder, verdicts and numerics from the runs' summaries; a pure function."""
+    """All that an audit says, from the plan and the runs' summaries; a pure function."""
     s = planned.scenario
     by_rung = {str(key): rows.set_index("replicate") for key, rows in replicates.groupby("rung", sort=False)}
     as_given = by_rung[climb(s)[-1].key]

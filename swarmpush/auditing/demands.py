@@ -42,8 +42,8 @@ class Demand:
 class DemandResult:
     """Whether a demand is met.
 
-    demand: as written. value, low, high: what was measured, with its interval; NaN where nothing was. is_met. reason:
-    why it is not met; empty if it is.
+    demand: as written. value, low, high: what was measured, with its interval; NaN where nothing was. is_met. end: what
+    decided: "low" or "high" end of the interval, or the "verdict". reason: why it is not met; empty if it is.
     """
 
     demand: str
@@ -51,6 +51,7 @@ class DemandResult:
     low: float
     high: float
     is_met: bool
+    end: str
     reason: str
 
 
@@ -158,7 +159,8 @@ def _shortfall(finding: Finding) -> str:
 
 
 def _result(demand: Demand, found: Estimate, reason: str) -> DemandResult:
-    return DemandResult(demand.text, found.mean, found.low, found.high, not reason, reason)
+    end = {">=": "low", "<=": "high", "=": "verdict"}[demand.relation]
+    return DemandResult(demand.text, found.mean, found.low, found.high, not reason, end, reason)
 
 
 def _words(name: str) -> str:

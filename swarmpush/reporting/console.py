@@ -10,6 +10,7 @@ from rich.table import Table
 
 from swarmpush.auditing.audit import Audit
 from swarmpush.auditing.converge import Convergence
+from swarmpush.auditing.rungs import GEOMETRY
 from swarmpush.cautions import CAUTIONS
 from swarmpush.dynamics.run import Run
 from swarmpush.kinematics.lap_loss import LapsKept
@@ -207,6 +208,8 @@ def show_audit(audit: Audit) -> None:
     for row in map(rung_row, audit.ladder):
         table.add_row(row["name"], row["speed"], row["cost"], row["interval"], row["arrived"])
     _console.print(table)
+    if any(rung.against == GEOMETRY and rung.arrival is None for rung in audit.ladder):
+        _console.print("errors of headings and bodies are compared with geometry, the others with the rung above")
     _show_restored(audit)
     columns = ("planned", "measured", "interval")
     table = _table("claim of the plan", *columns, "verdict", right=columns)

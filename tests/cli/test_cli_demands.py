@@ -76,3 +76,4 @@ def test_the_console_shows_what_would_come_back(short: Path, tmp_path: Path) -> 
     text = " ".join(call("audit", short, "--out", tmp_path / "audit").out.split())
     assert "what would come back if" in text
     assert "The same crew bouncing at random: " in text
+    assert "errors of headings and bodies are compared with geometry" in text

@@ -117,6 +117,7 @@ def test_the_doubtful_end_decides() -> None:
         assert found.is_met == is_met
         assert (found.value, found.low, found.high) == (speed.mean, speed.low, speed.high)
         assert bool(found.reason) != is_met
+        assert found.end == ("low" if ">=" in text else "high")
     assert "the low end of its interval is 9.446e-05 m/s (mean 0.000115 m/s)" in check("block_speed>=1").reason
     assert "the high end" in check("block_speed<=0").reason
 
@@ -147,7 +148,7 @@ def test_demanded_verdicts() -> None:
     assert check("lock=fails", lock).reason == "it is strained"
     assert check("lock=fails", finding("lock", Verdict.HOLDS)).reason == "it holds"
     assert check("lock=fails").reason == "geometry gives no lap here to judge"
-    assert (check("lock", lock).value, check("lock", lock).low) == (0.9, 0.8)
+    assert (check("lock", lock).value, check("lock", lock).low, check("lock", lock).end) == (0.9, 0.8, "verdict")
 
 
 def test_arrival_that_holds_is_arrival() -> None:
