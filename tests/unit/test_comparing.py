@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 import pandas as pd
 import pytest
@@ -37,6 +39,20 @@ def test_pairs_that_agree_still_leave_doubt() -> None:
         assert found.mean == 0.0
         assert found.low < 0.0 < found.high
     assert many.high - many.low < 0.1 * (few.high - few.low)
+
+
+def test_pairs_that_go_together_tell_more() -> None:
+    """With the same shares, 65 and 75 of 161, a difference is known better when most pairs agree, worse when few do.
+
+    Source: the correlation of method 10 by hand: (59 x 80 - 6 x 16 - 161/2)/sqrt(65 x 96 x 75 x 86) = 0.7162.
+    """
+    agree, mixed, differ = (
+        share_difference(*pairs(both, 65 - both, 75 - both, 21 + both), 0.95) for both in (59, 30, 5)
+    )
+    width, free, wide = (found.high - found.low for found in (agree, mixed, differ))
+    assert width < 0.6 * free < 0.6 * wide
+    # both reaches are nearly alike, so that correlation takes the root of 1 - phi off the width
+    assert width / free == pytest.approx(math.sqrt(1 - 0.7162), rel=0.01)
 
 
 def test_no_pairs() -> None:
