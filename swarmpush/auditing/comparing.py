@@ -2,13 +2,9 @@
 
 from __future__ import annotations
 
-import math
-
-import numpy as np
 import pandas as pd
-from numpy.typing import ArrayLike
 
-from swarmpush.auditing.statistics import Estimate, mean_interval, share_interval
+from swarmpush.auditing.differences import paired_interval, paired_share_interval
 
 COMPARED = {
     "block speed": ("block_speed_m_s", "m/s"),
@@ -39,43 +35,8 @@ def compare_runs(these: pd.DataFrame, others: pd.DataFrame, confidence: float) -
     rows = []
     for quantity, (column, unit) in COMPARED.items():
         this, other = these[column], others[column]
-        if column == "has_arrived":
-            change = share_difference(this, other, confidence)
-        else:
-            change = mean_interval(other - this, confidence)
+        compare = paired_share_interval if column == "has_arrived" else paired_interval
+        change = compare(other, this, confidence)
         means = this.mean(), other.mean()
         rows.append((quantity, unit, *means, change.mean, change.low, change.high, change.n))
     return pd.DataFrame(rows, columns=["quantity", "unit", "this", "other", "difference", "low", "high", "n"])
-
-
-def share_difference(these: ArrayLike, others: ArrayLike, confidence: float) -> Estimate:
-    """Difference of two shares of the same trials, second minus first, and its interval.
-
-    Source: R. G. Newcombe, Stat. Med. 17 (1998) 2635, method 10: the score intervals of both shares, squared and added
-    with the pairs' correlation, of which he takes a continuity correction off when it is positive. Student's interval
-    of the differences would have no width where all pairs are alike.
-
-    Arguments:
-        these, others: (n,) 0 or 1 per trial. confidence: e.g. 0.95.
-
-    >>> share_difference([1, 1, 0, 1], [1, 1, 0, 1], 0.95).low < -0.2
-    True
-    """
-    first, second = np.asarray(these, dtype=bool), np.asarray(others, dtype=bool)
-    n = len(first)
-    if n == 0:
-        return Estimate(math.nan, -1.0, 1.0, 0)
-    p, q = (share_interval(int(hits.sum()), n, confidence) for hits in (second, first))
-    both, neither = int((first & second).sum()), int((~first & ~second).sum())
-    product = float(both * neither - int((first & ~second).sum()) * int((~first & second).sum()))
-    if product > 0.0:
-        product = max(0.0, product - n / 2.0)
-    spread = math.sqrt(float(first.sum() * (~first).sum() * second.sum() * (~second).sum()))
-    phi = product / spread if spread > 0.0 else 0.0
-
-    def reach(a: float, b: float) -> float:
-        return math.sqrt(max(0.0, a * a - 2.0 * phi * a * b + b * b))
-
-    difference = p.mean - q.mean
-    low = difference - reach(p.mean - p.low, q.high - q.mean)
-    return Estimate(difference, low, difference + reach(p.high - p.mean, q.mean - q.low), n)
