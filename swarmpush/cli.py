@@ -1,6 +1,6 @@
 """The command line. It only calls the public interface, words the results, and maps errors to exit codes.
 
-Exit codes: 0 done, 2 bad input, 3 a demanded verdict is not met, 130 interrupted. Heavy packages are imported inside
+Exit codes: 0 done, 2 bad input, 3 a demand is not met, 130 interrupted. Heavy packages are imported inside
 the commands, so that help comes at once.
 """
 
@@ -18,11 +18,11 @@ from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
+from swarmpush.auditing.claims import CLAIMS, MEASURES, VERDICTS
+
 if TYPE_CHECKING:
     import pandas as pd
 
-    from swarmpush.auditing.audit import Audit
-    from swarmpush.auditing.verdicts import Finding
     from swarmpush.kinematics.declarations import Declarations
     from swarmpush.kinematics.planning import Plan
     from swarmpush.scenario import Scenario
@@ -30,6 +30,12 @@ if TYPE_CHECKING:
 BAD_INPUT, NOT_MET, INTERRUPTED = 2, 3, 130
 RESULTS = Path("results")  # where results of many runs go when no folder is named
 JOURNAL = "unfinished.jsonl"
+_REQUIRE_HELP = (
+    "exit with 3 unless this is met; may be repeated. NAME>=NUMBER or NAME<=NUMBER, in SI units or with a unit, judged "
+    'by the doubtful end of the interval, the low end for >=: "arrival>=0.9", "block_speed>=100 um/s"; names: '
+    f'{", ".join(MEASURES)}. CLAIM=VERDICT, or a CLAIM alone that must hold: "lock=holds", "arrival"; claims: '
+    f"{', '.join(CLAIMS)}; verdicts: {', '.join(VERDICTS)}"
+)
 
 app = typer.Typer(
     help="Does a crowd of blind pushers really move the block along the channel? Say so before parts are made.",
@@ -207,7 +213,10 @@ def audit(
     seed: Seed = None,
     require: Annotated[
         list[str] | None,
-        typer.Option(metavar="CLAIM", help="exit with 3 unless this claim holds, e.g. arrival; may be repeated"),
+        typer.Option(
+            metavar="DEMAND",
+            help=_REQUIRE_HELP,
+        ),
     ] = None,
     as_json: AsJson = False,
     out: Annotated[
@@ -219,24 +228,28 @@ def audit(
     """Hold the plan against rigid bodies: does the block arrive, which assumptions fail, what does each cost?"""
     import swarmpush
 
-    demanded = _claims(require or [])
+    demanded = _demands(require or [])
     s = _load(scenario)
     if seed is not None:
         s = s.replace(trial={"seed": seed})
     folder, journal = _resumable(out, f"{_stem(scenario)}-audit", force)
     with _resuming(folder), _preparing(as_json) as bar:
         result = swarmpush.audit(s, replicates=replicates, workers=workers, journal=journal, progress=bar)
-    files = result.save(folder) | {"folder": str(folder), "report": "report.html"}
+    files = result.save(folder, demanded) | {"folder": str(folder), "report": "report.html"}
     swarmpush.report(result, folder / "report.html")
     journal.unlink(missing_ok=True)
     if as_json:
-        _print_json(result.to_dict(files))
+        _print_json(result.to_dict(files, demanded))
     else:
         from swarmpush.reporting import console
 
         console.show_audit(result)
         console.say_where(folder / "report.html")
-    _demand(result, demanded)
+    unmet = [demand for demand in result.check(demanded) if not demand.is_met]
+    for demand in unmet:
+        print(f"required: {demand.demand}, but {demand.reason}", file=sys.stderr)
+    if unmet:
+        raise typer.Exit(NOT_MET)
 
 
 @app.command(short_help="JSON Schema of scenario files, for editors")
@@ -397,42 +410,16 @@ def _refuse_existing(path: Path, force: bool) -> None:
         raise _Refusal(f"{path} is there already; name another file with --out, or add --force")
 
 
-def _claims(names: list[str]) -> list[str]:
-    from swarmpush.auditing.claims import CLAIMS
+def _demands(texts: list[str]) -> list[str]:
+    """The demands, once all of them can be read."""
+    from swarmpush.auditing.demands import read_demand
 
-    wanted = [name.replace("-", " ").strip().lower() for name in names]
-    for name in wanted:
-        if name not in CLAIMS:
-            raise _Refusal(f"--require {name}: no such claim; there are {', '.join(CLAIMS)}")
-    return wanted
-
-
-def _demand(result: Audit, demanded: list[str]) -> None:
-    """Exit with 3 unless every demanded claim holds; to demand arrival is to demand that the block does arrive."""
-    findings = {finding.assumption: finding for finding in result.verdicts}
-    unmet = {name: _shortfall(findings.get(name)) for name in demanded}
-    for name, reason in unmet.items():
-        if reason:
-            print(f"required: {name}, but {reason}", file=sys.stderr)
-    if any(unmet.values()):
-        raise typer.Exit(NOT_MET)
-
-
-def _shortfall(finding: Finding | None) -> str:
-    """Why a demanded claim is not met; empty if it is."""
-    from swarmpush.auditing.claims import ARRIVAL
-    from swarmpush.auditing.statistics import Verdict, runs_to_show
-
-    if finding is None:
-        return "geometry gives no lap here to judge"
-    if finding.assumption == ARRIVAL and finding.predicted == 0.0:
-        return "the plan itself says that the block does not arrive in time"
-    if finding.verdict is Verdict.HOLDS:
-        return ""
-    if finding.assumption == ARRIVAL and finding.measured.mean == 1.0:
-        needed = runs_to_show(1.0 - finding.tolerance, finding.confidence)
-        return f"{finding.measured.n} runs cannot show it; {needed} replicates could"
-    return {Verdict.FAILS: "it fails", Verdict.STRAINED: "it is strained"}.get(finding.verdict, "it is undecided")
+    for text in texts:
+        try:
+            read_demand(text)
+        except ValueError as error:
+            raise _Refusal(f"--require {text}: {error}") from None
+    return texts
 
 
 def _preparing(is_quiet: bool) -> Any:

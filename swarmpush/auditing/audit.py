@@ -3,18 +3,19 @@
 from __future__ import annotations
 
 import json
-import os
-from collections.abc import Callable
-from concurrent.futures import ThreadPoolExecutor, as_completed
+from collections.abc import Callable, Iterable
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-import numpy as np
 import pandas as pd
 
-from swarmpush.auditing.journal import Journal
-from swarmpush.auditing.ladder import Rung, climb
+from swarmpush.auditing.comparing import compare_runs
+from swarmpush.auditing.demands import DemandResult, check_demands, read_demand
+from swarmpush.auditing.journal import Journal, Row
+from swarmpush.auditing.ladder import BASELINE, bounce_at_random, climb, restore
+from swarmpush.auditing.replicates import Progress, Task, replicate_seeds, run_tasks
+from swarmpush.auditing.rungs import Baseline, RestoredResult, RungResult, baseline, ladder, restored
 from swarmpush.auditing.statistics import Estimate, mean_interval, share_interval
 from swarmpush.auditing.verdicts import Finding, find_verdicts
 from swarmpush.dynamics.run import Run, load_run
@@ -25,25 +26,8 @@ from swarmpush.output import claim_folder, plain, provenance, to_json, write_tab
 from swarmpush.quantities import for_people
 from swarmpush.scenario import Scenario
 
-HALVED = "halved step"  # the rung that repeats the last one with half the step
+HALVED = "halved step"  # the level that repeats the scenario as given with half the step
 N_HALVED = 4  # replicates that are repeated with half the step
-
-Progress = Callable[[int, int, str], None]
-
-
-@dataclass(frozen=True)
-class RungResult:
-    """What one rung of the ladder gave.
-
-    rung, adds: its key and what it adds. block_speed_m_s: mean over replicates. cost_m_s: paired difference to the
-    rung below, negative when the block gets slower; None for geometry. arrival: share of runs; None for geometry.
-    """
-
-    rung: str
-    adds: str
-    block_speed_m_s: Estimate
-    cost_m_s: Estimate | None
-    arrival: Estimate | None
 
 
 @dataclass(frozen=True)
@@ -65,7 +49,12 @@ class Audit:
     """The plan's promise against what bodies did.
 
     scenario, plan: what was audited. replicates: one row per run: rung, replicate, seed and the measures of
-    `Run.summary`. sample: one run of the scenario as given, in full. The rest is derived from these.
+    `Run.summary`; besides the rungs of the ladder there are "restored: " and the key of an assumption, "baseline" and
+    "halved step". sample: one run of the scenario as given, in full. The rest is derived from these.
+
+    ladder: from geometry to the scenario as given. restored: what would come back with one assumption granted again,
+    in the ladder's order. baseline: the same crew bouncing at random. verdicts: on the plan's claims. arrival: share of
+    the runs as given. numerics: what the step costs.
     """
 
     scenario: Scenario
@@ -73,6 +62,8 @@ class Audit:
     replicates: pd.DataFrame
     sample: Run
     ladder: tuple[RungResult, ...]
+    restored: tuple[RestoredResult, ...]
+    baseline: Baseline
     verdicts: tuple[Finding, ...]
     arrival: Estimate
     numerics: Numerics
@@ -101,7 +92,7 @@ class Audit:
             f"{n} of {share.n} runs ({percent} interval {share.low:.0%} to {share.high:.0%}); it moves at "
             f"{for_people(speed, 'm/s')} where geometry promises {for_people(promise, 'm/s')}"
         )
-        costs = [r for r in self.ladder if r.cost_m_s is not None and r.cost_m_s.high < 0.0]
+        costs = [r for r in self.ladder if r.arrival is not None and r.cost_m_s is not None and r.cost_m_s.high < 0.0]
         if costs:
             worst = min(costs, key=lambda r: r.cost_m_s.mean if r.cost_m_s else 0.0)
             cost = worst.cost_m_s
@@ -109,8 +100,35 @@ class Audit:
             text += f", and what costs most is {worst.adds} ({for_people(cost.mean, 'm/s')})"
         return text + "."
 
-    def to_dict(self, files: dict[str, str] | None = None) -> dict[str, Any]:
-        """The audit as plain values for JSON; undefined values are None."""
+    def check(self, demands: Iterable[str]) -> tuple[DemandResult, ...]:
+        """Whether demands such as "arrival>=0.9", "block_speed>=100 um/s" or "lock=holds" are met.
+
+        The doubtful end of the interval counts: its low end for >=, its high end for <=; see `demands`.
+
+        Raises:
+            ValueError: when a text is no demand.
+        """
+        read = [read_demand(text) for text in demands]
+        return check_demands(read, self.verdicts, self.as_given, self.scenario.trial.confidence)
+
+    def compare(self, other: Audit) -> pd.DataFrame:
+        """Two designs side by side, run by run with the same random draws.
+
+        Arguments:
+            other: an audit with the same seed and number of replicates.
+
+        Returns:
+            One row each for block speed, arrival and strike rate (per pusher), with columns quantity, unit, this, other
+            (means), difference (other minus this), low, high (its interval, at this audit's confidence) and n (pairs).
+            Higher is better for all three.
+
+        Raises:
+            ValueError: when seeds or numbers of replicates differ.
+        """
+        return compare_runs(self.as_given, other.as_given, self.scenario.trial.confidence)
+
+    def to_dict(self, files: dict[str, str] | None = None, demands: Iterable[str] = ()) -> dict[str, Any]:
+        """The audit as plain values for JSON, with the demands made on it; undefined values are None."""
         result: dict[str, Any] = plain(
             {
                 "answer": self.answer,
@@ -127,9 +145,13 @@ class Audit:
                         "block_speed_m_s": r.block_speed_m_s,
                         "cost": r.cost_m_s,
                         "arrival": r.arrival,
+                        "against": r.against,
                     }
                     for r in self.ladder
                 ],
+                "restored": self.restored,
+                "baseline": self.baseline,
+                "demands": self.check(demands),
                 "verdicts": self.verdicts,
                 "numerics": self.numerics,
                 "plan": self.plan.to_dict(),
@@ -139,8 +161,8 @@ class Audit:
         )
         return result
 
-    def save(self, folder: Path) -> dict[str, str]:
-        """Write replicates, the sample run and, last, audit.json; returns the files' names.
+    def save(self, folder: Path, demands: Iterable[str] = ()) -> dict[str, str]:
+        """Write replicates, the sample run and, last, audit.json, with the demands made; returns the files' names.
 
         Raises:
             OutputError: when something cannot be written.
@@ -149,7 +171,7 @@ class Audit:
         write_table(folder / files["replicates"], self.replicates)
         claim_folder(folder / "sample", force=True)
         self.sample.save(folder / "sample")
-        write_text(folder / files["audit"], to_json(self.to_dict(files)))
+        write_text(folder / files["audit"], to_json(self.to_dict(files, demands)))
         return files
 
 
@@ -181,7 +203,8 @@ def audit(
 ) -> Audit:
     """Hold the plan against rigid bodies: what survives, what fails, and what each assumption costs.
 
-    Every rung of the ladder is run with the same seeds, so that costs are paired differences.
+    Every rung of the ladder is run with the same seeds, so that costs are paired differences; and so are the scenario
+    as given with one assumption restored, and the same crew bouncing at random.
 
     Arguments:
         s: the scenario.
@@ -202,54 +225,63 @@ def audit(
     if n < 2:
         raise ValueError(f"{n} replicates given; an interval needs at least 2")
     planned = plan(s)
-    rungs = climb(s)
-    halved = Rung(HALVED, "half the time step", rungs[-1].scenario)
+    scenarios = scenarios_to_run(s)
+    as_given = climb(s)[-1].key
+    originals = _originals(scenarios)
     seeds = replicate_seeds(s.trial.seed, n)
-    tasks = [(rung, k) for rung in rungs for k in range(n)] + [(halved, k) for k in range(min(n, N_HALVED))]
+    tasks = [Task(level, k) for level in dict.fromkeys(originals.values()) for k in range(n)]
+    tasks += [Task(HALVED, k) for k in range(min(n, N_HALVED))]
     cycles = _cycles(planned)
+    sample_task = Task(as_given, 0)
+    samples: list[Run] = []  # one run is needed in full
 
-    def run_one(rung: Rung, k: int) -> Run:
-        steps = choose_step(rung.scenario)
-        return simulate(rung.scenario, seed=seeds[k], steps=steps.halved() if rung is halved else steps, cycles=cycles)
+    def run_one(task: Task, look_up: Callable[[float], None]) -> Row:
+        scenario, k = scenarios[task.level], task.replicate
+        steps = choose_step(scenario)
+        steps = steps.halved() if task.level == HALVED else steps
+        run = simulate(scenario, seed=seeds[k], steps=steps, cycles=cycles, progress=look_up)
+        if task == sample_task:
+            samples.append(run)
+        return {"rung": task.level, "replicate": k, "seed": seeds[k], **run.summary()}
+
+    names = {rung.key: rung.adds for rung in climb(s)}
+
+    def tell(done: int, total: int, level: str) -> None:
+        if progress:
+            progress(done, total, names.get(level, level))
 
     kept = Journal(journal, provenance(s)) if journal else None
-    rows = dict(kept.rows) if kept else {}
-    sample_task = (rungs[-1], 0)
-    # one run is needed in full; the longest runs come last in the ladder, and starting with them keeps all workers busy
-    waiting = [
-        sample_task,
-        *(task for task in reversed(tasks) if (task[0].key, task[1]) not in rows and task != sample_task),
+    rows = run_tasks(tasks, run_one, journal=kept, again=(sample_task,), workers=workers, progress=tell)
+    table = [
+        rows[Task(originals.get(level, level), k)] | {"rung": level}
+        for level in scenarios
+        for k in range(min(n, N_HALVED) if level == HALVED else n)
     ]
-    done = len(tasks) - len(waiting)
-    sample: Run | None = None
-    pool = ThreadPoolExecutor(workers or os.cpu_count())
-    try:
-        futures = {pool.submit(run_one, rung, k): (rung, k) for rung, k in waiting}
-        for future in as_completed(list(futures)):
-            rung, k = futures.pop(future)
-            run = future.result()
-            row = {"rung": rung.key, "replicate": k, "seed": seeds[k], **run.summary()}
-            if (rung, k) == sample_task:
-                sample = run
-            if kept and (rung.key, k) not in rows:
-                kept.add(row)
-            rows[rung.key, k] = row
-            done += 1
-            if progress:
-                progress(done, len(tasks), rung.adds)
-    finally:
-        pool.shutdown(cancel_futures=True)
-    assert sample is not None
-    table = pd.DataFrame([rows[rung.key, k] for rung, k in tasks])
-    return conclude(planned, table, sample)
+    return conclude(planned, pd.DataFrame(table), samples[0])
+
+
+def scenarios_to_run(s: Scenario) -> dict[str, Scenario]:
+    """All that an audit runs, by level: the rungs, each assumption restored, the baseline, and the halved step."""
+    rungs = {rung.key: rung.scenario for rung in climb(s)}
+    granted = {granted.level: granted.scenario for granted in restore(s)}
+    return {**rungs, **granted, BASELINE: bounce_at_random(s), HALVED: s}
+
+
+def _originals(scenarios: dict[str, Scenario]) -> dict[str, str]:
+    """For each level but the halved step the first one with the same scenario, whose runs are the same.
+
+    Granting the last assumption again, for one, leads back to the rung below.
+    """
+    first: dict[str, str] = {}
+    levels = {level: s.digest() for level, s in scenarios.items() if level != HALVED}
+    return {level: first.setdefault(digest, level) for level, digest in levels.items()}
 
 
 def conclude(planned: Plan, replicates: pd.DataFrame, sample: Run) -> Audit:
-    """Ladder, verdicts and numerics from the runs' summaries; a pure function."""
+    """All that an audit says, from the plan and the runs' summaries; a pure function."""
     s = planned.scenario
-    rungs = climb(s)
-    by_rung = {key: rows.set_index("replicate") for key, rows in replicates.groupby("rung", sort=False)}
-    as_given = by_rung[rungs[-1].key]
+    by_rung = {str(key): rows.set_index("replicate") for key, rows in replicates.groupby("rung", sort=False)}
+    as_given = by_rung[climb(s)[-1].key]
     n_arrived, n = int(as_given["has_arrived"].sum()), len(as_given)
     halved = by_rung[HALVED]["block_speed_m_s"]
     whole = as_given.loc[halved.index, "block_speed_m_s"]
@@ -258,7 +290,9 @@ def conclude(planned: Plan, replicates: pd.DataFrame, sample: Run) -> Audit:
         plan=planned,
         replicates=replicates,
         sample=sample,
-        ladder=_ladder(planned, rungs, by_rung),
+        ladder=ladder(planned, by_rung),
+        restored=restored(planned, by_rung),
+        baseline=baseline(planned, by_rung),
         verdicts=find_verdicts(planned, as_given),
         arrival=share_interval(n_arrived, n, s.trial.confidence),
         numerics=Numerics(
@@ -268,32 +302,6 @@ def conclude(planned: Plan, replicates: pd.DataFrame, sample: Run) -> Audit:
             phantom_share=float(replicates["phantom_share"].max()),
         ),
     )
-
-
-def _ladder(planned: Plan, rungs: tuple[Rung, ...], by_rung: dict[Any, pd.DataFrame]) -> tuple[RungResult, ...]:
-    confidence = planned.scenario.trial.confidence
-    promise = planned.travel.block_speed_m_s
-    results = [RungResult("geometry", "the plan's own promise", Estimate(promise, promise, promise, 0), None, None)]
-    below: pd.Series[float] | float = promise
-    for rung in rungs:
-        speeds = by_rung[rung.key]["block_speed_m_s"]
-        n_arrived = int(by_rung[rung.key]["has_arrived"].sum())
-        results.append(
-            RungResult(
-                rung.key,
-                rung.adds,
-                mean_interval(speeds, confidence),
-                mean_interval(speeds - below, confidence),
-                share_interval(n_arrived, len(speeds), confidence),
-            )
-        )
-        below = speeds
-    return tuple(results)
-
-
-def replicate_seeds(seed: int, n: int) -> list[int]:
-    """Seeds of the replicates: the first ones stay the same when more are asked for."""
-    return [int(np.random.SeedSequence(seed, spawn_key=(k,)).generate_state(1)[0]) for k in range(n)]
 
 
 def _cycles(planned: Plan) -> tuple[tuple[str, ...], ...]:

@@ -1,4 +1,4 @@
-"""Names of the plan's claims, in the order in which they are judged."""
+"""Names of the plan's claims, in the order in which they are judged, of verdicts, and of what can be demanded."""
 
 LAP_TIME = "lap time"
 LOCK = "lock"
@@ -10,3 +10,18 @@ BLOCK_SPEED = "block speed"
 ARRIVAL = "arrival"
 
 CLAIMS = (LAP_TIME, LOCK, STRIKES_PER_LAP, STRIKE_RATE, NUDGE, MOMENTUM, BLOCK_SPEED, ARRIVAL)
+VERDICTS = ("holds", "strained", "fails", "undecided")
+
+# name -> column of the runs' summaries and its SI unit
+MEASURES = {
+    ARRIVAL: ("has_arrived", "1"),
+    BLOCK_SPEED: ("block_speed_m_s", "m/s"),
+    "travel": ("travel_m", "m"),
+    "duration": ("duration_s", "s"),
+    STRIKE_RATE: ("strike_rate_1_s", "1/s"),  # of one pusher
+    "nudge": ("nudge_m", "m"),
+    LAP_TIME: ("lap_time_s", "s"),
+    "lock share": ("lock_share", "1"),
+    "impact": ("impact_Ns", "N*s"),
+    "lean": ("lean_Ns", "N*s"),
+}

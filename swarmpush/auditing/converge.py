@@ -3,18 +3,15 @@
 from __future__ import annotations
 
 import hashlib
-import os
 from collections.abc import Callable
-from concurrent.futures import ThreadPoolExecutor, as_completed
 from dataclasses import dataclass
 from pathlib import Path
-from threading import Event
 from typing import Any
 
 import pandas as pd
 
-from swarmpush.auditing.audit import replicate_seeds
 from swarmpush.auditing.journal import Journal
+from swarmpush.auditing.replicates import Progress, Task, replicate_seeds, run_tasks
 from swarmpush.auditing.step_effect import DIVISORS, EFFECT_WORDS, SHARE, Effect, StepEffect, step_effect
 from swarmpush.dynamics.run import Run
 from swarmpush.dynamics.steps import StepSettings, choose_step
@@ -35,8 +32,6 @@ QUANTITIES = {
     "lap_time_s": ("lap time", "s"),
     "has_arrived": ("arrival", SHARE),
 }
-
-Progress = Callable[[int, int, str], None]
 
 
 @dataclass(frozen=True)
@@ -202,42 +197,21 @@ def converge(
     step = choose_step(s)
     settings = dict(zip(KEYS, (step, step.halved(), step.halved().halved()), strict=True))
     cycles = tuple(lap.surfaces for lap in find_laps(s)[0])
-    is_stopped = Event()
 
-    def look_up(share: float) -> None:
-        if is_stopped.is_set():
-            raise _Stopped
-
-    def run_one(key: str, k: int) -> dict[str, Any]:
+    def run_one(task: Task, look_up: Callable[[float], None]) -> dict[str, Any]:
+        key, k = task
         run = simulate(s, seed=seeds[k], steps=settings[key], cycles=cycles, progress=look_up)
         row = {"step": key, "replicate": k, "seed": seeds[k], "dt_s": run.steps.dt_s, "ended": run.ended}
         return row | {"story": _story(run)} | run.summary()
 
+    def tell(done: int, total: int, key: str) -> None:
+        if progress:
+            progress(done, total, f"at {for_people(settings[key].dt_s, 's')}")
+
     kept = Journal(journal, provenance(s) | {"work": "converge"}, level="step") if journal else None
-    rows = dict(kept.rows) if kept else {}
-    tasks = [(key, k) for key in KEYS for k in range(len(seeds))]
-    # the longest runs first, which keeps all workers busy to the end
-    waiting = [task for task in reversed(tasks) if task not in rows]
-    done = len(tasks) - len(waiting)
-    pool = ThreadPoolExecutor(workers or os.cpu_count())
-    try:
-        futures = {pool.submit(run_one, *task): task for task in waiting}
-        for future in as_completed(list(futures)):
-            task = futures.pop(future)
-            rows[task] = future.result()
-            if kept:
-                kept.add(rows[task])
-            done += 1
-            if progress:
-                progress(done, len(tasks), f"at {for_people(settings[task[0]].dt_s, 's')}")
-    finally:
-        is_stopped.set()  # after an interruption the runs under way end at their next report of progress
-        pool.shutdown(cancel_futures=True)
-    return find_convergence(s, pd.DataFrame([rows[task] for task in tasks]))
-
-
-class _Stopped(Exception):
-    """Nobody waits for this run any more."""
+    tasks = [Task(key, k) for key in KEYS for k in range(len(seeds))]
+    rows = run_tasks(tasks, run_one, journal=kept, workers=workers, progress=tell)
+    return find_convergence(s, pd.DataFrame(list(rows.values())))
 
 
 def find_convergence(s: Scenario, runs: pd.DataFrame) -> Convergence:

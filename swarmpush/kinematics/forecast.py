@@ -11,11 +11,12 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from swarmpush.kinematics.lap_loss import senses_on
 from swarmpush.kinematics.laps import Lap
 from swarmpush.kinematics.nudge import impact_impulse, normal_force, slope_pull, static_friction
 from swarmpush.kinematics.strikes import Strikes
 from swarmpush.kinematics.teams import CrewPush, crew_push, strikes_of
-from swarmpush.kinematics.visits import follow_visits
+from swarmpush.kinematics.visits import Visits, follow_visits
 from swarmpush.scenario import Scenario
 
 FRICTION_RANGE = (0.5, 2.0)  # handbook values of one pair of materials differ by that much
@@ -94,15 +95,8 @@ def forecast(s: Scenario, laps: tuple[Lap, ...], strikes: Strikes) -> TravelFore
         s: the scenario. laps: the main one first. strikes: of points that turn at once.
     """
     rear, front = follow_visits(s)
-    n = s.pushers.count
-    downhill = s.replace(channel={"slope": -s.channel.slope})  # a push on the front face is one the other way
-    forwards, backwards = crew_push(s, rear), crew_push(downhill, front)
-    rate = n * rear.strike_rate_1_s
-    if math.isinf(forwards.total + backwards.total):  # a nudge never ends, and the more frequent strikes win
-        back_rate = n * front.strike_rate_1_s
-        speed = math.copysign(math.inf, rate - back_rate) if rate != back_rate else 0.0
-    else:
-        speed = forwards.total - backwards.total
+    forwards, backwards, speed = crew_speed(s, rear, front)
+    rate = s.pushers.count * rear.strike_rate_1_s
     impacts = [impact_impulse(s, strike.approach_m_s) for strike in strikes_of(s, rear)]
     return TravelForecast(
         nudge_m=forwards.total / rate if rate > 0.0 else 0.0,
@@ -119,6 +113,39 @@ def forecast(s: Scenario, laps: tuple[Lap, ...], strikes: Strikes) -> TravelFore
         enough_share=forwards.enough,
         basis=_basis(s, forwards, backwards, rear.leaning_share),
     )
+
+
+def crew_speed(s: Scenario, rear: Visits, front: Visits) -> tuple[CrewPush, CrewPush, float]:
+    """What the crew does to the rear face, what it does to the front face, and the block's speed from both, m/s.
+
+    Arguments:
+        s: the scenario. rear, front: from `follow_visits`.
+    """
+    downhill = s.replace(channel={"slope": -s.channel.slope})  # a push on the front face is one the other way
+    forwards, backwards = crew_push(s, rear), crew_push(downhill, front)
+    if math.isinf(forwards.total + backwards.total):  # a nudge never ends, and the more frequent strikes win
+        rate, back_rate = rear.strike_rate_1_s, front.strike_rate_1_s
+        return forwards, backwards, math.copysign(math.inf, rate - back_rate) if rate != back_rate else 0.0
+    return forwards, backwards, forwards.total - backwards.total
+
+
+def speed_with_errors(s: Scenario, lap: Lap, *, seed: int = 0) -> tuple[float, float]:
+    """The forecast of the block's speed with errors of headings and turns, and without, for the same starts and draws.
+
+    Still the point world: pushers pass each other and the block is where it was. The crew is followed from its starts
+    for the trial's time as for `forecast`, but turns, bearings, ranges and sights err and headings wander as the
+    scenario says (`senses_on`; the mean leg is that of `lap`). A pusher that loses its lap goes on by its routine, so
+    that strikes it makes out of the lap, on its way back to one, and on the front face all count. (Worked out here.)
+
+    Arguments:
+        s: the scenario. lap: its main lap. seed: of starts and draws.
+
+    Returns:
+        with_errors, without: block speed, m/s, of the whole crew.
+    """
+    e = s.errors
+    erring = follow_visits(s, seed=seed, senses=senses_on(e, lap), diffusion=e.heading_diffusion)
+    return crew_speed(s, *erring)[2], crew_speed(s, *follow_visits(s, seed=seed))[2]
 
 
 def _basis(s: Scenario, push: CrewPush, back: CrewPush, leaning_share: float) -> str:

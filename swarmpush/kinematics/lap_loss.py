@@ -78,10 +78,23 @@ def laps_kept(
 
 def errs(s: Scenario) -> bool:
     """Whether anything in the point world can throw a pusher off its lap."""
-    e = s.errors
     spreads = [getattr(act, "spread", 0.0) for stage in s.routine.stages for act in stage.acts]
+    return headings_err(s.errors) or any(spreads)
+
+
+def headings_err(e: Errors) -> bool:
+    """Whether the scenario's errors, apart from any spread in the routine, can throw a pusher off its lap."""
     faults = (e.turn_bias, e.turn_sd, e.heading_diffusion, e.heading_drift, e.bearing_step, e.bearing_sd, e.range_sd)
-    return any((*faults, e.missed_sights, *spreads))
+    return any((*faults, e.missed_sights))
+
+
+def senses_on(e: Errors, lap: Lap) -> Senses:
+    """The faults of a pusher's senses and turns on a lap.
+
+    A leg is traced straight and its heading wanders at the end, so the chord's part goes with the turn before it.
+    """
+    sd = e.turn_sd if lap.is_heading_neutral else math.hypot(e.turn_sd, wander_per_leg(e, lap))
+    return Senses(bias_per_turn(e, lap), sd, e.bearing_step, e.bearing_sd, e.range_sd, e.missed_sights)
 
 
 def estimate_laps(laps: FloatArray, is_kept: NDArray[np.bool_], confidence: float) -> LapsKept:
@@ -144,9 +157,7 @@ class LapFollower:
 
     def legs_kept(self, e: Errors, n_laps: int) -> IntArray:
         """(n,) legs that each pusher runs before a bump is not the lap's; at most those of `n_laps` laps."""
-        # a leg is traced straight and its heading wanders at the end, so the chord's part goes with the turn before it
-        sd = e.turn_sd if self.lap.is_heading_neutral else math.hypot(e.turn_sd, wander_per_leg(e, self.lap))
-        senses = Senses(bias_per_turn(e, self.lap), sd, e.bearing_step, e.bearing_sd, e.range_sd, e.missed_sights)
+        senses = senses_on(e, self.lap)
         legs = np.zeros(len(self.keys), dtype=np.int64)
         workers = os.cpu_count() or 1
 

@@ -16,7 +16,7 @@ from swarmpush.draws import stream_keys
 from swarmpush.kinematics.bounce import trace
 from swarmpush.kinematics.boundary import boundary_of, surface_names
 from swarmpush.kinematics.strikes import AT_ONCE, MAX_BUMPS, N_FOLLOWED
-from swarmpush.program import EXACT, MEMORY, NOTES, compile_routine
+from swarmpush.program import EXACT, MEMORY, NOTES, Senses, compile_routine
 from swarmpush.scenario import Scenario
 from swarmpush.starts import draw_starts
 
@@ -52,13 +52,16 @@ class Visits(NamedTuple):
         return min(1.0, float(self.leaning_s.sum()) / self.time_s)
 
 
-def follow_visits(s: Scenario, *, seed: int = 0) -> tuple[Visits, Visits]:
-    """Follow pushers without errors from the scenario's starts for the length of the trial.
+def follow_visits(
+    s: Scenario, *, seed: int = 0, senses: Senses = EXACT, diffusion: float = 0.0
+) -> tuple[Visits, Visits]:
+    """Follow pushers from the scenario's starts for the length of the trial, without errors unless some are given.
 
     Randomness that belongs to the routine itself is kept.
 
     Arguments:
-        s: the scenario. seed: of starts and of the routine's own chance.
+        s: the scenario. seed: of starts, of the routine's own chance, and of errors. senses, diffusion: the pushers'
+            faults; see `trace`.
 
     Returns:
         The visits to the rear face, and those to the front face.
@@ -74,7 +77,7 @@ def follow_visits(s: Scenario, *, seed: int = 0) -> tuple[Visits, Visits]:
     for start, keys in zip(starts, stream_keys(seed, len(starts)), strict=True):
         memory, notes = np.zeros(MEMORY, dtype=np.int64), np.zeros(NOTES)
         n = trace(
-            boundary, program, EXACT, 0.0, s.pushers.free_speed, keys, start, 0.0, hits, surfaces, memory, notes
+            boundary, program, senses, diffusion, s.pushers.free_speed, keys, start, 0.0, hits, surfaces, memory, notes
         )  # fmt: skip
         table, time = _at_pace(s, hits[:n], surfaces[:n], n == n_legs, AT_ONCE * boundary.scale)
         found.append(table)

@@ -10,13 +10,22 @@ from rich.table import Table
 
 from swarmpush.auditing.audit import Audit
 from swarmpush.auditing.converge import Convergence
+from swarmpush.auditing.rungs import GEOMETRY
 from swarmpush.cautions import CAUTIONS
 from swarmpush.dynamics.run import Run
 from swarmpush.kinematics.planning import Plan
 from swarmpush.quantities import for_people
 from swarmpush.reporting.plan_words import count, followed, plan_answer, plan_facts
 from swarmpush.reporting.run_words import book_rows, cause_rows, energy_rows, run_answer, state_rows
-from swarmpush.reporting.wording import finding_row, interval, mean_and_error, number, rung_row
+from swarmpush.reporting.wording import (
+    baseline_words,
+    finding_row,
+    interval,
+    mean_and_error,
+    number,
+    restored_row,
+    rung_row,
+)
 
 _COLOURS = {"holds": "green", "strained": "yellow", "fails": "red", "undecided": "bright_black"}
 _EFFECT_COLOURS = {"small": "green", "large": "red", "untold": "bright_black"}
@@ -116,14 +125,16 @@ def show_run(run: Run) -> None:
 
 
 def show_audit(audit: Audit) -> None:
-    """The audit's answer, ladder and verdicts."""
+    """The audit's answer, ladder, what would come back, the crew bouncing at random, and verdicts."""
     _head(audit.scenario.about.name, audit.answer)
     costs = ("block speed", "difference", "its interval", "arrived")
     table = _table("rung", *costs, right=costs)
     for row in map(rung_row, audit.ladder):
         table.add_row(row["name"], row["speed"], row["cost"], row["interval"], row["arrived"])
     _console.print(table)
-    _console.print()
+    if any(rung.against == GEOMETRY and rung.arrival is None for rung in audit.ladder):
+        _console.print("errors of headings and bodies are compared with geometry, the others with the rung above")
+    _show_restored(audit)
     columns = ("planned", "measured", "interval")
     table = _table("claim of the plan", *columns, "verdict", right=columns)
     for row in map(finding_row, audit.verdicts):
@@ -140,6 +151,19 @@ def show_audit(audit: Audit) -> None:
         f"({interval(change, 'm/s')}, chance included)"
     )
     _caution()
+
+
+def _show_restored(audit: Audit) -> None:
+    """What would come back with one assumption granted again, most first; and the crew that bounces at random."""
+    _console.print()
+    gains = ("block speed", "gain", "its interval", "arrived")
+    if audit.restored:
+        table = _table("what would come back if", *gains, right=gains)
+        for row in map(restored_row, sorted(audit.restored, key=lambda r: r.gain_m_s.mean, reverse=True)):
+            table.add_row(_plain(row["name"]), row["speed"], row["gain"], row["interval"], row["arrived"])
+        _console.print(table)
+        _console.print()
+    _console.print(f"{baseline_words(audit)}\n")
 
 
 def show_convergence(result: Convergence) -> None:

@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import math
 
-from swarmpush.auditing.audit import RungResult
+from swarmpush.auditing.audit import Audit
+from swarmpush.auditing.rungs import RestoredResult, RungResult
 from swarmpush.auditing.statistics import Estimate
 from swarmpush.auditing.step_effect import StepMean, two_digits
 from swarmpush.auditing.verdicts import Finding
@@ -90,8 +91,36 @@ def rung_row(rung: RungResult) -> dict[str, str]:
         "speed": number(rung.block_speed_m_s.mean, "m/s"),
         "cost": "" if rung.cost_m_s is None else number(rung.cost_m_s.mean, "m/s"),
         "interval": "" if rung.cost_m_s is None else interval(rung.cost_m_s, "m/s"),
-        "arrived": "" if rung.arrival is None else f"{round(rung.arrival.mean * rung.arrival.n)} of {rung.arrival.n}",
+        "arrived": "" if rung.arrival is None else _arrived(rung.arrival),
     }
+
+
+def restored_row(restored: RestoredResult) -> dict[str, str]:
+    """An assumption granted again, as text."""
+    return {
+        "name": restored.statement,
+        "speed": number(restored.block_speed_m_s.mean, "m/s"),
+        "gain": number(restored.gain_m_s.mean, "m/s"),
+        "interval": interval(restored.gain_m_s, "m/s"),
+        "arrived": _arrived(restored.arrival),
+    }
+
+
+def baseline_words(audit: Audit) -> str:
+    """The crew that bounces at random beside the scenario as given and the plan, in two sentences."""
+    random, given = audit.baseline.block_speed_m_s, audit.ladder[-1].block_speed_m_s
+    lead = audit.baseline.lead_m_s
+    chance = "" if lead.low > 0.0 or lead.high < 0.0 else ", which may be chance"
+    return (
+        f"The same crew bouncing at random: {number(random.mean, 'm/s')} ({interval(random, 'm/s')}), arrived in "
+        f"{_arrived(audit.baseline.arrival)} runs; as given {number(given.mean, 'm/s')}, {_arrived(audit.arrival)}; "
+        f"planned {number(audit.plan.travel.block_speed_m_s, 'm/s')}. The routine's lead is "
+        f"{number(lead.mean, 'm/s')} ({interval(lead, 'm/s')}){chance}."
+    )
+
+
+def _arrived(arrival: Estimate) -> str:
+    return f"{round(arrival.mean * arrival.n)} of {arrival.n}"
 
 
 def finding_row(finding: Finding) -> dict[str, str]:

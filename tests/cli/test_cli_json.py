@@ -26,6 +26,9 @@ lock_share laps books.residual_rel books.phantom_share ended causes files
 AUDIT = """
 answer arrival.share arrival.low arrival.high
 ladder.*.rung ladder.*.block_speed_m_s.mean ladder.*.block_speed_m_s.low ladder.*.block_speed_m_s.high ladder.*.cost
+ladder.*.against restored.*.assumption restored.*.statement restored.*.block_speed_m_s.mean restored.*.gain_m_s.mean
+restored.*.gain_m_s.low restored.*.gain_m_s.high restored.*.arrival.mean baseline.block_speed_m_s.mean
+baseline.arrival.mean baseline.lead_m_s.low demands
 verdicts.*.assumption verdicts.*.statement verdicts.*.predicted verdicts.*.measured.mean verdicts.*.measured.low
 verdicts.*.measured.high verdicts.*.tolerance verdicts.*.verdict numerics provenance.versions provenance.scenario_hash
 provenance.seed
@@ -66,7 +69,9 @@ def test_audit_has_the_documented_keys(audited: Saved) -> None:
     """An audit gives its answer, the ladder with its costs, the verdicts, the numerics and where it came from."""
     audit = audited.outcome.json()
     assert missing(audit, AUDIT) == []
-    assert [row["rung"] for row in audit["ladder"]] == ["geometry", "bodies", "turning", "yaw", "errors", "crowding"]
+    rungs = ["geometry", "headings", "bodies", "turning", "yaw", "errors", "crowding"]
+    assert [row["rung"] for row in audit["ladder"]] == rungs
+    assert [row["assumption"] for row in audit["restored"]] == ["turning", "yaw", "errors", "crowding"]
     assert {row["verdict"] for row in audit["verdicts"]} <= {"holds", "strained", "fails", "undecided"}
     assert audit["provenance"]["seed"] == 1
 
@@ -115,7 +120,7 @@ def test_demanded_verdicts_that_do_not_hold(short: Path, tmp_path: Path, audited
     assert (verdicts["lock"], verdicts["lap time"]) == ("fails", "undecided")
     assert outcome.code == NOT_MET
     assert outcome.err.splitlines() == ["required: lock, but it fails", "required: lap time, but it is undecided"]
-    assert outcome.json() | {"files": None} == audited.outcome.json() | {"files": None}
+    assert outcome.json() | {"files": None, "demands": []} == audited.outcome.json() | {"files": None}
     assert (tmp_path / "audit" / "report.html").exists()
 
 

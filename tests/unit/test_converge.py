@@ -10,8 +10,8 @@ import pandas as pd
 import pytest
 
 import swarmpush
-from swarmpush.auditing.audit import replicate_seeds
 from swarmpush.auditing.converge import KEYS, Convergence, converge, count_replicates, draws_something, find_convergence
+from swarmpush.auditing.replicates import replicate_seeds
 from swarmpush.auditing.step_effect import Effect
 from swarmpush.demos import demo
 from swarmpush.dynamics.steps import choose_step

@@ -8,8 +8,10 @@ from itertools import pairwise
 import pandas as pd
 import pytest
 
-from swarmpush.auditing.audit import audit, replicate_seeds
-from swarmpush.auditing.ladder import ASSUMPTIONS, climb
+from swarmpush.auditing.audit import Audit, audit, conclude, scenarios_to_run
+from swarmpush.auditing.ladder import ASSUMPTIONS, BASELINE, bounce_at_random, climb, restore
+from swarmpush.auditing.replicates import replicate_seeds
+from swarmpush.auditing.rungs import ladder
 from swarmpush.demos import demo
 from swarmpush.kinematics.planning import plan
 from swarmpush.loading import from_tables, load
@@ -132,18 +134,177 @@ def test_more_replicates_keep_the_first_ones() -> None:
     pd.testing.assert_frame_equal(few.loc[common], more.loc[common], check_exact=True)
 
 
-def test_costs_are_paired_differences() -> None:
+@pytest.fixture(scope="module")
+def audited() -> Audit:
+    return audit(short("service_passage"))
+
+
+def speeds_of(result: Audit) -> pd.DataFrame:
+    """Block speeds, one column per level and one row per replicate."""
+    return result.replicates.pivot(index="replicate", columns="rung", values="block_speed_m_s")
+
+
+def test_costs_are_paired_differences(audited: Audit) -> None:
     """A rung's cost is the mean of its differences to the rung below, run by run, and costs add up to the whole."""
-    result = audit(short("service_passage"))
-    speeds = result.replicates.pivot(index="replicate", columns="rung", values="block_speed_m_s")
-    steps = result.ladder
+    speeds = speeds_of(audited)
+    steps = [rung for rung in audited.ladder if rung.rung != "headings"]
     for below, rung in pairwise(steps[1:]):
         assert rung.cost_m_s is not None
+        assert rung.against == below.rung
         assert rung.cost_m_s.mean == pytest.approx((speeds[rung.rung] - speeds[below.rung]).mean(), abs=1e-15)
-    promise = result.plan.travel.block_speed_m_s
+    promise = audited.plan.travel.block_speed_m_s
     total = sum(rung.cost_m_s.mean for rung in steps if rung.cost_m_s is not None)
     assert steps[0].block_speed_m_s.mean == promise
     assert promise + total == pytest.approx(steps[-1].block_speed_m_s.mean)
+
+
+# ---- errors of headings, in the point world ------------------------------------------------------------------------
+
+
+def test_headings_stand_beside_geometry(audited: Audit) -> None:
+    """Errors of headings are the second rung; they and bodies are both compared with geometry."""
+    assert [rung.rung for rung in audited.ladder[:3]] == ["geometry", "headings", "bodies"]
+    geometry, headings, bodies = audited.ladder[:3]
+    assert (headings.against, bodies.against) == ("geometry", "geometry")
+    assert headings.cost_m_s is not None
+    assert headings.arrival is None
+    assert headings.block_speed_m_s.mean == pytest.approx(geometry.block_speed_m_s.mean + headings.cost_m_s.mean)
+
+
+def test_headings_cost_more_the_larger_the_errors(audited: Audit) -> None:
+    """In the point world, turns that err by 20 deg cost a good part of the promise, and errors of 0.01 deg nothing."""
+    s = load(demo("service_passage"))
+    costs = []
+    for degrees in (0.01, 20.0):
+        erring = s.model_copy(update={"errors": Errors(turn_sd=math.radians(degrees))})
+        found = conclude(plan(erring, n_starts=200), audited.replicates, audited.sample)
+        cost = found.ladder[1].cost_m_s
+        assert found.ladder[1].rung == "headings"
+        assert cost is not None
+        costs.append(cost.mean / found.plan.travel.block_speed_m_s)
+    assert abs(costs[0]) < 0.001
+    assert costs[1] < -0.05
+
+
+def test_no_headings_without_errors_or_lap(audited: Audit) -> None:
+    """Without errors of headings, or without a lap, there is no such rung; a spread of speeds is none of them."""
+    s = load(demo("service_passage"))
+    for other in (
+        s.model_copy(update={"errors": Errors()}),
+        s.model_copy(update={"errors": Errors(speed_spread=0.05, missed_bumps=0.02)}),
+        bounce_at_random(s),
+    ):
+        planned = plan(other, n_starts=100)
+        assert bool(planned.laps) == (other.routine == s.routine)
+        rows = audited.replicates[audited.replicates["rung"] == "yaw"].set_index("replicate")
+        runs = {rung.key: rows for rung in climb(other)}
+        assert "headings" not in [rung.rung for rung in ladder(planned, runs)]
+
+
+# ---- one assumption restored ---------------------------------------------------------------------------------------
+
+
+def test_restored_scenarios_grant_one_assumption(s: Scenario) -> None:
+    """Each differs from the scenario as given by one assumption, and is a valid scenario; the last is a rung."""
+    granted = restore(s)
+    by_key = {assumption.key: assumption for assumption in ASSUMPTIONS}
+    assert [one.key for one in granted] == [rung.key for rung in climb(s)[1:]]
+    for one in granted:
+        assert one.scenario == by_key[one.key].idealise(s) != s
+        assert from_tables(one.scenario.to_tables(), one.key) == one.scenario
+    assert granted[-1].scenario == climb(s)[-2].scenario
+
+
+def test_bars_that_turn_at_once_are_discs() -> None:
+    """Turning at once brings discs on course along, as neither a bar nor a free heading can; the statement says so."""
+    s = load(demo("bristle_tray"))
+    granted = {one.key: one for one in restore(s)}
+    assert list(granted) == [rung.key for rung in climb(s)[1:]]
+    turning = granted["turning"]
+    assert turning.scenario.pushers.is_disc
+    assert "turn at once; pushers are discs" in turning.statement
+    assert granted["shape"].scenario.pushers.turn_rate == s.pushers.turn_rate
+    for one in granted.values():
+        assert from_tables(one.scenario.to_tables(), one.key) == one.scenario
+
+
+def test_gains_are_paired_differences(audited: Audit) -> None:
+    """A gain is the mean difference to the scenario as given, run by run, and the runs have the same seeds."""
+    speeds = speeds_of(audited)
+    assert [row.assumption for row in audited.restored] == ["turning", "yaw", "errors", "crowding"]
+    for row in audited.restored:
+        level = f"restored: {row.assumption}"
+        assert row.gain_m_s.mean == pytest.approx((speeds[level] - speeds["crowding"]).mean(), abs=1e-15)
+        assert row.block_speed_m_s.mean == pytest.approx(speeds[level].mean())
+        seeds = audited.replicates[audited.replicates["rung"] == level]["seed"].tolist()
+        assert seeds == replicate_seeds(audited.scenario.trial.seed, 2)
+
+
+def test_runs_of_the_same_scenario_are_made_once(audited: Audit) -> None:
+    """Crowding taken away again is the rung below it, so its runs are those, and progress counts them once."""
+    rows = audited.replicates.set_index("rung")
+    below = rows.loc["errors"].reset_index(drop=True)
+    pd.testing.assert_frame_equal(rows.loc["restored: crowding"].reset_index(drop=True), below, check_exact=True)
+    told: list[tuple[int, int, str]] = []
+    audit(audited.scenario, progress=lambda *what: told.append(what))
+    # 5 rungs, 3 restored and the baseline with 2 runs each, and 2 with half the step
+    assert {total for _, total, _ in told} == {20}
+    assert [done for done, _, _ in told] == list(range(1, 21))
+    assert "restored: crowding" not in {what for _, _, what in told}
+
+
+# ---- the crew that bounces at random -------------------------------------------------------------------------------
+
+
+def test_baseline_changes_the_routine_only(s: Scenario) -> None:
+    """The crew at random has the same rig, errors and starts, and another routine, which may stand in a file."""
+    random = bounce_at_random(s)
+    assert random.model_copy(update={"routine": s.routine}) == s
+    assert [act.act for act in random.routine.stages[0].acts] == ["run", "wander"]
+    assert from_tables(random.to_tables(), "random") == random
+    assert (draw_starts(random, 3) == draw_starts(s, 3)).all()
+    assert scenarios_to_run(s)[BASELINE] == random
+
+
+def test_lead_is_a_paired_difference(audited: Audit) -> None:
+    """The routine's lead is what it moves the block by more than the crew at random, run by run."""
+    speeds = speeds_of(audited)
+    baseline = audited.baseline
+    assert baseline.block_speed_m_s.mean == pytest.approx(speeds["baseline"].mean())
+    assert baseline.lead_m_s.mean == pytest.approx((speeds["crowding"] - speeds["baseline"]).mean(), abs=1e-15)
+    assert baseline.arrival.n == 2
+
+
+def test_a_crew_at_random_has_no_lead_over_itself() -> None:
+    """A scenario that bounces at random itself is its own baseline: the runs are the same and the lead is 0."""
+    result = audit(bounce_at_random(short("service_passage")))
+    assert result.baseline.lead_m_s.mean == 0.0
+    assert result.ladder[1].rung == "bodies"
+
+
+# ---- two designs ---------------------------------------------------------------------------------------------------
+
+
+def test_comparing_two_audits(audited: Audit) -> None:
+    """Two audits are compared run by run, other minus this; with itself an audit differs in nothing."""
+    quicker = audited.scenario.replace(pushers={"count": 3})
+    other = audit(quicker)
+    found = audited.compare(other).set_index("quantity")
+    assert found.index.tolist() == ["block speed", "arrival", "strike rate"]
+    change = other.as_given["block_speed_m_s"].to_numpy() - audited.as_given["block_speed_m_s"].to_numpy()
+    assert found.loc["block speed", "difference"] == pytest.approx(change.mean())
+    assert found.loc["block speed", "difference"] != 0.0
+    assert other.compare(audited)["difference"].to_numpy() == pytest.approx(-found["difference"].to_numpy())
+    assert (audited.compare(audited)["difference"] == 0.0).all()
+
+
+def test_other_draws_are_not_compared(audited: Audit) -> None:
+    """Audits with other seeds or another number of replicates have no pairs."""
+    s = audited.scenario
+    with pytest.raises(ValueError, match="2 and 3 replicates"):
+        audited.compare(audit(s, replicates=3))
+    with pytest.raises(ValueError, match="different seeds"):
+        audited.compare(audit(s.replace(trial={"seed": 2})))
 
 
 def test_one_replicate_is_too_few() -> None:
