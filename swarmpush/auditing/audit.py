@@ -223,7 +223,7 @@ def audit(
         for future in as_completed(list(futures)):
             rung, k = futures.pop(future)
             run = future.result()
-            row = {"rung": rung.key, "replicate": k, "seed": seeds[k], **run.summary()}
+            row = {"rung": rung.key, "replicate": k, "seed": seeds[k], **run.summary(planned.main_lap)}
             if (rung, k) == sample_task:
                 sample = run
             if kept and (rung.key, k) not in rows:
