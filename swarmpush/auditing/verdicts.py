@@ -226,5 +226,5 @@ def _law(plan: Plan) -> str:
         "given": "the given nudge",
         "impact": "the slide after one impact",
         "lean": "the thrust while in touch",
-        "auto": "the slide after one impact and the thrust while in touch",
+        "auto": "one slide and the thrust while in touch",
     }[plan.scenario.forecast.law]

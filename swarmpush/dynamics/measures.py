@@ -14,7 +14,7 @@ from swarmpush.kinematics.laps import Lap
 
 FloatArray = NDArray[np.float64]
 
-LEAST_PAIRS = 8  # of strikes in a row, below which their regression says nothing
+LEAST_PAIRS = 12  # of strikes in a row, below which their regression says nothing
 LEAST_PER_PUSHER = 3  # its own mean takes one of them
 SAME_HEADING = 1e-6  # rad; headings that scatter less do so by rounding, and have no regression
 IS_MOVING = 0.01  # of the free speed
@@ -52,15 +52,16 @@ def _half_turn(angle: FloatArray) -> FloatArray:
 def heading_growth(ends: pd.DataFrame) -> float:
     """By which factor a deviation of heading grows from strike to strike: 0 forgotten, 1 kept, more than 1 growing.
 
-    The slope of a regression of the later on the earlier deviation, each pusher about its own means. Its bias is taken
-    out: with n pairs of k pushers the slope r is low by (1 + r) k/n for the means and by 2 r/n for the slope itself;
-    with one pusher that is (1 + 3 r)/n (Kendall, Biometrika 41 (1954) 403; Marriott and Pope, ibid. 390).
+    The slope r of a regression of the later on the earlier deviation, each pusher about its own means, and its bias
+    taken out: with n pairs of k pushers and a true factor g it is low by (1 + g) k/n for the means and by 2 g/n for the
+    slope itself, so g = (r + k/n)/(1 - (k + 2)/n). (With one pusher the bias is (1 + 3 g)/n: Kendall, Biometrika 41
+    (1954) 403; Marriott and Pope, ibid. 390; for several worked out here.)
 
     Arguments:
         ends: from `lap_ends`. Pushers with fewer than 3 passes are left out.
 
     Returns:
-        The factor; NaN with fewer than 8 pairs, or where all headings are alike.
+        The factor; NaN with fewer than 12 pairs, or where all headings are alike.
     """
     by_pusher = ends.groupby("pusher")
     ends = ends[by_pusher["before_rad"].transform("size") >= LEAST_PER_PUSHER]
@@ -73,7 +74,7 @@ def heading_growth(ends: pd.DataFrame) -> float:
     if spread <= n * SAME_HEADING**2:
         return math.nan
     slope = float(before @ after) / spread
-    return slope + (1.0 + slope) * k / n + 2.0 * slope / n
+    return (slope + k / n) / (1.0 - (k + 2) / n)
 
 
 def share_in_band(bumps: pd.DataFrame, lap: Lap) -> float:
