@@ -58,8 +58,8 @@ def find_verdicts(plan: Plan, runs: pd.DataFrame) -> tuple[Finding, ...]:
         runs: summaries (`Run.summary` with the plan's main lap) of independent runs of the scenario as given, one row
             each. A column that is missing counts as not measured.
     """
-    judge_ = _Judge(plan, runs)
-    return (*_conditions(judge_), *_laps(judge_), *_travel(judge_))
+    j = _Judge(plan, runs)
+    return (*_conditions(j), *_laps(j), *_travel(j))
 
 
 def most_failed(findings: Iterable[Finding]) -> tuple[Finding, ...]:
@@ -96,9 +96,7 @@ class _Judge:
         """A claim that holds within a band of its own."""
         trial = self.plan.scenario.trial
         verdict = judge(measured, band)
-        return Finding(
-            name, statement, unit, predicted, measured, trial.confidence, trial.tolerance, verdict, band
-        )  # fmt: skip
+        return Finding(name, statement, unit, predicted, measured, trial.confidence, trial.tolerance, verdict, band)
 
     def near(
         self, name: str, statement: str, unit: str, predicted: float, measured: Estimate, scale: float = 1.0

@@ -49,6 +49,12 @@ def off_centre() -> Scenario:
     return ideal().replace(floor=floor, block={"width": 0.2, "length": 0.1, "offset": 0.03})
 
 
+def gliding() -> Scenario:
+    """The ideal rig with a heavier block that glides on for some two seconds of a lap of five."""
+    floor = {"static_friction": 3e-4, "kinetic_friction": 3e-4}
+    return ideal().replace(floor=floor, block={"mass": 5.0})
+
+
 SOUND = {"ideal": ideal(), "leaning": leaning(), "off centre": off_centre()}
 
 # by the condition that fails
@@ -56,6 +62,7 @@ FAULTY = {
     claims.UNDISTURBED: ideal().replace(pushers={"count": 6}),
     claims.INSTANT_TURNS: ideal().replace(pushers={"turn_rate": 1.0}),
     claims.NO_YAW: off_centre().replace(block={"yaw": "free"}),
+    claims.AT_REST: gliding(),
     claims.IN_BAND: ideal().replace(errors={"turn_sd": math.radians(30.0)}),
     claims.FORCE: leaning().replace(errors={"fade_time": 80.0}),
 }
