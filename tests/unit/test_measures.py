@@ -87,7 +87,7 @@ def test_growth_is_unbiased(growth: float) -> None:
     """Over many short series of three pushers the mean is the factor they were made with; without correction it is
     off by 0.06 and more."""
     rng, found = np.random.default_rng(1), []
-    for _ in range(300):
+    for _ in range(150):
         ends = []
         for k in range(3):
             x = [rng.normal() / math.sqrt(1 - growth**2)]
@@ -95,7 +95,7 @@ def test_growth_is_unbiased(growth: float) -> None:
                 x.append(growth * x[-1] + rng.normal())
             ends.append(paired(k, x[:-1], x[1:]))
         found.append(measures.heading_growth(pd.concat(ends)))
-    assert np.mean(found) == pytest.approx(growth, abs=0.035)  # 3 standard errors: 3 x 0.17/sqrt(300), and a rest
+    assert np.mean(found) == pytest.approx(growth, abs=0.045)  # 3 standard errors: 3 x 0.17/sqrt(150), and a rest
 
 
 def test_growth_needs_pairs_and_scatter() -> None:
