@@ -17,6 +17,7 @@ FloatArray = NDArray[np.float64]
 LEAST_PAIRS = 12  # of strikes in a row, below which their regression says nothing
 LEAST_PER_PUSHER = 3  # its own mean takes one of them
 SAME_HEADING = 1e-6  # rad; headings that scatter less do so by rounding, and have no regression
+LEAST_SCATTERED = 0.25  # of the strikes must be off their pusher's median
 IS_MOVING = 0.01  # of the free speed
 LAPS_TO_CATCH = 5.0  # lap times that a run must last before its pushers can be said to have found no lap
 
@@ -61,7 +62,7 @@ def heading_growth(ends: pd.DataFrame) -> float:
         ends: from `lap_ends`. Pushers with fewer than 3 passes are left out.
 
     Returns:
-        The factor; NaN with fewer than 12 pairs, or where all headings are alike.
+        The factor; NaN with fewer than 12 pairs, or where three quarters of the headings are alike.
     """
     by_pusher = ends.groupby("pusher")
     ends = ends[by_pusher["before_rad"].transform("size") >= LEAST_PER_PUSHER]
@@ -69,11 +70,11 @@ def heading_growth(ends: pd.DataFrame) -> float:
     if n < LEAST_PAIRS:
         return math.nan
     pairs = ends[["before_rad", "after_rad"]]
+    usual = ends.groupby("pusher")["before_rad"].transform("median")
+    if ((pairs["before_rad"] - usual).abs() > SAME_HEADING).mean() <= LEAST_SCATTERED:
+        return math.nan  # a slope would hang on single strikes, such as the first one on a lap without errors
     before, after = (pairs - pairs.groupby(ends["pusher"]).transform("mean")).to_numpy().T
-    spread = float(before @ before)
-    if spread <= n * SAME_HEADING**2:
-        return math.nan
-    slope = float(before @ after) / spread
+    slope = float(before @ after) / float(before @ before)
     return (slope + k / n) / (1.0 - (k + 2) / n)
 
 

@@ -108,6 +108,13 @@ def test_growth_needs_pairs_and_scatter() -> None:
     assert not math.isnan(measures.heading_growth(paired(0, zigzag, zigzag)))
 
 
+def test_growth_does_not_hang_on_single_strikes() -> None:
+    """Where a quarter of the headings are off and the rest alike there is no slope, with one more there is."""
+    after = 6 * [0.0, 0.1]
+    assert math.isnan(measures.heading_growth(paired(0, 3 * [1.0] + 9 * [0.3], after)))
+    assert not math.isnan(measures.heading_growth(paired(0, 4 * [1.0] + 8 * [0.3], after)))
+
+
 @pytest.mark.parametrize(
     ("letters", "headings", "share"),
     [
