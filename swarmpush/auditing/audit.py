@@ -242,7 +242,7 @@ def audit(
         run = simulate(scenario, seed=seeds[k], steps=steps, cycles=cycles, progress=look_up)
         if task == sample_task:
             samples.append(run)
-        return {"rung": task.level, "replicate": k, "seed": seeds[k], **run.summary()}
+        return {"rung": task.level, "replicate": k, "seed": seeds[k], **run.summary(planned.main_lap)}
 
     names = {rung.key: rung.adds for rung in climb(s)}
 

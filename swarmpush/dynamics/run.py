@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
@@ -12,10 +13,12 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from swarmpush.dynamics import measures
 from swarmpush.dynamics.bumps import find_bumps, find_completed_laps
 from swarmpush.dynamics.states import STATES, Tables, failures, pusher_states
 from swarmpush.dynamics.steps import StepSettings
 from swarmpush.kinematics.boundary import REAR
+from swarmpush.kinematics.laps import Lap
 from swarmpush.loading import from_tables
 from swarmpush.output import plain, provenance, to_json, write_table, write_text
 from swarmpush.scenario import Scenario
@@ -146,10 +149,15 @@ class Run:
         total = self.duration_s * self.scenario.pushers.count
         return float((self.laps["t_end_s"] - self.laps["t_start_s"]).sum() / total) if total > 0.0 else 0.0
 
-    def summary(self) -> dict[str, float]:
+    def summary(self, lap: Lap | None = None) -> dict[str, float]:
         """The run's measures as numbers, for statistics over runs; NaN where there is nothing to measure.
 
         Crew size x strike rate (per pusher) x nudge is the block's speed.
+
+        Arguments:
+            lap: the plan's main lap, with which strikes are compared. Without it lap_hit_y_m, lap_hit_heading_rad (mean
+                place and heading of the strikes that close this lap), heading_growth, in_band_share and captured_share
+                (of pushers that ever complete a lap of the plan) are NaN. The rest is explained in `measures.py`.
         """
         strikes = self.strikes
         n = len(strikes)
@@ -172,6 +180,14 @@ class Run:
             "n_laps": float(len(self.laps)),
             "residual_rel": self.books.residual_rel,
             "phantom_share": self.books.phantom_share,
+            **self._on_lap(lap),
+            "moving_alone_share": measures.moving_alone_share(
+                self.block, self.visits, self.scenario.pushers.free_speed
+            ),
+            "yaw_rms_rad": measures.yaw_rms(self.block),
+            "reacting_share": measures.reacting_share(self.pushers),
+            "strong_share": measures.strong_share(self.block),
+            "bumps_between_pushers": measures.bumps_between_pushers(self.bumps),
             **{f"cause_{name}": share for name, share in self.causes.items()},
         }
 
@@ -179,6 +195,22 @@ class Run:
         from swarmpush.reporting.notebook import run_html
 
         return run_html(self)
+
+    def _on_lap(self, lap: Lap | None) -> dict[str, float]:
+        """The measures that need the plan's lap."""
+        names = ("lap_hit_y_m", "lap_hit_heading_rad", "heading_growth", "in_band_share", "captured_share")
+        result = dict.fromkeys(names, math.nan)
+        if lap is None:
+            return result
+        ends = measures.lap_ends(self.bumps, lap)
+        if len(ends):
+            result["lap_hit_y_m"] = float(ends["y_m"].mean())
+            result["lap_hit_heading_rad"] = lap.rear_heading_rad + float(ends["after_rad"].mean())
+        result["heading_growth"] = measures.heading_growth(ends)
+        result["in_band_share"] = measures.share_in_band(self.bumps, lap)
+        if self.duration_s >= measures.LAPS_TO_CATCH * lap.time_s:
+            result["captured_share"] = self.laps["pusher"].nunique() / self.scenario.pushers.count
+        return result
 
     def to_dict(self, files: dict[str, str] | None = None) -> dict[str, Any]:
         """The run as plain values for JSON; undefined values are None."""

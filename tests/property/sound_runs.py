@@ -16,6 +16,7 @@ from swarmpush.dynamics.world import ENDINGS
 MOMENTUM = 1e-9  # unbalanced momentum over all impulses; rounding leaves 1e-15, and more in long runs
 ENERGY = 1e-9  # unbalanced energy over all work
 SHARE = 1e-9  # shares are sums of many steps
+SHARES = ("moving_alone_share", "reacting_share", "strong_share", "bumps_between_pushers")  # of a summary
 RAN_AWAY = ENDINGS[Ending.NOT_A_NUMBER]
 # columns that hold NaN where there is nothing to tell, by table
 MAY_LACK: dict[str, set[str]] = {
@@ -63,6 +64,9 @@ def _numbers(run: Run) -> Iterator[str]:
     summary = run.summary()
     if not math.isfinite(summary["travel_m"] + summary["block_speed_m_s"] + summary["lock_share"]):
         yield "the summary's measures are no numbers"
+    for name in SHARES:
+        if not (math.isnan(summary[name]) or 0.0 <= summary[name] <= 1.0 + SHARE):
+            yield f"{name} is {summary[name]}"
 
 
 def _flat(name: str, value: Any) -> Iterator[tuple[str, Any]]:
