@@ -209,6 +209,14 @@ def audit(
     replicates: Annotated[
         int | None, typer.Option(min=2, max=100_000, help="independent runs per rung; default: the scenario's")
     ] = None,
+    budget: Annotated[
+        int | None,
+        typer.Option(
+            min=2,
+            max=100_000,
+            help="most runs per rung: doubled up to this while a verdict is undecided; default: no more than the first",
+        ),
+    ] = None,
     workers: Annotated[int | None, typer.Option(min=1, max=1024, help="threads; default: one per processor")] = None,
     seed: Seed = None,
     require: Annotated[
@@ -232,9 +240,14 @@ def audit(
     s = _load(scenario)
     if seed is not None:
         s = s.replace(trial={"seed": seed})
+    first = s.trial.replicates if replicates is None else replicates
+    if budget is not None and budget < first:
+        raise _Refusal(f"--budget: {budget} runs are fewer than the {first} of the first look")
     folder, journal = _resumable(out, f"{_stem(scenario)}-audit", force)
     with _resuming(folder), _preparing(as_json) as bar:
-        result = swarmpush.audit(s, replicates=replicates, workers=workers, journal=journal, progress=bar)
+        result = swarmpush.audit(
+            s, replicates=replicates, budget=budget, workers=workers, journal=journal, progress=bar
+        )
     files = result.save(folder, demanded) | {"folder": str(folder), "report": "report.html"}
     swarmpush.report(result, folder / "report.html")
     journal.unlink(missing_ok=True)

@@ -4,9 +4,9 @@ from __future__ import annotations
 
 import json
 from collections.abc import Callable, Iterable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
-from typing import Any
+from typing import Any, NamedTuple
 
 import pandas as pd
 
@@ -14,9 +14,10 @@ from swarmpush.auditing.comparing import compare_runs
 from swarmpush.auditing.demands import DemandResult, check_demands, read_demand
 from swarmpush.auditing.journal import Journal, Row
 from swarmpush.auditing.ladder import BASELINE, bounce_at_random, climb, restore
+from swarmpush.auditing.looks import confidence_at, looks
 from swarmpush.auditing.replicates import Progress, Task, replicate_seeds, run_tasks
 from swarmpush.auditing.rungs import Baseline, RestoredResult, RungResult, baseline, ladder, restored
-from swarmpush.auditing.statistics import Estimate, mean_interval, share_interval
+from swarmpush.auditing.statistics import Estimate, Verdict, mean_interval, share_interval
 from swarmpush.auditing.verdicts import Finding, find_verdicts
 from swarmpush.dynamics.run import Run, load_run
 from swarmpush.dynamics.steps import StepSettings, choose_step
@@ -44,6 +45,17 @@ class Numerics:
     phantom_share: float
 
 
+class Look(NamedTuple):
+    """Which look at the runs an audit was concluded at, from 0, and the numbers of runs at all planned ones."""
+
+    number: int
+    planned: tuple[int, ...]
+
+    def confidence(self, s: Scenario) -> float:
+        """Confidence of each interval, so that all looks together have the scenario's."""
+        return confidence_at(self.number, len(self.planned), s.trial.confidence)
+
+
 @dataclass(frozen=True)
 class Audit:
     """The plan's promise against what bodies did.
@@ -54,7 +66,7 @@ class Audit:
 
     ladder: from geometry to the scenario as given. restored: what would come back with one assumption granted again,
     in the ladder's order. baseline: the same crew bouncing at random. verdicts: on the plan's claims. arrival: share of
-    the runs as given. numerics: what the step costs.
+    the runs as given. numerics: what the step costs. look: see `Look`.
     """
 
     scenario: Scenario
@@ -67,6 +79,7 @@ class Audit:
     verdicts: tuple[Finding, ...]
     arrival: Estimate
     numerics: Numerics
+    look: Look
 
     @property
     def as_given(self) -> pd.DataFrame:
@@ -82,7 +95,7 @@ class Audit:
     def answer(self) -> str:
         """Whether the block arrives, in one sentence."""
         s, share = self.scenario, self.arrival
-        percent = f"{s.trial.confidence:.0%}"
+        percent = f"{100 * self.look.confidence(s):.3g}%"
         n = round(share.mean * share.n)
         lead = "Yes" if share.low > 0.5 else "No" if share.high < 0.5 else "Open"
         speed = self.ladder[-1].block_speed_m_s.mean
@@ -109,7 +122,7 @@ class Audit:
             ValueError: when a text is no demand.
         """
         read = [read_demand(text) for text in demands]
-        return check_demands(read, self.verdicts, self.as_given, self.scenario.trial.confidence)
+        return check_demands(read, self.verdicts, self.as_given, self.look.confidence(self.scenario))
 
     def compare(self, other: Audit) -> pd.DataFrame:
         """Two designs side by side, run by run with the same random draws.
@@ -152,6 +165,11 @@ class Audit:
                 "restored": self.restored,
                 "baseline": self.baseline,
                 "demands": self.check(demands),
+                "looks": {
+                    "planned": self.look.planned,
+                    "number": self.look.number,
+                    "confidence": self.look.confidence(self.scenario),
+                },
                 "verdicts": self.verdicts,
                 "numerics": self.numerics,
                 "plan": self.plan.to_dict(),
@@ -182,10 +200,11 @@ def load_audit(folder: Path) -> Audit:
         ValueError: when the folder does not hold a whole audit.
     """
     try:
-        json.loads((folder / "audit.json").read_text(encoding="utf-8"))["answer"]  # written last: a whole audit
+        saved = json.loads((folder / "audit.json").read_text(encoding="utf-8"))  # written last: a whole audit
+        look = Look(int(saved["looks"]["number"]), tuple(saved["looks"]["planned"]))
         replicates = pd.read_parquet(folder / "replicates.parquet")
         planned = plan(load_run(folder / "sample").scenario)
-        return conclude(planned, replicates, load_run(folder / "sample", _cycles(planned)))
+        return conclude(planned, replicates, load_run(folder / "sample", _cycles(planned)), look)
     except OSError as error:
         reason = f"{Path(error.filename).name if error.filename else 'a file'}: {error.strerror or 'unreadable'}"
     except (KeyError, ValueError, TypeError):
@@ -197,6 +216,7 @@ def audit(
     s: Scenario,
     *,
     replicates: int | None = None,
+    budget: int | None = None,
     workers: int | None = None,
     journal: Path | None = None,
     progress: Progress | None = None,
@@ -209,6 +229,9 @@ def audit(
     Arguments:
         s: the scenario.
         replicates: independent runs per rung, at least 2; the scenario's own number unless given.
+        budget: most runs per rung: while a verdict is undecided, their number is doubled up to this, and every look has
+            so much more confidence that all looks together have the scenario's (`looks`). None: no more than
+            `replicates`, in one look.
         workers: threads; one per processor unless given. The result does not depend on it.
         journal: file for finished runs; if it is left from an interrupted audit of the same scenario, the runs in it
             are not made again. Delete it when the result is safe.
@@ -218,19 +241,20 @@ def audit(
         An `Audit`.
 
     Raises:
-        ValueError: for fewer than two replicates.
+        ValueError: for fewer than two replicates, or a budget below their number.
         OutputError: when the journal belongs to something else or cannot be written.
     """
     n = s.trial.replicates if replicates is None else replicates
     if n < 2:
         raise ValueError(f"{n} replicates given; an interval needs at least 2")
+    most = n if budget is None else budget
+    if most < n:
+        raise ValueError(f"a budget of {most} runs given; it is below the {n} of the first look")
     planned = plan(s)
     scenarios = scenarios_to_run(s)
     as_given = climb(s)[-1].key
     originals = _originals(scenarios)
-    seeds = replicate_seeds(s.trial.seed, n)
-    tasks = [Task(level, k) for level in dict.fromkeys(originals.values()) for k in range(n)]
-    tasks += [Task(HALVED, k) for k in range(min(n, N_HALVED))]
+    seeds = replicate_seeds(s.trial.seed, most)
     cycles = _cycles(planned)
     sample_task = Task(as_given, 0)
     samples: list[Run] = []  # one run is needed in full
@@ -251,13 +275,22 @@ def audit(
             progress(done, total, names.get(level, level))
 
     kept = Journal(journal, provenance(s)) if journal else None
-    rows = run_tasks(tasks, run_one, journal=kept, again=(sample_task,), workers=workers, progress=tell)
-    table = [
-        rows[Task(originals.get(level, level), k)] | {"rung": level}
-        for level in scenarios
-        for k in range(min(n, N_HALVED) if level == HALVED else n)
-    ]
-    return conclude(planned, pd.DataFrame(table), samples[0])
+    sizes = looks(n, most)
+    rows: dict[Task, Row] = {}
+    for number, size in enumerate(sizes):
+        tasks = [Task(level, k) for level in dict.fromkeys(originals.values()) for k in range(size)]
+        tasks += [Task(HALVED, k) for k in range(min(size, N_HALVED))]
+        again = () if samples else (sample_task,)
+        rows |= run_tasks(tasks, run_one, journal=kept, known=rows, again=again, workers=workers, progress=tell)
+        table = [
+            rows[Task(originals.get(level, level), k)] | {"rung": level}
+            for level in scenarios
+            for k in range(min(size, N_HALVED) if level == HALVED else size)
+        ]
+        result = conclude(planned, pd.DataFrame(table), samples[0], Look(number, sizes))
+        if all(finding.verdict is not Verdict.UNDECIDED for finding in result.verdicts):
+            break
+    return result
 
 
 def scenarios_to_run(s: Scenario) -> dict[str, Scenario]:
@@ -277,8 +310,10 @@ def _originals(scenarios: dict[str, Scenario]) -> dict[str, str]:
     return {level: first.setdefault(digest, level) for level, digest in levels.items()}
 
 
-def conclude(planned: Plan, replicates: pd.DataFrame, sample: Run) -> Audit:
-    """All that an audit says, from the plan and the runs' summaries; a pure function."""
+def conclude(planned: Plan, replicates: pd.DataFrame, sample: Run, look: Look) -> Audit:
+    """All that an audit says, from the plan and the runs' summaries, at one of several looks; a pure function."""
+    given, confidence = planned, look.confidence(planned.scenario)
+    planned = replace(planned, scenario=planned.scenario.replace(trial={"confidence": confidence}))
     s = planned.scenario
     by_rung = {str(key): rows.set_index("replicate") for key, rows in replicates.groupby("rung", sort=False)}
     as_given = by_rung[climb(s)[-1].key]
@@ -286,18 +321,19 @@ def conclude(planned: Plan, replicates: pd.DataFrame, sample: Run) -> Audit:
     halved = by_rung[HALVED]["block_speed_m_s"]
     whole = as_given.loc[halved.index, "block_speed_m_s"]
     return Audit(
-        scenario=s,
-        plan=planned,
+        scenario=given.scenario,
+        plan=given,
         replicates=replicates,
         sample=sample,
         ladder=ladder(planned, by_rung),
         restored=restored(planned, by_rung),
         baseline=baseline(planned, by_rung),
         verdicts=find_verdicts(planned, as_given),
-        arrival=share_interval(n_arrived, n, s.trial.confidence),
+        arrival=share_interval(n_arrived, n, confidence),
+        look=look,
         numerics=Numerics(
             steps=choose_step(s),
-            change_m_s=mean_interval(halved - whole, s.trial.confidence),
+            change_m_s=mean_interval(halved - whole, confidence),
             residual_rel=float(replicates["residual_rel"].max()),
             phantom_share=float(replicates["phantom_share"].max()),
         ),

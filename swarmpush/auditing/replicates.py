@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Callable, Collection, Sequence
+from collections.abc import Callable, Collection, Mapping, Sequence
 from concurrent.futures import CancelledError, Future, ThreadPoolExecutor, as_completed
 from threading import Event
 from typing import NamedTuple
@@ -39,6 +39,7 @@ def run_tasks(
     work: Work,
     *,
     journal: Journal | None = None,
+    known: Mapping[Task, Row] | None = None,
     again: Collection[Task] = (),
     workers: int | None = None,
     progress: Progress | None = None,
@@ -51,6 +52,7 @@ def run_tasks(
         work: makes one run and returns its row; called in a thread. What it is given second must be called now and then
             with any number: it raises `Stopped` once the runs are called off.
         journal: takes each row as it comes; its rows are not made anew.
+        known: further rows that are not made anew.
         again: tasks that are made, and first, though the journal may hold them.
         workers: threads; one per processor unless given. The rows do not depend on it.
         progress: called after each run with runs done, runs in all and the run's level.
@@ -62,7 +64,7 @@ def run_tasks(
         OutputError: when the journal cannot be written. Whatever `work` raises is passed on, and so is an interruption
         from the keyboard; runs under way then end soon, and those that have ended are in the journal.
     """
-    rows = {Task(*key): row for key, row in journal.rows.items()} if journal else {}
+    rows = dict(known or {}) | ({Task(*key): row for key, row in journal.rows.items()} if journal else {})
     waiting = [*again, *(task for task in reversed(tasks) if task not in rows and task not in again)]
     done = len(tasks) - len(waiting)
     is_stopped = Event()

@@ -25,7 +25,7 @@ RUNS = pd.DataFrame(
 
 
 def finding(name: str, verdict: Verdict, predicted: float = 1.0, measured: float = 0.9) -> Finding:
-    return Finding(name, "", "1", predicted, Estimate(measured, 0.8, 1.0, 4), 0.95, 0.1, verdict)
+    return Finding(name, "", "1", predicted, Estimate(measured, 0.8, 1.0, 4), 0.95, 0.1, verdict, (0.9, 1.1))
 
 
 def check(text: str, *findings: Finding) -> DemandResult:
@@ -66,7 +66,7 @@ def test_what_can_be_demanded(text: str, name: str, relation: str, bound: float 
         ("arrival>=", "write NAME>=NUMBER"),
         (">=0.9", "write NAME>=NUMBER"),
         ("arrival==1", "verdict"),
-        ("arival", "no such claim; there are lap time"),
+        ("arival", "no such claim; there are instant turns"),
         ("arival>=0.9", "no such measure; there are arrival"),
         ("momentum per strike>=1", "no such measure"),
         ("lock=perhaps", "no such verdict"),

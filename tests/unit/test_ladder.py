@@ -177,7 +177,7 @@ def test_headings_cost_more_the_larger_the_errors(audited: Audit) -> None:
     costs = []
     for degrees in (0.01, 20.0):
         erring = s.model_copy(update={"errors": Errors(turn_sd=math.radians(degrees))})
-        found = conclude(plan(erring, n_starts=200), audited.replicates, audited.sample)
+        found = conclude(plan(erring, n_starts=200), audited.replicates, audited.sample, audited.look)
         cost = found.ladder[1].cost_m_s
         assert found.ladder[1].rung == "headings"
         assert cost is not None
