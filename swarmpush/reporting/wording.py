@@ -77,6 +77,8 @@ def interval(estimate: Estimate, unit: str) -> str:
         return "-"
     if unit.startswith("share"):
         return f"{number(low, unit)} to {number(high, unit)}"
+    if unit == "rad":  # people read degrees
+        return f"{math.degrees(low):.3g} to {math.degrees(high):.3g} deg"
     factor, prefix = prefix_for(max(abs(low), abs(high)))
     if unit.startswith("1"):  # a ratio or a rate, which take no prefix
         factor, prefix = 1.0, ""
