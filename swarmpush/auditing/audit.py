@@ -17,7 +17,7 @@ from swarmpush.auditing.ladder import BASELINE, bounce_at_random, climb, restore
 from swarmpush.auditing.looks import confidence_at, looks
 from swarmpush.auditing.replicates import Progress, Task, replicate_seeds, run_tasks
 from swarmpush.auditing.rungs import Baseline, RestoredResult, RungResult, baseline, ladder, restored
-from swarmpush.auditing.statistics import Estimate, Verdict, mean_interval, share_interval
+from swarmpush.auditing.statistics import Estimate, Verdict, mean_interval, runs_to_decide, share_interval
 from swarmpush.auditing.verdicts import Finding, find_verdicts
 from swarmpush.dynamics.run import Run, load_run
 from swarmpush.dynamics.steps import StepSettings, choose_step
@@ -27,6 +27,7 @@ from swarmpush.output import claim_folder, plain, provenance, to_json, write_tab
 from swarmpush.quantities import for_people
 from swarmpush.scenario import Scenario
 
+MOSTLY = 0.5  # of the runs: a block arrives if more of them do
 HALVED = "halved step"  # the level that repeats the scenario as given with half the step
 N_HALVED = 4  # replicates that are repeated with half the step
 
@@ -82,6 +83,22 @@ class Audit:
     look: Look
 
     @property
+    def confidence(self) -> float:
+        """Confidence of each interval: the scenario's, or more after several looks."""
+        return self.look.confidence(self.scenario)
+
+    @property
+    def percent(self) -> str:
+        """The same for people."""
+        return f"{100 * self.confidence:.3g}%"
+
+    @property
+    def bench_runs(self) -> int | None:
+        """How many runs on a bench would most likely show whether more than half arrive, or fewer, if arrivals are there
+        as frequent as here; None where they are as likely as not. See `runs_to_decide`."""
+        return runs_to_decide(self.arrival.mean, 0, MOSTLY, self.scenario.trial.confidence)
+
+    @property
     def as_given(self) -> pd.DataFrame:
         """The runs of the scenario as given."""
         return self.replicates[self.replicates["rung"] == climb(self.scenario)[-1].key]
@@ -95,14 +112,13 @@ class Audit:
     def answer(self) -> str:
         """Whether the block arrives, in one sentence."""
         s, share = self.scenario, self.arrival
-        percent = f"{100 * self.look.confidence(s):.3g}%"
         n = round(share.mean * share.n)
-        lead = "Yes" if share.low > 0.5 else "No" if share.high < 0.5 else "Open"
+        lead = "Yes" if share.low > MOSTLY else "No" if share.high < MOSTLY else "Open"
         speed = self.ladder[-1].block_speed_m_s.mean
         promise = self.plan.travel.block_speed_m_s
         text = (
             f"{lead}: the block covers {for_people(s.goal.travel, 'm')} within {for_people(s.goal.time_limit, 's')} in "
-            f"{n} of {share.n} runs ({percent} interval {share.low:.0%} to {share.high:.0%}); it moves at "
+            f"{n} of {share.n} runs ({self.percent} interval {share.low:.0%} to {share.high:.0%}); it moves at "
             f"{for_people(speed, 'm/s')} where geometry promises {for_people(promise, 'm/s')}"
         )
         costs = [r for r in self.ladder if r.arrival is not None and r.cost_m_s is not None and r.cost_m_s.high < 0.0]
@@ -122,7 +138,7 @@ class Audit:
             ValueError: when a text is no demand.
         """
         read = [read_demand(text) for text in demands]
-        return check_demands(read, self.verdicts, self.as_given, self.look.confidence(self.scenario))
+        return check_demands(read, self.verdicts, self.as_given, self.confidence)
 
     def compare(self, other: Audit) -> pd.DataFrame:
         """Two designs side by side, run by run with the same random draws.
@@ -151,6 +167,7 @@ class Audit:
                     "high": self.arrival.high,
                     "n": self.arrival.n,
                 },
+                "bench_runs": self.bench_runs,
                 "ladder": [
                     {
                         "rung": r.rung,
@@ -168,7 +185,7 @@ class Audit:
                 "looks": {
                     "planned": self.look.planned,
                     "number": self.look.number,
-                    "confidence": self.look.confidence(self.scenario),
+                    "confidence": self.confidence,
                 },
                 "verdicts": self.verdicts,
                 "numerics": self.numerics,

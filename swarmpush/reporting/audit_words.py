@@ -60,7 +60,7 @@ def arrival_rows(audit: Audit) -> list[dict[str, str]]:
     ]
     planned = for_people(travel.time_to_goal_s, "s") if math.isfinite(travel.time_to_goal_s) else "never"
     if n_arrived == n:
-        time = mean_interval(runs["duration_s"], s.trial.confidence)
+        time = mean_interval(runs["duration_s"], audit.confidence)
         rows.append(("time to the goal", planned, number(time.mean, "s"), interval(time, "s")))
     else:  # a mean over those that arrived would leave out the slow ones
         rows.append(("time to the goal", planned, f"longer than its run in {n - n_arrived} of {n}", "-"))
@@ -78,7 +78,7 @@ def audited_cause_rows(audit: Audit) -> list[dict[str, str]]:
         column = f"cause_{key}"
         if column not in runs:
             continue
-        estimate = mean_interval(runs[column], audit.scenario.trial.confidence)
+        estimate = mean_interval(runs[column], audit.confidence)
         if estimate.mean > 0.0:
             low = max(0.0, estimate.low)
             span = f"{share_of(low)} to {share_of(min(1.0, estimate.high))}" if math.isfinite(estimate.high) else "-"
@@ -91,7 +91,7 @@ def audited_cause_rows(audit: Audit) -> list[dict[str, str]]:
 def numeric_rows(audit: Audit) -> list[tuple[str, str]]:
     """What chance and what the time step leave uncertain in the block's speed, and how well the books balance."""
     speed, numerics = audit.ladder[-1].block_speed_m_s, audit.numerics
-    change, percent = numerics.change_m_s, f"{audit.scenario.trial.confidence:.0%}"
+    change, percent = numerics.change_m_s, audit.percent
     rows = [
         ("block speed", f"{number(speed.mean, 'm/s')}, mean of {speed.n} runs"),
         ("chance", f"{interval(speed, 'm/s')} ({percent} interval)"),
@@ -211,7 +211,9 @@ def command_of(result: Audit | Run) -> str:
     """The command that makes the same numbers on any machine with the same versions."""
     if isinstance(result, Audit):
         s = result.scenario
-        return f"swarmpush audit {scenario_word(s)} --replicates {result.arrival.n} --seed {s.trial.seed}"
+        first, most = result.look.planned[0], result.look.planned[-1]
+        budget = f" --budget {most}" if most > first else ""
+        return f"swarmpush audit {scenario_word(s)} --replicates {first}{budget} --seed {s.trial.seed}"
     return f"swarmpush run {scenario_word(result.scenario)} --seed {result.seed}"
 
 

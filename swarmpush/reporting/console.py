@@ -19,6 +19,7 @@ from swarmpush.reporting.plan_words import count, followed, plan_answer, plan_fa
 from swarmpush.reporting.run_words import book_rows, cause_rows, energy_rows, run_answer, state_rows
 from swarmpush.reporting.wording import (
     baseline_words,
+    bench_words,
     finding_row,
     interval,
     mean_and_error,
@@ -164,6 +165,7 @@ def _show_restored(audit: Audit) -> None:
         _console.print(table)
         _console.print()
     _console.print(f"{baseline_words(audit)}\n")
+    _console.print(f"{bench_words(audit)}\n")
 
 
 def show_convergence(result: Convergence) -> None:

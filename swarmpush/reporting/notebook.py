@@ -35,7 +35,7 @@ def run_html(run: Run) -> str:
 def audit_html(audit: Audit) -> str:
     """The audit's answer and its ladder."""
     rows = [(row["name"], row["speed"], row["cost"], row["interval"], row["arrived"]) for row in ladder_rows(audit)]
-    columns = ("rung", "block speed", "difference", f"{audit.scenario.trial.confidence:.0%} interval", "arrived")
+    columns = ("rung", "block speed", "difference", f"{audit.percent} interval", "arrived")
     return _small(audit.scenario.about.name, audit.answer, "What each assumption costs", columns, rows)
 
 

@@ -31,7 +31,7 @@ from swarmpush.reporting.figure_data import as_csv
 from swarmpush.reporting.figures import FOLDER, audit_exhibits, run_exhibits
 from swarmpush.reporting.plan_words import force_words, noise_words, plan_answer
 from swarmpush.reporting.run_words import book_rows, cause_rows, energy_rows, main_reason, run_answer, state_rows
-from swarmpush.reporting.wording import finding_row
+from swarmpush.reporting.wording import bench_words, finding_row
 
 
 def report(result: Audit | Run, path: str | Path) -> Path:
@@ -154,13 +154,14 @@ def _audit_content(audit: Audit) -> dict[str, Any]:
         "demands": demand_rows(audit),
         "verdicts": [finding_row(f) for f in audit.verdicts],
         "arrival": arrival_rows(audit),
+        "bench": bench_words(audit),
         "causes": audited_cause_rows(audit),
         "numerics": numeric_rows(audit),
         "books": book_rows(run),
         "provenance": of_seeds + content["provenance"],
         "command": command_of(audit),
         "n_runs": audit.arrival.n,
-        "confidence": f"{s.trial.confidence:.0%}",
+        "confidence": audit.percent,
         "tolerance": f"{s.trial.tolerance:.0%}",
     }
 

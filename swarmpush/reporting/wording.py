@@ -108,6 +108,15 @@ def restored_row(restored: RestoredResult) -> dict[str, str]:
     }
 
 
+def bench_words(audit: Audit) -> str:
+    """How many runs on a bench would settle the claim, in one sentence."""
+    n = audit.bench_runs
+    if n is None:
+        return "Arrival is as likely as not, and no number of runs on a bench would tell which."
+    runs = "1 run" if n == 1 else f"{n} runs"
+    return f"If arrivals are as frequent on a bench, some {runs} there would show whether more than half arrive."
+
+
 def baseline_words(audit: Audit) -> str:
     """The crew that bounces at random beside the scenario as given and the plan, in two sentences."""
     random, given = audit.baseline.block_speed_m_s, audit.ladder[-1].block_speed_m_s

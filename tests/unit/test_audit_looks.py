@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 
 import pandas as pd
@@ -9,8 +10,9 @@ import pytest
 
 import swarmpush
 from swarmpush.auditing.audit import Audit, Look, load_audit
-from swarmpush.auditing.statistics import Verdict
+from swarmpush.auditing.statistics import Verdict, share_interval
 from swarmpush.demos import demo
+from swarmpush.reporting.wording import bench_words
 from swarmpush.scenario import Scenario
 
 FIRST, BUDGET = 2, 8  # arrival cannot be decided with so few, so that all looks are taken
@@ -57,3 +59,14 @@ def test_a_budget_below_the_first_look_is_refused(short: Scenario) -> None:
     """There is nothing to add then."""
     with pytest.raises(ValueError, match="a budget of 3 runs given; it is below the 4 of the first look"):
         swarmpush.audit(short, replicates=4, budget=3)
+
+
+def test_how_many_bench_runs_would_tell(looked: Audit) -> None:
+    """With no arrival at all a few bench runs show that less than half arrive: n/(n + z^2) above one half, n = 4."""
+    assert looked.arrival.mean == 0.0
+    assert looked.bench_runs == 4
+    assert looked.to_dict()["bench_runs"] == 4
+    likely = replace(looked, arrival=share_interval(6, 12, 0.95))
+    assert likely.bench_runs is None
+    assert "as likely as not" in bench_words(likely)
+    assert "some 4 runs there" in bench_words(looked)
