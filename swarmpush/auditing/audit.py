@@ -94,8 +94,10 @@ class Audit:
 
     @property
     def bench_runs(self) -> int | None:
-        """How many runs on a bench would most likely show whether more than half arrive, or fewer, if arrivals are there
-        as frequent as here; None where they are as likely as not. See `runs_to_decide`."""
+        """Runs on a bench that would most likely show whether more than half arrive, if arrivals are as frequent there.
+
+        None where they are as likely as not. See `runs_to_decide`.
+        """
         return runs_to_decide(self.arrival.mean, 0, MOSTLY, self.scenario.trial.confidence)
 
     @property
