@@ -26,7 +26,7 @@ if TYPE_CHECKING:
     from shapely.geometry.base import BaseGeometry
 
 ROUNDING = 1e-9  # relative; by this much lengths may miss each other and still fit
-MAX_TRAVEL = 0.25  # radii that a pusher may run in one step: the slop that goes with it is below the largest overlap
+MAX_TRAVEL = 0.25  # radii that a pusher may run in one step: the slop that goes with it is the largest overlap
 MAX_PACKING = 0.4  # share of the start region that discs can fill by random placement without getting stuck
 
 

@@ -18,7 +18,7 @@ from swarmpush.auditing.looks import confidence_at, looks
 from swarmpush.auditing.replicates import Progress, Task, replicate_seeds, run_tasks
 from swarmpush.auditing.rungs import Baseline, RestoredResult, RungResult, baseline, ladder, restored
 from swarmpush.auditing.statistics import Estimate, Verdict, mean_interval, runs_to_decide, share_interval
-from swarmpush.auditing.verdicts import Finding, find_verdicts
+from swarmpush.auditing.verdicts import Finding, find_verdicts, most_failed
 from swarmpush.dynamics.run import Run, load_run
 from swarmpush.dynamics.steps import StepSettings, choose_step
 from swarmpush.dynamics.world import simulate
@@ -91,6 +91,11 @@ class Audit:
     def percent(self) -> str:
         """The same for people."""
         return f"{100 * self.confidence:.3g}%"
+
+    @property
+    def failed(self) -> tuple[Finding, ...]:
+        """The claims that fail, what most likely ended the plan first; see `most_failed`."""
+        return most_failed(self.verdicts)
 
     @property
     def bench_runs(self) -> int | None:
@@ -190,6 +195,7 @@ class Audit:
                     "confidence": self.confidence,
                 },
                 "verdicts": self.verdicts,
+                "failed": [finding.assumption for finding in self.failed],
                 "numerics": self.numerics,
                 "plan": self.plan.to_dict(),
                 "files": files or {},

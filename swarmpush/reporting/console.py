@@ -166,6 +166,8 @@ def _show_restored(audit: Audit) -> None:
         _console.print()
     _console.print(f"{baseline_words(audit)}\n")
     _console.print(f"{bench_words(audit)}\n")
+    if audit.failed:
+        _console.print(f"What fails first: {', '.join(f.assumption for f in audit.failed[:3])}.\n")
 
 
 def show_convergence(result: Convergence) -> None:

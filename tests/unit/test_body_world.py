@@ -67,7 +67,7 @@ def path_of(run: Run, pusher: int = 0) -> pd.DataFrame:
 # ---- books --------------------------------------------------------------------------------------------------------
 
 BALANCED = 1e-9  # relative to the sum of all impulses; rounding leaves some 1e-15
-PHANTOM = 1e-5  # of the block's way: what the engine shifts without momentum, a thousandth of the 1 % that matters
+PHANTOM = 1e-6  # of the block's way: what the engine shifts without momentum
 
 
 @pytest.mark.parametrize("name", DEMOS)
