@@ -217,6 +217,14 @@ def audit(
             help="most runs per rung: doubled up to this while a verdict is undecided; default: no more than the first",
         ),
     ] = None,
+    around: Annotated[
+        bool,
+        typer.Option(
+            "--around",
+            help="also run crews of other sizes, and each measured value a quarter lower and higher: which crew sizes "
+            "are of use, and what to measure first; takes several times as long",
+        ),
+    ] = False,
     workers: Annotated[int | None, typer.Option(min=1, max=1024, help="threads; default: one per processor")] = None,
     seed: Seed = None,
     require: Annotated[
@@ -246,19 +254,26 @@ def audit(
     folder, journal = _resumable(out, f"{_stem(scenario)}-audit", force)
     with _resuming(folder), _preparing(as_json) as bar:
         result = swarmpush.audit(
-            s, replicates=replicates, budget=budget, workers=workers, journal=journal, progress=bar
+            s,
+            replicates=replicates,
+            budget=budget,
+            around=around,
+            require=demanded,
+            workers=workers,
+            journal=journal,
+            progress=bar,
         )
-    files = result.save(folder, demanded) | {"folder": str(folder), "report": "report.html"}
+    files = result.save(folder) | {"folder": str(folder), "report": "report.html"}
     swarmpush.report(result, folder / "report.html")
     journal.unlink(missing_ok=True)
     if as_json:
-        _print_json(result.to_dict(files, demanded))
+        _print_json(result.to_dict(files))
     else:
         from swarmpush.reporting import console
 
         console.show_audit(result)
         console.say_where(folder / "report.html")
-    unmet = [demand for demand in result.check(demanded) if not demand.is_met]
+    unmet = [demand for demand in result.demands if not demand.is_met]
     for demand in unmet:
         print(f"required: {demand.demand}, but {demand.reason}", file=sys.stderr)
     if unmet:

@@ -172,19 +172,22 @@ _PREFIXES = (
 def for_people(value: float, si_unit: str, digits: int = 3) -> str:
     """Write an SI number with a prefix a person reads easily; angles are written in degrees.
 
-    >>> for_people(0.00012, "m"), for_people(0.0698132, "rad"), for_people(0.0, "N")
-    ('120 µm', '4 deg', '0 N')
+    >>> for_people(0.00012, "m"), for_people(0.0698132, "rad"), for_people(0.0, "N"), for_people(6.4e-3, "kg*m^2")
+    ('120 µm', '4 deg', '0 N', '0.0064 kg m²')
     """
     if value is None or math.isnan(value):
         return "unknown"
     if math.isinf(value):
         return "never" if si_unit == "s" else ("unlimited" if value > 0 else "minus infinity")
-    if si_unit == "rad":
-        return f"{math.degrees(value):.{digits}g} deg"
+    if si_unit.startswith("rad"):
+        return f"{math.degrees(value):.{digits}g} deg{si_unit[3:]}"
     if si_unit == "1":
         return f"{value:.{digits}g}"
+    si_unit = si_unit.replace("*", " ").replace("^2", "²").replace("^3", "³")
     if value == 0.0:
         return f"0 {si_unit}"
+    if si_unit.startswith(("kg ", "kg/")):  # whose prefix is taken
+        return f"{value:.{digits}g} {si_unit}"
     if si_unit == "s" and abs(value) >= 1.0:
         return f"{value:.{digits}g} s" if abs(value) < 10**digits else f"{value:.0f} s"
     if si_unit == "kg":

@@ -115,7 +115,7 @@ def parse_range(s: Scenario, text: str) -> tuple[str, FloatArray]:
     if match is None:
         raise ValueError("write KEY=LOW:HIGH:N, for example channel.width=25cm:40cm:16")
     key = match["key"].strip()
-    known = _keys(s)
+    known = keys_of(s)
     if key not in known:
         raise ValueError(f"{key} is no key of this scenario; {_nearest(key, known)}")
     if isinstance(value_at(s, key), str | bool | tuple):
@@ -170,14 +170,14 @@ def _limits(s: Scenario, key: str) -> tuple[float, float]:
 
 
 def _way(s: Scenario, key: str) -> Way:
-    known = _keys(s)
+    known = keys_of(s)
     if key not in known:
         raise ScenarioError(s.about.name, [Problem(key, f"no key of this scenario; {_nearest(key, known)}")])
     return known[key]
 
 
-def _keys(s: Scenario) -> dict[str, Way]:
-    """Every key that holds a single value, or could, with the way to it."""
+def keys_of(s: Scenario) -> dict[str, Way]:
+    """Every key that holds a single value, or could, with the way to it through tables and lists, from 0."""
     return {_written(way): way for way in _leaves(s.model_dump(mode="json"))}
 
 

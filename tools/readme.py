@@ -74,7 +74,9 @@ def demo_output(results: Path) -> str:
 def draw_pictures(results: Path) -> None:
     """The two pictures of the README."""
     from swarmpush.auditing.audit import load_audit
-    from swarmpush.reporting.drawing import as_png, ladder, lap_over_runs
+    from swarmpush.reporting.audit_drawing import ladder
+    from swarmpush.reporting.drawing import as_png
+    from swarmpush.reporting.run_drawing import lap_over_runs
 
     audit = load_audit(results)
     PICTURES.mkdir(exist_ok=True)

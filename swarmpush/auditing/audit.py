@@ -15,9 +15,11 @@ from swarmpush.auditing.demands import DemandResult, check_demands, read_demand
 from swarmpush.auditing.journal import Journal, Row
 from swarmpush.auditing.ladder import BASELINE, bounce_at_random, climb, restore
 from swarmpush.auditing.looks import confidence_at, looks
+from swarmpush.auditing.neighbours import CrewSize, Influence, crew_sizes, influences, neighbours
 from swarmpush.auditing.replicates import Progress, Task, replicate_seeds, run_tasks
 from swarmpush.auditing.rungs import Baseline, RestoredResult, RungResult, baseline, ladder, restored
 from swarmpush.auditing.statistics import Estimate, Verdict, mean_interval, runs_to_decide, share_interval
+from swarmpush.auditing.survival import LogRank, SurvivalCurve, log_rank, median_time, restricted_mean, survival_curve
 from swarmpush.auditing.verdicts import Finding, find_verdicts, most_failed
 from swarmpush.dynamics.run import Run, load_run
 from swarmpush.dynamics.steps import StepSettings, choose_step
@@ -62,12 +64,15 @@ class Audit:
     """The plan's promise against what bodies did.
 
     scenario, plan: what was audited. replicates: one row per run: rung, replicate, seed and the measures of
-    `Run.summary`; besides the rungs of the ladder there are "restored: " and the key of an assumption, "baseline" and
-    "halved step". sample: one run of the scenario as given, in full. The rest is derived from these.
+    `Run.summary`; besides the rungs of the ladder there are "restored: " and the key of an assumption, "baseline",
+    "halved step", and neighbours where they were asked for. sample: one run of the scenario as given, in full. look:
+    see `Look`. required: what was demanded, as written. The rest is derived from these.
 
     ladder: from geometry to the scenario as given. restored: what would come back with one assumption granted again,
     in the ladder's order. baseline: the same crew bouncing at random. verdicts: on the plan's claims. arrival: share of
-    the runs as given. numerics: what the step costs. look: see `Look`.
+    the runs as given. crews: crews of other sizes beside the one given, smallest first; influences: what each measured
+    value does, the one to measure first at the head; both empty unless neighbours were asked for. numerics: what the
+    step costs.
     """
 
     scenario: Scenario
@@ -79,8 +84,11 @@ class Audit:
     baseline: Baseline
     verdicts: tuple[Finding, ...]
     arrival: Estimate
+    crews: tuple[CrewSize, ...]
+    influences: tuple[Influence, ...]
     numerics: Numerics
     look: Look
+    required: tuple[str, ...] = ()
 
     @property
     def confidence(self) -> float:
@@ -109,6 +117,37 @@ class Audit:
     def as_given(self) -> pd.DataFrame:
         """The runs of the scenario as given."""
         return self.replicates[self.replicates["rung"] == climb(self.scenario)[-1].key]
+
+    @property
+    def at_random(self) -> pd.DataFrame:
+        """The runs of the same crew bouncing at random."""
+        return self.replicates[self.replicates["rung"] == BASELINE]
+
+    def under_way(self, runs: pd.DataFrame) -> SurvivalCurve:
+        """Share of runs, such as `as_given` or `at_random`, whose block has not arrived yet, over time."""
+        return survival_curve(runs["duration_s"], ~runs["has_arrived"].astype(bool), self.confidence)
+
+    @property
+    def median_time_s(self) -> Estimate:
+        """Time by which half of the runs as given have arrived; infinite where fewer do."""
+        return median_time(self.under_way(self.as_given))
+
+    @property
+    def mean_time_s(self) -> Estimate:
+        """Mean time to the goal, with the time limit for a run that has not arrived by then.
+
+        Where every run that did not arrive broke off before, the last time known stands for the limit.
+        """
+        runs, curve = self.as_given, self.under_way(self.as_given)
+        limit = self.scenario.goal.time_limit
+        horizon = limit if curve.share[-1] == 0.0 else min(limit, float(curve.times_s[-1]))
+        return restricted_mean(runs["duration_s"], ~runs["has_arrived"].astype(bool), horizon, self.confidence)
+
+    @property
+    def sooner_than_random(self) -> LogRank:
+        """Whether the crew as given arrives sooner than the same crew bouncing at random."""
+        sets = [(runs["duration_s"], ~runs["has_arrived"].astype(bool)) for runs in (self.as_given, self.at_random)]
+        return log_rank(*sets[0], *sets[1])
 
     def _repr_html_(self) -> str:
         from swarmpush.reporting.notebook import audit_html
@@ -147,6 +186,11 @@ class Audit:
         read = [read_demand(text) for text in demands]
         return check_demands(read, self.verdicts, self.as_given, self.confidence)
 
+    @property
+    def demands(self) -> tuple[DemandResult, ...]:
+        """Whether what was demanded is met."""
+        return self.check(self.required)
+
     def compare(self, other: Audit) -> pd.DataFrame:
         """Two designs side by side, run by run with the same random draws.
 
@@ -163,8 +207,8 @@ class Audit:
         """
         return compare_runs(self.as_given, other.as_given, self.scenario.trial.confidence)
 
-    def to_dict(self, files: dict[str, str] | None = None, demands: Iterable[str] = ()) -> dict[str, Any]:
-        """The audit as plain values for JSON, with the demands made on it; undefined values are None."""
+    def to_dict(self, files: dict[str, str] | None = None) -> dict[str, Any]:
+        """The audit as plain values for JSON; undefined values are None."""
         result: dict[str, Any] = plain(
             {
                 "answer": self.answer,
@@ -175,6 +219,9 @@ class Audit:
                     "n": self.arrival.n,
                 },
                 "bench_runs": self.bench_runs,
+                "median_time_s": self.median_time_s,
+                "mean_time_s": self.mean_time_s,
+                "sooner_than_random": self.sooner_than_random,
                 "ladder": [
                     {
                         "rung": r.rung,
@@ -188,7 +235,9 @@ class Audit:
                 ],
                 "restored": self.restored,
                 "baseline": self.baseline,
-                "demands": self.check(demands),
+                "crews": self.crews,
+                "influences": self.influences,
+                "demands": self.demands,
                 "looks": {
                     "planned": self.look.planned,
                     "number": self.look.number,
@@ -204,8 +253,8 @@ class Audit:
         )
         return result
 
-    def save(self, folder: Path, demands: Iterable[str] = ()) -> dict[str, str]:
-        """Write replicates, the sample run and, last, audit.json, with the demands made; returns the files' names.
+    def save(self, folder: Path) -> dict[str, str]:
+        """Write replicates, the sample run and, last, audit.json; returns the files' names.
 
         Raises:
             OutputError: when something cannot be written.
@@ -214,7 +263,7 @@ class Audit:
         write_table(folder / files["replicates"], self.replicates)
         claim_folder(folder / "sample", force=True)
         self.sample.save(folder / "sample")
-        write_text(folder / files["audit"], to_json(self.to_dict(files, demands)))
+        write_text(folder / files["audit"], to_json(self.to_dict(files)))
         return files
 
 
@@ -229,7 +278,8 @@ def load_audit(folder: Path) -> Audit:
         look = Look(int(saved["looks"]["number"]), tuple(saved["looks"]["planned"]))
         replicates = pd.read_parquet(folder / "replicates.parquet")
         planned = plan(load_run(folder / "sample").scenario)
-        return conclude(planned, replicates, load_run(folder / "sample", _cycles(planned)), look)
+        required = tuple(str(demand["demand"]) for demand in saved["demands"])
+        return conclude(planned, replicates, load_run(folder / "sample", _cycles(planned)), look, required)
     except OSError as error:
         reason = f"{Path(error.filename).name if error.filename else 'a file'}: {error.strerror or 'unreadable'}"
     except (KeyError, ValueError, TypeError):
@@ -242,6 +292,8 @@ def audit(
     *,
     replicates: int | None = None,
     budget: int | None = None,
+    around: bool = False,
+    require: Iterable[str] = (),
     workers: int | None = None,
     journal: Path | None = None,
     progress: Progress | None = None,
@@ -257,6 +309,9 @@ def audit(
         budget: most runs per rung: while a verdict is undecided, their number is doubled up to this, and every look has
             so much more confidence that all looks together have the scenario's (`looks`). None: no more than
             `replicates`, in one look.
+        around: also run the neighbours: crews of other sizes, and each measured value lower and higher. They take
+            several times as long as all else.
+        require: demands on the result, such as "arrival>=0.9"; see `Audit.check`.
         workers: threads; one per processor unless given. The result does not depend on it.
         journal: file for finished runs; if it is left from an interrupted audit of the same scenario, the runs in it
             are not made again. Delete it when the result is safe.
@@ -266,7 +321,7 @@ def audit(
         An `Audit`.
 
     Raises:
-        ValueError: for fewer than two replicates, or a budget below their number.
+        ValueError: for fewer than two replicates, a budget below their number, or a text that is no demand.
         OutputError: when the journal belongs to something else or cannot be written.
     """
     n = s.trial.replicates if replicates is None else replicates
@@ -275,8 +330,11 @@ def audit(
     most = n if budget is None else budget
     if most < n:
         raise ValueError(f"a budget of {most} runs given; it is below the {n} of the first look")
+    required = tuple(require)
+    for text in required:
+        read_demand(text)
     planned = plan(s)
-    scenarios = scenarios_to_run(s)
+    scenarios = scenarios_to_run(s, around=around)
     as_given = climb(s)[-1].key
     originals = _originals(scenarios)
     seeds = replicate_seeds(s.trial.seed, most)
@@ -312,17 +370,18 @@ def audit(
             for level in scenarios
             for k in range(min(size, N_HALVED) if level == HALVED else size)
         ]
-        result = conclude(planned, pd.DataFrame(table), samples[0], Look(number, sizes))
+        result = conclude(planned, pd.DataFrame(table), samples[0], Look(number, sizes), required)
         if all(finding.verdict is not Verdict.UNDECIDED for finding in result.verdicts):
             break
     return result
 
 
-def scenarios_to_run(s: Scenario) -> dict[str, Scenario]:
-    """All that an audit runs, by level: the rungs, each assumption restored, the baseline, and the halved step."""
+def scenarios_to_run(s: Scenario, *, around: bool = False) -> dict[str, Scenario]:
+    """All that an audit runs, by level: rungs, each assumption restored, baseline, halved step, and neighbours."""
     rungs = {rung.key: rung.scenario for rung in climb(s)}
     granted = {granted.level: granted.scenario for granted in restore(s)}
-    return {**rungs, **granted, BASELINE: bounce_at_random(s), HALVED: s}
+    others = neighbours(s) if around else {}
+    return {**rungs, **granted, BASELINE: bounce_at_random(s), **others, HALVED: s}
 
 
 def _originals(scenarios: dict[str, Scenario]) -> dict[str, str]:
@@ -335,7 +394,7 @@ def _originals(scenarios: dict[str, Scenario]) -> dict[str, str]:
     return {level: first.setdefault(digest, level) for level, digest in levels.items()}
 
 
-def conclude(planned: Plan, replicates: pd.DataFrame, sample: Run, look: Look) -> Audit:
+def conclude(planned: Plan, replicates: pd.DataFrame, sample: Run, look: Look, required: tuple[str, ...] = ()) -> Audit:
     """All that an audit says, from the plan and the runs' summaries, at one of several looks; a pure function."""
     given, confidence = planned, look.confidence(planned.scenario)
     planned = replace(planned, scenario=planned.scenario.replace(trial={"confidence": confidence}))
@@ -355,7 +414,10 @@ def conclude(planned: Plan, replicates: pd.DataFrame, sample: Run, look: Look) -
         baseline=baseline(planned, by_rung),
         verdicts=find_verdicts(planned, as_given),
         arrival=share_interval(n_arrived, n, confidence),
+        crews=crew_sizes(planned, by_rung),
+        influences=influences(planned, by_rung),
         look=look,
+        required=required,
         numerics=Numerics(
             steps=choose_step(s),
             change_m_s=mean_interval(halved - whole, confidence),

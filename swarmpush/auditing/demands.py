@@ -72,16 +72,16 @@ def read_demand(text: str) -> Demand:
     name, relation, bound = _words(match[1]), match[2], match[3]
     if relation in (">=", "<="):
         if name not in _NAMES:
-            raise ValueError(f"no such measure; there are {', '.join(MEASURES)}")
+            raise ValueError(f"no measure is called {name}; there are {', '.join(MEASURES)}")
         measure = _NAMES[name]
         unit = MEASURES[measure][1]
         return Demand(text, measure, relation, _number(bound, unit))
     if name not in CLAIMS:
-        raise ValueError(f"no such claim; there are {', '.join(CLAIMS)}")
+        raise ValueError(f"no claim is called {name}; there are {', '.join(CLAIMS)}")
     if relation is None:
         return Demand(text, name, "=", Verdict.HOLDS)
     if bound.lower() not in VERDICTS:
-        raise ValueError(f"no such verdict; there are {', '.join(VERDICTS)} (numbers go with >= or <=)")
+        raise ValueError(f"no verdict is called {bound}; there are {', '.join(VERDICTS)} (numbers go with >= or <=)")
     return Demand(text, name, "=", Verdict(bound.lower()))
 
 

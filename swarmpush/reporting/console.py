@@ -15,18 +15,11 @@ from swarmpush.cautions import CAUTIONS
 from swarmpush.dynamics.run import Run
 from swarmpush.kinematics.planning import Plan
 from swarmpush.quantities import for_people
+from swarmpush.reporting.audit_rows import restored_rows
+from swarmpush.reporting.audit_words import arrival_words, baseline_words, bench_words, crew_words, influence_words
 from swarmpush.reporting.plan_words import count, followed, plan_answer, plan_facts
 from swarmpush.reporting.run_words import book_rows, cause_rows, energy_rows, run_answer, state_rows
-from swarmpush.reporting.wording import (
-    baseline_words,
-    bench_words,
-    finding_row,
-    interval,
-    mean_and_error,
-    number,
-    restored_row,
-    rung_row,
-)
+from swarmpush.reporting.wording import finding_row, interval, mean_and_error, number, rung_row
 
 _COLOURS = {"holds": "green", "strained": "yellow", "fails": "red", "undecided": "bright_black"}
 _EFFECT_COLOURS = {"small": "green", "large": "red", "untold": "bright_black"}
@@ -160,12 +153,15 @@ def _show_restored(audit: Audit) -> None:
     gains = ("block speed", "gain", "its interval", "arrived")
     if audit.restored:
         table = _table("what would come back if", *gains, right=gains)
-        for row in map(restored_row, sorted(audit.restored, key=lambda r: r.gain_m_s.mean, reverse=True)):
-            table.add_row(_plain(row["name"]), row["speed"], row["gain"], row["interval"], row["arrived"])
+        for row in restored_rows(audit):
+            table.add_row(_plain(row["name"]), *(row[key] for key in ("speed", "cost", "interval", "arrived")))
         _console.print(table)
         _console.print()
     _console.print(f"{baseline_words(audit)}\n")
+    _console.print(f"{arrival_words(audit)}\n")
     _console.print(f"{bench_words(audit)}\n")
+    for words in filter(None, (crew_words(audit), influence_words(audit))):
+        _console.print(f"{_plain(words)}\n")
     if audit.failed:
         _console.print(f"What fails first: {', '.join(f.assumption for f in audit.failed[:3])}.\n")
 

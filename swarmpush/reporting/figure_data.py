@@ -12,7 +12,7 @@ from swarmpush.auditing.audit import Audit
 from swarmpush.dynamics.run import Run
 from swarmpush.geometry import block_corners
 from swarmpush.kinematics.planning import Plan
-from swarmpush.reporting.drawing import book_entries, bump_legs, is_floor_shown, pushers_needed, rolling
+from swarmpush.reporting.run_drawing import book_entries, bump_legs, is_floor_shown, pushers_needed, rolling
 from swarmpush.reporting.run_words import energy_parts, state_shares
 
 
@@ -38,6 +38,38 @@ def ladder_data(audit: Audit) -> pd.DataFrame:
             for end, part in (("", "mean"), ("_low", "low"), ("_high", "high")):
                 row[f"{name}{end}{unit}"] = math.nan if estimate is None else getattr(estimate, part)
         rows.append(row | {"n_runs": rung.block_speed_m_s.n})
+    return pd.DataFrame(rows)
+
+
+def arrival_data(audit: Audit) -> pd.DataFrame:
+    """Share of runs arrived over time, with its interval, as given and bouncing at random."""
+    tables = []
+    for name, runs in (("as given", audit.as_given), ("bouncing at random", audit.at_random)):
+        curve = audit.under_way(runs)
+        columns = {"t_s": curve.times_s, "at_risk_runs": curve.at_risk, "arriving_runs": curve.events}
+        shares = {"arrived": curve.share, "arrived_low": curve.high, "arrived_high": curve.low}
+        columns |= {f"{column}_share": 1.0 - share for column, share in shares.items()}
+        tables.append(pd.DataFrame({"crew": name} | columns))
+    return pd.concat(tables, ignore_index=True)
+
+
+def crew_data(audit: Audit) -> pd.DataFrame:
+    """One row per size of the crew: block speed and arrivals with the ends of their intervals."""
+    rows = [
+        {
+            "pushers": size.count,
+            "block_speed_m_s": size.block_speed_m_s.mean,
+            "block_speed_low_m_s": size.block_speed_m_s.low,
+            "block_speed_high_m_s": size.block_speed_m_s.high,
+            "arrived_share": size.arrival.mean,
+            "arrived_low_share": size.arrival.low,
+            "arrived_high_share": size.arrival.high,
+            "strikes_1_s": size.strikes_1_s,
+            "too_weak_share": size.too_weak,
+            "in_touch_share": size.in_touch,
+        }
+        for size in audit.crews
+    ]
     return pd.DataFrame(rows)
 
 

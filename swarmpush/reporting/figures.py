@@ -16,7 +16,8 @@ from swarmpush.auditing.audit import Audit
 from swarmpush.dynamics.run import Run
 from swarmpush.kinematics.planning import Plan
 from swarmpush.quantities import for_people
-from swarmpush.reporting import drawing, figure_data
+from swarmpush.reporting import audit_drawing, figure_data, run_drawing
+from swarmpush.reporting.drawing import as_svg
 from swarmpush.reporting.run_words import energy_parts, state_rows
 from swarmpush.reporting.wording import interval, number, signed
 
@@ -46,7 +47,7 @@ def run_exhibits(run: Run, plan: Plan, ends: pd.DataFrame | None = None) -> dict
     """The figures of one run by key; `ends` is a table of other runs' duration_s and travel_m."""
     speed = plan.travel.block_speed_m_s
     impact = plan.travel.strike_impulse_Ns
-    draw, data = drawing, figure_data
+    draw, data = run_drawing, figure_data
     found = (
         _exhibit("lap", _lap_alt(plan, run), data.lap_data(plan, run), draw.lap_over_runs, plan, run),
         _exhibit("end", _end_alt(run), data.end_data(run), draw.end_of_run, run),
@@ -62,13 +63,19 @@ def run_exhibits(run: Run, plan: Plan, ends: pd.DataFrame | None = None) -> dict
 
 
 def audit_exhibits(audit: Audit) -> dict[str, Exhibit]:
-    """The figures of an audit by key: the ladder, and those of the run shown."""
-    ladder = _exhibit("ladder", _ladder_alt(audit), figure_data.ladder_data(audit), drawing.ladder, audit)
-    return {"ladder": ladder} | run_exhibits(audit.sample, audit.plan, audit.as_given)
+    """The figures of an audit by key: ladder, arrivals, crews of other sizes if tried, and those of the run shown."""
+    draw, data = audit_drawing, figure_data
+    found = [
+        _exhibit("ladder", _ladder_alt(audit), data.ladder_data(audit), draw.ladder, audit),
+        _exhibit("arrivals", _arrivals_alt(audit), data.arrival_data(audit), draw.arrivals, audit),
+    ]
+    if audit.crews:
+        found.append(_exhibit("crews", _crews_alt(audit), data.crew_data(audit), draw.crews, audit))
+    return {exhibit.key: exhibit for exhibit in found} | run_exhibits(audit.sample, audit.plan, audit.as_given)
 
 
 def _exhibit(key: str, alt: str, data: pd.DataFrame, draw: Callable[..., Figure], *records: Any) -> Exhibit:
-    return Exhibit(key, alt, named_svg(drawing.as_svg(draw, *records), key, alt), data)
+    return Exhibit(key, alt, named_svg(as_svg(draw, *records), key, alt), data)
 
 
 def named_svg(svg: str, key: str, alt: str) -> Markup:
@@ -93,6 +100,22 @@ def _ladder_alt(audit: Audit) -> str:
         f"Waterfall of the block's speed: geometry alone {number(first.block_speed_m_s.mean, 'm/s')}; "
         f"{'; '.join(steps)}; the scenario as given {number(audit.ladder[-1].block_speed_m_s.mean, 'm/s')}."
     )
+
+
+def _arrivals_alt(audit: Audit) -> str:
+    given, random = audit.arrival, audit.baseline.arrival
+    return (
+        f"Share of runs that have arrived over time: in the end {number(given.mean, 'share')} as given, "
+        f"{number(random.mean, 'share')} when the same crew bounces at random."
+    )
+
+
+def _crews_alt(audit: Audit) -> str:
+    sizes = [
+        f"{size.count} pushers {number(size.block_speed_m_s.mean, 'm/s')}, {number(size.arrival.mean, 'share')} arrive"
+        for size in audit.crews
+    ]
+    return f"Block speed and arrivals over the size of the crew: {'; '.join(sizes)}."
 
 
 def _lap_alt(plan: Plan, run: Run) -> str:

@@ -9,7 +9,7 @@ from swarmpush.auditing.audit import Audit
 from swarmpush.dynamics.run import Run
 from swarmpush.kinematics.planning import Plan
 from swarmpush.quantities import for_people
-from swarmpush.reporting.audit_words import ladder_rows
+from swarmpush.reporting.audit_rows import ladder_rows
 from swarmpush.reporting.plan_words import plan_answer
 from swarmpush.reporting.run_words import cause_rows, run_answer
 

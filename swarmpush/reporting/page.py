@@ -13,25 +13,33 @@ from swarmpush.dynamics.run import Run, load_run
 from swarmpush.kinematics.planning import Plan, plan
 from swarmpush.output import OutputError, provenance, write_text
 from swarmpush.quantities import for_people
-from swarmpush.reporting import drawing
-from swarmpush.reporting.audit_words import (
+from swarmpush.reporting.audit_rows import (
     arrival_rows,
     audited_cause_rows,
     baseline_rows,
-    command_of,
-    compared_words,
-    cost_sentences,
+    crew_rows,
     demand_rows,
+    influence_rows,
     ladder_rows,
     numeric_rows,
     restored_rows,
+)
+from swarmpush.reporting.audit_words import (
+    arrival_words,
+    bench_words,
+    command_of,
+    compared_words,
+    cost_sentences,
+    crew_words,
+    influence_words,
     step_words,
 )
 from swarmpush.reporting.figure_data import as_csv
 from swarmpush.reporting.figures import FOLDER, audit_exhibits, run_exhibits
 from swarmpush.reporting.plan_words import force_words, noise_words, plan_answer
+from swarmpush.reporting.run_drawing import is_floor_shown
 from swarmpush.reporting.run_words import book_rows, cause_rows, energy_rows, main_reason, run_answer, state_rows
-from swarmpush.reporting.wording import bench_words, finding_row
+from swarmpush.reporting.wording import finding_row
 
 
 def report(result: Audit | Run, path: str | Path) -> Path:
@@ -111,7 +119,7 @@ def _run_content(run: Run, planned: Plan) -> dict[str, Any]:
         "force_words": force_words(planned) if planned.force.floor_friction_N > 0.0 else "",
         "noise_words": noise_words(budget) if budget else "",
         "left_out": planned.left_out,
-        "has_needed": drawing.is_floor_shown(run),
+        "has_needed": is_floor_shown(run),
         "plan_answer": plan_answer(planned),
         "basis": planned.travel.basis,
         "is_audit": False,
@@ -154,7 +162,11 @@ def _audit_content(audit: Audit) -> dict[str, Any]:
         "demands": demand_rows(audit),
         "verdicts": [finding_row(f) for f in audit.verdicts],
         "arrival": arrival_rows(audit),
-        "bench": bench_words(audit),
+        "bench": [arrival_words(audit), bench_words(audit)],
+        "crews": crew_rows(audit),
+        "crew_words": crew_words(audit),
+        "influences": influence_rows(audit),
+        "influence_words": influence_words(audit),
         "causes": audited_cause_rows(audit),
         "numerics": numeric_rows(audit),
         "books": book_rows(run),
@@ -162,6 +174,7 @@ def _audit_content(audit: Audit) -> dict[str, Any]:
         "command": command_of(audit),
         "n_runs": audit.arrival.n,
         "confidence": audit.percent,
+        "trial_confidence": f"{100 * s.trial.confidence:.3g}%",
         "tolerance": f"{s.trial.tolerance:.0%}",
     }
 

@@ -2,14 +2,12 @@
 
 from __future__ import annotations
 
-import math
-
 import pandas as pd
 
 from swarmpush.dynamics.run import Run
 from swarmpush.dynamics.states import STATES
 from swarmpush.quantities import for_people
-from swarmpush.reporting.wording import AT_THE_BLOCK, CAUSES, REASONS, STATE_WORDS, TELLS_LITTLE
+from swarmpush.reporting.wording import AT_THE_BLOCK, CAUSES, REASONS, STATE_WORDS, TELLS_LITTLE, share_of
 
 LEAST_REASON = 0.05  # a cause with a smaller share is no reason for a run's failure
 PLAIN_REASON = 0.25  # what stands between thrust and motion for so long is the reason, whatever else there was
@@ -123,14 +121,3 @@ def book_rows(run: Run) -> list[tuple[str, str]]:
         ("displacement without velocity", f"{books.phantom_share:.1e} of the block's way"),
         ("deepest overlap", for_people(run.overlap_max_m, "m")),
     ]
-
-
-def share_of(share: float) -> str:
-    """A share as percent, small ones with two digits.
-
-    >>> share_of(0.384), share_of(0.0123), share_of(0.0)
-    ('38%', '1.2%', '0%')
-    """
-    if share == 0.0 or not math.isfinite(share):
-        return "0%" if share == 0.0 else "-"
-    return f"{share:.0%}" if share >= 0.0995 else f"{100 * share:.2g}%"

@@ -3,9 +3,9 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 
-from swarmpush.auditing.audit import Audit
-from swarmpush.auditing.rungs import RestoredResult, RungResult
+from swarmpush.auditing.rungs import RungResult
 from swarmpush.auditing.statistics import Estimate
 from swarmpush.auditing.step_effect import StepMean, two_digits
 from swarmpush.auditing.verdicts import Finding
@@ -60,6 +60,17 @@ def number(value: float, unit: str) -> str:
     return for_people(value, unit)
 
 
+def share_of(share: float) -> str:
+    """A share as percent, small ones with two digits.
+
+    >>> share_of(0.384), share_of(0.0123), share_of(0.0)
+    ('38%', '1.2%', '0%')
+    """
+    if share == 0.0 or not math.isfinite(share):
+        return "0%" if share == 0.0 else "-"
+    return f"{share:.0%}" if share >= 0.0995 else f"{100 * share:.2g}%"
+
+
 def signed(value: float, unit: str) -> str:
     """A difference with its sign.
 
@@ -85,6 +96,17 @@ def interval(estimate: Estimate, unit: str) -> str:
     return f"{low / factor:.3g} to {high / factor:.3g} {prefix}{unit if unit != '1' else ''}".rstrip()
 
 
+def until(time_s: Estimate) -> str:
+    """The interval of a time by which something happens, which may never do.
+
+    >>> until(Estimate(3.0, 1.0, math.inf, 5)), until(Estimate(math.inf, math.inf, math.inf, 5))
+    ('1 s or later', 'later than any run')
+    """
+    if not math.isfinite(time_s.low):
+        return "later than any run"
+    return interval(time_s, "s") if math.isfinite(time_s.high) else f"{for_people(time_s.low, 's')} or later"
+
+
 def rung_row(rung: RungResult) -> dict[str, str]:
     """A rung as text."""
     is_geometry = rung.cost_m_s is None
@@ -93,55 +115,26 @@ def rung_row(rung: RungResult) -> dict[str, str]:
         "speed": number(rung.block_speed_m_s.mean, "m/s"),
         "cost": "" if rung.cost_m_s is None else number(rung.cost_m_s.mean, "m/s"),
         "interval": "" if rung.cost_m_s is None else interval(rung.cost_m_s, "m/s"),
-        "arrived": "" if rung.arrival is None else _arrived(rung.arrival),
+        "arrived": "" if rung.arrival is None else arrived(rung.arrival),
     }
 
 
-def restored_row(restored: RestoredResult) -> dict[str, str]:
-    """An assumption granted again, as text."""
-    return {
-        "name": restored.statement,
-        "speed": number(restored.block_speed_m_s.mean, "m/s"),
-        "gain": number(restored.gain_m_s.mean, "m/s"),
-        "interval": interval(restored.gain_m_s, "m/s"),
-        "arrived": _arrived(restored.arrival),
-    }
-
-
-def bench_words(audit: Audit) -> str:
-    """How many runs on a bench would settle the claim, in one sentence."""
-    n = audit.bench_runs
-    if n is None:
-        return "Arrival is as likely as not, and no number of runs on a bench would tell which."
-    runs = "1 run" if n == 1 else f"{n} runs"
-    return f"If arrivals are as frequent on a bench, some {runs} there would show whether more than half arrive."
-
-
-def baseline_words(audit: Audit) -> str:
-    """The crew that bounces at random beside the scenario as given and the plan, in two sentences."""
-    random, given = audit.baseline.block_speed_m_s, audit.ladder[-1].block_speed_m_s
-    lead = audit.baseline.lead_m_s
-    chance = "" if lead.low > 0.0 or lead.high < 0.0 else ", which may be chance"
-    return (
-        f"The same crew bouncing at random: {number(random.mean, 'm/s')} ({interval(random, 'm/s')}), arrived in "
-        f"{_arrived(audit.baseline.arrival)} runs; as given {number(given.mean, 'm/s')}, {_arrived(audit.arrival)}; "
-        f"planned {number(audit.plan.travel.block_speed_m_s, 'm/s')}. The routine's lead is "
-        f"{number(lead.mean, 'm/s')} ({interval(lead, 'm/s')}){chance}."
-    )
-
-
-def _arrived(arrival: Estimate) -> str:
+def arrived(arrival: Estimate) -> str:
+    """How many of the runs arrived."""
     return f"{round(arrival.mean * arrival.n)} of {arrival.n}"
 
 
 def finding_row(finding: Finding) -> dict[str, str]:
-    """A verdict as text."""
+    """A verdict as text; a t interval of shares may leave 0 to 1, which they cannot."""
+    measured = finding.measured
+    if finding.unit.startswith("share"):
+        measured = replace(measured, low=max(0.0, measured.low), high=min(1.0, measured.high))
     return {
         "name": finding.assumption,
         "statement": finding.statement,
         "planned": number(finding.predicted, finding.unit),
         "measured": number(finding.measured.mean, finding.unit),
-        "interval": interval(finding.measured, finding.unit),
+        "interval": interval(measured, finding.unit),
         "verdict": str(finding.verdict),
     }
 

@@ -46,7 +46,7 @@ def test_audit_writes_its_files(audited: Saved) -> None:
     sample = {f"sample/{name}" for name in ("run.json", "visits.parquet", "block.parquet", "pushers.parquet")}
     files = contents(audited.folder)
     names = {name.replace("\\", "/") for name in files}
-    assert names == {"audit.json", "replicates.parquet", "report.html", *sample, *figures("ladder")}
+    assert names == {"audit.json", "replicates.parquet", "report.html", *sample, *figures("ladder", "arrivals")}
     audit = audited.outcome.json()
     saved = json.loads(files["audit.json"])
     assert audit.pop("files") == saved.pop("files") | {"folder": str(audited.folder), "report": "report.html"}

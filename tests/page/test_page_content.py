@@ -7,10 +7,9 @@ import io
 import math
 import re
 from collections.abc import Iterator
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from html.parser import HTMLParser
 from pathlib import Path
-from types import SimpleNamespace
 
 import matplotlib.pyplot as plt
 import numpy as np
@@ -20,14 +19,26 @@ import pytest
 import swarmpush
 from swarmpush import Audit, Run
 from swarmpush.auditing.audit import RungResult, load_audit
+from swarmpush.auditing.neighbours import CrewSize, Influence
 from swarmpush.auditing.statistics import Estimate
 from swarmpush.output import OutputError
-from swarmpush.reporting import audit_words
-from swarmpush.reporting.drawing import ladder
+from swarmpush.reporting import audit_rows, audit_words
+from swarmpush.reporting.audit_drawing import ladder
 from swarmpush.reporting.page import page
 
-UNITS = r"_(m|s|m_s|rad|Ns|J|share|pushers)$"
-WORDS = {"rung", "adds", "n_runs", "line", "body", "when", "mode", "pusher", "part"}  # columns of names and counts
+UNITS = r"_(m|s|m_s|rad|Ns|J|share|pushers|runs)$"
+WORDS = {
+    "rung",
+    "adds",
+    "n_runs",
+    "line",
+    "body",
+    "when",
+    "mode",
+    "pusher",
+    "part",
+    "crew",
+}  # columns of names and counts
 DIGITS = 1e-8  # relative: data are written with nine digits
 
 
@@ -45,7 +56,7 @@ def test_every_figure_has_its_data(audit_page: Path) -> None:
     """As many tables as figures, of plain numbers, with units in the names of their columns."""
     text = audit_page.read_text(encoding="utf-8")
     named = set(re.findall(r'href="(figures/[a-z]+\.csv)"', text))
-    assert len(named) == text.count("<figure>") == 9
+    assert len(named) == text.count("<figure>") == 10
     assert {f"figures/{file.name}" for file in (audit_page.parent / "figures").iterdir()} == named
     for name in named:
         table = pd.read_csv(audit_page.parent / name)
@@ -69,6 +80,10 @@ def test_data_are_those_of_the_results(audit_page: Path, result: Audit) -> None:
     assert block["end"] - block["start"] == pytest.approx(run.travel_m, rel=1e-6, abs=1e-9)
     assert len(end) == 2 * (1 + run.scenario.pushers.count)
     assert csv(audit_page, "energy")["energy_J"].sum() == pytest.approx(0.0, abs=1e-6 * run.energy.drive)
+    arrivals = csv(audit_page, "arrivals")
+    given = arrivals[arrivals["crew"] == "as given"]
+    assert given["arrived_share"].iloc[-1] == pytest.approx(result.arrival.mean, rel=DIGITS)
+    assert given["arriving_runs"].sum() == result.as_given["has_arrived"].sum()
     shares = csv(audit_page, "states").drop(columns="t_s").sum(axis=1)
     np.testing.assert_allclose(shares, 1.0, rtol=DIGITS)
     assert csv(audit_page, "leaning")["leaning_most_pushers"].max() == run.block["n_leaning_most"].max()
@@ -103,7 +118,7 @@ def test_the_waterfall_goes_down_from_geometry(result: Audit) -> None:
     ends = np.array([span[1] for span in spans[:-1]])
     starts = np.array([span[0] for span in spans[1:-1]])
     names = [rung.rung for rung in result.ladder]
-    against = [getattr(rung, "against", "") or names[k] for k, rung in enumerate(result.ladder[1:])]
+    against = [rung.against for rung in result.ladder[1:]]
     np.testing.assert_allclose(starts, [ends[names.index(name)] for name in against], rtol=1e-9, atol=1e-12)
     np.testing.assert_allclose(ends / ends[0], np.array(speeds) / speeds[0], rtol=1e-9, atol=1e-12)
     assert spans[-1] == pytest.approx((0.0, ends[-1]))
@@ -112,15 +127,17 @@ def test_the_waterfall_goes_down_from_geometry(result: Audit) -> None:
 
 def made(result: Audit, *costs: tuple[str, float, float, float]) -> Audit:
     """The audit with other rungs: what each adds, and its cost with both ends of the interval."""
-    rungs = [RungResult(adds, adds, Estimate(1e-3, 1e-3, 1e-3, 3), Estimate(c, low, high, 3), Estimate(0, 0, 1, 3))
-             for adds, c, low, high in costs]  # fmt: skip
+    names = [result.ladder[0].rung, *(cost[0] for cost in costs)]
+    speed, none = Estimate(1e-3, 1e-3, 1e-3, 3), Estimate(0, 0, 1, 3)
+    rungs = [RungResult(adds, adds, speed, Estimate(c, low, high, 3), none, above)
+             for above, (adds, c, low, high) in zip(names, costs, strict=False)]  # fmt: skip
     return replace(result, ladder=(result.ladder[0], *rungs))
 
 
 def test_a_rung_beside_the_others(result: Audit) -> None:
     """A rung that names another one than the rung above begins at that one's speed, and the page says so."""
     first, second, third, *_ = result.ladder
-    beside = SimpleNamespace(**vars(third) | {"against": first.rung})
+    beside = replace(third, against=first.rung)
     audit = replace(result, ladder=(first, second, beside))
     bar = ladder(audit).axes[0].patches[2]
     promise = ladder(audit).axes[0].patches[0].get_width()
@@ -169,44 +186,29 @@ def test_the_largest_costs_in_words(result: Audit) -> None:
     assert "No rung of the ladder slows the block." in page(made(result, ("gain", 5e-4, 4e-4, 6e-4)))
 
 
-@dataclass(frozen=True)
-class Demand:
-    """Something demanded, of a kind that the page knows nothing of."""
-
-    what: str
-    share_needed: float
-
-
 def test_parts_that_an_audit_may_have(result: Audit) -> None:
-    """Restored assumptions, a baseline and demands are shown, escaped, where there are any, and else not mentioned."""
-    headings = ("with one assumption restored", "Against a baseline", "What was demanded")
-    bare = replace(result)
-    for name in ("restored", "baseline", "demands"):
-        object.__setattr__(bare, name, None)
-    text = page(bare)
-    assert not any(heading in text for heading in headings)
-    (rung,) = made(result, ("<i>crowds</i>", -3e-4, -4e-4, -2e-4)).ladder[1:]
-    full = replace(result)
-    granted = SimpleNamespace(
-        statement="nobody <i>errs</i>",
-        block_speed_m_s=rung.block_speed_m_s,
-        gain_m_s=Estimate(5e-4, 4e-4, 6e-4, 3),
-        arrival=rung.arrival,
+    """Demands, other crews and measured values are shown where there are any; all is escaped."""
+    headings = ("What was demanded", "Round about")
+    assert not any(heading in page(result) for heading in headings)
+    granted = replace(result.restored[0], statement="nobody <i>errs</i>", gain_m_s=Estimate(5e-4, 4e-4, 6e-4, 3))
+    estimate = result.ladder[-1].block_speed_m_s
+    crews = tuple(CrewSize(n, estimate, None, result.arrival, 0.1, 0.01, 0.2) for n in (3, 6))
+    influence = Influence("block.mass", 0.5, 0.25, Estimate(-1e-3, -2e-3, -5e-4, 3), 0.1, 0.05)
+    full = replace(
+        result,
+        restored=(result.restored[1], granted),
+        crews=crews,
+        influences=(influence,),
+        required=("arrival >= 0.8", "block_speed<=1 m/s"),
     )
-    parts = (rung, granted)
-    for name, value in {"restored": parts, "baseline": rung, "demands": (Demand("<b>arrival", 0.8),)}.items():
-        object.__setattr__(full, name, value)
     text = page(full)
     for heading in headings:
         assert heading in text
-    assert [row["cost"] for row in audit_words.restored_rows(full)] == ["+500 µm/s", "-300 µm/s"]
-    assert [row["cost"] for row in audit_words.baseline_rows(full)] == [
-        "+300 µm/s"
-    ]  # the lead of the scenario as given
+    assert audit_rows.restored_rows(full)[0]["cost"] == "+500 µm/s"
+    assert [words.split(":")[0] for _, words in audit_rows.demand_rows(full)] == ["not met", "met"]
     assert "nobody &lt;i&gt;errs&lt;/i&gt;" in text
-    assert "without &lt;i&gt;crowds&lt;/i&gt;" in text
-    assert "&lt;b&gt;arrival" in text
-    assert "share needed: 0.8" in text
+    assert "Measure first: block.mass to within 10%." in text
+    assert "-100 µm/s" in text  # a tenth of the change per relative change
     assert "<i>" not in text
 
 
@@ -218,7 +220,7 @@ def test_regimes_come_first_among_the_details(audit_page: Path, result: Audit) -
     assert places == sorted(places)
     for regime in result.plan.regime:
         assert regime.meaning in text
-    for row in (*audit_words.audited_cause_rows(result), *audit_words.arrival_rows(result)):
+    for row in (*audit_rows.audited_cause_rows(result), *audit_rows.arrival_rows(result)):
         assert row["name"] in text
     for seed in result.as_given["seed"]:
         assert str(seed) in text

@@ -12,7 +12,7 @@ import swarmpush
 from swarmpush.auditing.audit import Audit, Look, load_audit
 from swarmpush.auditing.statistics import Verdict, share_interval
 from swarmpush.demos import demo
-from swarmpush.reporting.wording import bench_words
+from swarmpush.reporting.audit_words import bench_words
 from swarmpush.scenario import Scenario
 
 FIRST, BUDGET = 2, 8  # arrival cannot be decided with so few, so that all looks are taken

@@ -18,8 +18,9 @@ from swarmpush.dynamics.states import STATES
 from swarmpush.dynamics.world import simulate
 from swarmpush.kinematics.forecast import push_force
 from swarmpush.loading import load
-from swarmpush.reporting.drawing import end_of_run, leaning, pusher_shape, pushers_needed, states
+from swarmpush.reporting.drawing import pusher_shape
 from swarmpush.reporting.page import page
+from swarmpush.reporting.run_drawing import end_of_run, leaning, pushers_needed, states
 from swarmpush.reporting.run_words import (
     cause_rows,
     energy_parts,
