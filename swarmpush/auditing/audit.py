@@ -17,7 +17,18 @@ from swarmpush.auditing.ladder import BASELINE, bounce_at_random, climb, restore
 from swarmpush.auditing.looks import confidence_at, looks
 from swarmpush.auditing.neighbours import CrewSize, Influence, crew_sizes, influences, neighbours
 from swarmpush.auditing.replicates import Progress, Task, replicate_seeds, run_tasks
-from swarmpush.auditing.rungs import Baseline, RestoredResult, RungResult, baseline, ladder, restored
+from swarmpush.auditing.rungs import (
+    HEADINGS,
+    N_HEADINGS,
+    Baseline,
+    RestoredResult,
+    RungResult,
+    baseline,
+    has_headings,
+    ladder,
+    restored,
+    speed_off_course,
+)
 from swarmpush.auditing.statistics import Estimate, Verdict, mean_interval, runs_to_decide, share_interval
 from swarmpush.auditing.survival import LogRank, SurvivalCurve, log_rank, median_time, restricted_mean, survival_curve
 from swarmpush.auditing.verdicts import Finding, find_verdicts, most_failed
@@ -343,7 +354,10 @@ def audit(
     samples: list[Run] = []  # one run is needed in full
 
     def run_one(task: Task, look_up: Callable[[float], None]) -> Row:
-        scenario, k = scenarios[task.level], task.replicate
+        k = task.replicate
+        if task.level == HEADINGS:
+            return {"rung": HEADINGS, "replicate": k, "seed": k, "block_speed_m_s": speed_off_course(planned, seed=k)}
+        scenario = scenarios[task.level]
         steps = choose_step(scenario)
         steps = steps.halved() if task.level == HALVED else steps
         run = simulate(scenario, seed=seeds[k], steps=steps, cycles=cycles, progress=look_up)
@@ -351,7 +365,8 @@ def audit(
             samples.append(run)
         return {"rung": task.level, "replicate": k, "seed": seeds[k], **run.summary(planned.main_lap)}
 
-    names = {rung.key: rung.adds for rung in climb(s)}
+    n_headings = N_HEADINGS if has_headings(planned) else 0
+    names = {rung.key: rung.adds for rung in climb(s)} | {HEADINGS: "errors of headings alone"}
 
     def tell(done: int, total: int, level: str) -> None:
         if progress:
@@ -361,11 +376,13 @@ def audit(
     sizes = looks(n, most)
     rows: dict[Task, Row] = {}
     for number, size in enumerate(sizes):
-        tasks = [Task(level, k) for level in dict.fromkeys(originals.values()) for k in range(size)]
+        tasks = [Task(HEADINGS, k) for k in range(n_headings)]
+        tasks += [Task(level, k) for level in dict.fromkeys(originals.values()) for k in range(size)]
         tasks += [Task(HALVED, k) for k in range(min(size, N_HALVED))]
         again = () if samples else (sample_task,)
         rows |= run_tasks(tasks, run_one, journal=kept, known=rows, again=again, workers=workers, progress=tell)
-        table = [
+        table = [rows[Task(HEADINGS, k)] for k in range(n_headings)]
+        table += [
             rows[Task(originals.get(level, level), k)] | {"rung": level}
             for level in scenarios
             for k in range(min(size, N_HALVED) if level == HALVED else size)

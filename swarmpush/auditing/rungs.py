@@ -15,7 +15,7 @@ from swarmpush.kinematics.lap_loss import headings_err
 from swarmpush.kinematics.planning import Plan
 
 GEOMETRY, HEADINGS = "geometry", "headings"  # the rungs of the point world
-N_SEEDS = 4  # forecasts of 300 pushers each, with and without errors; they differ little from seed to seed
+N_HEADINGS = 4  # seeds of forecasts of 300 pushers each, with and without errors; they differ little from seed to seed
 
 Runs = Mapping[str, pd.DataFrame]  # by level, with the replicate as index
 
@@ -72,28 +72,38 @@ def ladder(planned: Plan, runs: Runs) -> tuple[RungResult, ...]:
     compared with geometry, and from there on each rung with the one below: those costs add up to the whole.
     """
     s, promise = planned.scenario, planned.travel.block_speed_m_s
-    results = [RungResult(GEOMETRY, "the plan's own promise", _exactly(promise), None, None), *_headings(planned)]
+    confidence = s.trial.confidence
+    results = [RungResult(GEOMETRY, "the plan's own promise", _exactly(promise), None, None)]
+    if HEADINGS in runs:
+        speeds = runs[HEADINGS]["block_speed_m_s"]
+        cost = mean_interval(speeds - promise, confidence)
+        speed = mean_interval(speeds, confidence)
+        results.append(RungResult(HEADINGS, "errors of headings alone", speed, cost, None, GEOMETRY))
     below: pd.Series[float] | float = promise
     against = GEOMETRY
     for rung in climb(s):
         speed, arrival = _speed_and_arrival(planned, runs[rung.key])
         speeds = runs[rung.key]["block_speed_m_s"]
-        cost = mean_interval(speeds - below, s.trial.confidence)
+        cost = mean_interval(speeds - below, confidence)
         results.append(RungResult(rung.key, rung.adds, speed, cost, arrival, against))
         below, against = speeds, rung.key
     return tuple(results)
 
 
-def _headings(planned: Plan) -> tuple[RungResult, ...]:
-    """The rung of errors of headings and turns; none without a lap, without such errors, or where nothing moves."""
-    s, lap, promise = planned.scenario, planned.main_lap, planned.travel.block_speed_m_s
-    if lap is None or not headings_err(s.errors) or not math.isfinite(promise):
-        return ()
-    pairs = [speed_with_errors(s, lap, seed=seed) for seed in range(N_SEEDS)]
-    cost = mean_interval([erring - exact for erring, exact in pairs], s.trial.confidence)
-    # the promise is one of the draws; only differences are compared, so that the rung stands beside it
-    speed = Estimate(promise + cost.mean, promise + cost.low, promise + cost.high, cost.n)
-    return (RungResult(HEADINGS, "errors of headings alone", speed, cost, None, GEOMETRY),)
+def has_headings(planned: Plan) -> bool:
+    """Whether errors of headings make a rung: there is a lap, there are such errors, and something moves."""
+    is_finite = math.isfinite(planned.travel.block_speed_m_s)
+    return planned.main_lap is not None and headings_err(planned.scenario.errors) and is_finite
+
+
+def speed_off_course(planned: Plan, seed: int) -> float:
+    """Block speed in the point world with errors of headings and turns, m/s: the promise plus what they change.
+
+    The promise is one forecast of many; only the difference of two with the same starts is kept of this seed's.
+    """
+    assert planned.main_lap is not None
+    erring, exact = speed_with_errors(planned.scenario, planned.main_lap, seed=seed)
+    return planned.travel.block_speed_m_s + erring - exact
 
 
 def restored(planned: Plan, runs: Runs) -> tuple[RestoredResult, ...]:

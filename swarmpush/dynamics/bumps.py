@@ -10,13 +10,18 @@ planned lap, from one strike to the strike that closes it.
 from __future__ import annotations
 
 from collections.abc import Iterable
+from typing import Any, NamedTuple
 
 import numpy as np
 import pandas as pd
+from numpy.typing import NDArray
 
 from swarmpush.kinematics.boundary import REAR
 from swarmpush.kinematics.laps import IN_THE_OPEN
 
+BUMP_COLUMNS = (
+    "pusher", "surface", "t_on_s", "t_off_s", "impact_Ns", "lean_Ns", "x_m", "y_m", "approach_m_s", "heading_rad"
+)  # fmt: skip
 LAP_COLUMNS = {"pusher": np.int64, "t_start_s": np.float64, "t_end_s": np.float64, "n_strikes": np.int64}
 
 
@@ -32,38 +37,33 @@ def find_bumps(visits: pd.DataFrame, apart_s: float = 0.0) -> pd.DataFrame:
         impact_Ns, lean_Ns (summed), x_m, y_m, approach_m_s and heading_rad (of the first touch; NaN for a pusher that
         another one's visit is entered for).
     """
-    touches = visits[visits["pusher"] >= 0]
-    between = touches[touches["partner"] == "pusher"]
+    columns = {name: visits[name].to_numpy() for name in ("partner", "other_pusher", *BUMP_COLUMNS)}
+    of_pusher = np.flatnonzero(columns["pusher"] >= 0)
+    between = of_pusher[columns["partner"][of_pusher] == "pusher"]
     # a visit between pushers is entered once, by the first; the second has bumped as well
-    seconds = between.assign(pusher=between["other_pusher"], x_m=np.nan, y_m=np.nan, heading_rad=np.nan)
-    both = pd.concat([touches, seconds], ignore_index=True) if len(seconds) else touches
-    both = both.sort_values(["pusher", "t_on_s"], kind="stable")
-    number = _bump_numbers(both, apart_s)
-    first = both.iloc[np.unique(number, return_index=True)[1]]
-    ends = both["t_off_s"].groupby(number).max()
-    sums = both[["impact_Ns", "lean_Ns"]].groupby(number).sum()
-    return pd.DataFrame(
-        {
-            "pusher": first["pusher"].to_numpy(),
-            "surface": first["surface"].to_numpy(),
-            "t_on_s": first["t_on_s"].to_numpy(),
-            "t_off_s": ends.to_numpy(),
-            "impact_Ns": sums["impact_Ns"].to_numpy(),
-            "lean_Ns": sums["lean_Ns"].to_numpy(),
-            "x_m": first["x_m"].to_numpy(),
-            "y_m": first["y_m"].to_numpy(),
-            "approach_m_s": first["approach_m_s"].to_numpy(),
-            "heading_rad": first["heading_rad"].to_numpy(),
-        }
-    )
+    touches = {name: np.concatenate([columns[name][of_pusher], columns[name][between]]) for name in BUMP_COLUMNS}
+    n = len(of_pusher)
+    touches["pusher"][n:] = columns["other_pusher"][between]
+    for name in ("x_m", "y_m", "heading_rad"):
+        touches[name][n:] = np.nan
+    order = np.lexsort([touches["t_on_s"], touches["pusher"]])
+    touches = {name: values[order] for name, values in touches.items()}
+    number = _bump_numbers(touches, apart_s)
+    first = np.unique(number, return_index=True)[1]
+    bumps = {name: values[first] for name, values in touches.items()}
+    np.maximum.at(bumps["t_off_s"], number, touches["t_off_s"])
+    for name in ("impact_Ns", "lean_Ns"):
+        bumps[name] = np.bincount(number, touches[name], minlength=len(first))
+    return pd.DataFrame(bumps)
 
 
-def _bump_numbers(touches: pd.DataFrame, apart_s: float) -> np.ndarray:
+def _bump_numbers(touches: dict[str, NDArray[Any]], apart_s: float) -> NDArray[np.int64]:
     """Number of the bump to which each touch belongs; touches in order of pusher and time."""
-    numbers = np.zeros(len(touches), dtype=np.int64)
+    numbers = np.zeros(len(touches["pusher"]), dtype=np.int64)
     latest: dict[tuple[int, str], tuple[int, float]] = {}  # by pusher and surface: number and end of the last bump
     before, n_bumps = None, 0
-    columns = (touches[name].to_numpy() for name in ("pusher", "surface", "t_on_s", "t_off_s"))
+    # plain values are quicker
+    columns = (touches[name].tolist() for name in ("pusher", "surface", "t_on_s", "t_off_s"))
     for k, (pusher, surface, t_on, t_off) in enumerate(zip(*columns, strict=True)):
         place = pusher, surface
         number, end = latest.get(place, (-1, -np.inf))
@@ -84,8 +84,30 @@ def find_completed_laps(bumps: pd.DataFrame, cycles: Iterable[tuple[str, ...]]) 
     Returns:
         One row per lap: pusher, t_start_s, t_end_s, n_strikes.
     """
-    surface, pusher, t_on = (bumps[name].to_numpy() for name in ("surface", "pusher", "t_on_s"))
-    found: list[pd.DataFrame] = []
+    laps = lap_rows(bumps, cycles)
+    pusher, t_on = bumps["pusher"].to_numpy(), bumps["t_on_s"].to_numpy()
+    columns = (pusher[laps.first], t_on[laps.first], t_on[laps.last], laps.n_strikes)
+    return pd.DataFrame(
+        {name: values.astype(kind) for (name, kind), values in zip(LAP_COLUMNS.items(), columns, strict=True)}
+    )
+
+
+class LapRows(NamedTuple):
+    """Rows of a table of bumps between which a lap was completed, (n,) each, and the strikes that each lap has."""
+
+    first: NDArray[np.int64]
+    last: NDArray[np.int64]
+    n_strikes: NDArray[np.int64]
+
+
+def lap_rows(bumps: pd.DataFrame, cycles: Iterable[tuple[str, ...]]) -> LapRows:
+    """The strikes that begin and close the planned laps that pushers completed, in order of pusher and time.
+
+    Arguments:
+        bumps, cycles: see `find_completed_laps`.
+    """
+    surface, pusher = bumps["surface"].to_numpy(), bumps["pusher"].to_numpy()
+    found = []
     for cycle in dict.fromkeys(_as_bumped(cycle) for cycle in cycles):
         length = len(cycle)
         n = len(surface) - length
@@ -94,31 +116,14 @@ def find_completed_laps(bumps: pd.DataFrame, cycles: Iterable[tuple[str, ...]]) 
         is_lap = pusher[:n] == pusher[length:]
         for k, name in enumerate((*cycle, REAR)):
             is_lap &= surface[k : n + k] == name
-        at = np.flatnonzero(is_lap)
-        found.append(
-            pd.DataFrame(
-                {
-                    "pusher": pusher[at],
-                    "t_start_s": t_on[at],
-                    "t_end_s": t_on[at + length],
-                    "n_strikes": np.full(len(at), cycle.count(REAR)),
-                }
-            )
-        )
-    if not found:
-        return pd.DataFrame({name: pd.Series(dtype=kind) for name, kind in LAP_COLUMNS.items()})
-    laps = pd.concat(found).sort_values(["pusher", "t_start_s", "t_end_s"], kind="stable")
-    return _one_after_another(laps)
-
-
-def _one_after_another(laps: pd.DataFrame) -> pd.DataFrame:
-    """The laps that begin after the pusher's last one has ended, so that no time counts twice."""
-    is_kept, last, free_from = [], -1, 0.0
-    for pusher, start, end in zip(laps["pusher"], laps["t_start_s"], laps["t_end_s"], strict=True):
-        is_kept.append(pusher != last or start >= free_from)
-        if is_kept[-1]:
-            last, free_from = pusher, end
-    return laps[np.array(is_kept, dtype=bool)].reset_index(drop=True)
+        found += [(first, first + length, cycle.count(REAR)) for first in np.flatnonzero(is_lap).tolist()]
+    free_from, last_pusher, kept = 0, -1, []
+    for first, last, n_strikes in sorted(found):
+        # a lap begins after the pusher's last one has ended, so that no time counts twice
+        if pusher[first] != last_pusher or first >= free_from:
+            kept.append((first, last, n_strikes))
+            free_from, last_pusher = last, pusher[first]
+    return LapRows(*np.array(kept, dtype=np.int64).reshape(-1, 3).T)
 
 
 def _as_bumped(cycle: tuple[str, ...]) -> tuple[str, ...]:

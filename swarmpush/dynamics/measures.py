@@ -8,7 +8,7 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
-from swarmpush.dynamics.bumps import find_completed_laps
+from swarmpush.dynamics.bumps import LapRows
 from swarmpush.kinematics.boundary import REAR
 from swarmpush.kinematics.laps import Lap
 
@@ -22,26 +22,23 @@ IS_MOVING = 0.01  # of the free speed
 LAPS_TO_CATCH = 5.0  # lap times that a run must last before its pushers can be said to have found no lap
 
 
-def lap_ends(bumps: pd.DataFrame, lap: Lap) -> pd.DataFrame:
+def lap_ends(bumps: pd.DataFrame, lap: Lap, passes: LapRows) -> pd.DataFrame:
     """The strikes at both ends of each completed pass round one lap.
 
     Arguments:
-        bumps: from `find_bumps`. lap: of the plan.
+        bumps: from `find_bumps`. lap: of the plan. passes: its passes, from `lap_rows`.
 
     Returns:
         One row per pass: pusher, y_m where its last strike was, and before_rad, after_rad: by how much the headings of
         its first and its last strike differ from the plan's, within half a turn.
     """
-    passes = find_completed_laps(bumps, (lap.surfaces,))
-    strikes = bumps.loc[bumps["surface"] == REAR, ["pusher", "t_on_s", "y_m", "heading_rad"]]
-    first = passes.merge(strikes, left_on=["pusher", "t_start_s"], right_on=["pusher", "t_on_s"])
-    last = passes.merge(strikes, left_on=["pusher", "t_end_s"], right_on=["pusher", "t_on_s"])
+    pusher, y, heading = (bumps[name].to_numpy() for name in ("pusher", "y_m", "heading_rad"))
     return pd.DataFrame(
         {
-            "pusher": last["pusher"],
-            "y_m": last["y_m"],
-            "before_rad": _half_turn(first["heading_rad"].to_numpy() - lap.rear_heading_rad),
-            "after_rad": _half_turn(last["heading_rad"].to_numpy() - lap.rear_heading_rad),
+            "pusher": pusher[passes.last],
+            "y_m": y[passes.last],
+            "before_rad": _half_turn(heading[passes.first] - lap.rear_heading_rad),
+            "after_rad": _half_turn(heading[passes.last] - lap.rear_heading_rad),
         }
     )
 
@@ -78,35 +75,33 @@ def heading_growth(ends: pd.DataFrame) -> float:
     return (slope + k / n) / (1.0 - (k + 2) / n)
 
 
-def share_in_band(bumps: pd.DataFrame, lap: Lap) -> float:
+def share_in_band(bumps: pd.DataFrame, lap: Lap, passes: LapRows) -> float:
     """Share of strikes out of a lap that keep the lap: on its route, and under a heading within its band.
 
     Counted is each strike that follows on one which has closed the lap, however the pusher got there, unless it has
     bumped into another pusher on the way. To take only completed laps would leave out those that errors have ended.
 
     Arguments:
-        bumps: from `find_bumps`. lap: of the plan.
+        bumps: from `find_bumps`. lap: of the plan. passes: its passes, from `lap_rows`.
 
     Returns:
         The share, from 0 to 1; NaN if no strike is counted.
     """
-    passes = find_completed_laps(bumps, (lap.surfaces,))
-    ends = set(zip(passes["pusher"], passes["t_end_s"], strict=True))
-    closed = set(zip(passes["pusher"], passes["t_start_s"], strict=True))
+    ends, closed = set(passes.last.tolist()), set(passes.first.tolist())
     low, high = lap.leg_bands_rad[-1]
     n_kept = n_counted = 0
-    begun: tuple[int, float] | None = None  # the last strike, if it has closed the lap and nobody was met since
-    columns = (bumps[name].to_numpy() for name in ("pusher", "surface", "t_on_s", "heading_rad"))
-    for pusher, surface, t_on, heading in zip(*columns, strict=True):
-        if surface == "pusher" or (begun and begun[0] != pusher):
+    begun: int | None = None  # row of the last strike, if it has closed the lap and nobody was met since
+    pusher, heading = bumps["pusher"].to_numpy(), bumps["heading_rad"].to_numpy()
+    for row, surface in enumerate(bumps["surface"].to_numpy()):
+        if surface == "pusher" or (begun is not None and pusher[begun] != pusher[row]):
             begun = None
         if surface != REAR:
             continue
-        if begun:
-            off = math.remainder(heading - lap.rear_heading_rad, 2 * math.pi)
+        if begun is not None:
+            off = math.remainder(heading[row] - lap.rear_heading_rad, 2 * math.pi)
             n_kept += begun in closed and low <= off <= high
             n_counted += 1
-        begun = (pusher, t_on) if (pusher, t_on) in ends else None
+        begun = row if row in ends else None
     return n_kept / n_counted if n_counted else math.nan
 
 

@@ -14,7 +14,7 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from swarmpush.dynamics import measures
-from swarmpush.dynamics.bumps import find_bumps, find_completed_laps
+from swarmpush.dynamics.bumps import find_bumps, find_completed_laps, lap_rows
 from swarmpush.dynamics.states import STATES, Tables, failures, pusher_states
 from swarmpush.dynamics.steps import StepSettings
 from swarmpush.kinematics.boundary import REAR
@@ -202,12 +202,13 @@ class Run:
         result = dict.fromkeys(names, math.nan)
         if lap is None:
             return result
-        ends = measures.lap_ends(self.bumps, lap)
+        passes = lap_rows(self.bumps, (lap.surfaces,))
+        ends = measures.lap_ends(self.bumps, lap, passes)
         if len(ends):
             result["lap_hit_y_m"] = float(ends["y_m"].mean())
             result["lap_hit_heading_rad"] = lap.rear_heading_rad + float(ends["after_rad"].mean())
         result["heading_growth"] = measures.heading_growth(ends)
-        result["in_band_share"] = measures.share_in_band(self.bumps, lap)
+        result["in_band_share"] = measures.share_in_band(self.bumps, lap, passes)
         if self.duration_s >= measures.LAPS_TO_CATCH * lap.time_s:
             result["captured_share"] = self.laps["pusher"].nunique() / self.scenario.pushers.count
         return result

@@ -9,6 +9,7 @@ import pandas as pd
 import pytest
 
 from swarmpush.dynamics import measures
+from swarmpush.dynamics.bumps import lap_rows
 from swarmpush.kinematics.laps import Lap
 
 HEADING, LOW, HIGH = 0.1, -0.2, 0.3  # rad: of the lap at the rear face, and the errors that keep it
@@ -44,9 +45,17 @@ def bumps(pusher: int, letters: str, *headings: float) -> pd.DataFrame:
 # ---- strikes at the ends of laps -----------------------------------------------------------------------------------
 
 
+def ends_of(table: pd.DataFrame, of: Lap) -> pd.DataFrame:
+    return measures.lap_ends(table, of, lap_rows(table, (of.surfaces,)))
+
+
+def in_band(table: pd.DataFrame, of: Lap) -> float:
+    return measures.share_in_band(table, of, lap_rows(table, (of.surfaces,)))
+
+
 def test_ends_of_laps() -> None:
     """A pass has the deviations of its first and its last strike, and the place of its last."""
-    ends = measures.lap_ends(bumps(4, "rtbrtbr", 0.1, 0.15, 0.3), lap())
+    ends = ends_of(bumps(4, "rtbrtbr", 0.1, 0.15, 0.3), lap())
     assert ends["pusher"].tolist() == [4, 4]
     assert ends["y_m"].tolist() == [11.0, 12.0]
     assert ends["before_rad"].tolist() == pytest.approx([0.0, 0.05], abs=EXACT)
@@ -55,13 +64,13 @@ def test_ends_of_laps() -> None:
 
 def test_strikes_of_other_routes_end_no_lap() -> None:
     """A strike that another route led to is in no pass, and a pass is not made of two pushers' bumps."""
-    assert len(measures.lap_ends(bumps(0, "rbtrbtr"), lap())) == 0
-    assert len(measures.lap_ends(pd.concat([bumps(0, "rtb"), bumps(1, "rt")]), lap())) == 0
+    assert len(ends_of(bumps(0, "rbtrbtr"), lap())) == 0
+    assert len(ends_of(pd.concat([bumps(0, "rtb"), bumps(1, "rt")]), lap())) == 0
 
 
 def test_deviations_are_within_half_a_turn() -> None:
     """Headings on either side of a half turn differ by little."""
-    ends = measures.lap_ends(bumps(0, "rtbr", 3.1, -3.1), lap(3.1))
+    ends = ends_of(bumps(0, "rtbr", 3.1, -3.1), lap(3.1))
     assert ends["after_rad"].tolist() == pytest.approx([2 * math.pi - 6.2], abs=EXACT)
 
 
@@ -131,13 +140,13 @@ def test_growth_does_not_hang_on_single_strikes() -> None:
 )
 def test_share_in_band(letters: str, headings: tuple[float, ...], share: float) -> None:
     """Strikes after one that has closed the lap count, kept if by its route and in its band."""
-    assert measures.share_in_band(bumps(0, letters, *headings), lap()) == pytest.approx(share, nan_ok=True)
+    assert in_band(bumps(0, letters, *headings), lap()) == pytest.approx(share, nan_ok=True)
 
 
 def test_share_in_band_goes_by_pusher() -> None:
     """A pusher's last strike is not continued by the next one's first."""
     table = pd.concat([bumps(0, "rtbr", 0.1, 0.1), bumps(1, "rtbr", 0.1, 0.1)])
-    assert math.isnan(measures.share_in_band(table, lap()))
+    assert math.isnan(in_band(table, lap()))
 
 
 # ---- block and crew ------------------------------------------------------------------------------------------------
