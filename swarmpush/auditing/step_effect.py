@@ -9,8 +9,9 @@ from enum import StrEnum
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from swarmpush.auditing.differences import paired_interval, paired_share_interval
 from swarmpush.auditing.grid_index import Behaviour, GridIndex, grid_index
-from swarmpush.auditing.statistics import Estimate, mean_interval, share_interval
+from swarmpush.auditing.statistics import Estimate
 from swarmpush.quantities import for_people
 
 SHARE = "share of runs"
@@ -141,8 +142,8 @@ def step_effect(
     for a large effect leaves half the allowed size if the effect falls in proportion to the step. None is suggested
     when the second halving changes about as much as the first, as with a count that itself depends on the step.
 
-    For a share the interval comes from the pairs that changed, in either direction, with a score interval each: a t
-    interval would have no width where no pair changed.
+    For a share the interval comes from the pairs that changed, see `paired_share_interval`: a t interval would have no
+    width where no pair changed.
 
     Arguments:
         quantity, unit: name and SI unit; "share of runs" for values of 0 and 1.
@@ -162,9 +163,8 @@ def step_effect(
     """
     table = np.asarray(values, dtype=np.float64).reshape(-1, len(DIVISORS))
     whole = table[np.isfinite(table).all(axis=1)]
-    is_pair = np.isfinite(table[:, [0, -1]]).all(axis=1)
-    pairs = table[is_pair, 0] - table[is_pair, -1]
-    difference = _share_change(pairs, confidence) if unit == SHARE else mean_interval(pairs, confidence)
+    compare = paired_share_interval if unit == SHARE else paired_interval
+    difference = compare(table[:, 0], table[:, -1], confidence)
     coarse, middle, fine = whole.mean(axis=0) if len(whole) else (math.nan,) * 3
     grid = grid_index(fine, middle, coarse) if len(whole) else None
     judged = difference
@@ -199,15 +199,6 @@ def _mean(column: NDArray[np.float64]) -> StepMean:
         n=n,
         n_left_out=len(column) - n,
     )
-
-
-def _share_change(pairs: NDArray[np.float64], confidence: float) -> Estimate:
-    """Change of a share between paired runs: those gained less those lost, each bounded by itself."""
-    n = len(pairs)
-    if n == 0:
-        return Estimate(math.nan, math.nan, math.nan, 0)
-    gained, lost = (share_interval(int(np.sum(pairs * sign > 0.5)), n, confidence) for sign in (1, -1))
-    return Estimate(float(pairs.mean()), gained.low - lost.high, gained.high - lost.low, n)
 
 
 def _off_the_limit(grid: GridIndex, coarse: float, middle: float, fine: float) -> Estimate:

@@ -21,26 +21,19 @@ from swarmpush.reporting.drawing import as_svg
 from swarmpush.reporting.run_words import energy_parts, state_rows
 from swarmpush.reporting.wording import interval, number, signed
 
-FOLDER = "figures"  # beside the page
-
 
 @dataclass(frozen=True)
 class Exhibit:
     """A figure of the page.
 
     key: its name in the page. alt: what it shows, in words. svg: the picture, safe to stand in a page. data: its
-    numbers, which are written to `file` beside the page.
+    numbers, which are written to a file of that name beside the page.
     """
 
     key: str
     alt: str
     svg: Markup
     data: pd.DataFrame
-
-    @property
-    def file(self) -> str:
-        """Where the data are, seen from the page."""
-        return f"{FOLDER}/{self.key}.csv"
 
 
 def run_exhibits(run: Run, plan: Plan, ends: pd.DataFrame | None = None) -> dict[str, Exhibit]:

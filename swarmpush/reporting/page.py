@@ -35,7 +35,7 @@ from swarmpush.reporting.audit_words import (
     step_words,
 )
 from swarmpush.reporting.figure_data import as_csv
-from swarmpush.reporting.figures import FOLDER, audit_exhibits, run_exhibits
+from swarmpush.reporting.figures import audit_exhibits, run_exhibits
 from swarmpush.reporting.plan_words import force_words, noise_words, plan_answer
 from swarmpush.reporting.run_drawing import is_floor_shown
 from swarmpush.reporting.run_words import book_rows, cause_rows, energy_rows, main_reason, run_answer, state_rows
@@ -46,8 +46,8 @@ def report(result: Audit | Run, path: str | Path) -> Path:
     """Write a report of an audit or of a single run, and beside it the data of its figures.
 
     Arguments:
-        result: what to report. path: the HTML file to write; replaced if it is there. The folder `figures` beside it
-            is made if need be, and gets a CSV file for each figure.
+        result: what to report. path: the HTML file to write; replaced if it is there. A folder beside it is made if
+            need be, and gets a CSV file for each figure: `figures` for a `report.html`, else `NAME-figures`.
 
     Returns:
         The path.
@@ -56,22 +56,22 @@ def report(result: Audit | Run, path: str | Path) -> Path:
         OutputError: when something cannot be written.
     """
     path = Path(path)
-    content = _content(result)
+    folder = path.parent / ("figures" if path.stem == "report" else f"{path.stem}-figures")
+    content = _content(result) | {"data_folder": folder.name}
     text = _render(content)
-    folder = path.parent / FOLDER
     try:
         folder.mkdir(exist_ok=True)
     except OSError as error:
         raise OutputError(f"{folder} cannot be made ({error.strerror}); write the report to another folder") from None
     for exhibit in content["figures"].values():
-        write_text(path.parent / exhibit.file, as_csv(exhibit.data))
+        write_text(folder / f"{exhibit.key}.csv", as_csv(exhibit.data))
     write_text(path, text)
     return path
 
 
 def page(result: Audit | Run) -> str:
     """The report as HTML text; its links to the figures' data lead to files that only `report` writes."""
-    return _render(_content(result))
+    return _render(_content(result) | {"data_folder": "figures"})
 
 
 def load_result(folder: Path) -> Audit | Run:

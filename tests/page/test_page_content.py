@@ -291,3 +291,12 @@ def test_csv_text_is_plain() -> None:
     table = pd.DataFrame({"line": ["a, b", "c"], "x_m": [math.nan, 1e-7]})
     assert as_csv(table) == 'line,x_m\n"a, b",\nc,1e-07\n'
     assert pd.read_csv(io.StringIO(as_csv(table)))["x_m"][1] == 1e-7
+
+
+def test_two_reports_in_one_folder(run: Run, result: Audit, tmp_path: Path) -> None:
+    """Each page has a folder of its own for its data, to which its links lead."""
+    for what, name in ((run, "first run"), (result, "report")):
+        text = swarmpush.report(what, tmp_path / f"{name}.html").read_text(encoding="utf-8")
+        for link in re.findall(r'href="([^"#]+\.csv)"', text):
+            assert (tmp_path / link.replace("%20", " ")).is_file(), link
+    assert {folder.name for folder in tmp_path.iterdir() if folder.is_dir()} == {"first run-figures", "figures"}
