@@ -24,10 +24,10 @@ def saved(request: pytest.FixtureRequest) -> Saved:
 
 def test_made_again_from_saved_results(saved: Saved, tmp_path: Path) -> None:
     """The report of saved results is the first one, byte for byte, and the results stay as they are."""
-    before, again = contents(saved.folder), tmp_path / "again.html"
+    before, again = contents(saved.folder), tmp_path / "report.html"
     assert call("report", saved.folder, "--json", "--out", again).json() == {"report": str(again)}
     made = contents(tmp_path)
-    assert made.pop("again.html") == before["report.html"]
+    assert made.pop("report.html") == before["report.html"]
     assert made == {name: data for name, data in before.items() if name.startswith("figures")}
     assert contents(saved.folder) == before
 
