@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from functools import cached_property
 from itertools import combinations
 from typing import Any
 
-from swarmpush.loading import from_tables
+from pydantic import ValidationError
+
+from swarmpush.loading import from_tables, reword
 from swarmpush.problems import Problem, ScenarioError
 from swarmpush.scenario import Scenario
 from swarmpush.vary import Way, known_keys, nearest_keys, written
@@ -33,10 +35,26 @@ class Setter:
         """
         if unknown := [self.unknown(key) for key in changes if not self.is_known(key)]:
             raise ScenarioError(source, unknown)
+        return from_tables(self._changed(changes), source)
+
+    def misread(self, changes: Mapping[str, Any]) -> list[Problem]:
+        """What is wrong with values of known keys by themselves: units, ranges, choices, not how they fit together."""
+        tables = self._changed(changes)
+        try:
+            Scenario.model_validate(tables)
+        except ValidationError as error:
+            return reword(error, tables, Scenario)
+        return []
+
+    def _changed(self, changes: Mapping[str, Any]) -> dict[str, Any]:
         tables = dict(self._tables)
         for key, value in changes.items():
             _put(tables, self._ways[key], value)
-        return from_tables(tables, source)
+        return tables
+
+    def is_single(self, key: str) -> bool:
+        """Whether there is such a key, and it holds a single value."""
+        return key in self._single
 
     def is_known(self, key: str) -> bool:
         """Whether there is such a key, of a single value or of a table or list."""
@@ -55,7 +73,7 @@ class Setter:
         changes: dict[str, Any] = {}
         for name, value in tables.items():
             key = f"{within}.{name}" if within else name
-            if isinstance(value, dict) and isinstance(self._table_at(key), dict):
+            if isinstance(value, dict) and isinstance(self.plain_at(key), dict):
                 changes |= self.flat(value, key)
             else:
                 changes[key] = value
@@ -70,7 +88,8 @@ class Setter:
             if all(a == b for a, b in zip(way, way_of_other, strict=False))
         ]
 
-    def _table_at(self, key: str) -> Any:
+    def plain_at(self, key: str) -> Any:
+        """The value of a key as plain tables, lists, SI numbers and text; None where there is none."""
         value: Any = self._tables
         for part in self._ways.get(key, ()):
             value = value[part] if isinstance(part, int) else value.get(part)
@@ -86,9 +105,15 @@ class Setter:
 
     @cached_property
     def _ways(self) -> dict[str, Way]:
-        tables = self.base.model_dump(mode="json")
-        whole = {(name,) for name in tables} | {way[:k] for way in self._single.values() for k in range(1, len(way))}
-        return self._single | {written(way): way for way in whole if written(way) not in self._single}
+        return {written(way): way for way in _all_ways(self.base.model_dump(mode="json"))}
+
+
+def _all_ways(value: Any, way: Way = ()) -> Iterator[Way]:
+    if way:
+        yield way
+    if isinstance(value, dict | list):
+        for part, inner in value.items() if isinstance(value, dict) else enumerate(value):
+            yield from _all_ways(inner, (*way, part))
 
 
 def _put(tables: dict[str, Any], way: Way, value: Any) -> None:

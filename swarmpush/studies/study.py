@@ -20,8 +20,6 @@ from swarmpush.vary import unit_at
 
 Value = float | int | str | bool
 
-DESIGNS = ("grid", "list", "latin hypercube", "sobol", "screening", "sensitivity")
-
 
 @dataclass(frozen=True)
 class Stop:
@@ -64,6 +62,13 @@ class Axis:
         """Whether its values are numbers, so that one can be more than another."""
         return not any(isinstance(value, str | bool) for value in self.values)
 
+    @property
+    def ends(self) -> tuple[float, float]:
+        """Ends of its range."""
+        assert self.low is not None
+        assert self.high is not None
+        return self.low, self.high
+
     def changes(self, value: Any) -> Mapping[str, Any]:
         """The keys that a value sets, and to what."""
         if self.options is not None:
@@ -86,7 +91,7 @@ class Study:
     name, note: for people. base: the scenario. points: (n_points, n_axes) one row per point, index 0, 1, ... named
     "point"; SI numbers, counts as int, or text. replicates: runs of each point, at first if there is a `stop`.
     seed: of all runs; replicates have the same seeds at every point, so that points differ by less chance.
-    outputs: names of measures in `claims.MEASURES`. design: how the points were chosen, one of `DESIGNS`.
+    outputs: names of measures in `claims.MEASURES`. design: how the points were chosen, see `designs.py`.
     axes: what the columns of the points are; left out: keys of the scenario.
     """
 
