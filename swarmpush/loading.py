@@ -133,12 +133,12 @@ def _problem(tables: dict[str, Any], details: Any, model: type[BaseModel]) -> Pr
         case "union_tag_invalid":
             allowed = context["expected_tags"].replace("'", '"')
             tag = context["discriminator"].strip("'")
-            return Problem(f"{key}.{tag}", f"{_shown(context['tag'])} given; allowed: {allowed}")
+            return Problem(f"{key}.{tag}", f"{shown(context['tag'])} given; allowed: {allowed}")
         case "union_tag_not_found":
             return Problem(key, f"the key {context['discriminator']} is missing")
         case "value_error" if isinstance(details["input"], dict):
             return Problem(key, str(context["error"]))
-    given = f"{_shown(_value_at(tables, place.keys))} given"
+    given = f"{shown(_value_at(tables, place.keys))} given"
     match details["type"]:
         case "too_short":
             return Problem(key, f"{given}; must have at least {context['min_length']} items")
@@ -215,7 +215,7 @@ def _written(keys: tuple[str | int, ...]) -> str:
         if isinstance(key, int):
             text += f"[{key + 1}]"
         else:
-            text += ("." if text else "") + (key if key.isprintable() else _shown(key))
+            text += ("." if text else "") + (key if key.isprintable() else shown(key))
     return text
 
 
@@ -225,7 +225,7 @@ def _value_at(tables: Any, keys: tuple[str | int, ...]) -> Any:
     return tables
 
 
-def _shown(value: object) -> str:
+def shown(value: object) -> str:
     """A value as a person would write it in the file, shortened."""
     if isinstance(value, dict):
         return "a table"

@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Annotated, Any, Literal, get_args, get_origin
 
 from swarmpush.auditing.claims import MEASURES
 from swarmpush.demos import DEMOS, demo
-from swarmpush.loading import load
+from swarmpush.loading import load, shown
 from swarmpush.problems import Problem, ScenarioError
 from swarmpush.quantities import to_si
 from swarmpush.scenario import Scenario
@@ -104,10 +104,10 @@ def _key_axis(v: Vary, key: str, place: str, setter: Setter) -> Axis:
     if not math.isfinite(low) or not math.isfinite(high):
         raise Wrong(Problem(place, "the ends of a range must be finite"))
     if low >= high:
-        raise Wrong(Problem(f"{place}.high", f"{v.high} given; must be more than low = {v.low}"))
+        raise Wrong(Problem(f"{place}.high", f"{shown(v.high)} given; must be more than low = {shown(v.low)}"))
     is_log = v.scale == "log"
     if is_log and low <= 0.0:
-        raise Wrong(Problem(f"{place}.low", f'{v.low} given; must be more than 0 with scale = "log"'))
+        raise Wrong(Problem(f"{place}.low", f'{shown(v.low)} given; must be more than 0 with scale = "log"'))
     return Axis(key, unit, low, high, is_log, kind == "count", v.n)
 
 
@@ -215,22 +215,16 @@ def _values(
         try:
             values.append(_value(value, kind, unit))
         except ValueError as error:
-            problems.append(Problem(f"{place}.{name}", f"{_shown(value)} given; {error}"))
+            problems.append(Problem(f"{place}.{name}", f"{shown(value)} given; {error}"))
     if problems:
         raise Wrong(*problems)
     for k in _to_check(values):
         for problem in setter.misread({key: values[k]}):
             reason = problem.sentence.partition(" given; ")[2] or problem.sentence
-            problems.append(Problem(f"{place}.{places[k]}", f"{_shown(given[k])} given; {reason}"))
+            problems.append(Problem(f"{place}.{places[k]}", f"{shown(given[k])} given; {reason}"))
     if problems:
         raise Wrong(*problems)
     return tuple(values)
-
-
-def _shown(value: Any) -> str:
-    """A value as it stands in the file, shortened."""
-    text = f'"{value}"' if isinstance(value, str) else str(value).lower() if isinstance(value, bool) else str(value)
-    return text if len(text) <= 60 else text[:57] + "..."
 
 
 def _to_check(values: list[Value]) -> list[int]:
