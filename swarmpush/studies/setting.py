@@ -68,12 +68,12 @@ class Setter:
     def flat(self, tables: Mapping[str, Any], within: str = "") -> dict[str, Any]:
         """Changes written as nested tables, as changes of single keys: a table changes the keys that it names.
 
-        A table stays whole where the scenario has none.
+        A table stays whole where the scenario has none, and where it is an item of a list, such as an act.
         """
         changes: dict[str, Any] = {}
         for name, value in tables.items():
             key = f"{within}.{name}" if within else name
-            if isinstance(value, dict) and isinstance(self.plain_at(key), dict):
+            if isinstance(value, dict) and isinstance(self.plain_at(key), dict) and not key.endswith("]"):
                 changes |= self.flat(value, key)
             else:
                 changes[key] = value
