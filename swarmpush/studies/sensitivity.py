@@ -21,7 +21,6 @@ from dataclasses import dataclass
 
 import numpy as np
 import pandas as pd
-from numpy.typing import NDArray
 
 from swarmpush.auditing.statistics import Estimate
 from swarmpush.studies.responses import FloatArray, mean_product, mean_value, mean_variance, responses
@@ -174,7 +173,8 @@ def _resampled(parts: FloatArray, shared: float, seed: int) -> FloatArray:
     results = []
     for start in range(0, N_RESAMPLES, at_a_time):
         size = min(at_a_time, N_RESAMPLES - start)
-        weights: NDArray[np.float64] = rng.multinomial(n, np.full(n, 1.0 / n), size=size) / n
+        drawn = rng.integers(n, size=(size, n)) + n * np.arange(size)[:, None]
+        weights = np.bincount(drawn.ravel(), minlength=size * n).reshape(size, n) / n
         results.append(_shares(weights @ parts, shared))
     together = np.concatenate(results)
     # a resample in which nothing varies says nothing

@@ -166,7 +166,11 @@ def loads_study(text: str, folder: Path = Path(), source: str = "study") -> Stud
     Arguments:
         text: what would stand in the file. folder: from which other files are seen. source: the name used in errors.
     """
-    tables = parse_toml(text, source)
+    return study_from_tables(parse_toml(text, source), folder, source)
+
+
+def study_from_tables(tables: dict[str, Any], folder: Path = Path(), source: str = "study") -> Study:
+    """The same for a nested dictionary such as `tomllib` returns."""
     problems: list[Problem] = []
     try:
         StudyFile.model_validate(tables)
