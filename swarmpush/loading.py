@@ -41,12 +41,12 @@ def load(path: str | Path) -> Scenario:
         ScenarioError: for every way in which the file can be missing, unreadable or wrong.
     """
     path = Path(path)
-    return _parse(_read(path), str(path))
+    return loads(read_text(path), str(path))
 
 
 def loads(text: str, source: str = "scenario") -> Scenario:
     """The same for text in memory; `source` is the name used in errors."""
-    return _parse(text, source)
+    return from_tables(parse_toml(text, source), source)
 
 
 def from_tables(tables: dict[str, Any], source: str = "scenario") -> Scenario:
@@ -58,14 +58,19 @@ def from_tables(tables: dict[str, Any], source: str = "scenario") -> Scenario:
     try:
         scenario = Scenario.model_validate(tables)
     except ValidationError as error:
-        problems = [_problem(tables, details) for details in error.errors(include_url=False) if not _is_echo(details)]
-        raise ScenarioError(source, problems + list(_misfits_of_the_rest(tables))) from None
+        raise ScenarioError(source, reword(error, tables, Scenario) + list(_misfits_of_the_rest(tables))) from None
     if problems := [problem for check in CHECKS for problem in check(scenario)]:
         raise ScenarioError(source, problems)
     return scenario
 
 
-def _read(path: Path) -> str:
+def read_text(path: Path) -> str:
+    """The text of a file that should hold TOML.
+
+    Raises:
+        ScenarioError: when it is missing, too large or no text.
+    """
+
     def refuse(sentence: str) -> ScenarioError:
         return ScenarioError(str(path), [Problem("", sentence)])
 
@@ -86,19 +91,28 @@ def _read(path: Path) -> str:
         raise refuse(f"not a text file (byte {error.start} is not UTF-8)") from None
 
 
-def _parse(text: str, source: str) -> Scenario:
+def parse_toml(text: str, source: str) -> dict[str, Any]:
+    """The nested tables of a TOML text.
+
+    Raises:
+        ScenarioError: when it is empty or no TOML.
+    """
     if not text.strip():
         raise ScenarioError(source, [Problem("", "empty; start from a copy of one of the demo scenarios")])
     try:
-        tables = tomllib.loads(text)
+        return tomllib.loads(text)
     except tomllib.TOMLDecodeError as error:
         raise ScenarioError(source, [Problem("", f"not valid TOML: {error}")]) from None
     except (RecursionError, ValueError):  # ValueError: a number of thousands of digits
         raise ScenarioError(source, [Problem("", "nested too deeply, or a number too long")]) from None
-    return from_tables(tables, source)
 
 
 # ---- wording of model errors ---------------------------------------------------------------------------------
+
+
+def reword(error: ValidationError, tables: dict[str, Any], model: type[BaseModel]) -> list[Problem]:
+    """What a model found wrong with the tables of a file, in words; one problem each."""
+    return [_problem(tables, details, model) for details in error.errors(include_url=False) if not _is_echo(details)]
 
 
 def _is_echo(details: Any) -> bool:
@@ -106,8 +120,8 @@ def _is_echo(details: Any) -> bool:
     return bool(details["type"] == "too_short" and len(details["input"]) > details["ctx"]["actual_length"])
 
 
-def _problem(tables: dict[str, Any], details: Any) -> Problem:
-    place = _find(details["loc"])
+def _problem(tables: dict[str, Any], details: Any, model: type[BaseModel]) -> Problem:
+    place = _find(details["loc"], model)
     key = _written(place.keys)
     context = details.get("ctx", {})
     match details["type"]:
@@ -119,12 +133,12 @@ def _problem(tables: dict[str, Any], details: Any) -> Problem:
         case "union_tag_invalid":
             allowed = context["expected_tags"].replace("'", '"')
             tag = context["discriminator"].strip("'")
-            return Problem(f"{key}.{tag}", f"{_shown(context['tag'])} given; allowed: {allowed}")
+            return Problem(f"{key}.{tag}", f"{shown(context['tag'])} given; allowed: {allowed}")
         case "union_tag_not_found":
             return Problem(key, f"the key {context['discriminator']} is missing")
         case "value_error" if isinstance(details["input"], dict):
             return Problem(key, str(context["error"]))
-    given = f"{_shown(_value_at(tables, place.keys))} given"
+    given = f"{shown(_value_at(tables, place.keys))} given"
     match details["type"]:
         case "too_short":
             return Problem(key, f"{given}; must have at least {context['min_length']} items")
@@ -147,6 +161,7 @@ _KINDS = {
     "model_type": "a table",
     "model_attributes_type": "a table",
     "tuple_type": "a list",
+    "dict_type": "a table",
     "string_type": "text",
     "int_type": "a whole number",
     "bool_type": "true or false",
@@ -166,10 +181,10 @@ class _Place(NamedTuple):
     field: FieldInfo | None
 
 
-def _find(location: tuple[str | int, ...]) -> _Place:
+def _find(location: tuple[str | int, ...], model: type[BaseModel]) -> _Place:
     """Follow a model error's location; where several models can stand, it holds a tag that is not in the file."""
     keys: list[str | int] = []
-    models: list[type[BaseModel]] = [Scenario]
+    models: list[type[BaseModel]] = [model]
     table: type[BaseModel] | None = None
     field: FieldInfo | None = None
     for part in location:
@@ -200,7 +215,7 @@ def _written(keys: tuple[str | int, ...]) -> str:
         if isinstance(key, int):
             text += f"[{key + 1}]"
         else:
-            text += ("." if text else "") + (key if key.isprintable() else _shown(key))
+            text += ("." if text else "") + (key if key.isprintable() else shown(key))
     return text
 
 
@@ -210,7 +225,7 @@ def _value_at(tables: Any, keys: tuple[str | int, ...]) -> Any:
     return tables
 
 
-def _shown(value: object) -> str:
+def shown(value: object) -> str:
     """A value as a person would write it in the file, shortened."""
     if isinstance(value, dict):
         return "a table"

@@ -77,7 +77,7 @@ def unit_at(s: Scenario, key: str) -> str:
     Raises:
         ScenarioError: when there is no such key.
     """
-    field = _field(s, key)
+    field = field_at(s, key)
     marks = [*(mark for mark in field.metadata if isinstance(mark, Quantity)), *_quantities(field.annotation)]
     return marks[0].si_unit if marks else "1"
 
@@ -115,9 +115,9 @@ def parse_range(s: Scenario, text: str) -> tuple[str, FloatArray]:
     if match is None:
         raise ValueError("write KEY=LOW:HIGH:N, for example channel.width=25cm:40cm:16")
     key = match["key"].strip()
-    known = keys_of(s)
+    known = known_keys(s)
     if key not in known:
-        raise ValueError(f"{key} is no key of this scenario; {_nearest(key, known)}")
+        raise ValueError(f"{key} is no key of this scenario; {nearest_keys(key, known)}")
     if isinstance(value_at(s, key), str | bool | tuple):
         raise ValueError(f"{key} does not hold a number")
     unit = unit_at(s, key)
@@ -163,22 +163,22 @@ def _number(text: str, unit: str) -> float:
 
 
 def _limits(s: Scenario, key: str) -> tuple[float, float]:
-    marks = _field(s, key).metadata
+    marks = field_at(s, key).metadata
     least = [mark.ge for mark in marks if hasattr(mark, "ge")]
     most = [mark.le for mark in marks if hasattr(mark, "le")]
     return max(least, default=-math.inf), min(most, default=math.inf)
 
 
 def _way(s: Scenario, key: str) -> Way:
-    known = keys_of(s)
+    known = known_keys(s)
     if key not in known:
-        raise ScenarioError(s.about.name, [Problem(key, f"no key of this scenario; {_nearest(key, known)}")])
+        raise ScenarioError(s.about.name, [Problem(key, f"no key of this scenario; {nearest_keys(key, known)}")])
     return known[key]
 
 
-def keys_of(s: Scenario) -> dict[str, Way]:
-    """Every key that holds a single value, or could, with the way to it through tables and lists, from 0."""
-    return {_written(way): way for way in _leaves(s.model_dump(mode="json"))}
+def known_keys(s: Scenario) -> dict[str, Way]:
+    """Every key that holds a single value, or could, with the way to it: names of tables, items of lists from 0."""
+    return {written(way): way for way in _leaves(s.model_dump(mode="json"))}
 
 
 def _leaves(value: Any, way: Way = ()) -> Iterator[Way]:
@@ -192,12 +192,13 @@ def _leaves(value: Any, way: Way = ()) -> Iterator[Way]:
         yield way
 
 
-def _written(way: Way) -> str:
+def written(way: Way) -> str:
+    """A way as a key."""
     parts = (f"[{part + 1}]" if isinstance(part, int) else f".{part}" for part in way)
     return "".join(parts).removeprefix(".")
 
 
-def _nearest(key: str, known: dict[str, Way]) -> str:
+def nearest_keys(key: str, known: dict[str, Way]) -> str:
     """The keys most like this one; a wrong table is forgiven where the last name is right."""
     name = key.rpartition(".")[2]
     close = difflib.get_close_matches(key, known, n=3, cutoff=0.6)
@@ -207,7 +208,7 @@ def _nearest(key: str, known: dict[str, Way]) -> str:
     return f"nearest: {', '.join(close[:3])}"
 
 
-def _field(s: Scenario, key: str) -> FieldInfo:
+def field_at(s: Scenario, key: str) -> FieldInfo:
     """The model's field that holds a key; for an item of a list of numbers, that of the list."""
     value: Any = s
     field: FieldInfo | None = None

@@ -17,7 +17,7 @@ from swarmpush.auditing.statistics import Estimate, mean_interval, share_interva
 from swarmpush.kinematics.planning import Plan
 from swarmpush.problems import ScenarioError
 from swarmpush.scenario import Scenario
-from swarmpush.vary import keys_of, value_at, with_value
+from swarmpush.vary import known_keys, value_at, with_value
 
 OCTAVES = range(-2, 4)  # crews from a quarter of the one given to eight times as many
 REACH = 0.25  # relative; large enough to stand out from chance, small enough for a value that was guessed
@@ -114,7 +114,7 @@ def _other_counts(s: Scenario) -> list[int]:
 
 def shifts(s: Scenario) -> Iterator[Shift]:
     """Every measured value, lowered and raised by a quarter or by as much less as makes valid scenarios."""
-    for key in filter(_is_measured, keys_of(s)):
+    for key in filter(_is_measured, known_keys(s)):
         value = value_at(s, key)
         if not isinstance(value, float) or value == 0.0 or not math.isfinite(value):
             continue
