@@ -1,0 +1,1 @@
+"""Studies: one scenario at many points, several runs each."""
