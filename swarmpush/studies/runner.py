@@ -25,6 +25,7 @@ Progress = Callable[[int, int, int], None]
 
 MOST_LOSSES = 3  # workers that a chunk may take along before it is split, and a single run before it is given up
 MOST_RUNS = 1_000  # of a chunk
+SHORTEST_CHUNK = 0.1  # of the time that a chunk should take, towards the end
 PACE_WEIGHT = 0.2  # of the latest chunk in what is known of the time per run
 LOOK_EVERY_S = 0.25  # how soon an interruption is noticed
 WIND_UP_S = 5.0  # that chunks under way get to hand over what they have made
@@ -138,10 +139,10 @@ class _Work:
         return bool(self._in_hand)
 
     def _length(self) -> int:
-        """Runs of the next chunk: as many as take a chunk's time, and towards the end few, so that all stay busy."""
-        by_time = int(self._pool.chunk_s / self._pace_s)
-        n_left = self._agenda.planned - self._agenda.done - self._n_in_hand
-        return max(1, min(by_time, n_left // (2 * self._pool.n_workers), MOST_RUNS))
+        """Runs of the next chunk: as many as take a chunk's time, and towards the end less, so that all stay busy."""
+        by_time = self._pool.chunk_s / self._pace_s
+        share = (self._agenda.planned - self._agenda.done - self._n_in_hand) / (2 * self._pool.n_workers)
+        return max(1, min(round(by_time), round(max(share, SHORTEST_CHUNK * by_time)), MOST_RUNS))
 
     def _take(self, timeout: float) -> None:
         """Keep what the pool has made; what was lost is to be made again."""

@@ -7,18 +7,20 @@ import time
 from collections.abc import Callable, Sequence
 from contextlib import suppress
 from dataclasses import dataclass, field
+from functools import lru_cache
 from itertools import groupby
 from typing import Any, NamedTuple
 
 from swarmpush.auditing.replicates import Stopped, replicate_seed
 from swarmpush.dynamics.steps import choose_step
 from swarmpush.dynamics.world import simulate
-from swarmpush.kinematics.laps import find_laps
+from swarmpush.kinematics.laps import Lap, find_laps
 from swarmpush.problems import ScenarioError
 from swarmpush.scenario import Scenario
 from swarmpush.studies.study import Study
 
 WHOLE_POINT = -1  # replicate of a failure that is the point's, not a run's
+LAPS_KEPT = 8  # scenarios whose laps are at hand, since the next chunk often goes on with the same point
 WARM_STEPS = 50  # of the run that has everything compiled
 
 Row = dict[str, Any]
@@ -87,7 +89,7 @@ def _run_point(
     s = None
     try:
         s = study.scenario(point)
-        laps = find_laps(s)[0]
+        laps = _laps_of(s)
     except Exception as error:
         made.failures.append(failure(RunKey(point, WHOLE_POINT), study.seed, error, s))
         return
@@ -103,6 +105,11 @@ def _run_point(
             made.failures.append(failure(RunKey(point, replicate), seed, error, s))
         else:
             made.rows.append({"point": point, "replicate": replicate, "seed": seed, **row})
+
+
+@lru_cache(LAPS_KEPT)
+def _laps_of(s: Scenario) -> tuple[Lap, ...]:
+    return find_laps(s)[0]
 
 
 def failure(key: RunKey, seed: int, error: Exception, s: Scenario | None) -> Failure:
