@@ -20,6 +20,7 @@ from concurrent.futures.process import BrokenProcessPool
 from contextlib import contextmanager, suppress
 from dataclasses import replace
 from multiprocessing.context import BaseContext
+from multiprocessing.process import BaseProcess
 from multiprocessing.synchronize import Event
 from typing import TypeVar
 
@@ -29,7 +30,7 @@ from swarmpush.studies.work import Made, RunKey, make_runs, warm_up
 
 AHEAD = 2  # chunks per process: one that is worked on, one that waits, so that no process waits for the parent
 CHUNK_S = 1.5  # of work in a chunk: long against its way there and back, short against a study
-PATIENCE = 5.0  # s that a process gets to end by itself
+PATIENCE = 1.0  # s that a process gets to end by itself
 MOST_FALSE_STARTS = 3  # in a row: processes that end before they are of use
 ONE_THREAD = (
     "OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "NUMBA_NUM_THREADS", "VECLIB_MAXIMUM_THREADS",
@@ -108,7 +109,7 @@ class LocalPool(Pool):
             # where nothing is compiled yet, one does it for all
             self._processes += [self._start() for _ in range(1 if is_first_start() else n_workers)]
             with suppress(BrokenProcessPool):  # which the first chunk will meet again
-                self._processes[0].pid.result()
+                self._processes[0].is_of_use.result()
             self._processes += [self._start() for _ in range(n_workers - len(self._processes))]
         except BaseException:
             self.close()
@@ -125,7 +126,7 @@ class LocalPool(Pool):
     @property
     def pids(self) -> list[int]:
         """Process numbers of the workers that are of use."""
-        return [process.pid.result() for process in self._processes if process.is_ready]
+        return [pid for process in self._processes if process.is_ready for pid in process.pids]
 
     def submit(self, name: int, keys: Sequence[RunKey]) -> None:
         process = min(self._processes, key=lambda process: len(process.chunks))
@@ -157,19 +158,20 @@ class LocalPool(Pool):
 
     def close(self) -> None:
         self.call_off()
-        for process in self._processes:
-            process.executor.shutdown(wait=False, cancel_futures=True)
-        wait([chunk.future for process in self._processes for chunk in process.chunks.values()], PATIENCE)
-        for process in self._processes:
-            if process.is_ready and not all(chunk.future.done() for chunk in process.chunks.values()):
-                with suppress(ProcessLookupError):
-                    os.kill(process.pid.result(), signal.SIGTERM if sys.platform == "win32" else signal.SIGKILL)
-            process.executor.shutdown(wait=True)
+        futures = {process: [chunk.future for chunk in process.chunks.values()] for process in self._processes}
+        wait([future for of_one in futures.values() for future in of_one], PATIENCE)
+        for process, of_one in futures.items():
+            if not all(future.done() for future in of_one) or not process.is_ready:
+                process.kill()
+        for process in futures:
+            process.executor.shutdown(wait=True, cancel_futures=True)
 
     def _start(self) -> _Process:
         executor = ProcessPoolExecutor(1, self._context, _begin, (self._study, self._is_called_off))
+        before = set(multiprocessing.active_children())
         with _launching():  # the first call starts the process
-            return _Process(executor, executor.submit(_get_ready))
+            is_of_use = executor.submit(_get_ready)
+        return _Process(executor, is_of_use, set(multiprocessing.active_children()) - before)
 
     def _replace(self, process: _Process) -> _Process:
         """A new process in place of one that is broken, whose chunks are dealt with as they come in."""
@@ -208,21 +210,31 @@ class _Chunk:
 
 
 class _Process:
-    """A worker process: its executor, its number once it is of use, and its chunks in order."""
+    """A worker process: its executor, what it gives once it is of use, and its chunks in order."""
 
-    def __init__(self, executor: ProcessPoolExecutor, pid: Future[int]) -> None:
-        self.executor, self.pid = executor, pid
+    def __init__(self, executor: ProcessPoolExecutor, is_of_use: Future[None], started: set[BaseProcess]) -> None:
+        self.executor, self.is_of_use, self._started = executor, is_of_use, started
         self.chunks: dict[int, _Chunk] = {}
+
+    @property
+    def pids(self) -> list[int]:
+        """Its number."""
+        return [process.pid for process in self._started if process.pid is not None]
+
+    def kill(self) -> None:
+        """End it at once."""
+        for process in self._started:
+            process.kill()
 
     @property
     def is_ready(self) -> bool:
         """Whether it has come to be of use."""
-        return self.pid.done() and self.pid.exception() is None
+        return self.is_of_use.done() and self.is_of_use.exception() is None
 
     @property
     def is_broken(self) -> bool:
         """Whether it has ended before that."""
-        return self.pid.done() and self.pid.exception() is not None
+        return self.is_of_use.done() and self.is_of_use.exception() is not None
 
 
 def drain(waiting: queue.SimpleQueue[Item], timeout: float) -> Iterator[Item]:
@@ -281,9 +293,8 @@ def _follow_parent() -> None:
     os._exit(1)
 
 
-def _get_ready() -> int:
+def _get_ready() -> None:
     warm_up(_study.base)
-    return os.getpid()
 
 
 def _make(keys: Sequence[RunKey]) -> Made:

@@ -28,7 +28,7 @@ MOST_RUNS = 1_000  # of a chunk
 SHORTEST_CHUNK = 0.1  # of the time that a chunk should take, towards the end
 PACE_WEIGHT = 0.2  # of the latest chunk in what is known of the time per run
 LOOK_EVERY_S = 0.25  # how soon an interruption is noticed
-WIND_UP_S = 5.0  # that chunks under way get to hand over what they have made
+WIND_UP_S = 3.0  # that chunks under way get to hand over what they have made
 
 
 class _Chunk(NamedTuple):
