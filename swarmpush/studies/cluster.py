@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import logging
 import queue
 import time
 from collections.abc import Mapping, Sequence
@@ -17,6 +18,8 @@ from swarmpush.studies.work import Made, RunKey, make_runs, warm_up
 AHEAD = 4  # chunks per thread of a worker; so many that their way there does not count, so few that a scheduler copes
 CHUNK_S = 6.0  # of work in a chunk, so that a scheduler with 500 threads sees less than 100 chunks per second
 CONNECT_S = 10.0  # for a scheduler to answer, and for a first worker to be there
+# report lost connections with tracebacks; what matters of them is raised here
+CHATTY = ("distributed", "distributed.client", "distributed.core", "distributed.utils")
 LOOK_EVERY_S = 5.0  # how often it is asked how many workers there are
 
 Versions = Mapping[str, str]
@@ -35,19 +38,24 @@ class ClusterPool(Pool):
     """
 
     chunk_s = CHUNK_S
+    most_losses = 1  # the scheduler has tried several workers by then
 
     def __init__(self, study: Study, address: str) -> None:
         try:
             import distributed
         except ImportError:
             raise PoolError("a cluster needs dask; install it with: pip install swarmpush[cluster]") from None
-        self._address, self._lost = address, (distributed.scheduler.KilledWorker, CancelledError)
+        self._address, self._lost, self._is_called_off = address, distributed.scheduler.KilledWorker, False
+        self._levels = {name: logging.getLogger(name).level for name in CHATTY}
+        for name in CHATTY:
+            logging.getLogger(name).setLevel(logging.CRITICAL)
         self._ended: queue.SimpleQueue[int] = queue.SimpleQueue()
         self._futures: dict[int, Any] = {}
         self._versions = versions()
         try:
             self._client = distributed.Client(address, timeout=CONNECT_S, set_as_default=False)
         except (OSError, ValueError) as error:
+            self._talk_again()
             raise PoolError(
                 f"no Dask scheduler answers at {address} ({error}); start one with `dask scheduler`, or check "
                 "the address"
@@ -55,12 +63,14 @@ class ClusterPool(Pool):
         try:
             self._prepare(study)
         except BaseException:
-            self._client.close()
+            self.close()
             raise
 
     @property
     def n_workers(self) -> int:
-        if time.monotonic() - self._looked_at > LOOK_EVERY_S:
+        if time.monotonic() - self._looked_at > # report lost connections with tracebacks; what matters of them is raised here
+CHATTY = ("distributed", "distributed.client", "distributed.core", "distributed.utils")
+LOOK_EVERY_S:
             self._n_threads = self._count_threads()
         return self._n_threads
 
@@ -80,23 +90,30 @@ class ClusterPool(Pool):
                 theirs, made = self._futures.pop(name).result()
             except self._lost:
                 results.append((name, None))
+            except CancelledError:  # by this process, or else because nobody is there any more
+                if not self._is_called_off:
+                    raise self._is_gone() from None
+                results.append((name, Made()))
             else:
                 check_versions(self._versions, {"a worker": theirs})
                 results.append((name, made))
         if self._client.status != "running":
-            raise PoolError(
-                f"the Dask scheduler at {self._address} is gone; start it and its workers again, then repeat "
-                "the command, which goes on from what has been written"
-            )
+            raise self._is_gone()
         return results
 
     def call_off(self) -> None:
+        self._is_called_off = True
         self._client.cancel(list(self._futures.values()), force=True)
 
     def close(self) -> None:
         if self._client.status == "running":
             self.call_off()
         self._client.close()
+        self._talk_again()
+
+    def _talk_again(self) -> None:
+        for name, level in self._levels.items():
+            logging.getLogger(name).setLevel(level)
 
     def _prepare(self, study: Study) -> None:
         try:
@@ -114,6 +131,12 @@ class ClusterPool(Pool):
             raise PoolError(f"a worker cannot load {error.name}; install swarmpush on all workers") from None
         self._prefix = self._study.key
         self._n_threads = self._count_threads()
+
+    def _is_gone(self) -> PoolError:
+        return PoolError(
+            f"the Dask scheduler at {self._address} is gone; start it and its workers again, then repeat the command, "
+            "which goes on from what has been written"
+        )
 
     def _count_threads(self) -> int:
         self._looked_at = time.monotonic()

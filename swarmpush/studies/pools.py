@@ -48,10 +48,12 @@ class Pool(ABC):
     """Workers. Close it after use; what is not done by then is called off.
 
     capacity: chunks that should be in its hands. n_workers: chunks that are worked on at the same time.
-    chunk_s: how long the work of a chunk should take.
+    chunk_s: how long the work of a chunk should take. most_losses: how often a chunk may come back as lost before it is
+    split, and a single run before it is given up.
     """
 
     chunk_s: float
+    most_losses: int
 
     @property
     @abstractmethod
@@ -96,6 +98,7 @@ class LocalPool(Pool):
     """
 
     chunk_s = CHUNK_S
+    most_losses = 3
 
     def __init__(self, study: Study, n_workers: int) -> None:
         self._study = replace(study)  # without what it may have worked out for itself, which need not be sent

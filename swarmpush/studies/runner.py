@@ -23,7 +23,6 @@ from swarmpush.studies.work import Failure, Made, RunKey
 
 Progress = Callable[[int, int, int], None]
 
-MOST_LOSSES = 3  # workers that a chunk may take along before it is split, and a single run before it is given up
 MOST_RUNS = 1_000  # of a chunk
 SHORTEST_CHUNK = 0.1  # of the time that a chunk should take, towards the end
 PACE_WEIGHT = 0.2  # of the latest chunk in what is known of the time per run
@@ -32,7 +31,7 @@ WIND_UP_S = 3.0  # that chunks under way get to hand over what they have made
 
 
 class _Chunk(NamedTuple):
-    """Runs that are made together, and how many workers were lost over them."""
+    """Runs that are made together, and how often they came back as lost."""
 
     keys: Sequence[RunKey]
     n_losses: int = 0
@@ -171,15 +170,13 @@ class _Work:
 
     def _retry(self, chunk: _Chunk) -> None:
         """A chunk whose worker was lost: again, or in single runs, or given up if it is one."""
-        if chunk.n_losses + 1 < MOST_LOSSES:
+        if chunk.n_losses + 1 < self._pool.most_losses:
             self._again.append(_Chunk(chunk.keys, chunk.n_losses + 1))
         elif len(chunk.keys) > 1:
             self._again.extend(_Chunk([key]) for key in chunk.keys)
         else:
             key = chunk.keys[0]
-            message = (
-                f"{MOST_LOSSES} workers in a row ended during this run; they crashed, were killed or ran out of memory"
-            )
+            message = "each worker that took this run has ended during it: crashed, killed, or out of memory"
             seed = replicate_seed(self._study.seed, key.replicate)
             self._keep(Made(failures=[Failure(*key, seed, "WorkerLost", message, "")]))
 
