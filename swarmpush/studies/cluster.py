@@ -68,9 +68,7 @@ class ClusterPool(Pool):
 
     @property
     def n_workers(self) -> int:
-        if time.monotonic() - self._looked_at > # report lost connections with tracebacks; what matters of them is raised here
-CHATTY = ("distributed", "distributed.client", "distributed.core", "distributed.utils")
-LOOK_EVERY_S:
+        if time.monotonic() - self._looked_at > LOOK_EVERY_S:
             self._n_threads = self._count_threads()
         return self._n_threads
 
