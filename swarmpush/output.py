@@ -7,10 +7,11 @@ import math
 import os
 import platform
 import tempfile
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
 from dataclasses import fields, is_dataclass
 from enum import Enum
+from functools import cache
 from importlib.metadata import version
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -55,14 +56,20 @@ def to_json(value: Any, *, is_ascii: bool = False) -> str:
     return json.dumps(plain(value), indent=2, ensure_ascii=is_ascii, allow_nan=False)
 
 
+@cache
+def versions() -> Mapping[str, str]:
+    """Versions of all that the numbers depend on."""
+    packages = ("swarmpush", "pymunk", "numpy", "numba", "scipy", "pandas")
+    return {name: version(name) for name in packages} | {"python": platform.python_version()}
+
+
 def provenance(s: Scenario, *, seed: int | None = None) -> dict[str, Any]:
     """What is needed to get the same numbers again."""
-    packages = ("swarmpush", "pymunk", "numpy", "numba", "scipy", "pandas")
     return {
         "scenario": s.about.name,
         "scenario_hash": s.digest(),
         "seed": s.trial.seed if seed is None else seed,
-        "versions": {name: version(name) for name in packages} | {"python": platform.python_version()},
+        "versions": dict(versions()),
         "platform": f"{platform.system()} {platform.machine()}",
     }
 

@@ -31,7 +31,12 @@ class Stopped(Exception):
 
 def replicate_seeds(seed: int, n: int) -> list[int]:
     """Seeds of the replicates: the first ones stay the same when more are asked for."""
-    return [int(np.random.SeedSequence(seed, spawn_key=(k,)).generate_state(1)[0]) for k in range(n)]
+    return [replicate_seed(seed, k) for k in range(n)]
+
+
+def replicate_seed(seed: int, replicate: int) -> int:
+    """Seed of one replicate, counted from 0."""
+    return int(np.random.SeedSequence(seed, spawn_key=(replicate,)).generate_state(1)[0])
 
 
 def run_tasks(
