@@ -42,15 +42,15 @@ def run_exhibits(run: Run, plan: Plan, ends: pd.DataFrame | None = None) -> dict
     impact = plan.travel.strike_impulse_Ns
     draw, data = run_drawing, figure_data
     found = (
-        _exhibit("lap", _lap_alt(plan, run), data.lap_data(plan, run), draw.lap_over_runs, plan, run),
-        _exhibit("end", _end_alt(run), data.end_data(run), draw.end_of_run, run),
-        _exhibit("path", _path_alt(run, ends), data.path_data(run, speed, ends), draw.block_path, run, speed, ends),
-        _exhibit("impulses", _impulse_alt(run), data.impulse_data(run), draw.impulses, run, impact),
-        _exhibit("books", _account_alt("impulse on the block", draw.book_entries(run), "N s"), data.book_data(run),
+        exhibit("lap", _lap_alt(plan, run), data.lap_data(plan, run), draw.lap_over_runs, plan, run),
+        exhibit("end", _end_alt(run), data.end_data(run), draw.end_of_run, run),
+        exhibit("path", _path_alt(run, ends), data.path_data(run, speed, ends), draw.block_path, run, speed, ends),
+        exhibit("impulses", _impulse_alt(run), data.impulse_data(run), draw.impulses, run, impact),
+        exhibit("books", _account_alt("impulse on the block", draw.book_entries(run), "N s"), data.book_data(run),
                  draw.books, run),
-        _exhibit("energy", _account_alt("energy", energy_parts(run), "J"), data.energy_data(run), draw.energy, run),
-        _exhibit("leaning", _leaning_alt(run), data.leaning_data(run), draw.leaning, run),
-        _exhibit("states", _state_alt(run), data.state_data(run), draw.states, run),
+        exhibit("energy", _account_alt("energy", energy_parts(run), "J"), data.energy_data(run), draw.energy, run),
+        exhibit("leaning", _leaning_alt(run), data.leaning_data(run), draw.leaning, run),
+        exhibit("states", _state_alt(run), data.state_data(run), draw.states, run),
     )  # fmt: skip
     return {exhibit.key: exhibit for exhibit in found}
 
@@ -59,15 +59,16 @@ def audit_exhibits(audit: Audit) -> dict[str, Exhibit]:
     """The figures of an audit by key: ladder, arrivals, crews of other sizes if tried, and those of the run shown."""
     draw, data = audit_drawing, figure_data
     found = [
-        _exhibit("ladder", _ladder_alt(audit), data.ladder_data(audit), draw.ladder, audit),
-        _exhibit("arrivals", _arrivals_alt(audit), data.arrival_data(audit), draw.arrivals, audit),
+        exhibit("ladder", _ladder_alt(audit), data.ladder_data(audit), draw.ladder, audit),
+        exhibit("arrivals", _arrivals_alt(audit), data.arrival_data(audit), draw.arrivals, audit),
     ]
     if audit.crews:
-        found.append(_exhibit("crews", _crews_alt(audit), data.crew_data(audit), draw.crews, audit))
+        found.append(exhibit("crews", _crews_alt(audit), data.crew_data(audit), draw.crews, audit))
     return {exhibit.key: exhibit for exhibit in found} | run_exhibits(audit.sample, audit.plan, audit.as_given)
 
 
-def _exhibit(key: str, alt: str, data: pd.DataFrame, draw: Callable[..., Figure], *records: Any) -> Exhibit:
+def exhibit(key: str, alt: str, data: pd.DataFrame, draw: Callable[..., Figure], *records: Any) -> Exhibit:
+    """A figure drawn from records, with its name in words and its data."""
     return Exhibit(key, alt, named_svg(as_svg(draw, *records), key, alt), data)
 
 

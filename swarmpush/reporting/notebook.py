@@ -12,6 +12,10 @@ from swarmpush.quantities import for_people
 from swarmpush.reporting.audit_rows import ladder_rows
 from swarmpush.reporting.plan_words import plan_answer
 from swarmpush.reporting.run_words import cause_rows, run_answer
+from swarmpush.reporting.study_words import point_rows
+from swarmpush.studies.sweep import StudyResult
+
+MOST_POINTS = 30
 
 
 def plan_html(plan: Plan) -> str:
@@ -37,6 +41,15 @@ def audit_html(audit: Audit) -> str:
     rows = [(row["name"], row["speed"], row["cost"], row["interval"], row["arrived"]) for row in ladder_rows(audit)]
     columns = ("rung", "block speed", "difference", f"{audit.percent} interval", "arrived")
     return _small(audit.scenario.about.name, audit.answer, "What each assumption costs", columns, rows)
+
+
+def study_html(result: StudyResult) -> str:
+    """The study's answer and its points, as many as fit."""
+    rows = point_rows(result)[:MOST_POINTS]
+    columns = list(rows[0]) if rows else ["point"]
+    cells = [[row[column] for column in columns] for row in rows]
+    caption = f"{len(rows)} of {len(result.study.points)} points"
+    return _small(result.study.name, result.answer, caption, columns, cells)
 
 
 def _small(name: str, answer: str, caption: str, columns: Sequence[str], rows: Iterable[Sequence[str]]) -> str:

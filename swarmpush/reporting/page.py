@@ -39,11 +39,16 @@ from swarmpush.reporting.figures import audit_exhibits, run_exhibits
 from swarmpush.reporting.plan_words import force_words, noise_words, plan_answer
 from swarmpush.reporting.run_drawing import is_floor_shown
 from swarmpush.reporting.run_words import book_rows, cause_rows, energy_rows, main_reason, run_answer, state_rows
+from swarmpush.reporting.study_page import study_content
 from swarmpush.reporting.wording import finding_row
+from swarmpush.studies.saved import DEFINITION
+from swarmpush.studies.sweep import StudyResult, load_sweep
+
+Reported = Audit | Run | StudyResult
 
 
-def report(result: Audit | Run, path: str | Path) -> Path:
-    """Write a report of an audit or of a single run, and beside it the data of its figures.
+def report(result: Reported, path: str | Path) -> Path:
+    """Write a report of an audit, a study or a single run, and beside it the data of its figures.
 
     Arguments:
         result: what to report. path: the HTML file to write; replaced if it is there. A folder beside it is made if
@@ -69,17 +74,19 @@ def report(result: Audit | Run, path: str | Path) -> Path:
     return path
 
 
-def page(result: Audit | Run) -> str:
+def page(result: Reported) -> str:
     """The report as HTML text; its links to the figures' data lead to files that only `report` writes."""
     return _render(_content(result) | {"data_folder": "figures"})
 
 
-def load_result(folder: Path) -> Audit | Run:
-    """Read a saved audit or run.
+def load_result(folder: Path) -> Reported:
+    """Read a saved audit, study or run.
 
     Raises:
-        ValueError: when the folder holds neither.
+        ValueError: when the folder holds none of these. OutputError: when a study in it cannot be read.
     """
+    if (folder / DEFINITION).exists():
+        return load_sweep(folder)
     if not (folder / "audit.json").exists() and (folder / "run.json").exists():
         try:
             cycles = tuple(lap.surfaces for lap in plan(load_run(folder).scenario).laps)
@@ -97,10 +104,13 @@ def _render(content: dict[str, Any]) -> str:
         trim_blocks=True,
         lstrip_blocks=True,
     )
-    return environment.get_template("page.html.jinja").render(content)
+    name = "study.html.jinja" if content["kind"] == "study" else "page.html.jinja"
+    return environment.get_template(name).render(content)
 
 
-def _content(result: Audit | Run) -> dict[str, Any]:
+def _content(result: Reported) -> dict[str, Any]:
+    if isinstance(result, StudyResult):
+        return study_content(result)
     if isinstance(result, Audit):
         return _audit_content(result)
     planned = plan(result.scenario)

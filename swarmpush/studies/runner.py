@@ -17,6 +17,7 @@ from typing import NamedTuple
 from swarmpush.auditing.replicates import replicate_seed
 from swarmpush.studies.agenda import Agenda, stop_column
 from swarmpush.studies.pools import LocalPool, Pool, PoolError
+from swarmpush.studies.saved import save_study
 from swarmpush.studies.store import Store, Summary
 from swarmpush.studies.study import Study
 from swarmpush.studies.work import Failure, Made, RunKey
@@ -66,6 +67,7 @@ def run_study(
         and `cluster.py`. KeyboardInterrupt: after what has ended is written.
     """
     with Store(folder, study, is_forced=is_forced) as store:
+        save_study(study, folder)
         agenda = Agenda(study, store.known(stop_column(study)))
         if agenda.done < agenda.planned:
             with _interruptions() as is_interrupted:

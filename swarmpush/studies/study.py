@@ -92,7 +92,8 @@ class Study:
     "point"; SI numbers, counts as int, or text. replicates: runs of each point, at first if there is a `stop`.
     seed: of all runs; replicates have the same seeds at every point, so that points differ by less chance.
     outputs: names of measures in `claims.MEASURES`. design: how the points were chosen, see `designs.py`.
-    axes: what the columns of the points are; left out: keys of the scenario.
+    axes: what the columns of the points are; left out: keys of the scenario. demand: of `auditing/demands.py`, on one
+    of the outputs, which shows where the design is good enough; it changes no run.
     """
 
     name: str
@@ -105,6 +106,7 @@ class Study:
     outputs: tuple[str, ...]
     design: str
     axes: tuple[Axis, ...] = ()
+    demand: str = ""
 
     def scenario(self, point: int) -> Scenario:
         """The scenario of a point.
@@ -115,7 +117,7 @@ class Study:
         if not 0 <= point < len(self.points):
             raise IndexError(f"point {point} asked for; there are {len(self.points)}, counted from 0")
         changes: dict[str, Any] = {}
-        for axis, column in zip(self._axes, self._columns, strict=True):
+        for axis, column in zip(self.varied, self._columns, strict=True):
             changes |= axis.changes(column[point])
         return self._setter.set(changes, f"point {point} ({self.values_at(point)})")
 
@@ -123,7 +125,7 @@ class Study:
         """The values of a point for people, e.g. "pushers.count = 4, errors.turn_sd = 5 deg"."""
         return ", ".join(
             f"{axis.name} = {axis.written(column[point])}"
-            for axis, column in zip(self._axes, self._columns, strict=True)
+            for axis, column in zip(self.varied, self._columns, strict=True)
         )
 
     def digest(self) -> str:
@@ -154,12 +156,13 @@ class Study:
         return looks(self.replicates, self.stop.most) if self.stop else (self.replicates,)
 
     @cached_property
-    def _axes(self) -> tuple[Axis, ...]:
+    def varied(self) -> tuple[Axis, ...]:
+        """What the columns of the points are."""
         return self.axes or tuple(Axis(str(key), unit_at(self.base, str(key))) for key in self.points.columns)
 
     @cached_property
     def _columns(self) -> list[np.ndarray[Any, np.dtype[Any]]]:
-        return [self.points[axis.name].to_numpy() for axis in self._axes]
+        return [self.points[axis.name].to_numpy() for axis in self.varied]
 
     @cached_property
     def _setter(self) -> Setter:
