@@ -61,7 +61,8 @@ def what_remains(found: Sensitivity | Screening) -> str:
     if others:
         shows = "shows" if len(others) == 1 else "show"
         sentences.append(
-            f"{', '.join(others)} {shows} no effect on {found.output} beyond error; rough values will do there."
+            f"{', '.join(others)} {shows} no effect on {found.output} beyond error; within the ranges given a rough "
+            "value will do."
         )
     if isinstance(found, Sensitivity):
         sentences += _rest_of_variance(found)

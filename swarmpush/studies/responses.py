@@ -47,8 +47,8 @@ def mean_product(p: FloatArray, q: FloatArray) -> FloatArray:
     Returns:
         (...) products; NaN with fewer than two runs. Where there is but one replicate, the plain product.
 
-    >>> mean_product(np.array([1.0, 3.0]), np.array([2.0, 4.0]))  # (1 x 4 + 3 x 2) / 2
-    array(5.)
+    >>> float(mean_product(np.array([1.0, 3.0]), np.array([2.0, 4.0])))  # (1 x 4 + 3 x 2) / 2
+    5.0
     """
     if p.shape[-1] == 1:
         return p[..., 0] * q[..., 0]

@@ -46,7 +46,7 @@ from typing import Annotated, Any, Literal
 from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Field, TypeAdapter, ValidationError
 
 from swarmpush.auditing.claims import ARRIVAL, BLOCK_SPEED, MEASURES
-from swarmpush.loading import parse_toml, read_text, reword
+from swarmpush.loading import parse_toml, read_text, reword, shown
 from swarmpush.problems import Problem, ScenarioError
 from swarmpush.scenario import About, Ratio, Whole
 from swarmpush.studies.designs import EVEN, SAMPLED, grid_values, make_points, n_points
@@ -91,9 +91,9 @@ class Design(_Table):
     points: Whole | None = Field(
         default=None,
         ge=2,
-        le=MAX_POINTS,
         description="of a sampled design; trajectories of a screening, each of one point more than things varied; rows "
         "of a sensitivity design, each of two points more. A power of two for sobol and sensitivity",
+        json_schema_extra={"maximum": MAX_POINTS},
     )
 
 
@@ -278,11 +278,10 @@ class _Reading:
             yield Problem("design.points", f"missing (how many points a {design.kind} design has)")
         if design.kind not in SAMPLED and design.points is not None:
             yield Problem("design.points", f"a {design.kind} has as many points as its values give; leave it out")
-        if design.kind in EVEN and design.points is not None and design.points & (design.points - 1):
-            lower = 2 ** (design.points.bit_length() - 1)
-            yield Problem(
-                "design.points", f"{design.points} given; must be a power of two, e.g. {lower} or {2 * lower}"
-            )
+        points = design.points or 0
+        if design.kind in EVEN and points <= MAX_POINTS and points & (points - 1):
+            lower = 2 ** (points.bit_length() - 1)
+            yield Problem("design.points", f"{points} given; must be a power of two, e.g. {lower} or {2 * lower}")
         for axis, place in zip(self._axes, self._places, strict=True):
             yield from _axis_misfits(design.kind, axis, place)
         if design.kind == "list" and len({len(axis.values) for axis in self._axes if axis.values}) > 1:
@@ -294,10 +293,10 @@ class _Reading:
             yield Problem(
                 "design.kind", f"a list goes through all values together, but their numbers differ ({lengths})"
             )
-        if self._axes and len(self._axes) == self._n_vary:
-            number = n_points(design.kind, self._axes, design.points)
-            if number > MAX_POINTS:
-                yield Problem("design", f"{number} points; there can be at most {MAX_POINTS}")
+        is_known = len(self._axes) == self._n_vary > 0
+        number = n_points(design.kind, self._axes, design.points) if is_known else points
+        if number > MAX_POINTS:
+            yield Problem("design", f"{shown(number)} points; there can be at most {MAX_POINTS}")
 
     def _misfits(self) -> Iterator[Problem]:
         stop, given = self._parts.get("stop"), self._parts.get("replicates")
