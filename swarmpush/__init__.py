@@ -16,7 +16,7 @@ from typing import TYPE_CHECKING, Any
 if TYPE_CHECKING:
     from swarmpush.auditing.audit import Audit, audit
     from swarmpush.auditing.converge import Convergence, converge
-    from swarmpush.demos import demo
+    from swarmpush.demos import demo, study_demo
     from swarmpush.dynamics.attached import Crew
     from swarmpush.dynamics.drive import Drive
     from swarmpush.dynamics.plugin import attach
@@ -30,6 +30,9 @@ if TYPE_CHECKING:
     from swarmpush.problems import ScenarioError
     from swarmpush.reporting.page import report
     from swarmpush.scenario import Scenario
+    from swarmpush.studies.study import Study
+    from swarmpush.studies.study_file import load_study
+    from swarmpush.studies.sweep import StudyResult, load_sweep, sweep
     from swarmpush.vary import with_value
 
 __all__ = [
@@ -41,6 +44,8 @@ __all__ = [
     "Run",
     "Scenario",
     "ScenarioError",
+    "Study",
+    "StudyResult",
     "Units",
     "attach",
     "audit",
@@ -49,10 +54,14 @@ __all__ = [
     "cycle_map",
     "demo",
     "load",
+    "load_study",
+    "load_sweep",
     "loads",
     "plan",
     "report",
     "simulate",
+    "study_demo",
+    "sweep",
     "with_value",
 ]
 
@@ -77,6 +86,12 @@ _HOME = {
     "plan": "swarmpush.kinematics.planning",
     "report": "swarmpush.reporting.page",
     "simulate": "swarmpush.dynamics.world",
+    "Study": "swarmpush.studies.study",
+    "StudyResult": "swarmpush.studies.sweep",
+    "load_study": "swarmpush.studies.study_file",
+    "load_sweep": "swarmpush.studies.sweep",
+    "study_demo": "swarmpush.demos",
+    "sweep": "swarmpush.studies.sweep",
     "with_value": "swarmpush.vary",
 }
 

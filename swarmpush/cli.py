@@ -26,6 +26,7 @@ if TYPE_CHECKING:
     from swarmpush.kinematics.declarations import Declarations
     from swarmpush.kinematics.planning import Plan
     from swarmpush.scenario import Scenario
+    from swarmpush.studies.study import Study
 
 BAD_INPUT, NOT_MET, INTERRUPTED = 2, 3, 130
 RESULTS = Path("results")  # where results of many runs go when no folder is named
@@ -47,6 +48,22 @@ app = typer.Typer(
     context_settings={"help_option_names": ["-h", "--help"]},
 )
 
+studies = typer.Typer(
+    no_args_is_help=True, rich_markup_mode=None, help="Look into a study, and make its failed runs again."
+)
+app.add_typer(studies, name="study", short_help="look into a study; make its failed runs again")
+
+StudyArgument = Annotated[
+    str, typer.Argument(metavar="STUDY", help="a study file (.toml), or the name of a demo study")
+]
+StudyFolder = Annotated[Path, typer.Argument(metavar="FOLDER", help="results of a study")]
+Workers = Annotated[
+    int | None, typer.Option("--workers", min=1, max=1024, help="processes; default: one per processor")
+]
+Cluster = Annotated[
+    str | None,
+    typer.Option("--cluster", metavar="ADDRESS", help="a Dask scheduler, e.g. tcp://10.0.0.1:8786, whose workers run"),
+]
 ScenarioArgument = Annotated[
     str, typer.Argument(metavar="SCENARIO", help="a scenario file (.toml), or the name of a demo scenario")
 ]
@@ -131,7 +148,17 @@ def plan(
 
 @app.command(short_help="one run with rigid bodies, books balanced")
 def run(
-    scenario: ScenarioArgument,
+    scenario: Annotated[
+        str | None,
+        typer.Argument(metavar="[SCENARIO]", help="a scenario file (.toml), or the name of a demo; or --from-study"),
+    ] = None,
+    from_study: Annotated[
+        Path | None, typer.Option("--from-study", metavar="FOLDER", help="make a run of a study again, bit for bit")
+    ] = None,
+    point: Annotated[int | None, typer.Option(min=0, help="with --from-study: its point, from 0")] = None,
+    replicate: Annotated[
+        int | None, typer.Option(min=0, help="with --from-study: its number at that point, from 0; default: 0")
+    ] = None,
     seed: Seed = None,
     converging: Annotated[
         bool,
@@ -159,11 +186,17 @@ def run(
 
     if replicates is not None and not converging:
         raise _Refusal("--replicates goes with --converge; a run is one run, and 'swarmpush audit' makes many")
-    s = _load(scenario)
+    stem = _stem(scenario or str(from_study))
+    if from_study is None and scenario is not None:
+        if point is not None or replicate is not None:
+            raise _Refusal("--point and --replicate go with --from-study")
+        s = _load(scenario)
+    elif from_study is not None and scenario is None:
+        s, seed = _of_study(from_study, point, replicate, seed)
+    else:
+        raise _Refusal("name a scenario, or a study's folder with --from-study and one of its points with --point")
     if converging:
-        _converge(
-            s if seed is None else s.replace(trial={"seed": seed}), _stem(scenario), replicates, as_json, out, force
-        )
+        _converge(s if seed is None else s.replace(trial={"seed": seed}), stem, replicates, as_json, out, force)
         return
     folder = claim_folder(out, force=force) if out else None
     with _preparing(as_json) as bar:
@@ -280,17 +313,104 @@ def audit(
         raise typer.Exit(NOT_MET)
 
 
+@app.command(short_help="one scenario at many points: thousands of runs, resumable")
+def sweep(
+    study: StudyArgument,
+    workers: Workers = None,
+    cluster: Cluster = None,
+    dry_run: Annotated[
+        bool, typer.Option("--dry-run", help="only say what the study is and what it will take")
+    ] = False,
+    as_json: AsJson = False,
+    out: Annotated[
+        Path | None,
+        typer.Option(
+            metavar="FOLDER", help="folder for the results, in which a study goes on; default: results/NAME-study"
+        ),
+    ] = None,
+    force: Annotated[
+        bool, typer.Option("--force", help="throw away what the folder holds of another study, and start anew")
+    ] = False,
+) -> None:
+    """Run a scenario at many points, several runs each. The same command goes on with what was interrupted."""
+    from swarmpush.reporting import study_console
+    from swarmpush.studies.estimate import estimate
+    from swarmpush.studies.saved import DEFINITION
+    from swarmpush.studies.trying import warnings
+
+    s = _load_study(study)
+    folder = out or RESULTS / f"{_stem(study)}-study"
+    if dry_run or force or not (folder / DEFINITION).exists():
+        told = warnings(s)
+        with _preparing(as_json):
+            cost = estimate(s, workers)
+        if not as_json:
+            study_console.show_cost(s, cost, told)
+        elif dry_run:
+            _print_json({"study": s.name, "design": s.design, "cost": cost, "warnings": told})
+        if dry_run:
+            return
+    _run_study(s, folder, workers, cluster, as_json, force)
+
+
+@studies.command("show", short_help="how far a study has come, also while it runs")
+def study_show(folder: StudyFolder, as_json: AsJson = False) -> None:
+    """Show how far a study has come: runs done and planned, failures, rate, time left. It may be running meanwhile."""
+    from swarmpush.reporting.study_words import summary_words
+    from swarmpush.studies.store import read_summary
+
+    summary = read_summary(folder)
+    if as_json:
+        _print_json({"folder": folder, "summary": summary})
+        return
+    print(summary_words(summary))
+
+
+@studies.command("failures", short_help="which runs failed, and why")
+def study_failures(folder: StudyFolder, as_json: AsJson = False) -> None:
+    """List the runs and points that failed, at which values, and why."""
+    from swarmpush.reporting import study_console
+    from swarmpush.studies.saved import read_study
+    from swarmpush.studies.store import read_failures
+
+    failures, s = read_failures(folder), read_study(folder)
+    if as_json:
+        _print_json({"folder": folder, "failures": failures.drop(columns="tables").to_dict("records")})
+        return
+    study_console.show_failures(failures, s, folder)
+
+
+@studies.command("rerun-failed", short_help="make the failed runs of a study again")
+def study_rerun_failed(
+    folder: StudyFolder, workers: Workers = None, cluster: Cluster = None, as_json: AsJson = False
+) -> None:
+    """Forget the failures of a study and make these runs again; then go on with it if it was not finished."""
+    from swarmpush.studies.saved import read_study
+    from swarmpush.studies.store import forget_failures
+
+    s = read_study(folder)
+    n = forget_failures(folder)
+    if not as_json:
+        print(f"{n} failures forgotten")
+    _run_study(s, folder, workers, cluster, as_json, force=False)
+
+
 @app.command(short_help="JSON Schema of scenario files, for editors")
 def schema(
+    of_studies: Annotated[bool, typer.Option("--study", help="that of study files instead")] = False,
     as_json: AsJson = False,
     out: Annotated[Path | None, typer.Option(metavar="FILE", help="write to this file instead of the screen")] = None,
     force: Annotated[bool, typer.Option("--force", help="replace the file if it is there")] = False,
 ) -> None:
-    """Print the JSON Schema of scenario files, with which editors complete and check them."""
+    """Print the JSON Schema of scenario or study files, with which editors complete and check them."""
     from swarmpush.output import to_json, write_text
     from swarmpush.scenario import Scenario
 
     tables = {"$schema": "https://json-schema.org/draft/2020-12/schema"} | Scenario.model_json_schema()
+    if of_studies:
+        from swarmpush.studies.study_file import study_schema
+
+        tables = study_schema()
     text = to_json(tables, is_ascii=True)
     if out is None:
         print(text)
@@ -378,6 +498,55 @@ def _load(name: str) -> Scenario:
             raise _Refusal(f"{name}: no such file; the demo scenarios are {', '.join(DEMOS)}")
         path = swarmpush.demo(path.name.replace("-", "_"))
     return swarmpush.load(path)
+
+
+def _of_study(folder: Path, point: int | None, replicate: int | None, seed: int | None) -> tuple[Scenario, int]:
+    """Scenario and seed of a run of a study."""
+    from swarmpush.studies.replay import run_of_study
+
+    if point is None or seed is not None:
+        raise _Refusal("--from-study needs --point, and has a seed for each --replicate instead of --seed")
+    try:
+        return run_of_study(folder, point, replicate or 0)
+    except IndexError as error:
+        raise _Refusal(f"--point: {error}") from None
+
+
+def _load_study(name: str) -> Study:
+    """The study of a file, or the demo study of that name if there is no such file."""
+    import swarmpush
+    from swarmpush.demos import STUDY_DEMOS
+
+    path = Path(name)
+    if not path.suffix and not path.exists():
+        if path.name.replace("-", "_") not in STUDY_DEMOS:
+            raise _Refusal(f"{name}: no such file; the demo studies are {', '.join(STUDY_DEMOS)}")
+        path = swarmpush.study_demo(path.name.replace("-", "_"))
+    return swarmpush.load_study(path)
+
+
+def _run_study(s: Study, folder: Path, workers: int | None, cluster: str | None, as_json: bool, force: bool) -> None:
+    """Run a study, write up what came out, and show it."""
+    import swarmpush
+    from swarmpush.reporting import console, study_console
+    from swarmpush.reporting.progress import study_bar
+    from swarmpush.studies.pools import PoolError
+
+    try:
+        with study_bar(is_quiet=as_json) as bar:
+            result = swarmpush.sweep(s, folder, workers=workers, cluster=cluster, progress=bar, is_forced=force)
+    except KeyboardInterrupt:
+        print(f"interrupted; what is done is kept, and the same command goes on (folder {folder})", file=sys.stderr)
+        raise typer.Exit(INTERRUPTED) from None
+    except PoolError as error:
+        raise _Refusal(str(error)) from None
+    files = result.save(folder) | {"folder": str(folder), "report": "report.html"}
+    swarmpush.report(result, folder / "report.html")
+    if as_json:
+        _print_json(result.to_dict(files))
+        return
+    study_console.show_study(result, folder)
+    console.say_where(folder / "report.html", folder / "table.csv")
 
 
 def _range(s: Scenario, text: str | None, has_default: bool) -> tuple[str, Any]:

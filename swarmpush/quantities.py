@@ -179,10 +179,10 @@ def for_people(value: float, si_unit: str, digits: int = 3) -> str:
         return "unknown"
     if math.isinf(value):
         return "never" if si_unit == "s" else ("unlimited" if value > 0 else "minus infinity")
-    if si_unit.startswith("rad"):
+    if si_unit in ("rad", "rad/sqrt(s)"):
         return f"{math.degrees(value):.{digits}g} deg{si_unit[3:]}"
-    if si_unit == "1":
-        return f"{value:.{digits}g}"
+    if si_unit in ("1", "rad/s"):
+        return f"{value:.{digits}g} {si_unit}".removesuffix(" 1")
     si_unit = si_unit.replace("*", " ").replace("^2", "²").replace("^3", "³")
     if value == 0.0:
         return f"0 {si_unit}"

@@ -236,9 +236,9 @@ def _scale_of(result: StudyResult, axis: Axis) -> tuple[float, str]:
     """By what the values of an axis are divided, and the unit that they then have."""
     if not axis.is_ordered or axis.unit == "1":
         return 1.0, ""
-    if axis.unit.startswith("rad"):
+    if axis.unit in ("rad", "rad/sqrt(s)"):
         return math.pi / 180.0, f"deg{axis.unit.removeprefix('rad')}"
-    if axis.unit.startswith("kg"):
+    if axis.unit.startswith(("kg", "rad")):
         return 1.0, axis.unit
     scale, prefix = prefix_for(float(result.study.points[axis.name].abs().max()))
     return scale, f"{prefix}{axis.unit.replace('*', ' ')}"

@@ -42,11 +42,11 @@ def cost_words(cost: Cost) -> str:
     runs = f"{size.least_runs}" if size.least_runs == size.most_runs else f"{size.least_runs} to {size.most_runs}"
     time, most = duration(cost.least_s), duration(cost.most_s)
     times = time if time == most else f"{time} to {most}"
-    room = f"{max(cost.most_bytes, 1000) / 1e6:.2g} MB"
+    room = for_people(float(cost.most_bytes), "B")
     workers = "1 process" if cost.workers == 1 else f"{cost.workers} processes"
     return (
-        f"{runs} runs at {size.n_points} points. About {times} on {workers} ({for_people(cost.run_s, 's', 2)} a run "
-        f"where timed, the slowest {for_people(cost.slowest_s, 's', 2)}), and {room} on the disk."
+        f"{runs} runs at {size.n_points} points. About {times} on {workers} ({for_people(cost.run_s, 's')} a run "
+        f"where timed, the slowest {for_people(cost.slowest_s, 's')}), and {room} on the disk."
     )
 
 

@@ -4,6 +4,7 @@ format = 1
 base = "vibration_duct"             # a demo, or a scenario file, seen from the study file's folder
 replicates = 12                     # runs of each point; left out: the scenario's own number, and so is the seed
 outputs = ["arrival", "block speed"]
+demand = "arrival>=0.9"             # shown on the outputs; left out: none
 
 [about]
 name = "Crew size against departure"
@@ -46,6 +47,8 @@ from typing import Annotated, Any, Literal
 from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Field, TypeAdapter, ValidationError
 
 from swarmpush.auditing.claims import ARRIVAL, BLOCK_SPEED, MEASURES
+from swarmpush.auditing.demands import read_demand
+from swarmpush.auditing.statistics import Verdict
 from swarmpush.loading import parse_toml, read_text, reword, shown
 from swarmpush.problems import Problem, ScenarioError
 from swarmpush.scenario import About, Ratio, Whole
@@ -70,6 +73,12 @@ def _measure(name: str) -> str:
         close = difflib.get_close_matches(name, MEASURES, n=1, cutoff=0.6)
         raise ValueError(f"did you mean '{close[0]}'?" if close else f"allowed: {', '.join(MEASURES)}")
     return name
+
+
+def _demand(text: str) -> str:
+    if isinstance(read_demand(text).bound, Verdict):
+        raise ValueError("a study has no verdicts; write NAME>=NUMBER or NAME<=NUMBER")
+    return text
 
 
 Scalar = Annotated[float | int | str | bool, BeforeValidator(_scalar)]
@@ -142,6 +151,9 @@ class StudyFile(_Table):
     )
     seed: Whole | None = Field(default=None, ge=0, le=MAX_SEED, description="left out: the scenario's own")
     outputs: tuple[Measure, ...] = Field(default=(ARRIVAL, BLOCK_SPEED), min_length=1, description="what is looked at")
+    demand: Annotated[str, AfterValidator(_demand)] | None = Field(
+        default=None, max_length=200, description='on one of the outputs, e.g. "arrival>=0.9"; shown, changes no run'
+    )
     design: Design
     vary: tuple[Vary, ...] = Field(min_length=1, max_length=200)
     stop: StopTable | None = None
@@ -230,6 +242,7 @@ class _Reading:
             outputs=parts.get("outputs") or (ARRIVAL, BLOCK_SPEED),
             design=design.kind,
             axes=tuple(self._axes),
+            demand=parts.get("demand") or "",
         )
 
     def _read_base(self, folder: Path) -> None:
@@ -306,7 +319,10 @@ class _Reading:
             yield Problem("replicates", "1 given; an interval, which [stop] asks for, needs at least 2")
         elif stop and replicates and stop.most < replicates:
             yield Problem("stop.most", f"{stop.most} given; must be at least the {replicates} replicates at first")
-        outputs = self._parts.get("outputs", ())
+        outputs = self._parts.get("outputs") or (ARRIVAL, BLOCK_SPEED)
+        demand = self._parts.get("demand")
+        if demand and (name := read_demand(demand).name) not in outputs:
+            yield Problem("demand", f"{name} is not among the outputs ({', '.join(outputs)}); add it there")
         if len(set(outputs)) < len(outputs):
             yield Problem("outputs", "one of them is named twice")
 

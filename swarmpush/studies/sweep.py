@@ -108,10 +108,13 @@ class StudyResult:
         if done.n_failures:
             text += f", {done.n_failures} failed"
         output = self.study.outputs[0]
-        known = self.table[output_column(output)]
-        if known.notna().any():
-            best = int(np.nanargmax(known.to_numpy()))
-            text += f". Most {output} at {self.study.values_at(best)}"
+        means = self.table[output_column(output)].to_numpy(dtype=np.float64)
+        if np.isfinite(means).any():
+            highest = np.flatnonzero(means == np.nanmax(means))
+            others = f", and at {len(highest) - 1} more" if len(highest) > 1 else ""
+            text += f". {output[:1].upper()}{output[1:]} is highest at {self.study.values_at(int(highest[0]))}{others}"
+        if met := self.meets_demand():
+            text += f". The demand {self.study.demand} is met for certain at {sum(map(bool, met))} points"
         return f"{text}."
 
     def _repr_html_(self) -> str:
