@@ -8,7 +8,7 @@ from pathlib import Path
 import pandas as pd
 
 from swarmpush.reporting.console import caution, console, head, new_table, without_styles
-from swarmpush.reporting.study_words import advice_words, cost_words, failure_rows, point_rows, summary_words
+from swarmpush.reporting.study_words import Row, advice_words, cost_words, failure_rows, point_rows, summary_words
 from swarmpush.studies.estimate import Cost
 from swarmpush.studies.study import Study
 from swarmpush.studies.sweep import StudyResult
@@ -29,7 +29,16 @@ def show_study(result: StudyResult, folder: Path) -> None:
     for output in result.study.outputs:
         for sentence in advice_words(result, output):
             console.print(without_styles(sentence))
-    rows = point_rows(result)
+    rows = point_rows(result) if result.study.design in ("grid", "list") else []
+    if rows:
+        _show_points(result, rows)
+    console.print(f"\n{summary_words(result.summary)}")
+    if len(result.failures):
+        print(f"see which: swarmpush study failures {folder}")
+    caution()
+
+
+def _show_points(result: StudyResult, rows: Sequence[Row]) -> None:
     of_point = [column for column in rows[0] if column in ("point", *result.study.points, "demand")]
     table = new_table(*of_point, *result.study.outputs)
     for row in rows[:MOST_ROWS]:
@@ -38,10 +47,6 @@ def show_study(result: StudyResult, folder: Path) -> None:
     console.print(table)
     if len(rows) > MOST_ROWS:
         console.print(f"... and {len(rows) - MOST_ROWS} more points, in the table")
-    console.print(f"\n{summary_words(result.summary)}")
-    if len(result.failures):
-        print(f"see which: swarmpush study failures {folder}")
-    caution()
 
 
 def show_failures(failures: pd.DataFrame, study: Study, folder: Path) -> None:

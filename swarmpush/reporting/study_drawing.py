@@ -16,7 +16,7 @@ from swarmpush.auditing.statistics import Verdict
 from swarmpush.quantities import prefix_for
 from swarmpush.reporting.drawing import AXIS, BLUE, GREEN, INK, ORANGE, PURPLE, SKY, VERMILION
 from swarmpush.studies.screening import Screening
-from swarmpush.studies.study import Axis
+from swarmpush.studies.study import Axis, Value
 from swarmpush.studies.sweep import StudyResult
 
 FloatArray = NDArray[np.float64]
@@ -32,6 +32,7 @@ LINES = (
 )
 MOST_LINES = len(LINES)
 MOST_TICKS = 8
+BESIDE = 0.012  # of the axis, from line to line
 CELL = 0.55  # inches of a heat map's cell
 
 
@@ -55,7 +56,7 @@ def response(result: StudyResult, output: str) -> Figure:
     figure, panel = plt.subplots(figsize=(8.4, 3.4))
     points = result.study.points
     scale, label = _scaled(result, output)
-    place, names = _places(result, along)
+    place = _places(result, along)
     groups = list(dict.fromkeys(points[across.name])) if across else [None]
     for k, value in enumerate(groups):
         colour, mark, dash = LINES[k % MOST_LINES]
@@ -63,13 +64,15 @@ def response(result: StudyResult, output: str) -> Figure:
         rows = rows[np.argsort(place[rows], kind="stable")]
         mean, spread = _spread(result, output, rows, scale)
         # lines stand a little beside one another, so that their whiskers do not hide each other
-        offset = (k - (len(groups) - 1) / 2) * 0.012 * (np.ptp(place) or 1.0)
+        shift = (k - (len(groups) - 1) / 2) * BESIDE
+        beside = (
+            place[rows] * (place.max() / place.min()) ** shift if along.is_log else place[rows] + shift * np.ptp(place)
+        )
         name = across.written(value) if across else None
-        panel.errorbar(place[rows] + offset, mean, yerr=spread, color=colour, marker=mark, ls=dash, ms=4.5, capsize=3,
+        panel.errorbar(beside, mean, yerr=spread, color=colour, marker=mark, ls=dash, ms=4.5, capsize=3,
                        lw=1.3, label=name)  # fmt: skip
     _mark_demand(panel, result, output, scale)
-    panel.set_xticks(*names)
-    panel.set_xlabel(_axis_label(result, along))
+    _name_axis(panel, result, along)
     panel.set_ylabel(label)
     if across:
         _legend(panel, across.name)
@@ -197,11 +200,9 @@ def _panels(result: StudyResult, output: str, axes: tuple[Axis, ...]) -> Figure:
     scale, label = _scaled(result, output)
     mean, _ = _spread(result, output, np.arange(len(result.study.points)), scale)
     for panel, axis in zip(panels.flat, axes, strict=False):
-        place, names = _places(result, axis)
-        panel.plot(place, mean, ls="", marker="o", ms=3.5, color=BLUE, mfc="none", alpha=0.7)
+        panel.plot(_places(result, axis), mean, ls="", marker="o", ms=3.5, color=BLUE, mfc="none", alpha=0.7)
         _mark_demand(panel, result, output, scale)
-        panel.set_xticks(*names)
-        panel.set_xlabel(_axis_label(result, axis), fontsize=8)
+        _name_axis(panel, result, axis)
     for panel in panels.flat[len(axes) :]:
         panel.set_visible(False)
     for row in panels:
@@ -210,20 +211,33 @@ def _panels(result: StudyResult, output: str, axes: tuple[Axis, ...]) -> Figure:
     return figure
 
 
-def _places(result: StudyResult, axis: Axis) -> tuple[FloatArray, tuple[list[float], list[str]]]:
-    """Where the points stand along an axis, and ticks with their names."""
+def _places(result: StudyResult, axis: Axis) -> FloatArray:
+    """Where the points stand along an axis, in the picture's unit; values without order are numbered."""
     column = result.study.points[axis.name]
+    if axis.is_ordered:
+        return column.to_numpy(dtype=np.float64) / _scale_of(result, axis)[0]
+    shown = _options_of(result, axis)
+    return np.array([shown.index(value) for value in column], dtype=np.float64)
+
+
+def _options_of(result: StudyResult, axis: Axis) -> list[Value]:
+    """The values of an axis without order, as the study names them."""
+    return [value for value in axis.values if (result.study.points[axis.name] == value).any()]
+
+
+def _name_axis(panel: Axes, result: StudyResult, axis: Axis) -> None:
+    """Name and ticks below a panel: a tick per value while there are few."""
+    panel.set_xlabel(_axis_label(result, axis))
     if not axis.is_ordered:
-        shown = [value for value in axis.values if (column == value).any()]
-        place = np.array([shown.index(value) for value in column], dtype=np.float64)
-        return place, ([float(k) for k in range(len(shown))], [axis.written(value) for value in shown])
-    values = column.to_numpy(dtype=np.float64)
-    distinct = np.unique(values)
-    if len(distinct) > MOST_TICKS:
-        distinct = distinct[np.linspace(0, len(distinct) - 1, MOST_TICKS).round().astype(int)]
-    names = [f"{value / _scale_of(result, axis)[0]:.3g}" for value in distinct]
-    along = np.log10 if axis.is_log else np.asarray
-    return along(values), (along(distinct).tolist(), names)
+        shown = _options_of(result, axis)
+        panel.set_xticks(range(len(shown)), [axis.written(value) for value in shown])
+        return
+    if axis.is_log:
+        panel.set_xscale("log")
+    values = np.unique(_places(result, axis))
+    if len(values) <= MOST_TICKS:
+        panel.set_xticks(values, [f"{value:.3g}" for value in values])
+        panel.minorticks_off()
 
 
 def _axis_label(result: StudyResult, axis: Axis) -> str:

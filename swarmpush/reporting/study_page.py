@@ -77,6 +77,7 @@ def _output(result: StudyResult, output: str) -> dict[str, Any]:
     return {
         "id": output.replace(" ", "-"),
         "key": output.replace(" ", "_"),
+        "name": output,
         "title": _title(output),
         "weights": rows,
         "weight_keys": keys,

@@ -76,10 +76,12 @@ def _floor(chance: float) -> float:
 
 
 def _share_sentence(rank: int, row: Mapping[Hashable, Any], output: str) -> str:
-    total, low, high, alone = row["total"], row["total_low"], row["total_high"], max(row["first"], 0.0)
+    # estimates and their limits can lie beyond all and none, which what they estimate cannot
+    names = ("total", "total_low", "total_high", "first")
+    total, low, high, alone = (min(max(row[name], 0.0), 1.0) for name in names)
     return (
         f"{_lead(rank, row['key'])}: {total:.0%} ({low:.0%} to {high:.0%}) of the variance of {output} would be "
-        f"left if all other keys were known; to know this one alone takes away {min(alone, 1.0):.0%}."
+        f"left if all other keys were known; to know this one alone takes away {alone:.0%}."
     )
 
 
