@@ -42,8 +42,7 @@ def _show_points(result: StudyResult, rows: Sequence[Row]) -> None:
     of_point = [column for column in rows[0] if column in ("point", *result.study.points, "demand")]
     table = new_table(*of_point, *result.study.outputs)
     for row in rows[:MOST_ROWS]:
-        outputs = (f"{row[output]} ({row[f'{output} interval']})" for output in result.study.outputs)
-        table.add_row(*(without_styles(text) for text in (*(row[column] for column in of_point), *outputs)))
+        table.add_row(*(without_styles(row[column]) for column in (*of_point, *result.study.outputs)))
     console.print(table)
     if len(rows) > MOST_ROWS:
         console.print(f"... and {len(rows) - MOST_ROWS} more points, in the table")

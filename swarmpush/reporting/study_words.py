@@ -26,13 +26,14 @@ def duration(seconds: float) -> str:
     """A time to wait, to two digits.
 
     >>> duration(8.3), duration(1500.0), duration(86400.0)
-    ('8 s', '25 min', '24 h')
+    ('8.3 s', '25 min', '24 h')
     """
     if not math.isfinite(seconds):
         return "an unknown time"
     for unit, size in (("s", 1.0), ("min", 60.0), ("h", 3600.0), ("days", 86400.0)):
         if seconds < MANY_SECONDS * size or unit == "days":
-            return f"{max(1.0, seconds / size):.0f} {unit}"
+            value = max(1.0, seconds / size)
+            return f"{value:.2g} {unit}" if value < 10.0 else f"{value:.0f} {unit}"
     raise AssertionError
 
 
@@ -73,7 +74,7 @@ def output_words(output: str, estimate: Estimate) -> tuple[str, str]:
 
 
 def point_rows(result: StudyResult) -> list[Row]:
-    """One row per point: its values, runs, and each output with its interval."""
+    """One row per point: its values, runs, each output with its interval, and whether the demand is met."""
     study, rows = result.study, []
     estimates = {output: result.estimates(output) for output in study.outputs}
     met = result.meets_demand()
@@ -83,7 +84,8 @@ def point_rows(result: StudyResult) -> list[Row]:
             row[axis.name] = axis.written(value)
         row["runs"] = str(result.table["n_runs"].iloc[point])
         for output in study.outputs:
-            row[output], row[f"{output} interval"] = output_words(output, estimates[output][point])
+            mean, span = output_words(output, estimates[output][point])
+            row[output] = mean if span == "-" else f"{mean} ({span})"
         if met:
             row["demand"] = {True: "met", False: "not met", None: "-"}[met[point]]
         rows.append(row)

@@ -8,10 +8,13 @@ from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
 
+import numpy as np
+import pandas as pd
 import pytest
 
 import swarmpush
 from swarmpush import Audit, Run
+from swarmpush.studies.store import Summary
 
 REQUIRED = "SWARMPUSH_BROWSER"  # set to "required": without a browser the tests fail instead of being skipped
 HOSTILE = """<script>document.title="taken"</script> & <img src="https://example.org/a.png" onerror="1">'"""
@@ -42,6 +45,29 @@ def audit_page(result: Audit, tmp_path_factory: pytest.TempPathFactory) -> Path:
 def run_page(run: Run, tmp_path_factory: pytest.TempPathFactory) -> Path:
     """The run's report."""
     return swarmpush.report(run, tmp_path_factory.mktemp("run") / "report.html")
+
+
+@pytest.fixture(scope="session")
+def study_page(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """The report of a study over two axes of numbers, with a failure and a hostile name."""
+    base = swarmpush.load(swarmpush.demo("service_passage")).replace(goal={"time_limit": 2.0})
+    counts, speeds = np.meshgrid([1, 2, 3], [0.1, 0.15, 0.2])
+    points = pd.DataFrame({"pushers.count": counts.ravel(), "pushers.free_speed": speeds.ravel()}).rename_axis("point")
+    outputs = ("block speed", "arrival", "strike rate", "nudge")
+    study = swarmpush.Study(
+        HOSTILE[:120], HOSTILE, base, points, 2, None, 1, outputs, "grid", demand="block_speed>=0.2 mm/s"
+    )
+    rows = [
+        {"point": point, "replicate": k, "seed": k, **swarmpush.simulate(study.scenario(point), seed=k).summary()}
+        for point in range(len(points))
+        for k in range(2)
+    ]
+    failures = pd.DataFrame(
+        [{"point": 0, "replicate": 1, "seed": 1, "error": "Error", "message": HOSTILE, "tables": ""}]
+    )
+    summary = Summary(len(points), len(points), 0, len(rows) + 1, len(rows), 1, 2.0)
+    result = swarmpush.StudyResult(study, summary, pd.DataFrame(rows), failures)
+    return swarmpush.report(result, tmp_path_factory.mktemp("study") / "report.html")
 
 
 @pytest.fixture(scope="session")

@@ -46,9 +46,9 @@ class Shown(NamedTuple):
     complaints: list[str]
 
 
-@pytest.fixture(params=["audit_page", "run_page"])
+@pytest.fixture(params=["audit_page", "run_page", "study_page"])
 def path(request: pytest.FixtureRequest) -> Path:
-    """Either kind of report."""
+    """Each kind of report."""
     found: Path = request.getfixturevalue(request.param)
     return found
 
