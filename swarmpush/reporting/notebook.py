@@ -45,7 +45,7 @@ def audit_html(audit: Audit) -> str:
 
 def study_html(result: StudyResult) -> str:
     """The study's answer and its points, as many as fit."""
-    rows = point_rows(result)[:MOST_POINTS]
+    rows = point_rows(result, MOST_POINTS)
     columns = list(rows[0]) if rows else ["point"]
     cells = [[row[column] for column in columns] for row in rows]
     caption = f"{len(rows)} of {len(result.study.points)} points"

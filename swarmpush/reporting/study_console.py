@@ -29,7 +29,7 @@ def show_study(result: StudyResult, folder: Path) -> None:
     for output in result.study.outputs:
         for sentence in advice_words(result, output):
             console.print(without_styles(sentence))
-    rows = point_rows(result) if result.study.design in ("grid", "list") else []
+    rows = point_rows(result, MOST_ROWS) if result.study.design in ("grid", "list") else []
     if rows:
         _show_points(result, rows)
     console.print(f"\n{summary_words(result.summary)}")
@@ -41,11 +41,11 @@ def show_study(result: StudyResult, folder: Path) -> None:
 def _show_points(result: StudyResult, rows: Sequence[Row]) -> None:
     of_point = [column for column in rows[0] if column in ("point", *result.study.points, "demand")]
     table = new_table(*of_point, *result.study.outputs)
-    for row in rows[:MOST_ROWS]:
+    for row in rows:
         table.add_row(*(without_styles(row[column]) for column in (*of_point, *result.study.outputs)))
     console.print(table)
-    if len(rows) > MOST_ROWS:
-        console.print(f"... and {len(rows) - MOST_ROWS} more points, in the table")
+    if len(result.study.points) > len(rows):
+        console.print(f"... and {len(result.study.points) - len(rows)} more points, in the table")
 
 
 def show_failures(failures: pd.DataFrame, study: Study, folder: Path) -> None:

@@ -32,6 +32,7 @@ LINES = (
 )
 MOST_LINES = len(LINES)
 MOST_TICKS = 8
+MOST_DOTS = 2000  # that are drawn one by one; more would make a page too heavy to open
 BESIDE = 0.012  # of the axis, from line to line
 CELL = 0.55  # inches of a heat map's cell
 
@@ -130,10 +131,13 @@ def arrivals(result: StudyResult) -> Figure:
         colour, _, dash = LINES[k % MOST_LINES]
         curve = result.under_way(runs)
         end = max(end, float(curve.times_s[-1]))
-        arrived = 100.0 * (1.0 - curve.share)
-        panel.step([0.0, *curve.times_s], [0.0, *arrived], where="post", color=colour, ls=dash, lw=1.5, label=name)
+        arrived, is_heavy = 100.0 * (1.0 - curve.share), len(curve.times_s) > MOST_DOTS
+        t = np.concatenate([[0.0], curve.times_s])
+        style = {"color": colour, "ls": dash, "lw": 1.5, "rasterized": is_heavy}
+        panel.step(t, np.concatenate([[0.0], arrived]), where="post", label=name, **style)
         low, high = (100.0 * (1.0 - column) for column in (curve.high, curve.low))
-        panel.fill_between(curve.times_s, low, high, step="post", color=colour, alpha=0.12, lw=0)
+        panel.fill_between(curve.times_s, low, high, step="post", color=colour, alpha=0.12, lw=0,
+                           rasterized=is_heavy)  # fmt: skip
     panel.set_xlim(0.0, end)
     panel.set_ylim(-3.0, 103.0)
     panel.set_xlabel("time, s")
@@ -200,7 +204,8 @@ def _panels(result: StudyResult, output: str, axes: tuple[Axis, ...]) -> Figure:
     scale, label = _scaled(result, output)
     mean, _ = _spread(result, output, np.arange(len(result.study.points)), scale)
     for panel, axis in zip(panels.flat, axes, strict=False):
-        panel.plot(_places(result, axis), mean, ls="", marker="o", ms=3.5, color=BLUE, mfc="none", alpha=0.7)
+        panel.plot(_places(result, axis), mean, ls="", marker="o", ms=3.5, color=BLUE, mfc="none", alpha=0.7,
+                   rasterized=len(mean) > MOST_DOTS)  # fmt: skip
         _mark_demand(panel, result, output, scale)
         _name_axis(panel, result, axis)
     for panel in panels.flat[len(axes) :]:
@@ -260,7 +265,8 @@ def _scale_of(result: StudyResult, axis: Axis) -> tuple[float, str]:
 
 def _spread(result: StudyResult, output: str, rows: NDArray[np.int64], scale: float) -> tuple[FloatArray, FloatArray]:
     """Means of some points, and how far their intervals reach below and above, in the picture's unit."""
-    found = [result.estimates(output)[row] for row in rows]
+    estimates = result.estimates(output)
+    found = [estimates[row] for row in rows]
     mean = np.array([estimate.mean for estimate in found]) / scale
     ends = np.array([(e.mean - e.low, e.high - e.mean) for e in found]).reshape(-1, 2).T / scale
     return mean, np.where(np.isfinite(ends), np.maximum(ends, 0.0), 0.0)

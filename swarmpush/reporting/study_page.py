@@ -26,7 +26,7 @@ WEIGHTS = {
 def study_content(result: StudyResult) -> dict[str, Any]:
     """All that the page shows."""
     study, origin = result.study, provenance(result.study.base, seed=result.study.seed)
-    rows = point_rows(result)
+    rows = point_rows(result, MOST_ROWS)
     demand = study.demand
     return {
         "name": study.name,
@@ -42,9 +42,9 @@ def study_content(result: StudyResult) -> dict[str, Any]:
         "demand": demand,
         "demanded": _title(read_demand(demand).name) if demand else "",
         "group_test": _group_test(result),
-        "rows": rows[:MOST_ROWS],
+        "rows": rows,
         "row_keys": list(rows[0]) if rows else [],
-        "n_points": len(rows),
+        "n_points": len(study.points),
         "failures": failure_rows(result.failures.head(MOST_ROWS), study),
         "n_failures": len(result.failures),
         "command": f"swarmpush sweep {study_word(study)}",

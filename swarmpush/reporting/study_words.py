@@ -73,12 +73,12 @@ def output_words(output: str, estimate: Estimate) -> tuple[str, str]:
     return number(estimate.mean, unit), interval(estimate, unit)
 
 
-def point_rows(result: StudyResult) -> list[Row]:
-    """One row per point: its values, runs, each output with its interval, and whether the demand is met."""
+def point_rows(result: StudyResult, most: int) -> list[Row]:
+    """One row per point, at most so many: values, runs, each output with its interval, demand met or not."""
     study, rows = result.study, []
     estimates = {output: result.estimates(output) for output in study.outputs}
     met = result.meets_demand()
-    for point, values in enumerate(study.points.itertuples(index=False)):
+    for point, values in enumerate(study.points.head(most).itertuples(index=False)):
         row: Row = {"point": str(point)}
         for axis, value in zip(study.varied, values, strict=True):
             row[axis.name] = axis.written(value)

@@ -8,7 +8,7 @@ import sys
 import pytest
 from commands import BAD_INPUT, DONE, PATIENCE, assert_refused, call
 
-COMMANDS = ("plan", "run", "audit", "schema", "report")
+COMMANDS = ("plan", "run", "audit", "sweep", "schema", "report")
 
 
 def test_help_names_every_command() -> None:

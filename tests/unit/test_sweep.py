@@ -166,7 +166,8 @@ def test_the_page_of_every_design(text: str, figures: set[str]) -> None:
     assert "<b>grid" not in html
     assert "<i>loose" not in html
     assert not re.search(r"\bnan\b", html)
-    assert len(point_rows(result)) == len(result.study.points)
+    assert len(point_rows(result, 1000)) == len(result.study.points)
+    assert len(point_rows(result, 2)) == 2
     for output in result.study.outputs:
         assert len(weight_rows(result, output)) in (0, len(result.study.varied))
 
