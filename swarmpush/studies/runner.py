@@ -56,7 +56,7 @@ def run_study(
         workers: processes on this machine; one per processor unless given. cluster: address of a Dask scheduler, e.g.
             "tcp://10.0.0.1:8786", whose workers make the runs instead.
         progress: called now and then with runs done, runs planned, which may grow, and failures so far.
-        is_forced: throw away what the folder holds of another study, and start anew.
+        is_forced: throw away the runs that the folder holds, of whatever study, and start anew.
 
     Returns:
         The summary. Runs that failed do not end a study; `store.read_failures` lists them.
