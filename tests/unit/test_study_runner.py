@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import errno
 import json
 import math
 import multiprocessing
@@ -24,7 +25,8 @@ from swarmpush.auditing.replicates import replicate_seeds
 from swarmpush.dynamics.world import simulate
 from swarmpush.kinematics.planning import plan
 from swarmpush.loading import from_tables
-from swarmpush.studies import pools, runner
+from swarmpush.output import OutputError
+from swarmpush.studies import pools, runner, store
 from swarmpush.studies.agenda import Agenda, is_enough
 from swarmpush.studies.pools import LocalPool, Pool, PoolError
 from swarmpush.studies.runner import run_study
@@ -176,6 +178,28 @@ def test_an_interruption_ends_processes(tmp_path: Path) -> None:
         run_study(study, tmp_path, workers=2, progress=lambda *_: os.kill(os.getpid(), signal.SIGINT))
     assert multiprocessing.active_children() == []
     assert signal.getsignal(signal.SIGINT) is signal.default_int_handler
+
+
+def test_a_full_disk_ends_the_study_and_costs_nothing_but_time(tmp_path: Path) -> None:
+    """When nothing can be written any more it ends with one error; with room again the same call goes on."""
+    study = small_study(4, 3)
+    with handy(study):
+        run_study(study, tmp_path / "whole")
+
+    def fill(*_: int) -> None:
+        disk.side_effect = OSError(errno.ENOSPC, os.strerror(errno.ENOSPC))
+
+    with (
+        handy(study) as pool,
+        patch.object(os, "fsync") as disk,
+        patch.object(store, "MOST_ROWS", 4),
+        pytest.raises(OutputError, match=r"No space.*make room.*goes on from there"),
+    ):
+        run_study(study, tmp_path / "full", progress=fill)
+    assert pool.is_closed
+    with handy(study):
+        run_study(study, tmp_path / "full")
+    assert table_of(tmp_path / "full") == table_of(tmp_path / "whole")
 
 
 # ---- lost workers ------------------------------------------------------------------------------------------------
