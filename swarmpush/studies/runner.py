@@ -68,12 +68,12 @@ def run_study(
     with Store(folder, study, is_forced=is_forced) as store:
         agenda = Agenda(study, store.known(stop_column(study)))
         if agenda.done < agenda.planned:
-            with _interruptions() as is_interrupted:
-                pool = _open_pool(study, workers, cluster, agenda.planned - agenda.done)
-                try:
+            pool = _open_pool(study, workers, cluster, agenda.planned - agenda.done)
+            try:
+                with _interruptions() as is_interrupted:
                     _Work(study, store, agenda, pool, progress).do(is_interrupted)
-                finally:
-                    pool.close()
+            finally:
+                pool.close()
             if is_interrupted():
                 raise KeyboardInterrupt
         store.flush(agenda.wanted)
