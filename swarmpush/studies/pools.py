@@ -110,10 +110,12 @@ class LocalPool(Pool):
         self._n_false_starts = 0
         try:
             # where nothing is compiled yet, one does it for all
-            self._processes += [self._start() for _ in range(1 if is_first_start() else n_workers)]
+            with _launching():
+                self._processes += [self._start() for _ in range(1 if is_first_start() else n_workers)]
             with suppress(BrokenProcessPool):  # which the first chunk will meet again
                 self._processes[0].is_of_use.result()
-            self._processes += [self._start() for _ in range(n_workers - len(self._processes))]
+            with _launching():
+                self._processes += [self._start() for _ in range(n_workers - len(self._processes))]
         except BaseException:
             self.close()
             raise
@@ -172,14 +174,14 @@ class LocalPool(Pool):
     def _start(self) -> _Process:
         executor = ProcessPoolExecutor(1, self._context, _begin, (self._study, self._is_called_off))
         before = set(multiprocessing.active_children())
-        with _launching():  # the first call starts the process
-            is_of_use = executor.submit(_get_ready)
+        is_of_use = executor.submit(_get_ready)  # the first call starts the process
         return _Process(executor, is_of_use, set(multiprocessing.active_children()) - before)
 
     def _replace(self, process: _Process) -> _Process:
         """A new process in place of one that is broken, whose chunks are dealt with as they come in."""
-        new = self._start()
-        self._processes[self._processes.index(process)] = new
+        with _launching():
+            new = self._start()
+            self._processes[self._processes.index(process)] = new
         return new
 
     def _bury(self, process: _Process) -> list[tuple[int, Made | None]]:
@@ -259,7 +261,13 @@ def _start_method() -> BaseContext:
 
 @contextmanager
 def _launching() -> Iterator[None]:
-    """Processes started inside have one thread for numbers, and do not run the caller's script a second time."""
+    """Processes started inside have one thread for numbers, and do not run the caller's script a second time.
+
+    Ctrl-C is put off to the end, so that none is left half started.
+    """
+    interruptions: list[int] = []
+    is_main = threading.current_thread() is threading.main_thread()
+    handler = signal.signal(signal.SIGINT, lambda number, _: interruptions.append(number)) if is_main else None
     before = {name: os.environ.get(name) for name in ONE_THREAD}
     script = sys.modules["__main__"]
     os.environ.update(dict.fromkeys(ONE_THREAD, "1"))
@@ -273,6 +281,10 @@ def _launching() -> Iterator[None]:
                 os.environ.pop(name, None)
             else:
                 os.environ[name] = value
+        if is_main:
+            signal.signal(signal.SIGINT, handler)
+        if interruptions:
+            signal.raise_signal(signal.SIGINT)
 
 
 # ---- in a process ------------------------------------------------------------------------------------------------

@@ -57,7 +57,7 @@ def run_study(
         workers: processes on this machine; one per processor unless given. cluster: address of a Dask scheduler, e.g.
             "tcp://10.0.0.1:8786", whose workers make the runs instead.
         progress: called now and then with runs done, runs planned, which may grow, and failures so far.
-        is_forced: throw away what the folder holds of another study, and start anew.
+        is_forced: throw away the runs that the folder holds, of whatever study, and start anew.
 
     Returns:
         The summary. Runs that failed do not end a study; `store.read_failures` lists them.
@@ -70,12 +70,12 @@ def run_study(
         save_study(study, folder)
         agenda = Agenda(study, store.known(stop_column(study)))
         if agenda.done < agenda.planned:
-            with _interruptions() as is_interrupted:
-                pool = _open_pool(study, workers, cluster, agenda.planned - agenda.done)
-                try:
+            pool = _open_pool(study, workers, cluster, agenda.planned - agenda.done)
+            try:
+                with _interruptions() as is_interrupted:
                     _Work(study, store, agenda, pool, progress).do(is_interrupted)
-                finally:
-                    pool.close()
+            finally:
+                pool.close()
             if is_interrupted():
                 raise KeyboardInterrupt
         store.flush(agenda.wanted)

@@ -82,7 +82,7 @@ class Store:
 
     Arguments:
         folder: made if it is missing. study: what is run.
-        is_forced: throw away what the folder holds of another study, or of other versions, and start anew.
+        is_forced: throw away the runs that the folder holds, of whatever study, and start anew.
 
     Raises:
         OutputError: when the folder belongs to another study or to other versions, holds something else, is in use by

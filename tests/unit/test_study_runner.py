@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import errno
 import json
 import math
 import multiprocessing
@@ -24,7 +25,8 @@ from swarmpush.auditing.replicates import replicate_seeds
 from swarmpush.dynamics.world import simulate
 from swarmpush.kinematics.planning import plan
 from swarmpush.loading import from_tables
-from swarmpush.studies import runner
+from swarmpush.output import OutputError
+from swarmpush.studies import pools, runner, store
 from swarmpush.studies.agenda import Agenda, is_enough
 from swarmpush.studies.pools import LocalPool, Pool, PoolError
 from swarmpush.studies.runner import run_study
@@ -130,11 +132,11 @@ def test_a_finished_study_is_not_run_again(tmp_path: Path) -> None:
 
 def test_chunks_take_their_time_and_become_shorter(tmp_path: Path) -> None:
     """Once the time per run is known, chunks hold many runs; towards the end fewer."""
-    study = small_study(10, 20, base=quick_base(0.2))
-    with handy(study) as pool, patch.object(HandyPool, "chunk_s", 0.5):
+    study = small_study(5, 20, base=quick_base(0.2))
+    with handy(study) as pool, patch.object(HandyPool, "chunk_s", 0.3):
         run_study(study, tmp_path)
     lengths = [len(keys) for keys in pool.chunks]
-    assert sum(lengths) == 200
+    assert sum(lengths) == 100
     assert lengths[0] == 1
     assert max(lengths) > 4
     assert lengths[-1] < max(lengths)
@@ -176,6 +178,28 @@ def test_an_interruption_ends_processes(tmp_path: Path) -> None:
         run_study(study, tmp_path, workers=2, progress=lambda *_: os.kill(os.getpid(), signal.SIGINT))
     assert multiprocessing.active_children() == []
     assert signal.getsignal(signal.SIGINT) is signal.default_int_handler
+
+
+def test_a_full_disk_ends_the_study_and_costs_nothing_but_time(tmp_path: Path) -> None:
+    """When nothing can be written any more it ends with one error; with room again the same call goes on."""
+    study = small_study(4, 3)
+    with handy(study):
+        run_study(study, tmp_path / "whole")
+
+    def fill(*_: int) -> None:
+        disk.side_effect = OSError(errno.ENOSPC, os.strerror(errno.ENOSPC))
+
+    with (
+        handy(study) as pool,
+        patch.object(os, "fsync") as disk,
+        patch.object(store, "MOST_ROWS", 4),
+        pytest.raises(OutputError, match=r"No space.*make room.*goes on from there"),
+    ):
+        run_study(study, tmp_path / "full", progress=fill)
+    assert pool.is_closed
+    with handy(study):
+        run_study(study, tmp_path / "full")
+    assert table_of(tmp_path / "full") == table_of(tmp_path / "whole")
 
 
 # ---- lost workers ------------------------------------------------------------------------------------------------
@@ -236,6 +260,31 @@ def test_processes_that_cannot_start_are_told(tmp_path: Path) -> None:
     with pytest.raises(PoolError, match="ended as soon as they had started"):
         run_study(DeadlyStudy(**values), tmp_path, workers=1)
     assert len(read_failures(tmp_path)) == 0
+
+
+def test_processes_have_one_thread_for_numbers() -> None:
+    """Libraries of numbers are told to use one thread in a worker, and the caller's surroundings stay as they are."""
+    before = dict(os.environ)
+    pool = LocalPool(small_study(), 1)
+    try:
+        executor = pool._processes[0].executor
+        threads = [executor.submit(os.getenv, name).result() for name in pools.ONE_THREAD]
+    finally:
+        pool.close()
+    assert threads == ["1"] * len(pools.ONE_THREAD)
+    assert dict(os.environ) == before
+    assert multiprocessing.active_children() == []
+
+
+@pytest.mark.slow
+def test_processes_that_are_not_forked(tmp_path: Path) -> None:
+    """Where there is no server to fork from, processes start anew and give the same."""
+    study = small_study()
+    with handy(study):
+        run_study(study, tmp_path / "here")
+    with patch.object(pools, "_start_method", lambda: multiprocessing.get_context("spawn")):
+        run_study(study, tmp_path / "spawned", workers=1)
+    assert table_of(tmp_path / "here") == table_of(tmp_path / "spawned")
 
 
 @pytest.mark.slow
