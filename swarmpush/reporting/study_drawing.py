@@ -133,8 +133,10 @@ def arrivals(result: StudyResult) -> Figure:
         end = max(end, float(curve.times_s[-1]))
         arrived, is_heavy = 100.0 * (1.0 - curve.share), len(curve.times_s) > MOST_DOTS
         t = np.concatenate([[0.0], curve.times_s])
-        style = {"color": colour, "ls": dash, "lw": 1.5, "rasterized": is_heavy}
-        panel.step(t, np.concatenate([[0.0], arrived]), where="post", label=name, **style)
+        (line,) = panel.step(
+            t, np.concatenate([[0.0], arrived]), where="post", color=colour, ls=dash, lw=1.5, label=name
+        )
+        line.set_rasterized(is_heavy)
         low, high = (100.0 * (1.0 - column) for column in (curve.high, curve.low))
         panel.fill_between(curve.times_s, low, high, step="post", color=colour, alpha=0.12, lw=0,
                            rasterized=is_heavy)  # fmt: skip
