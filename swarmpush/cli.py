@@ -150,7 +150,7 @@ def plan(
 def run(
     scenario: Annotated[
         str | None,
-        typer.Argument(metavar="[SCENARIO]", help="a scenario file (.toml), or the name of a demo; or --from-study"),
+        typer.Argument(metavar="SCENARIO", help="a scenario file (.toml), or the name of a demo; or --from-study"),
     ] = None,
     from_study: Annotated[
         Path | None, typer.Option("--from-study", metavar="FOLDER", help="make a run of a study again, bit for bit")

@@ -6,7 +6,7 @@ import difflib
 import math
 from collections.abc import Iterator
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated, Any, Literal, get_args, get_origin
+from typing import Annotated, Any, Literal, get_args, get_origin
 
 from swarmpush.auditing.claims import MEASURES
 from swarmpush.demos import DEMOS, demo
@@ -16,10 +16,8 @@ from swarmpush.quantities import to_si
 from swarmpush.scenario import Scenario
 from swarmpush.studies.setting import Setter
 from swarmpush.studies.study import Axis, Value
+from swarmpush.studies.study_tables import Vary
 from swarmpush.vary import field_at, unit_at
-
-if TYPE_CHECKING:
-    from swarmpush.studies.study_file import Vary
 
 # keys that change no run: a study has its own name, seed, replicates and confidence
 WITHOUT_EFFECT = (
