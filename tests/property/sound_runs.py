@@ -10,8 +10,8 @@ import numpy as np
 
 from swarmpush.dynamics.loop import Ending
 from swarmpush.dynamics.run import Run
+from swarmpush.dynamics.simulation import ENDINGS
 from swarmpush.dynamics.states import STATES
-from swarmpush.dynamics.world import ENDINGS
 
 MOMENTUM = 1e-9  # unbalanced momentum over all impulses; rounding leaves 1e-15, and more in long runs
 ENERGY = 1e-9  # unbalanced energy over all work

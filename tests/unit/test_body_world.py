@@ -16,7 +16,7 @@ import pandas as pd
 import pytest
 
 from swarmpush.demos import demo
-from swarmpush.dynamics import world
+from swarmpush.dynamics import simulation
 from swarmpush.dynamics.host import host_disagreement
 from swarmpush.dynamics.loop import advance_plainly
 from swarmpush.dynamics.run import Run
@@ -148,7 +148,7 @@ def test_compiled_loop_is_the_plain_loop(name: str, monkeypatch: pytest.MonkeyPa
     s = load(demo(name))
     seconds = 1200 * choose_step(s).dt_s
     fast = digest(demo_run(name, seconds, count=3))
-    monkeypatch.setattr(world, "_stepper", lambda: advance_plainly)
+    monkeypatch.setattr(simulation, "_stepper", lambda: advance_plainly)
     assert digest(demo_run(name, seconds, count=3)) == fast
 
 
@@ -160,13 +160,13 @@ def test_host_is_the_one_that_the_loop_knows() -> None:
 def test_an_unknown_host_is_driven_plainly(monkeypatch: pytest.MonkeyPatch) -> None:
     """When the compiled way to the engine differs from pymunk's, the run says so and takes the slow way."""
     expected = digest(demo_run("service_passage", 0.5))
-    monkeypatch.setattr(world, "host_disagreement", lambda: "motion in step 3")
-    world._stepper.cache_clear()
+    monkeypatch.setattr(simulation, "host_disagreement", lambda: "motion in step 3")
+    simulation._stepper.cache_clear()
     try:
         with pytest.warns(RuntimeWarning, match="motion in step 3"):
             slow = demo_run("service_passage", 0.5)
     finally:
-        world._stepper.cache_clear()
+        simulation._stepper.cache_clear()
     assert digest(slow) == expected
 
 

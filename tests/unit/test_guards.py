@@ -15,7 +15,7 @@ import numpy as np
 import pytest
 
 from swarmpush.demos import demo
-from swarmpush.dynamics import host, world
+from swarmpush.dynamics import host, simulation, world
 from swarmpush.dynamics.chipmunk import MOTION, ORDERS
 from swarmpush.dynamics.host import Host, HostSpace, host_disagreement
 from swarmpush.dynamics.loop import Task, advance, advance_plainly
@@ -205,7 +205,7 @@ def meddled_run(meddle: Callable[[HostSpace, Task], None], s: Scenario, monkeypa
         return advance(space.host, task, first, n, is_answered)
 
     monkeypatch.setattr(world, "CHUNK", CHUNK)
-    monkeypatch.setattr(world, "_stepper", lambda: step)
+    monkeypatch.setattr(simulation, "_stepper", lambda: step)
     return simulate(s, seed=2, cycles=())
 
 
@@ -247,7 +247,7 @@ def test_guards_of_the_plain_loop(monkeypatch: pytest.MonkeyPatch) -> None:
         return advance_plainly(space, task, first, n, is_answered)
 
     monkeypatch.setattr(world, "CHUNK", 20)
-    monkeypatch.setattr(world, "_stepper", lambda: step)
+    monkeypatch.setattr(simulation, "_stepper", lambda: step)
     run = simulate(passage(has_train=False), seed=2, cycles=())
     assert run.ended == GUARDS["jump"][1]
     assert np.isfinite(run.pushers["x_m"]).all()

@@ -15,7 +15,7 @@ from typing import Any
 import numpy as np
 import pytest
 
-from swarmpush.dynamics import build, world
+from swarmpush.dynamics import build, simulation, world
 from swarmpush.dynamics.ledger import SLOTS
 from swarmpush.dynamics.loop import advance_plainly
 from swarmpush.dynamics.run import Run
@@ -153,7 +153,7 @@ def test_with_little_room_for_visits(name: str, monkeypatch: pytest.MonkeyPatch)
             fetched.append(int(ledger.n_log[0]))
             super().fetch(ledger)
 
-    monkeypatch.setattr(world, "VisitLog", Watched)
+    monkeypatch.setattr(simulation, "VisitLog", Watched)
     new_ledger = build.new_ledger
     for room in (lambda n_moving: SLOTS * n_moving + 2, lambda n_moving: 10**5):
         fetched.clear()
@@ -176,7 +176,7 @@ def test_spilled_to_a_file(name: str, kept: int, monkeypatch: pytest.MonkeyPatch
         logs.append(VisitLog(kept=kept))
         return logs[-1]
 
-    monkeypatch.setattr(world, "VisitLog", log)
+    monkeypatch.setattr(simulation, "VisitLog", log)
     monkeypatch.setattr(world, "CHUNK", 100)
     assert digest(run_of(name)) == usual(name)
     assert logs[0]._file is not None
@@ -184,7 +184,7 @@ def test_spilled_to_a_file(name: str, kept: int, monkeypatch: pytest.MonkeyPatch
 
 def test_temporary_file_is_closed(monkeypatch: pytest.MonkeyPatch) -> None:
     """The temporary file goes with its log, without a warning about a file left open."""
-    monkeypatch.setattr(world, "VisitLog", partial(VisitLog, kept=0))
+    monkeypatch.setattr(simulation, "VisitLog", partial(VisitLog, kept=0))
     with warnings.catch_warnings():
         warnings.simplefilter("error")
         with monkeypatch.context() as patched:
@@ -221,7 +221,7 @@ def test_in_threads(n_threads: int) -> None:
 def test_plainly(name: str, monkeypatch: pytest.MonkeyPatch) -> None:
     """The compiled loop and the one through pymunk's public interface give the same run."""
     fast = run_of(name, N_PLAIN_STEPS)
-    monkeypatch.setattr(world, "_stepper", lambda: advance_plainly)
+    monkeypatch.setattr(simulation, "_stepper", lambda: advance_plainly)
     plain = run_of(name, N_PLAIN_STEPS)
     assert len(fast.visits) > 15
     assert digest(fast) == digest(plain)

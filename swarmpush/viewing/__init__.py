@@ -1,0 +1,1 @@
+"""Looking at runs: films of them, pictures, and a window."""
