@@ -63,7 +63,7 @@ def test_a_watched_run_is_the_run(name: str) -> None:
 
 
 def test_frames_are_the_runs_places(film: Film) -> None:
-    """At the times of the run's path a frame has its places and headings; before, after and between lies what is near."""
+    """At the times of the run's path a frame has its places; between them a straight line."""
     assert film.run is not None
     block, crew = film.run.block, film.run.pushers
     n = film.scenario.pushers.count

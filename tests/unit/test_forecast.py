@@ -343,7 +343,7 @@ def test_visits_of_nobody() -> None:
 
 def shown(s: Scenario, width: int, monkeypatch: pytest.MonkeyPatch) -> str:
     paper = io.StringIO()
-    monkeypatch.setattr(console, "_console", Console(file=paper, width=width, highlight=False))
+    monkeypatch.setattr(console, "console", Console(file=paper, width=width, highlight=False))
     console.show_plan(plan(s, n_starts=20))
     return paper.getvalue()
 
