@@ -57,19 +57,17 @@ class Binding(NamedTuple):
         return " or ".join(_KEY_WORDS.get(key, key.upper() if len(key) == 1 else _spelled(key)) for key in self.keys)
 
 
-_KEY_WORDS = {"-": "minus", "+": "plus", ",": "comma", ".": "point", "=": "equals"}
+_KEY_WORDS = {"-": "Minus", "+": "Plus", ",": "Comma", ".": "Period", "=": "="}
 
 
 def _spelled(key: str) -> str:
-    before, _, last = key.rpartition("+")
-    last = last.upper() if len(last) == 1 else last.capitalize()
-    return f"{before.capitalize()}+{last}" if before else last
+    return "+".join(part.capitalize() for part in key.split("+"))
 
 
 BINDINGS = (
     Binding(Command.PAUSE, ("space",), "pause, or go on"),
-    Binding(Command.BACK, ("left",), "a second back; paused: one sample"),
-    Binding(Command.FORWARD, ("right",), "a second on; paused: one sample"),
+    Binding(Command.BACK, ("left",), "1 s back; paused: 1 sample"),
+    Binding(Command.FORWARD, ("right",), "1 s on; paused: 1 sample"),
     Binding(Command.TO_START, ("home",), "to the start"),
     Binding(Command.TO_END, ("end",), "to the end so far"),
     Binding(Command.SLOWER, ("-",), "half as fast"),
@@ -85,11 +83,11 @@ BINDINGS = (
     Binding(Command.PAN_UP, ("shift+up",), "look up"),
     Binding(Command.PAN_DOWN, ("shift+down",), "look down"),
     Binding(Command.WHOLE, ("w",), "the whole rig"),
-    Binding(Command.FOLLOW, ("f",), "follow the next pusher (or click)"),
-    Binding(Command.LET_GO, ("shift+f",), "follow none (or click it again)"),
+    Binding(Command.FOLLOW, ("f",), "follow the next (or click)"),
+    Binding(Command.LET_GO, ("shift+f",), "follow none (or click again)"),
     Binding(Command.TRAILS, ("t",), "trails: none, short, long"),
     Binding(Command.LAP, ("l",), "planned lap"),
-    Binding(Command.YAW, ("y",), "the block's yaw drawn 1, 5, 20 fold"),
+    Binding(Command.YAW, ("y",), "yaw drawn 1, 5, 20 fold"),
     Binding(Command.POINT_WORLD, ("d",), "point world beside it"),
     Binding(Command.NEXT_SEED, ("n",), "next seed, from the start"),
     Binding(Command.PREVIOUS_SEED, ("b",), "previous seed, from the start"),

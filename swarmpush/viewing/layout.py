@@ -9,6 +9,7 @@ from swarmpush.viewing.commands import BINDINGS, Binding, Command
 
 LEAST_SIZE = (640, 400)  # px; a smaller window is laid out as if it were this large
 HELP_COLUMNS = 3
+KEYS_UNITS = 6.5  # of a column of the list, for the keys
 CHARTS_SHARE = 0.27  # of the window's height
 
 
@@ -95,24 +96,28 @@ def _rigs(place: Rect, n: int, aspect: float) -> tuple[Rect, ...]:
 
 def _status_cells(place: Rect, unit: int) -> tuple[dict[Command, Rect], Rect, Rect, Rect]:
     """Cells from both ends of the status line; the chosen value takes what is left between them."""
-    gap = unit // 2
+    gap = unit // 3
     widths: list[tuple[Command | str, float]] = [
         (Command.PAUSE, 4.5),
+        ("", 0.5),
         (Command.SLOWER, 2.0),
-        ("speed", 4.5),
+        ("speed", 4.0),
         (Command.FASTER, 2.0),
+        ("", 0.5),
         (Command.PREVIOUS_SEED, 2.0),
         ("seed", 6.5),
         (Command.NEXT_SEED, 2.0),
+        ("", 0.5),
         (Command.PREVIOUS_PARAMETER, 2.0),
         (Command.NEXT_PARAMETER, 2.0),
         ("value", 0.0),
         (Command.LOWER, 2.0),
         (Command.RAISE, 2.0),
+        ("", 0.5),
         (Command.HELP, 4.0),
     ]
     taken = sum(round(units * unit) for _, units in widths) + gap * (len(widths) - 1)
-    x, cells, texts = place.x, {}, {}
+    x, cells, texts = place.x, dict[Command, Rect](), dict[str, Rect]()
     for name, units in widths:
         cell = Rect(x, place.y, round(units * unit) or place.width - taken, place.height)
         if isinstance(name, Command):

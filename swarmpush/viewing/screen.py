@@ -5,11 +5,13 @@ from __future__ import annotations
 from collections.abc import Callable
 from typing import Literal
 
+import numpy as np
+
 from swarmpush.reporting.palette import AXIS, BLUE, INK, PALE, PAPER
 from swarmpush.viewing.commands import Command
 from swarmpush.viewing.controls import Controls, speed_words
 from swarmpush.viewing.film import Film
-from swarmpush.viewing.layout import Layout, Rect
+from swarmpush.viewing.layout import KEYS_UNITS, Layout, Rect
 from swarmpush.viewing.marks import Anchor, Mark, Polygon, Text, box
 from swarmpush.viewing.parameters import parameters
 
@@ -22,14 +24,17 @@ SIDE_UNITS = 24  # of the message's line, for what is said about the film
 LABELS = {
     Command.SLOWER: "-",
     Command.FASTER: "+",
-    Command.PREVIOUS_SEED: "<",
-    Command.NEXT_SEED: ">",
-    Command.PREVIOUS_PARAMETER: "<",
-    Command.NEXT_PARAMETER: ">",
     Command.LOWER: "-",
     Command.RAISE: "+",
     Command.HELP: "Help",
 }
+ARROWS = {  # the way they point, x to the right, y downward
+    Command.PREVIOUS_SEED: (-1, 0),
+    Command.NEXT_SEED: (1, 0),
+    Command.PREVIOUS_PARAMETER: (0, -1),
+    Command.NEXT_PARAMETER: (0, 1),
+}
+ARROW_SIZE = 0.35  # of the unit, from its middle to its tip
 
 
 def line(text: str, place: Rect, size: float, measure: Measure, colour: str = INK, align: Align = "left") -> list[Text]:
@@ -50,16 +55,26 @@ def status(controls: Controls, film: Film, layout: Layout, measure: Measure) -> 
     """The status line: what can be clicked, and the values between."""
     unit, marks = layout.unit, list[Mark]()
     for command, cell in layout.cells.items():
-        label = LABELS.get(command) or ("Go" if controls.is_paused else "Pause")
         fill = PALE if command is Command.HELP and controls.shows_help else BUTTON
         marks.append(Polygon(box(cell), fill, AXIS, max(1.0, unit / 14)))
-        marks += line(label, cell.inset(unit // 6), unit, measure, align="middle")
+        if command in ARROWS:
+            marks.append(_arrow(cell, *ARROWS[command], ARROW_SIZE * unit))
+        else:
+            label = LABELS.get(command) or ("Go" if controls.is_paused else "Pause")
+            marks += line(label, cell.inset(unit // 6), unit, measure, align="middle")
     scenario = controls.wanted.scenario if controls.wanted else film.scenario
     seed = controls.wanted.seed if controls.wanted else film.seed
     marks += line(speed_words(controls.speed), layout.speed_cell, unit, measure, align="middle")
     marks += line(f"seed {seed}", layout.seed_cell, unit, measure, align="middle")
     marks += line(parameters(scenario)[controls.parameter].words(scenario), layout.value_cell, unit, measure)
     return marks
+
+
+def _arrow(cell: Rect, right: int, down: int, size: float) -> Polygon:
+    """A triangle in the middle of a cell."""
+    ahead, aside = np.array([right, down]), np.array([down, right])
+    middle = np.array([cell.x + cell.width / 2, cell.y + cell.height / 2])
+    return Polygon(middle + size * np.array([ahead, aside - ahead, -aside - ahead]), INK)
 
 
 def message(said: str, aside: str, layout: Layout, measure: Measure) -> list[Mark]:
@@ -79,7 +94,7 @@ def help_list(layout: Layout, measure: Measure) -> list[Mark]:
     head = Rect(sheet.x + unit, sheet.y, sheet.width - 2 * unit, 3 * unit)
     marks += line("Keys; each line can be clicked as well", head, 1.15 * unit, measure)
     for binding, cell in layout.help_cells:
-        keys = cell._replace(width=7 * unit)
+        keys = cell._replace(width=round(KEYS_UNITS * unit))
         words = Rect(keys.x + keys.width, cell.y, cell.width - keys.width - unit // 2, cell.height)
         marks += line(binding.key_words, keys._replace(width=keys.width - unit // 2), 0.9 * unit, measure, BLUE)
         marks += line(binding.words, words, 0.9 * unit, measure)
