@@ -287,9 +287,7 @@ class Window:
         surface.fill(PAPER)
         self._pieces = self._picture(self.layout)
         for place, marks in self._pieces:
-            surface.set_clip(place)
-            paint(surface, marks, (place.x, place.y))
-        surface.set_clip(None)
+            paint(surface, marks, (place.x, place.y), (place.width, place.height))
 
     def _picture(self, layout: Layout) -> list[tuple[Rect, list[Mark]]]:
         """What is drawn where; places of marks count from the corners of their rectangles."""
@@ -297,10 +295,12 @@ class Window:
         window = Rect(0, 0, layout.width, layout.height)
         if c.shows_help:
             return [(window, help_list(layout, _width))]
-        shown = [(film, layout.rigs[0])]
+        shown = [film]
         if c.has_point_world and self._point and self._point.done():
-            shown.append((self._point.result(), layout.rigs[-1]))
-        rigs = [(rig, scene(other, c.t_s, state.view_of(c, other, rig))) for other, rig in shown]
+            shown.append(self._point.result())
+        rigs = [
+            (layout.rigs[k], scene(other, c.t_s, state.view_of(c, other, layout, k))) for k, other in enumerate(shown)
+        ]
         chart, bar = (place._replace(x=0, y=0) for place in (layout.charts, layout.timeline))
         said = c.message or "H lists all keys and what they do."
         return [

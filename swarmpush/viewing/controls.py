@@ -16,7 +16,7 @@ from swarmpush.reporting.wording import CAUSES
 from swarmpush.scenario import Scenario
 from swarmpush.viewing.commands import BY_KEY, Command
 from swarmpush.viewing.film import Film
-from swarmpush.viewing.layout import Layout, Rect
+from swarmpush.viewing.layout import Layout
 from swarmpush.viewing.parameters import parameters, stepped
 from swarmpush.viewing.scene import View, whole
 
@@ -148,10 +148,10 @@ def start(s: Scenario, duration_s: float | None = None, speed: float | None = No
     return Controls(speed=min(SPEEDS, key=lambda known: abs(math.log(known / max(wanted, SPEEDS[0])))))
 
 
-def view_of(controls: Controls, film: Film, rig: Rect) -> View:
-    """What part of a rig the picture shows, and how."""
+def view_of(controls: Controls, film: Film, layout: Layout, rig: int = 0) -> View:
+    """What part of a rig one of the window's pictures shows, and how."""
     s = film.scenario
-    base = whole(s, rig.width, rig.height)
+    base = _whole(film, layout, rig)
     centre = controls.centre_m or base.centre
     if controls.follow is not None and controls.zoom > 1.0:
         x, y, _ = film.frame(controls.t_s).pushers[controls.follow]
@@ -166,6 +166,11 @@ def view_of(controls: Controls, film: Film, rig: Rect) -> View:
         flash_s=FLASH_S * controls.speed,
         picked=controls.follow,
     )
+
+
+def _whole(film: Film, layout: Layout, rig: int) -> View:
+    place = layout.rigs[rig]
+    return whole(film.scenario, place.width, place.height, type_px=layout.unit)
 
 
 def passed(controls: Controls, elapsed_s: float) -> float:
@@ -307,13 +312,13 @@ def _look(c: Controls, command: Command, film: Film, layout: Layout) -> Controls
         case Command.ZOOM_OUT:
             return _zoom(c, 1.0 / ZOOM_STEP, film, layout)
         case Command.PAN_LEFT:
-            return _pan(c, PAN_SHARE * layout.rigs[0].width, 0.0, film, layout.rigs[0])
+            return _pan(c, PAN_SHARE * layout.rigs[0].width, 0.0, film, layout)
         case Command.PAN_RIGHT:
-            return _pan(c, -PAN_SHARE * layout.rigs[0].width, 0.0, film, layout.rigs[0])
+            return _pan(c, -PAN_SHARE * layout.rigs[0].width, 0.0, film, layout)
         case Command.PAN_UP:
-            return _pan(c, 0.0, PAN_SHARE * layout.rigs[0].height, film, layout.rigs[0])
+            return _pan(c, 0.0, PAN_SHARE * layout.rigs[0].height, film, layout)
         case Command.PAN_DOWN:
-            return _pan(c, 0.0, -PAN_SHARE * layout.rigs[0].height, film, layout.rigs[0])
+            return _pan(c, 0.0, -PAN_SHARE * layout.rigs[0].height, film, layout)
     raise ValueError(command)
 
 
@@ -394,16 +399,12 @@ def _rig_at(x: float, y: float, layout: Layout) -> int | None:
 def _zoom(c: Controls, factor: float, film: Film, layout: Layout) -> Controls:
     """Zoom about the pointer, or about the middle when it is elsewhere."""
     found = _rig_at(*c.pointer, layout) if c.pointer else None
-    rig = layout.rigs[found or 0]
-    most = (
-        LARGEST_PUSHER
-        * rig.height
-        / (whole(film.scenario, rig.width, rig.height).px_per_m * film.scenario.pushers.radius)
-    )
+    rig, pushers = layout.rigs[found or 0], film.scenario.pushers
+    most = LARGEST_PUSHER * rig.height / (_whole(film, layout, found or 0).px_per_m * pushers.radius)
     zoom = min(max(c.zoom * factor, LEAST_ZOOM), max(most, 1.0))
     if abs(zoom - 1.0) < 1e-9:  # what repeated steps leave of 1
         zoom = 1.0
-    before, zoomed = view_of(c, film, rig), replace(c, zoom=zoom)
+    before, zoomed = view_of(c, film, layout, found or 0), replace(c, zoom=zoom)
     if c.pointer is None or found is None or (c.follow is not None and zoom > 1.0):
         return zoomed
     x, y = c.pointer[0] - rig.x, c.pointer[1] - rig.y
@@ -412,9 +413,9 @@ def _zoom(c: Controls, factor: float, film: Film, layout: Layout) -> Controls:
     return replace(zoomed, centre_m=_near_channel(centre, film.scenario))
 
 
-def _pan(c: Controls, dx: float, dy: float, film: Film, rig: Rect) -> Controls:
+def _pan(c: Controls, dx: float, dy: float, film: Film, layout: Layout, rig: int = 0) -> Controls:
     """Move the picture by some pixels; a pusher that is followed is let go."""
-    view = view_of(c, film, rig)
+    view = view_of(c, film, layout, rig)
     zero, moved = view.to_m(0.0, 0.0), view.to_m(dx, dy)
     centre = (view.centre[0] - float(moved[0] - zero[0]), view.centre[1] - float(moved[1] - zero[1]))
     return replace(c, centre_m=_near_channel(centre, film.scenario), follow=None if c.zoom > 1.0 else c.follow)
@@ -433,13 +434,13 @@ def _followed(c: Controls, pusher: int) -> Controls:
 def _let_go(c: Controls, film: Film, layout: Layout) -> Controls:
     if c.follow is None:
         return c
-    centre = view_of(c, film, layout.rigs[0]).centre if c.zoom > 1.0 else c.centre_m
+    centre = view_of(c, film, layout).centre if c.zoom > 1.0 else c.centre_m
     return replace(c, follow=None, centre_m=centre, message="No pusher is followed.")
 
 
-def _pick(c: Controls, x: float, y: float, film: Film, rig: Rect, layout: Layout) -> Controls:
+def _pick(c: Controls, x: float, y: float, film: Film, layout: Layout) -> Controls:
     """Follow the pusher under the pointer, or let go of it."""
-    view = view_of(c, film, rig)
+    view, rig = view_of(c, film, layout), layout.rigs[0]
     places = film.frame(c.t_s).pushers
     px, py = view.to_px(places[:, 0], places[:, 1])
     away = np.hypot(px - (x - rig.x), py - (y - rig.y))
@@ -476,14 +477,14 @@ def _move(c: Controls, x: float, y: float, film: Film, layout: Layout) -> Contro
     if not hold.has_moved and math.dist(hold.began, (x, y)) <= STILL_PX:
         return c
     c = replace(c, hold=replace(hold, last=(x, y), has_moved=True))
-    return _pan(c, x - hold.last[0], y - hold.last[1], film, layout.rigs[min(hold.rig, len(layout.rigs) - 1)])
+    return _pan(c, x - hold.last[0], y - hold.last[1], film, layout, min(hold.rig, len(layout.rigs) - 1))
 
 
 def _release(c: Controls, x: float, y: float, film: Film, layout: Layout) -> Controls:
     hold, c = c.hold, replace(c, hold=None)
     if hold is None or hold.what != "rig" or hold.has_moved or hold.rig > 0:
         return c
-    return _pick(c, x, y, film, layout.rigs[0], layout)
+    return _pick(c, x, y, film, layout)
 
 
 def _scrub(c: Controls, x: float, film: Film, layout: Layout) -> Controls:

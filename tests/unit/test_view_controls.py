@@ -221,10 +221,10 @@ def test_wheel_zooms_about_the_pointer(film):
     rig, at = LAYOUT.rigs[0], (400.0, 150.0)
     for notches in (1.0, -1.0, 3.0):
         controls = Controls(zoom=2.0, centre_m=(0.5 * film.scenario.channel.length, 0.5 * film.scenario.channel.width))
-        before = view_of(controls, film, rig)
+        before = view_of(controls, film, LAYOUT)
         place = before.to_m(at[0] - rig.x, at[1] - rig.y)
         controls, action = handle(controls, Wheel(*at, notches), film, LAYOUT)
-        view = view_of(controls, film, rig)
+        view = view_of(controls, film, LAYOUT)
         assert action is None
         assert view.px_per_m == pytest.approx(before.px_per_m * state.ZOOM_STEP**notches)
         np.testing.assert_allclose(view.to_px(*place), (at[0] - rig.x, at[1] - rig.y), atol=ROUNDING_PX)
@@ -242,7 +242,7 @@ def test_zoom_keys_act_about_the_pointer_too(film):
 def test_zoom_has_limits_and_comes_back_to_the_whole(film):
     near, far = after(Controls(), film, *["z"] * 60), after(Controls(), film, *["x"] * 60)
     rig, s = LAYOUT.rigs[0], film.scenario
-    radius_px = view_of(near, film, rig).px_per_m * s.pushers.radius
+    radius_px = view_of(near, film, LAYOUT).px_per_m * s.pushers.radius
     assert radius_px == pytest.approx(state.LARGEST_PUSHER * rig.height)
     assert far.zoom == state.LEAST_ZOOM
     assert after(Controls(), film, "z", "z", "x", "x").zoom == 1.0
@@ -251,19 +251,19 @@ def test_zoom_has_limits_and_comes_back_to_the_whole(film):
 
 
 def test_drag_moves_the_picture_with_the_pointer(film):
-    rig, controls = LAYOUT.rigs[0], Controls(zoom=3.0)
-    before = view_of(controls, film, rig)
+    controls = Controls(zoom=3.0)
+    before = view_of(controls, film, LAYOUT)
     grabbed = before.to_m(500.0, 200.0)
     for event in (PointerDown(500, 200), PointerMove(520, 190), PointerMove(560, 180), PointerUp(560, 180)):
         controls, _ = handle(controls, event, film, LAYOUT)
-    np.testing.assert_allclose(view_of(controls, film, rig).to_px(*grabbed), (560.0, 180.0), atol=ROUNDING_PX)
+    np.testing.assert_allclose(view_of(controls, film, LAYOUT).to_px(*grabbed), (560.0, 180.0), atol=ROUNDING_PX)
     assert controls.hold is None
     still, _ = handle(controls, PointerMove(100, 100), film, LAYOUT)
     assert still.centre_m == controls.centre_m
 
 
 def test_keys_pan_and_the_channel_is_never_lost(film):
-    s, middle = film.scenario, view_of(Controls(), film, LAYOUT.rigs[0]).centre
+    s, middle = film.scenario, view_of(Controls(), film, LAYOUT).centre
     assert after(Controls(zoom=2.0), film, "shift+right").centre_m[0] > middle[0]
     assert after(Controls(zoom=2.0), film, "shift+left").centre_m[0] < middle[0]
     assert after(Controls(zoom=2.0), film, "shift+up").centre_m[1] > middle[1]
@@ -275,14 +275,14 @@ def test_keys_pan_and_the_channel_is_never_lost(film):
 def test_a_click_on_a_pusher_follows_it_and_another_lets_go(film):
     rig, controls = LAYOUT.rigs[0], Controls(t_s=7.0, is_paused=True)
     x, y, _ = film.frame(7.0).pushers[4]
-    px, py = view_of(controls, film, rig).to_px(x, y)
+    px, py = view_of(controls, film, LAYOUT).to_px(x, y)
     click = (PointerDown(px + rig.x, py + rig.y), PointerUp(px + rig.x, py + rig.y))
     for event in click:
         controls, _ = handle(controls, event, film, LAYOUT)
     assert controls.follow == 4
-    assert view_of(controls, film, rig).picked == 4
+    assert view_of(controls, film, LAYOUT).picked == 4
     zoomed = after(controls, film, "z", "z")
-    np.testing.assert_allclose(view_of(zoomed, film, rig).centre, (x, y))
+    np.testing.assert_allclose(view_of(zoomed, film, LAYOUT).centre, (x, y))
     for event in click:
         controls, _ = handle(controls, event, film, LAYOUT)
     assert controls.follow is None
@@ -308,13 +308,12 @@ def test_pushers_are_followed_in_turn(film):
 
 
 def test_switches(film):
-    rig = LAYOUT.rigs[0]
-    trails = [view_of(after(Controls(), film, *["t"] * k), film, rig).trail_s for k in range(4)]
+    trails = [view_of(after(Controls(), film, *["t"] * k), film, LAYOUT).trail_s for k in range(4)]
     assert trails[0] == trails[3] == 0.0
     assert 0.0 < trails[1] < trails[2]
-    yaws = [view_of(after(Controls(), film, *["y"] * k), film, rig).yaw_factor for k in range(4)]
+    yaws = [view_of(after(Controls(), film, *["y"] * k), film, LAYOUT).yaw_factor for k in range(4)]
     assert yaws == [1.0, 5.0, 20.0, 1.0]
-    assert not view_of(after(Controls(), film, "l"), film, rig).has_lap
+    assert not view_of(after(Controls(), film, "l"), film, LAYOUT).has_lap
     assert after(Controls(), film, "d").has_point_world
     assert not after(Controls(), film, "d", "d").has_point_world
     assert after(Controls(), film, "h").shows_help
@@ -322,7 +321,7 @@ def test_switches(film):
 
 
 def test_strikes_are_shown_for_the_same_time_on_the_clock_at_any_speed(film):
-    views = [view_of(Controls(speed=speed), film, LAYOUT.rigs[0]) for speed in (0.125, 64.0)]
+    views = [view_of(Controls(speed=speed), film, LAYOUT) for speed in (0.125, 64.0)]
     assert [view.flash_s for view in views] == [0.05, 25.6]
 
 
