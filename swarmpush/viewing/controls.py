@@ -31,6 +31,7 @@ PAN_SHARE = 0.15  # of the picture
 NEAR_PX = 8.0  # from a pusher's outline, for a click to mean it
 STILL_PX = 4.0  # of a pointer between press and release that meant a click
 MAX_SEED = 2**62
+PREPARING = "Working out the plan and the start ..."
 
 
 @dataclass(frozen=True)
@@ -246,7 +247,7 @@ def perform(controls: Controls, command: Command, film: Film, layout: Layout) ->
 
 
 def _wanting(c: Controls, run: Restart) -> tuple[Controls, Restart]:
-    return replace(c, wanted=run, message="Working out the plan and the start ..."), run
+    return replace(c, wanted=run, message=PREPARING), run
 
 
 def begun(controls: Controls, old: Film, new: Film) -> Controls:
