@@ -185,11 +185,12 @@ class Window:
         """Take over what was prepared meanwhile."""
         if self._next and self._next.done():
             prepared, self._next = self._next, None
-            if error := prepared.exception():
-                sentence = f"Not changed. {error}"
-                self.controls = replace(self.controls, wanted=None, message=sentence)
+            try:
+                new = prepared.result()
+            except ValueError as error:
+                self.controls = replace(self.controls, wanted=None, message=f"Not changed. {error}")
             else:
-                old, self.film, self._point = self.film, prepared.result(), None
+                old, self.film, self._point = self.film, new, None
                 self.controls = state.begun(self.controls, old, self.film)
                 self._name()
         if self.controls.has_point_world and self._point is None:
