@@ -212,13 +212,14 @@ class Window:
 
     @property
     def texts(self) -> list[tuple[str, Rect]]:
-        """Each text of the last picture with the rectangle it fills."""
-        return [
-            (mark.text, _text_box(mark, place))
+        """Each text of the last picture with the rectangle it fills, as far as there is something of it to be seen."""
+        boxes = [
+            (mark.text, place, _text_box(mark, place))
             for place, marks in self._pieces
             for mark in marks
             if isinstance(mark, Text)
         ]
+        return [(text, box) for text, place, box in boxes if _overlap(place, box)]
 
     def draw(self) -> None:
         """Draw everything."""
@@ -268,6 +269,10 @@ def _text_box(mark: Text, place: Rect) -> Rect:
     x = mark.x - (width if "e" in mark.anchor else 0 if "w" in mark.anchor else width / 2)
     y = mark.y - (height if "s" in mark.anchor else 0 if "n" in mark.anchor else height / 2)
     return Rect(round(place.x + x), round(place.y + y), width, height)
+
+
+def _overlap(a: Rect, b: Rect) -> bool:
+    return a.x < b.x + b.width and b.x < a.x + a.width and a.y < b.y + b.height and b.y < a.y + a.height
 
 
 def translated(event: pygame.event.Event) -> Event | None:
