@@ -1,4 +1,4 @@
-"""What pictures are made of: shapes and texts in pixels, from the upper left corner of a picture, with their colours."""
+"""What pictures are made of: shapes and texts in pixels from a picture's upper left corner, with their colours."""
 
 from __future__ import annotations
 

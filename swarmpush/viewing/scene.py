@@ -56,7 +56,9 @@ UNKNOWN_STATE = -1
 TRAIL_POINTS = 48  # of one pusher's trail; what lies between them is hardly a pixel
 FADES = 4  # steps in which a strike fades
 LARGEST = 0.95  # quantile of the impulses so far that counts as a large one
-LEAN_ROOM = 6.0  # by how much leaning's impulse may exceed what the key's size stands for before impacts are drawn smaller
+LEAN_ROOM = (
+    6.0  # by how much leaning's impulse may exceed what the key's size stands for before impacts are drawn smaller
+)
 STRIKE_SIZE = 0.62  # of a large strike's disc, radius over type size
 SYMBOL_FROM = 5.0  # px: half the width of the smallest pusher in which a symbol can be made out
 CORNER_POINTS = 6  # of a bar's rounded corner
@@ -154,10 +156,10 @@ def scene(film: Film, t_s: float, view: View) -> list[Mark]:
     unit_Ns = large_strike_Ns(film)
     marks = [
         *_channel(film.scenario, view),
-        *_goal(film.scenario, view),
         *(_trails(film, frame.t_s, view) if view.trail_s > 0.0 else ()),
         *(_lap(film, float(frame.blocks[0, 0] - rests[0, 0]), view) if view.has_lap else ()),
         *_blocks(film.scenario, rests, frame.blocks, view),
+        *_goal(film.scenario, view),
         *_crew(film.scenario, frame, view),
         *(_strikes(film, frame, rests, unit_Ns, view) if unit_Ns else ()),
         *_strips(film, frame, unit_Ns, view),
@@ -166,7 +168,7 @@ def scene(film: Film, t_s: float, view: View) -> list[Mark]:
     return marks
 
 
-# ---- the rig ------------------------------------------------------------------------------------------------------------
+# ---- the rig --------------------------------------------------------------------------------------------------------
 
 
 def _edge(view: View) -> float:
@@ -205,9 +207,12 @@ def _goal(s: Scenario, view: View) -> list[Mark]:
     if not -letters < x < view.width + letters:
         return []
     ends = np.array([(x, max(top - 0.5 * letters, 0.0)), (x, min(bottom + 0.5 * letters, view.height))])
+    name = "goal of the rear face"
+    half = text_width(name, 0.9 * letters) / 2
+    at = min(max(x, half), max(view.width - half, half))
     return [
         *dashed(ends, 0.4 * letters, GREEN, _edge(view), BLOCK),
-        Text(x, top - 0.6 * letters, "goal of the rear face", 0.9 * letters, AXIS, "s", BLOCK),
+        Text(at, top - 0.6 * letters, name, 0.9 * letters, AXIS, "s", BLOCK),
     ]
 
 
@@ -279,7 +284,7 @@ def _trails(film: Film, t_s: float, view: View) -> list[Mark]:
     ]
 
 
-# ---- the crew -----------------------------------------------------------------------------------------------------------
+# ---- the crew -------------------------------------------------------------------------------------------------------
 
 
 def _crew(s: Scenario, frame: Frame, view: View) -> list[Mark]:
@@ -288,11 +293,13 @@ def _crew(s: Scenario, frame: Frame, view: View) -> list[Mark]:
     headings = -frame.pushers[:, 2]  # y points down in pictures
     reach = p.reach * view.px_per_m + 2 * view.letters
     seen = ((places > -reach) & (places < np.array([view.width, view.height]) + reach)).all(axis=1)
+    scale = view.px_per_m
+    body = (max(p.radius * scale, 1.5), p.trunk / 2 * scale, p.nose / 2 * scale)
     marks: list[Mark] = []
     for k in (UNKNOWN_STATE, *range(len(STATES))):
         chosen = np.flatnonzero(seen & (frame.states == k))
         if len(chosen):
-            marks += _alike(s, view.px_per_m, k, places[chosen], headings[chosen], 0.75 * _edge(view))
+            marks += _alike(body, k, places[chosen], headings[chosen], 0.75 * _edge(view))
     if view.picked is not None and view.picked < len(places):
         x, y = places[view.picked]
         radius = 1.25 * p.reach * view.px_per_m + 2 * _edge(view)
@@ -301,15 +308,18 @@ def _crew(s: Scenario, frame: Frame, view: View) -> list[Mark]:
 
 
 def _alike(
-    s: Scenario, px_per_m: float, state: int, places: FloatArray, headings: FloatArray, edge: float
+    body: tuple[float, float, float], state: int, places: FloatArray, headings: FloatArray, edge: float
 ) -> list[Mark]:
-    """Pushers in one state: outline in the state's colour, a tick ahead, and the state's symbol where there is room."""
-    p = s.pushers
-    radius = max(p.radius * px_per_m, 1.5)
-    ahead, aside = p.trunk / 2 * px_per_m, p.nose / 2 * px_per_m
+    """Pushers in one state: outline in the state's colour, a tick ahead, and the state's symbol where there is room.
+
+    Arguments:
+        body: radius, half the trunk and half the nose, px. state: see `Frame`. places: (k, 2) px. headings: (k,) rad,
+            as they are drawn. edge: width of outlines, px.
+    """
+    radius, ahead, aside = body
     fill, outline, ink = _colours(state)
     marks: list[Mark]
-    if p.is_disc:
+    if ahead == aside == 0.0:
         marks = [Circle(x, y, radius, fill, outline, edge, CREW) for x, y in places.tolist()]
     else:
         shape = _rounded(ahead, aside, radius)
@@ -366,7 +376,7 @@ def _rounded(ahead: float, aside: float, radius: float) -> FloatArray:
     return np.asarray(corners + radius * np.column_stack([np.cos(angles), np.sin(angles)]))
 
 
-# ---- strikes ------------------------------------------------------------------------------------------------------------
+# ---- strikes --------------------------------------------------------------------------------------------------------
 
 
 def large_strike_Ns(film: Film) -> float:
@@ -399,9 +409,7 @@ def _strikes(film: Film, frame: Frame, rests: FloatArray, large_Ns: float, view:
     strikes = film.strikes(frame.t_s - view.flash_s, frame.t_s)
     if not len(strikes):
         return []
-    places = view.points(
-        _placed(_on_rear_face(film.scenario, film, strikes, rests), frame.blocks[0], view)
-    )
+    places = view.points(_placed(_on_rear_face(film.scenario, film, strikes, rests), frame.blocks[0], view))
     ages = (frame.t_s - strikes["t_on_s"].to_numpy()) / view.flash_s
     impacts, leans = (
         strike_radius(strikes[column].to_numpy(), large_Ns, view.letters) for column in ("impact_Ns", "lean_Ns")
@@ -425,7 +433,7 @@ def _on_rear_face(s: Scenario, film: Film, strikes: pd.DataFrame, rests: FloatAr
 
 
 def strike_marks(x: float, y: float, impact: float, lean: float, letters: float, share: float = 1.0) -> list[Mark]:
-    """A strike at a place of the picture, by the radii of its impact and its leaning, faded to a share of its colour."""
+    """A strike at a place of the picture, by the radii of its impact and its leaning, with a share of its colour."""
     half = math.sqrt(math.pi) / 2 * lean
     marks: list[Mark] = []
     if half > 0.0:
@@ -443,7 +451,7 @@ def faded(colour: str, share: float) -> str:
     return "#" + "".join(f"{round(255 + share * (part - 255)):02x}" for part in parts)
 
 
-# ---- what stands round the rig ------------------------------------------------------------------------------------------
+# ---- what stands round the rig --------------------------------------------------------------------------------------
 
 
 def _strips(film: Film, frame: Frame, large_Ns: float, view: View) -> list[Mark]:
@@ -489,9 +497,9 @@ def _scale_bar(view: View) -> tuple[list[Mark], float]:
     text = for_people(length_m, "m")
     right, width = view.width - 0.8 * letters, length_m * view.px_per_m
     left, tick = right - width, 0.35 * letters
-    points = np.array(
-        [(left, middle - tick), (left, middle), (right, middle), (right, middle - tick)]
-    ) + np.array([0.0, 0.5 * tick])
+    points = np.array([(left, middle - tick), (left, middle), (right, middle), (right, middle - tick)]) + np.array(
+        [0.0, 0.5 * tick]
+    )
     edge = 1.3 * _edge(view)
     marks: list[Mark] = [Line(part, INK, edge, LETTERS) for part in (points[:2], points[1:3], points[2:])]
     marks.append(Text(left - 0.5 * letters, middle, text, letters, INK, "e", LETTERS))
@@ -520,14 +528,9 @@ def _key(film: Film, frame: Frame, large_Ns: float, view: View, top: float) -> l
             marks.append(Line(np.array([(at - 0.5 * letters, y), (at + 0.6 * letters, y)]), PLANNED, 1.3 * _edge(view)))
         elif what != "size":
             state = STATES.index(what) if what else UNKNOWN_STATE
-            marks += _sample(film.scenario, state, at, y, view)
+            body = (0.55 * letters, 0.0, 0.0)
+            marks += _alike(body, state, np.array([(at, y)]), np.zeros(1), 0.75 * _edge(view))
     return [mark._replace(z=LETTERS) for mark in marks]
-
-
-def _sample(s: Scenario, state: int, x: float, y: float, view: View) -> list[Mark]:
-    """A pusher in a state, for the key: as large as its line allows."""
-    scale = 0.55 * view.letters / max(s.pushers.radius + s.pushers.nose / 2, 0.75 * s.pushers.reach)
-    return _alike(s, scale, state, np.array([(x, y)]), np.zeros(1), 0.75 * _edge(view))
 
 
 def _flow(texts: list[str], width: float, letters: float) -> list[tuple[float, float]]:
@@ -536,7 +539,7 @@ def _flow(texts: list[str], width: float, letters: float) -> list[tuple[float, f
     x, row = 0.6 * letters, 0.0
     for text in texts:
         room = (1.5 if not text.startswith("this size") else 0.0) * letters + text_width(text, letters)
-        if x + room > width and x > letters:
+        if x > letters and (x + room > width or text == "impact"):  # what tells of strikes stays together
             x, row = 0.6 * letters, row + 1.5
         places.append((x, row))
         x += room + 1.0 * letters

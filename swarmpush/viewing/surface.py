@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import os
 from collections.abc import Iterable
 from functools import lru_cache
@@ -15,7 +16,9 @@ os.environ.setdefault("PYGAME_HIDE_SUPPORT_PROMPT", "1")  # it would stand betwe
 import pygame
 
 SUBPIXELS = 4  # places within a pixel at which discs are kept, so that slow ones do not jerk
-THIN = 1.6  # px: up to here a line is one smooth line
+THIN = 1.3  # px: up to here a line is one smooth line
+SMOOTH = 4.0  # px: up to here it is several side by side
+CENTRES = 0.5  # px: pygame's smooth lines take places from the middle of the first pixel
 FEW_POINTS = 40  # a line with more is drawn as one band
 DEFAULT_FONT_SHARE = 0.6875  # by which pygame draws its own font smaller than asked for
 
@@ -57,10 +60,10 @@ def _polygon(surface: pygame.Surface, mark: Polygon, offset: tuple[float, float]
             corners = points.tolist()
             pygame.draw.polygon(surface, mark.fill, corners)
             if mark.edge is None:
-                pygame.draw.aalines(surface, mark.fill, True, corners)
+                pygame.draw.aalines(surface, mark.fill, True, (points - CENTRES).tolist())
     if mark.edge is not None:
         if mark.width <= THIN:
-            pygame.draw.aalines(surface, mark.edge, True, points.tolist())
+            pygame.draw.aalines(surface, mark.edge, True, (points - CENTRES).tolist())
         else:
             _line(surface, np.vstack([points, points[:1]]), mark.edge, mark.width, is_closed=True)
 
@@ -73,11 +76,9 @@ def _is_box(points: FloatArray) -> bool:
     return bool(b == d and c == e and f == h and a == g)
 
 
-def _line(
-    surface: pygame.Surface, points: FloatArray, colour: str, width: float, *, is_closed: bool = False
-) -> None:
+def _line(surface: pygame.Surface, points: FloatArray, colour: str, width: float, *, is_closed: bool = False) -> None:
     if width <= THIN:
-        pygame.draw.aalines(surface, colour, False, points.tolist())
+        pygame.draw.aalines(surface, colour, False, (points - CENTRES).tolist())
         return
     ways = np.diff(points, axis=0)
     lengths = np.hypot(ways[:, 0], ways[:, 1])
@@ -97,15 +98,21 @@ def _line(
             high = np.maximum(a, b) + abs(n)
             extent = np.maximum(np.rint(high - low), 1.0)
             surface.fill(colour, pygame.Rect(*np.rint(low).tolist(), *extent.tolist()))
+        elif width <= SMOOTH:
+            for share in np.linspace(-1.0, 1.0, math.ceil(width)) * (1.0 - 1.0 / width):
+                pygame.draw.aaline(surface, colour, a + share * n - CENTRES, b + share * n - CENTRES)
         else:
+            n *= 1.0 - 1.0 / width  # the smooth edge adds half a pixel on either side
             _filled(surface, np.array([a + n, b + n, b - n, a - n]), colour)
+    if width <= SMOOTH:
+        return
     joints = points[:-1] if is_closed else points[1:-1]
     for x, y in joints.tolist():
         _circle(surface, Circle(x, y, width / 2, colour), (0.0, 0.0))
 
 
 def _filled(surface: pygame.Surface, points: FloatArray, colour: str) -> None:
-    corners = points.tolist()
+    corners = (points - CENTRES).tolist()
     pygame.draw.polygon(surface, colour, corners)
     pygame.draw.aalines(surface, colour, True, corners)
 
