@@ -13,6 +13,7 @@ import numpy as np
 from swarmpush.dynamics.states import STATES
 from swarmpush.quantities import for_people
 from swarmpush.reporting.palette import AXIS, GREEN, INK, MEASURED, PALE, PLANNED, QUIET, STATE_COLOURS
+from swarmpush.reporting.wording import TELLS_LITTLE
 from swarmpush.viewing.film import Film
 from swarmpush.viewing.marks import (
     FloatArray,
@@ -36,12 +37,13 @@ GROUND, CURVE, LETTERS, CURSOR = range(4)
 
 
 class _Panel(NamedTuple):
-    """One strip chart: (k,) values at the times of the series, what is planned per second, and a level with its name."""
+    """One strip chart: (k,) values at the series' times; what is planned per second, and a level, with names."""
 
     name: str
     unit: str
     values: FloatArray
     planned_per_s: float = 0.0
+    planned_name: str = "plan"
     level: float = 0.0
     level_name: str = ""
     level_colour: str = GREEN
@@ -84,7 +86,7 @@ def charts_cursor(film: Film, t_s: float, place: Place, *, type_px: float | None
         value = float(np.interp(t, film.series().t_s, panel.values))
         x = plot[0] + t / span_s(film) * plot[2]
         marks.append(Line(np.array([(x, plot[1]), (x, plot[1] + plot[3])]), INK, _edge(letters), CURSOR))
-        text = for_people(value, panel.unit) if panel.unit else f"{value:.2g}"
+        text = for_people(value, panel.unit) if panel.unit else f"{value:.1f}"
         marks.append(Text(part[0] + part[2], part[1] + 0.7 * letters, text, letters, MEASURED, "e", LETTERS))
     return marks
 
@@ -94,7 +96,7 @@ def _panels(film: Film) -> tuple[_Panel, ...]:
     momentum = travel.strike_impulse_Ns * travel.strike_rate_1_s  # the rate is that of the whole crew
     needed = force.pushers_to_move
     return (
-        _Panel("block travel", "m", series.travel_m, travel.block_speed_m_s, s.goal.travel, "goal"),
+        _Panel("block travel", "m", series.travel_m, travel.block_speed_m_s, "plan", s.goal.travel, "goal"),
         _Panel(
             "pushers leaning",
             "",
@@ -103,7 +105,7 @@ def _panels(film: Film) -> tuple[_Panel, ...]:
             level_name="needed",
             level_colour=PLANNED,
         ),
-        _Panel("momentum given", "N*s", series.impulse_Ns, momentum),
+        _Panel("momentum given", "N*s", series.impulse_Ns, momentum, "planned impacts"),
     )
 
 
@@ -160,7 +162,7 @@ def _panel(film: Film, panel: _Panel, part: Place, letters: float) -> list[Mark]
         line = segment_within(start, end, (x, y), (x + width, y + height))
         if line is not None:
             marks += dashed(line, 0.5 * letters, PLANNED, 1.3 * edge, CURVE)
-            labels.append(("plan", PLANNED))
+            labels.append((panel.planned_name, PLANNED))
     if 0.0 < panel.level <= axes.top:
         marks += dashed(axes.level(panel.level), 0.25 * letters, panel.level_colour, 1.3 * edge, CURVE)
         labels.append((panel.level_name, panel.level_colour))
@@ -260,7 +262,7 @@ def timeline_ground(film: Film, place: Place, *, type_px: float | None = None) -
     times = film.strikes(-1.0, film.duration_s)["t_on_s"].to_numpy()
     columns = np.unique(np.floor(x + times / span_s(film) * width) + 0.5)
     low, tick = bar[1] + bar[3], 0.3 * bar[3]
-    marks += [Line(np.array([(at, low - tick), (at, low)]), INK, 1.0, CURVE) for at in columns]
+    marks += [Line(np.array([(at, low - tick), (at, low)]), INK, _edge(letters), CURVE) for at in columns]
     return marks + _spells(film, (x, y, width, BAR_FROM * height), letters)
 
 
@@ -302,17 +304,15 @@ def _spells(film: Film, place: Place, letters: float) -> list[Mark]:
     """What went wrong: a pointer where it first did, and its name where there is room up to the next."""
     x, y, width, height = place
     spells = film.spells()
+    spells = spells[~spells["cause"].isin(TELLS_LITTLE)]
     begins = x + spells["t_first_s"].to_numpy(dtype=np.float64) / span_s(film) * width
     small, size = min(0.85 * letters, 0.8 * height), 0.22 * height
     names = [str(cause).replace("_", " ") for cause in spells["cause"]]
     marks: list[Mark] = []
-    free = x
-    for at, name in zip(begins.tolist(), names, strict=True):
+    for at, following, name in zip(begins.tolist(), [*begins.tolist()[1:], x + width], names, strict=True):
         low = y + height
         pointer = np.array([(at, low), (at - size, low - 1.6 * size), (at + size, low - 1.6 * size)])
         marks.append(Polygon(pointer, PLANNED, z=CURVE))
-        room = text_width(name, small)
-        if at >= free and at + 1.5 * size + room <= x + width:
+        if at + 2.5 * size + text_width(name, small) <= following:
             marks.append(Text(at + 1.5 * size, y + height / 2, name, small, AXIS, "w", LETTERS))
-            free = at + 2.5 * size + room
     return marks

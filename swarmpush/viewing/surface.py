@@ -19,7 +19,6 @@ SUBPIXELS = 4  # places within a pixel at which discs are kept, so that slow one
 THIN = 1.3  # px: up to here a line is one smooth line
 SMOOTH = 4.0  # px: up to here it is several side by side
 CENTRES = 0.5  # px: pygame's smooth lines take places from the middle of the first pixel
-FEW_POINTS = 40  # a line with more is drawn as one band
 DEFAULT_FONT_SHARE = 0.6875  # by which pygame draws its own font smaller than asked for
 
 
@@ -88,9 +87,8 @@ def _line(surface: pygame.Surface, points: FloatArray, colour: str, width: float
     ways, lengths = ways[keep], lengths[keep]
     points = np.vstack([points[:-1][keep], points[-1]])
     aside = np.column_stack([-ways[:, 1], ways[:, 0]]) / lengths[:, None] * (width / 2)
-    if len(points) > FEW_POINTS:
-        at_points = np.vstack([aside[:1], (aside[1:] + aside[:-1]) / 2, aside[-1:]])
-        _filled(surface, np.vstack([points + at_points, (points - at_points)[::-1]]), colour)
+    if width <= SMOOTH and not (ways == 0.0).any(axis=1).all():
+        _side_by_side(surface, points, aside, colour, width, is_closed)
         return
     for a, b, n in zip(points[:-1], points[1:], aside, strict=True):
         if a[0] == b[0] or a[1] == b[1]:  # along the picture's sides: sharp
@@ -98,17 +96,26 @@ def _line(surface: pygame.Surface, points: FloatArray, colour: str, width: float
             high = np.maximum(a, b) + abs(n)
             extent = np.maximum(np.rint(high - low), 1.0)
             surface.fill(colour, pygame.Rect(*np.rint(low).tolist(), *extent.tolist()))
-        elif width <= SMOOTH:
-            for share in np.linspace(-1.0, 1.0, math.ceil(width)) * (1.0 - 1.0 / width):
-                pygame.draw.aaline(surface, colour, a + share * n - CENTRES, b + share * n - CENTRES)
         else:
-            n *= 1.0 - 1.0 / width  # the smooth edge adds half a pixel on either side
+            n = n * (1.0 - 1.0 / width)  # the smooth edge adds half a pixel on either side
             _filled(surface, np.array([a + n, b + n, b - n, a - n]), colour)
-    if width <= SMOOTH:
-        return
     joints = points[:-1] if is_closed else points[1:-1]
     for x, y in joints.tolist():
         _circle(surface, Circle(x, y, width / 2, colour), (0.0, 0.0))
+
+
+def _side_by_side(
+    surface: pygame.Surface, points: FloatArray, aside: FloatArray, colour: str, width: float, is_closed: bool
+) -> None:
+    """A line of a few pixels as smooth lines beside each other, which meet in full corners."""
+    first, last = (aside[-1:], aside[:1]) if is_closed else (aside[:1], aside[-1:])
+    before, after = np.vstack([first, aside]), np.vstack([aside, last])
+    middle = before + after
+    # the corner's point lies where both sides' parallels meet, but not far out where a line turns back on itself
+    bend = np.maximum((middle * middle).sum(axis=1) / (2.0 * (aside[0] @ aside[0])), 0.5)
+    corners = middle / bend[:, None]
+    for share in np.linspace(-1.0, 1.0, math.ceil(width)) * (1.0 - 1.0 / width):
+        pygame.draw.aalines(surface, colour, False, (points + share * corners - CENTRES).tolist())
 
 
 def _filled(surface: pygame.Surface, points: FloatArray, colour: str) -> None:
