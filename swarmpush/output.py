@@ -101,8 +101,12 @@ def free_folder(parent: Path, stem: str) -> Path:
 
 
 @contextmanager
-def _written_whole(path: Path) -> Iterator[Path]:
-    """A temporary file beside `path` that takes its place once it is written; nothing half-written is left."""
+def written_whole(path: Path) -> Iterator[Path]:
+    """A temporary file beside `path` that takes its place once it is written; nothing half-written is left.
+
+    Raises:
+        OutputError: when the place cannot be written.
+    """
     part: Path | None = None
     try:
         handle, name = tempfile.mkstemp(dir=path.parent, suffix=".part")
@@ -125,7 +129,7 @@ def write_text(path: Path, text: str) -> None:
     Raises:
         OutputError: when the place cannot be written.
     """
-    with _written_whole(path) as part:
+    with written_whole(path) as part:
         part.write_text(text, encoding="utf-8")
 
 
@@ -135,7 +139,7 @@ def write_bytes(path: Path, data: bytes) -> None:
     Raises:
         OutputError: when the place cannot be written.
     """
-    with _written_whole(path) as part:
+    with written_whole(path) as part:
         part.write_bytes(data)
 
 
@@ -145,5 +149,5 @@ def write_table(path: Path, table: pd.DataFrame) -> None:
     Raises:
         OutputError: when the place cannot be written.
     """
-    with _written_whole(path) as part:
+    with written_whole(path) as part:
         table.to_parquet(part, index=False)
