@@ -13,7 +13,7 @@ from swarmpush.auditing.audit import MOSTLY, Audit
 from swarmpush.auditing.statistics import Estimate
 from swarmpush.auditing.survival import SurvivalCurve
 from swarmpush.quantities import prefix_for
-from swarmpush.reporting.drawing import AXIS, BAD, GOOD, INK, MEASURED, PLANNED, QUIET
+from swarmpush.reporting.palette import AXIS, BAD, GOOD, INK, MEASURED, PLANNED, QUIET
 from swarmpush.reporting.wording import interval, number, signed
 
 MOST_BEYOND = 2.0  # lengths of the bars by which the ladder's picture is made longer to show the speed needed

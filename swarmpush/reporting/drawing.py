@@ -19,14 +19,9 @@ from matplotlib.patches import Polygon
 
 from swarmpush.geometry import block_corners, channel_corners, outward_normal, post_corners
 from swarmpush.kinematics.planning import Plan
+from swarmpush.reporting.palette import AXIS, INK, MEASURED, PALE, QUIET
 from swarmpush.scenario import Pushers, Scenario
 
-# The colours are those of M. Okabe and K. Ito, "Color Universal Design" (2008), which remain distinct with the common
-# kinds of colour blindness; greys are for what is not compared.
-ORANGE, SKY, GREEN, YELLOW = "#E69F00", "#56B4E9", "#009E73", "#F0E442"
-BLUE, VERMILION, PURPLE = "#0072B2", "#D55E00", "#CC79A7"
-PLANNED, MEASURED, QUIET, GOOD, BAD = VERMILION, BLUE, "#9aa5b1", GREEN, ORANGE
-INK, AXIS, PALE = "#22303c", "#5f6b76", "#e3e7eb"
 STYLE: dict[Any, Any] = {
     "font.family": "DejaVu Sans",
     "font.size": 9,

@@ -22,18 +22,8 @@ from swarmpush.kinematics.laps import BUDGET
 from swarmpush.kinematics.planning import Plan
 from swarmpush.kinematics.settling import ATTRACTING, NEUTRAL, REPELLING, short_name
 from swarmpush.quantities import prefix_for
-from swarmpush.reporting.drawing import (
-    AXIS,
-    GOOD,
-    INK,
-    MEASURED,
-    ORANGE,
-    PALE,
-    PLANNED,
-    PURPLE,
-    QUIET,
-    draw_rig,
-)
+from swarmpush.reporting.drawing import draw_rig
+from swarmpush.reporting.palette import AXIS, GOOD, INK, MEASURED, ORANGE, PALE, PLANNED, PURPLE, QUIET
 from swarmpush.vary import column_of, unit_at, value_at
 
 CREAM = "#fff8e6"

@@ -14,30 +14,15 @@ from matplotlib.patches import Polygon
 from matplotlib.ticker import MaxNLocator
 
 from swarmpush.dynamics.run import Run
-from swarmpush.dynamics.states import STATES
 from swarmpush.geometry import block_corners, channel_corners, post_corners
 from swarmpush.kinematics.forecast import push_force
 from swarmpush.kinematics.planning import Plan
 from swarmpush.quantities import prefix_for
-from swarmpush.reporting.drawing import (
-    BAD,
-    GOOD,
-    GREEN,
-    INK,
-    MEASURED,
-    ORANGE,
-    PLANNED,
-    QUIET,
-    VERMILION,
-    draw_block,
-    draw_rig,
-    pusher_shape,
-    turned,
-)
+from swarmpush.reporting.drawing import draw_block, draw_rig, pusher_shape, turned
+from swarmpush.reporting.palette import BAD, GOOD, INK, MEASURED, PLANNED, QUIET, STATE_COLOURS
 from swarmpush.reporting.run_words import energy_parts, state_shares
 from swarmpush.reporting.wording import STATE_WORDS
 
-STATE_COLOURS = dict(zip(STATES, ("#000000", ORANGE, GREEN, VERMILION, "#c9d1d9"), strict=True))
 BINS = 80  # of a run's time in which shares of states are averaged for the picture
 MAX_LEGS = 150  # runs from bump to bump drawn behind the lap
 

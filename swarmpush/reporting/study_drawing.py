@@ -14,7 +14,7 @@ from swarmpush.auditing.claims import ARRIVAL, MEASURES
 from swarmpush.auditing.demands import read_demand
 from swarmpush.auditing.statistics import Verdict
 from swarmpush.quantities import prefix_for
-from swarmpush.reporting.drawing import AXIS, BLUE, GREEN, INK, ORANGE, PURPLE, SKY, VERMILION
+from swarmpush.reporting.palette import AXIS, BLUE, GREEN, INK, ORANGE, PURPLE, SKY, VERMILION
 from swarmpush.studies.screening import Screening
 from swarmpush.studies.study import Axis, Value
 from swarmpush.studies.sweep import StudyResult

@@ -13,7 +13,7 @@ from commands import DONE, Outcome, assert_refused, call, contents, edited
 from matplotlib.colors import to_rgb
 from matplotlib.image import imread
 
-from swarmpush.reporting.drawing import PLANNED
+from swarmpush.reporting.palette import PLANNED
 
 NAMES = ("plan", "cycle_map", "basin_map")
 WIDTHS = "channel.width=28 cm:40 cm:4"  # the first is narrower than the block
