@@ -309,7 +309,7 @@ def _spells(film: Film, place: Place, letters: float) -> list[Mark]:
     small, size = min(0.85 * letters, 0.8 * height), 0.22 * height
     names = [str(cause).replace("_", " ") for cause in spells["cause"]]
     marks: list[Mark] = []
-    for at, following, name in zip(begins.tolist(), [*begins.tolist()[1:], x + width], names, strict=True):
+    for at, following, name in zip(begins.tolist(), [*begins.tolist(), x + width][1:], names, strict=True):
         low = y + height
         pointer = np.array([(at, low), (at - size, low - 1.6 * size), (at + size, low - 1.6 * size)])
         marks.append(Polygon(pointer, PLANNED, z=CURVE))

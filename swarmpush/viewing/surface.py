@@ -175,3 +175,8 @@ def _font(size: int) -> pygame.font.Font:
     """pygame's own font, which is the same everywhere."""
     pygame.font.init()
     return pygame.font.Font(None, round(size / DEFAULT_FONT_SHARE))
+
+
+def text_size(text: str, size: float) -> tuple[int, int]:
+    """Width and height of a text as it is drawn, px."""
+    return _font(round(size)).size(text)

@@ -16,7 +16,7 @@ from swarmpush.output import OutputError, write_bytes
 from swarmpush.reporting.palette import PAPER
 from swarmpush.viewing import controls as state
 from swarmpush.viewing.app import ViewingError
-from swarmpush.viewing.charts import strip_charts, timeline
+from swarmpush.viewing.charts import charts, timeline
 from swarmpush.viewing.commands import BY_KEY, REPEATING
 from swarmpush.viewing.controls import (
     Action,
@@ -245,8 +245,8 @@ class Window:
         said = c.message or "H lists all keys and what they do."
         return [
             *rigs,
-            (layout.charts, strip_charts(film, c.t_s, chart)),
-            (layout.timeline, timeline(film, c.t_s, bar)),
+            (layout.charts, charts(film, c.t_s, chart, type_px=layout.unit)),
+            (layout.timeline, timeline(film, c.t_s, bar, type_px=layout.unit)),
             (window, [*status(c, film, layout, _width), *message(said, self._aside(), layout, _width)]),
         ]
 
