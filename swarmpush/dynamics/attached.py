@@ -25,11 +25,11 @@ from swarmpush.dynamics.build import (
     inverse_inertia,
     new_path,
     prepare_masses,
-    step_turn,
+    rig_of,
     unit_deviates,
 )
 from swarmpush.dynamics.chipmunk import address, face_body, note_pairs, order_body, read_place
-from swarmpush.dynamics.crew import TOUCHES_BLOCK, Mode, Rig, act, new_crew
+from swarmpush.dynamics.crew import TOUCHES_BLOCK, Mode, act, new_crew
 from swarmpush.dynamics.drive import Drive
 from swarmpush.dynamics.host import Host, keep_state, lend, read_state
 from swarmpush.dynamics.ledger import (
@@ -262,28 +262,15 @@ class Crew:
         prepare_masses(units, turn_drag, dt)
         speed = drive.free_speed / u.speed
         crossing = min((outline.half_width for outline in self._outlines), default=1.0) / speed
-        turned = step_turn(drive.turn_rate * u.time, dt)
-        rig = Rig(
-            dt=dt,
-            drive_while_turning=drive.drive_while_turning,
-            turn_rate=drive.turn_rate * u.time,
-            turn_cos=math.cos(turned),
-            turn_sin=math.sin(turned),
-            bump_threshold=drive.bump_threshold / u.impulse,
-            half_arc=drive.bumper_arc / 2,
-            latency=drive.latency / u.time,
-            retry=MISSED_BUMP_RETRY * crossing,
-            missed_bumps=e.missed_bumps,
-            false_bumps=e.false_bumps * u.time,
-            diffusion=e.heading_diffusion * math.sqrt(u.time),
-            noise_steps=max(1, round(NOISE_INTERVAL * crossing / dt)),
-            heading_is_free=is_free,
-            follows=not self._faces,
+        rig = rig_of(
+            drive,
+            e,
+            u,
+            dt,
             turn_drag=turn_drag,
-            contact_arm=drive.contact_arm / u.length,
-            fade_rate=u.time / e.fade_time if e.fade_time else 0.0,
-            pull_x=0.0,
-            pull_y=0.0,
+            follows=not self._faces,
+            retry=MISSED_BUMP_RETRY * crossing,
+            noise_steps=max(1, round(NOISE_INTERVAL * crossing / dt)),
         )
         blocks = np.zeros(self._n_rows - n, dtype=BLOCK_STATE)
         blocks["entity"] = np.arange(len(blocks)) + n

@@ -12,6 +12,7 @@ from swarmpush.draws import Purpose, normal, stream_keys, uniform
 from swarmpush.dynamics.blocks import BLOCK_STATE, Ground
 from swarmpush.dynamics.chipmunk import address
 from swarmpush.dynamics.crew import Crew, Rig, new_crew
+from swarmpush.dynamics.drive import Drive
 from swarmpush.dynamics.host import BLOCK, PUSHER, WALL, Footing, HostSpace, Hull
 from swarmpush.dynamics.ledger import SERIES, SLOTS, new_ledger
 from swarmpush.dynamics.loop import Limits, Path, Task
@@ -30,7 +31,7 @@ from swarmpush.geometry import (
 )
 from swarmpush.kinematics.boundary import surface_names
 from swarmpush.program import Senses, compile_routine, in_units
-from swarmpush.scenario import Block, Pushers, Scenario, rounded_gyration_squared
+from swarmpush.scenario import Block, Errors, Pushers, Scenario, rounded_gyration_squared
 from swarmpush.starts import draw_starts
 
 MISSED_BUMP_RETRY = 4.0  # radius / free speed: a pusher that goes on pressing feels a missed bump this much later
@@ -177,10 +178,42 @@ def step_turn(turn_rate: float, dt: float) -> float:
 
 
 def _rig(s: Scenario, u: Units, steps: StepSettings) -> Rig:
-    p, e = s.pushers, s.errors
-    turned = step_turn(p.turn_rate * u.time, steps.dt_s / u.time)
+    p = s.pushers
+    rig = rig_of(
+        p,
+        s.errors,
+        u,
+        steps.dt_s / u.time,
+        turn_drag=p.turning_drag / u.turn_drag,
+        follows=not p.is_disc,
+        retry=MISSED_BUMP_RETRY,
+        noise_steps=steps.noise_steps,
+    )
+    pull_x, pull_y = (-s.gravity * math.sin(rise) / u.acceleration for rise in (s.channel.slope, s.channel.cross_slope))
+    return rig._replace(pull_x=pull_x, pull_y=pull_y)
+
+
+def rig_of(
+    p: Pushers | Drive,
+    e: Errors,
+    u: Units,
+    dt: float,
+    *,
+    turn_drag: float,
+    follows: bool,
+    retry: float,
+    noise_steps: int,
+) -> Rig:
+    """What all pushers share, on a level table; everything but p and e in engine units.
+
+    Arguments:
+        p, e: the pushers, or what drives them; their errors. dt: time step. turn_drag: of a free heading.
+        follows: whether shapes follow headings. retry: time after which a missed bump may be felt. noise_steps: steps
+            between two changes of a wandering heading.
+    """
+    turned = step_turn(p.turn_rate * u.time, dt)
     return Rig(
-        dt=steps.dt_s / u.time,
+        dt=dt,
         drive_while_turning=p.drive_while_turning,
         turn_rate=p.turn_rate * u.time,
         turn_cos=math.cos(turned),
@@ -188,18 +221,18 @@ def _rig(s: Scenario, u: Units, steps: StepSettings) -> Rig:
         bump_threshold=p.bump_threshold / u.impulse,
         half_arc=p.bumper_arc / 2,
         latency=p.latency / u.time,
-        retry=MISSED_BUMP_RETRY,
+        retry=retry,
         missed_bumps=e.missed_bumps,
         false_bumps=e.false_bumps * u.time,
         diffusion=e.heading_diffusion * math.sqrt(u.time),
-        noise_steps=steps.noise_steps,
+        noise_steps=noise_steps,
         heading_is_free=p.heading == "free",
-        follows=not p.is_disc,
-        turn_drag=p.turning_drag / u.turn_drag,
+        follows=follows,
+        turn_drag=turn_drag,
         contact_arm=p.contact_arm / u.length,
         fade_rate=u.time / e.fade_time if e.fade_time else 0.0,
-        pull_x=-s.gravity * math.sin(s.channel.slope) / u.acceleration,
-        pull_y=-s.gravity * math.sin(s.channel.cross_slope) / u.acceleration,
+        pull_x=0.0,
+        pull_y=0.0,
     )
 
 
