@@ -33,6 +33,7 @@ COLUMN = 1.5  # px: a curve has one point each
 MOST_ABOVE = 2.5  # a plan's line is shown in full up to so many times what was measured
 BAR_FROM = 0.4  # share of the time line's height above the bar, for what went wrong
 STACK = ("locked", "lost", "held at a wall", "ahead", "idle")  # what serves the purpose lies at the bottom
+WIDEST_VALUE = "48.4 mm"  # beside a panel's name
 GROUND, CURVE, LETTERS, CURSOR = range(4)
 
 
@@ -105,7 +106,7 @@ def _panels(film: Film) -> tuple[_Panel, ...]:
             level_name="needed",
             level_colour=PLANNED,
         ),
-        _Panel("momentum given", "N*s", series.impulse_Ns, momentum, "planned impacts"),
+        _Panel("momentum", "N*s", series.impulse_Ns, momentum, "plan: impacts"),
     )
 
 
@@ -166,13 +167,15 @@ def _panel(film: Film, panel: _Panel, part: Place, letters: float) -> list[Mark]
     if 0.0 < panel.level <= axes.top:
         marks += dashed(axes.level(panel.level), 0.25 * letters, panel.level_colour, 1.3 * edge, CURVE)
         labels.append((panel.level_name, panel.level_colour))
-    at = part[0] + text_width(panel.name, letters) + 0.3 * letters
+    at = part[0] + text_width(panel.name, letters) + 0.5 * letters
     for text, colour in labels:
-        marks += dashed(
-            np.array([(at, title), (at + 1.5 * letters, title)]), 0.3 * letters, colour, 1.3 * edge, LETTERS
-        )
-        marks.append(Text(at + 1.8 * letters, title, text, 0.9 * letters, AXIS, "w", LETTERS))
-        at += 2.3 * letters + text_width(text, 0.9 * letters)
+        room = 1.85 * letters + text_width(text, 0.8 * letters)
+        if at + room + text_width(WIDEST_VALUE, letters) > part[0] + part[2]:
+            break
+        sample = np.array([(at, title), (at + 1.1 * letters, title)])
+        marks += dashed(sample, 0.22 * letters, colour, 1.3 * edge, LETTERS)
+        marks.append(Text(at + 1.35 * letters, title, text, 0.8 * letters, AXIS, "w", LETTERS))
+        at += room
     marks.append(Line(_curve(film, panel, axes), MEASURED, 1.6 * edge, CURVE))
     marks.sort(key=lambda mark: mark.z)
     return marks

@@ -151,7 +151,7 @@ def _planned(
     end_s: float | None,
     speed: float,
     options: dict[str, Any],
-) -> tuple[NDArray[np.float64], Sheet]:
+) -> tuple[list[float], Sheet]:
     """Model times of the frames, and how they are divided."""
     for name, value in (("frame rate", fps), ("speed", speed)):
         if not (value > 0.0 and math.isfinite(value)):
@@ -165,12 +165,10 @@ def _planned(
     if n > MOST_FRAMES:
         raise OutputError(f"{n} frames are more than {MOST_FRAMES}; raise the speed, or choose a shorter span")
     parts = sheet(film.scenario, size, **({"flash_s": FLASH_S * speed} | options))
-    return begin_s + np.arange(n) * speed / fps, parts
+    return [begin_s + k * speed / fps for k in range(n)], parts
 
 
-def _surfaces(
-    film: Film, parts: Sheet, times: NDArray[np.float64], progress: Progress | None
-) -> Iterator[pygame.Surface]:
+def _surfaces(film: Film, parts: Sheet, times: list[float], progress: Progress | None) -> Iterator[pygame.Surface]:
     """The frames, each on the same surface, which must be used before the next."""
     import pygame
 
@@ -180,7 +178,7 @@ def _surfaces(
     ground, surface = (pygame.Surface((parts.width, parts.height), 0, 32, masks) for _ in range(2))
     ground.fill(PAPER)
     paint(ground, parts.ground(film).marks)
-    for k, t_s in enumerate(times.tolist()):
+    for k, t_s in enumerate(times):
         surface.blit(ground, (0, 0))
         for layer in parts.moving(film, t_s):
             paint(surface, layer.marks, size=layer.size)
@@ -189,12 +187,13 @@ def _surfaces(
             progress(k + 1, len(times))
 
 
-def _fifteen_bits(surface: pygame.Surface) -> NDArray[np.uint32]:
+def _fifteen_bits(surface: pygame.Surface) -> NDArray[np.int32]:
     """Five bits of red, green and blue of each pixel, (width, height)."""
     import pygame
 
-    pixels = pygame.surfarray.array2d(surface).astype(np.uint32)
-    return ((pixels >> 9) & 0x7C00) | ((pixels >> 6) & 0x3E0) | ((pixels >> 3) & 0x1F)
+    pixels = pygame.surfarray.array2d(surface)
+    bits: NDArray[np.int32] = ((pixels >> 9) & 0x7C00) | ((pixels >> 6) & 0x3E0) | ((pixels >> 3) & 0x1F)
+    return bits
 
 
 @cache

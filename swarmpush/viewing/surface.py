@@ -3,17 +3,13 @@
 from __future__ import annotations
 
 import math
-import os
 from collections.abc import Iterable
 from functools import lru_cache
 
 import numpy as np
+import pygame
 
 from swarmpush.viewing.marks import Circle, FloatArray, Line, Mark, Polygon, Text
-
-os.environ.setdefault("PYGAME_HIDE_SUPPORT_PROMPT", "1")  # it would stand between the lines of the console
-
-import pygame
 
 SUBPIXELS = 4  # places within a pixel at which discs are kept, so that slow ones do not jerk
 THIN = 1.3  # px: up to here a line is one smooth line
@@ -175,3 +171,8 @@ def _font(size: int) -> pygame.font.Font:
     """pygame's own font, which is the same everywhere."""
     pygame.font.init()
     return pygame.font.Font(None, round(size / DEFAULT_FONT_SHARE))
+
+
+def text_size(text: str, size: float) -> tuple[int, int]:
+    """Width and height of a text as it is drawn, px."""
+    return _font(round(size)).size(text)
