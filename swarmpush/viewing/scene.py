@@ -53,7 +53,7 @@ STATE_NAMES = {
 IMPACT, LEAN = BLUE, PURPLE
 GROUND, TRAIL, LAP, BLOCK, CREW, FLASH, STRIP, LETTERS = range(8)  # what lies above what
 UNKNOWN_STATE = -1
-TRAIL_POINTS = 48  # of one pusher's trail; what lies between them is hardly a pixel
+TRAIL_POINTS = (16, 48, 5000)  # of one pusher's trail, least and most, and of all trails together
 FADES = 4  # steps in which a strike fades
 LARGEST = 0.95  # quantile of the impulses so far that counts as a large one
 LEAN_ROOM = (
@@ -272,7 +272,9 @@ def _lap(film: Film, travel_m: float, view: View) -> list[Mark]:
 
 def _trails(film: Film, t_s: float, view: View) -> list[Mark]:
     places = film.trail(t_s, view.trail_s)
-    rows = np.unique(np.linspace(0, len(places) - 1, TRAIL_POINTS).round().astype(int))
+    least, most, all_trails = TRAIL_POINTS
+    n = min(most, max(least, all_trails // film.scenario.pushers.count))
+    rows = np.unique(np.linspace(0, len(places) - 1, n).round().astype(int))
     if len(rows) < 2:
         return []
     trails = view.points(places[rows]).swapaxes(0, 1)
