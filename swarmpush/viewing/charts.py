@@ -14,7 +14,7 @@ from swarmpush.dynamics.states import STATES
 from swarmpush.quantities import for_people
 from swarmpush.reporting.palette import AXIS, GREEN, INK, MEASURED, PALE, PLANNED, QUIET, STATE_COLOURS
 from swarmpush.reporting.wording import TELLS_LITTLE
-from swarmpush.viewing.film import Film
+from swarmpush.viewing.film import Film, Series
 from swarmpush.viewing.marks import (
     FloatArray,
     Line,
@@ -33,6 +33,7 @@ COLUMN = 1.5  # px: a curve has one point each
 MOST_ABOVE = 2.5  # a plan's line is shown in full up to so many times what was measured
 BAR_FROM = 0.4  # share of the time line's height above the bar, for what went wrong
 STACK = ("locked", "lost", "held at a wall", "ahead", "idle")  # what serves the purpose lies at the bottom
+WIDEST_VALUE = "48.4 mm"  # beside a panel's name
 GROUND, CURVE, LETTERS, CURSOR = range(4)
 
 
@@ -69,21 +70,22 @@ def charts(film: Film, t_s: float, place: Place, *, type_px: float | None = None
 def charts_ground(film: Film, place: Place, *, type_px: float | None = None) -> list[Mark]:
     """The strip charts without their cursors."""
     letters = type_px or _letters(place)
-    panels = _panels(film)
+    series = film.series()
     marks: list[Mark] = []
-    for panel, part in zip(panels, _parts(place, letters), strict=True):
-        marks += _panel(film, panel, part, letters)
+    for panel, part in zip(_panels(film, series), _parts(place, letters), strict=True):
+        marks += _panel(film, series.t_s, panel, part, letters)
     return marks
 
 
 def charts_cursor(film: Film, t_s: float, place: Place, *, type_px: float | None = None) -> list[Mark]:
     """The cursors of the strip charts, and the values there."""
     letters = type_px or _letters(place)
+    series = film.series()
     marks: list[Mark] = []
-    for panel, part in zip(_panels(film), _parts(place, letters), strict=True):
+    for panel, part in zip(_panels(film, series), _parts(place, letters), strict=True):
         plot = _plot(part, letters)
         t = min(max(t_s, 0.0), film.duration_s)
-        value = float(np.interp(t, film.series().t_s, panel.values))
+        value = float(np.interp(t, series.t_s, panel.values))
         x = plot[0] + t / span_s(film) * plot[2]
         marks.append(Line(np.array([(x, plot[1]), (x, plot[1] + plot[3])]), INK, _edge(letters), CURSOR))
         text = for_people(value, panel.unit) if panel.unit else f"{value:.1f}"
@@ -91,8 +93,8 @@ def charts_cursor(film: Film, t_s: float, place: Place, *, type_px: float | None
     return marks
 
 
-def _panels(film: Film) -> tuple[_Panel, ...]:
-    s, travel, force, series = film.scenario, film.plan.travel, film.plan.force, film.series()
+def _panels(film: Film, series: Series) -> tuple[_Panel, ...]:
+    s, travel, force = film.scenario, film.plan.travel, film.plan.force
     momentum = travel.strike_impulse_Ns * travel.strike_rate_1_s  # the rate is that of the whole crew
     needed = force.pushers_to_move
     return (
@@ -105,7 +107,7 @@ def _panels(film: Film) -> tuple[_Panel, ...]:
             level_name="needed",
             level_colour=PLANNED,
         ),
-        _Panel("momentum given", "N*s", series.impulse_Ns, momentum, "planned impacts"),
+        _Panel("momentum", "N*s", series.impulse_Ns, momentum, "plan: impacts"),
     )
 
 
@@ -151,7 +153,7 @@ class _Axes(NamedTuple):
         return self.points(np.array([0.0, self.span_s]), np.array([value, value]))
 
 
-def _panel(film: Film, panel: _Panel, part: Place, letters: float) -> list[Mark]:
+def _panel(film: Film, t_s: FloatArray, panel: _Panel, part: Place, letters: float) -> list[Mark]:
     axes = _Axes(_plot(part, letters), span_s(film), *_range(panel, span_s(film)))
     x, y, width, height = axes.plot
     edge, title = _edge(letters), part[1] + 0.7 * letters
@@ -166,14 +168,16 @@ def _panel(film: Film, panel: _Panel, part: Place, letters: float) -> list[Mark]
     if 0.0 < panel.level <= axes.top:
         marks += dashed(axes.level(panel.level), 0.25 * letters, panel.level_colour, 1.3 * edge, CURVE)
         labels.append((panel.level_name, panel.level_colour))
-    at = part[0] + text_width(panel.name, letters) + 0.3 * letters
+    at = part[0] + text_width(panel.name, letters) + 0.5 * letters
     for text, colour in labels:
-        marks += dashed(
-            np.array([(at, title), (at + 1.5 * letters, title)]), 0.3 * letters, colour, 1.3 * edge, LETTERS
-        )
-        marks.append(Text(at + 1.8 * letters, title, text, 0.9 * letters, AXIS, "w", LETTERS))
-        at += 2.3 * letters + text_width(text, 0.9 * letters)
-    marks.append(Line(_curve(film, panel, axes), MEASURED, 1.6 * edge, CURVE))
+        room = 1.85 * letters + text_width(text, 0.8 * letters)
+        if at + room + text_width(WIDEST_VALUE, letters) > part[0] + part[2]:
+            break
+        sample = np.array([(at, title), (at + 1.1 * letters, title)])
+        marks += dashed(sample, 0.22 * letters, colour, 1.3 * edge, LETTERS)
+        marks.append(Text(at + 1.35 * letters, title, text, 0.8 * letters, AXIS, "w", LETTERS))
+        at += room
+    marks.append(Line(_curve(film, t_s, panel, axes), MEASURED, 1.6 * edge, CURVE))
     marks.sort(key=lambda mark: mark.z)
     return marks
 
@@ -210,10 +214,10 @@ def _scales(axes: _Axes, unit: str, letters: float) -> list[Mark]:
     return marks
 
 
-def _curve(film: Film, panel: _Panel, axes: _Axes) -> FloatArray:
+def _curve(film: Film, t_s: FloatArray, panel: _Panel, axes: _Axes) -> FloatArray:
     """What was measured so far, one point per column; a count is averaged over each, so that none is lost."""
     shown = min(film.duration_s, axes.span_s)
-    t_s, n = film.series().t_s, max(2, round(shown / axes.span_s * axes.plot[2] / COLUMN))
+    n = max(2, round(shown / axes.span_s * axes.plot[2] / COLUMN))
     if panel.unit or len(t_s) < n:
         times = np.linspace(0.0, shown, n)
         values = np.interp(times, t_s, panel.values)
@@ -279,7 +283,7 @@ def timeline_cursor(film: Film, t_s: float, place: Place) -> list[Mark]:
 def _stack(film: Film, shares: FloatArray, bar: Place) -> list[Mark]:
     """Shares of the crew by state, stacked, averaged over columns of the bar."""
     x, y, width, height = bar
-    t_s, n = film.series().t_s, max(2, int(width / (2 * COLUMN)))
+    t_s, n = film.times_s, max(2, int(width / (2 * COLUMN)))
     edges = np.linspace(0.0, film.duration_s, n + 1)
     middles = x + (edges[1:] + edges[:-1]) / 2 / span_s(film) * width
     middles[[0, -1]] = x, x + film.duration_s / span_s(film) * width

@@ -78,20 +78,15 @@ def box(place: Place) -> FloatArray:
     return np.array([(x, y), (x + width, y), (x + width, y + height), (x, y + height)])
 
 
-def dashed(points: FloatArray, dash: float, colour: str, width: float, z: int) -> list[Line]:
-    """A line as dashes with gaps of the same length, px."""
-    steps = np.hypot(*np.diff(points, axis=0).T)
-    along = np.concatenate([[0.0], np.cumsum(steps)])
-    if not dash > 0.0 or along[-1] == 0.0:
+def dashed(ends: FloatArray, dash: float, colour: str, width: float, z: int) -> list[Line]:
+    """A straight line between two places, (2, 2) px, as dashes with gaps of the same length, px."""
+    way = ends[1] - ends[0]
+    length = float(np.hypot(*way))
+    if not length > 0.0:
         return []
-    begins = np.arange(0.0, along[-1], 2 * dash)
-    lines = []
-    for begin in begins:
-        end = min(begin + dash, along[-1])
-        bends = points[(along > begin) & (along < end)]
-        ends = [[np.interp(at, along, points[:, axis]) for axis in range(2)] for at in (begin, end)]
-        lines.append(Line(np.vstack([ends[0], *bends, ends[1]]), colour, width, z))
-    return lines
+    begins = np.arange(0.0, length, 2 * dash)
+    shares = np.stack([begins, np.minimum(begins + dash, length)], axis=1)[:, :, None] / length
+    return [Line(points, colour, width, z) for points in ends[0] + shares * way]
 
 
 def within(points: FloatArray, low: tuple[float, float], high: tuple[float, float]) -> FloatArray:

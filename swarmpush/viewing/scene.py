@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 import pandas as pd
@@ -53,7 +53,7 @@ STATE_NAMES = {
 IMPACT, LEAN = BLUE, PURPLE
 GROUND, TRAIL, LAP, BLOCK, CREW, FLASH, STRIP, LETTERS = range(8)  # what lies above what
 UNKNOWN_STATE = -1
-TRAIL_POINTS = 48  # of one pusher's trail; what lies between them is hardly a pixel
+TRAIL_POINTS = (16, 48, 5000)  # of one pusher's trail, least and most, and of all trails together
 FADES = 4  # steps in which a strike fades
 LARGEST = 0.95  # quantile of the impulses so far that counts as a large one
 LEAN_ROOM = (
@@ -62,6 +62,7 @@ LEAN_ROOM = (
 STRIKE_SIZE = 0.62  # of a large strike's disc, radius over type size
 SYMBOL_FROM = 5.0  # px: half the width of the smallest pusher in which a symbol can be made out
 CORNER_POINTS = 6  # of a bar's rounded corner
+ARROW_FROM = 8.0  # sizes of an arrow: a shorter leg of the lap has none
 MARGIN = 60.0  # px round the picture within which outlines are cut off, so that their cut edges are not seen
 LONGEST_UNIT = "this size: 500 mN s"  # for the room that the key takes
 
@@ -153,7 +154,7 @@ def scene(film: Film, t_s: float, view: View) -> list[Mark]:
     """
     frame = film.frame(t_s)
     rests = film.frame(0.0).blocks
-    unit_Ns = large_strike_Ns(film)
+    scale = StrikeScale(large_strike_Ns(film), _large_px(film.scenario, view))
     marks = [
         *_channel(film.scenario, view),
         *(_trails(film, frame.t_s, view) if view.trail_s > 0.0 else ()),
@@ -161,8 +162,8 @@ def scene(film: Film, t_s: float, view: View) -> list[Mark]:
         *_blocks(film.scenario, rests, frame.blocks, view),
         *_goal(film.scenario, view),
         *_crew(film.scenario, frame, view),
-        *(_strikes(film, frame, rests, unit_Ns, view) if unit_Ns else ()),
-        *_strips(film, frame, unit_Ns, view),
+        *(_strikes(film, frame, rests, scale, view) if scale.large_Ns else ()),
+        *_strips(film, frame, scale, view),
     ]
     marks.sort(key=lambda mark: mark.z)
     return marks
@@ -260,7 +261,7 @@ def _lap(film: Film, travel_m: float, view: View) -> list[Mark]:
         marks.append(Line(leg, PLANNED, 1.3 * _edge(view), LAP))
         way = b - a
         length = float(np.hypot(*way))
-        if length > 5 * size:
+        if length > ARROW_FROM * size:
             ahead = way / length
             aside = np.array([-ahead[1], ahead[0]])
             tip = (a + b) / 2 + size * ahead
@@ -271,7 +272,9 @@ def _lap(film: Film, travel_m: float, view: View) -> list[Mark]:
 
 def _trails(film: Film, t_s: float, view: View) -> list[Mark]:
     places = film.trail(t_s, view.trail_s)
-    rows = np.unique(np.linspace(0, len(places) - 1, TRAIL_POINTS).round().astype(int))
+    least, most, all_trails = TRAIL_POINTS
+    n = min(most, max(least, all_trails // film.scenario.pushers.count))
+    rows = np.unique(np.linspace(0, len(places) - 1, n).round().astype(int))
     if len(rows) < 2:
         return []
     trails = view.points(places[rows]).swapaxes(0, 1)
@@ -399,21 +402,31 @@ def _large(impulses_Ns: FloatArray) -> float:
     return float(np.partition(sizes, rank)[rank])
 
 
-def strike_radius(impulse_Ns: Any, large_Ns: float, letters: float) -> Any:
-    """Radius of a disc for an impulse, px; its area is in proportion. A square for leaning has the disc's area."""
-    return STRIKE_SIZE * letters * np.sqrt(np.maximum(impulse_Ns, 0.0) / large_Ns)
+class StrikeScale(NamedTuple):
+    """How large strikes are drawn: the impulse of a large one, N s, and the radius of its disc, px."""
+
+    large_Ns: float
+    large_px: float
+
+    def radius(self, impulse_Ns: Any) -> Any:
+        """Radius of a disc for an impulse, px; its area is in proportion. A square for leaning has the disc's area."""
+        return self.large_px * np.sqrt(np.maximum(impulse_Ns, 0.0) / self.large_Ns)
 
 
-def _strikes(film: Film, frame: Frame, rests: FloatArray, large_Ns: float, view: View) -> list[Mark]:
+def _large_px(s: Scenario, view: View) -> float:
+    """As large as a line of the key allows, but not much larger than a pusher unless that is hardly to be seen."""
+    most, least = STRIKE_SIZE * view.letters, 0.3 * view.letters
+    return min(most, max(least, 1.2 * s.pushers.reach * view.px_per_m))
+
+
+def _strikes(film: Film, frame: Frame, rests: FloatArray, scale: StrikeScale, view: View) -> list[Mark]:
     """Strikes of the last moments where they hit the rear face, which they stay on: impact a disc, leaning a square."""
     strikes = film.strikes(frame.t_s - view.flash_s, frame.t_s)
     if not len(strikes):
         return []
     places = view.points(_placed(_on_rear_face(film.scenario, film, strikes, rests), frame.blocks[0], view))
     ages = (frame.t_s - strikes["t_on_s"].to_numpy()) / view.flash_s
-    impacts, leans = (
-        strike_radius(strikes[column].to_numpy(), large_Ns, view.letters) for column in ("impact_Ns", "lean_Ns")
-    )
+    impacts, leans = (scale.radius(strikes[column].to_numpy()) for column in ("impact_Ns", "lean_Ns"))
     marks: list[Mark] = []
     for (x, y), age, impact, lean in zip(places.tolist(), ages, impacts, leans, strict=True):
         share = 1.0 - 0.7 * math.floor(FADES * min(max(age, 0.0), 0.999)) / FADES
@@ -454,14 +467,14 @@ def faded(colour: str, share: float) -> str:
 # ---- what stands round the rig --------------------------------------------------------------------------------------
 
 
-def _strips(film: Film, frame: Frame, large_Ns: float, view: View) -> list[Mark]:
+def _strips(film: Film, frame: Frame, scale: StrikeScale, view: View) -> list[Mark]:
     letters = view.letters
     top, bottom = view.strips
     return [
         Polygon(box((0.0, 0.0, view.width, top)), PAPER, z=STRIP),
         Polygon(box((0.0, view.height - bottom, view.width, bottom)), PAPER, z=STRIP),
         *_head(film, frame, view),
-        *_key(film, frame, large_Ns, view, view.height - bottom + 0.75 * letters),
+        *_key(film, frame, scale, view, view.height - bottom + 0.75 * letters),
     ]
 
 
@@ -506,12 +519,12 @@ def _scale_bar(view: View) -> tuple[list[Mark], float]:
     return marks, width + 1.3 * letters + text_width(text, letters)
 
 
-def _key(film: Film, frame: Frame, large_Ns: float, view: View, top: float) -> list[Mark]:
+def _key(film: Film, frame: Frame, scale: StrikeScale, view: View, top: float) -> list[Mark]:
     """What the marks mean, at the bottom."""
     letters = view.letters
     states = list(STATE_NAMES) if (frame.states != UNKNOWN_STATE).any() else []
     entries = [(STATE_NAMES[name], name) for name in states] or [("pusher", "")]
-    unit_Ns = round_number(large_Ns) if large_Ns > 0.0 else 0.0
+    unit_Ns = round_number(scale.large_Ns) if scale.large_Ns > 0.0 else 0.0
     if unit_Ns:
         size = f"this size: {for_people(unit_Ns, 'N s')}"
         entries += [("impact", "impact"), ("leaning", "lean"), (size, "size")]
@@ -522,7 +535,7 @@ def _key(film: Film, frame: Frame, large_Ns: float, view: View, top: float) -> l
         y, at = top + row * letters, x + 0.6 * letters
         marks.append(Text(x + (0.0 if what == "size" else 1.5 * letters), y, text, letters, INK, "w", LETTERS))
         if what in ("impact", "lean"):
-            radius = float(strike_radius(unit_Ns, large_Ns, letters))
+            radius = float(scale.radius(unit_Ns))
             marks += strike_marks(at, y, *((radius, 0.0) if what == "impact" else (0.0, radius)), letters)
         elif what == "lap":
             marks.append(Line(np.array([(at - 0.5 * letters, y), (at + 0.6 * letters, y)]), PLANNED, 1.3 * _edge(view)))

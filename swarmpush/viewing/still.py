@@ -86,7 +86,7 @@ def _artist(mark: Mark) -> Artist:
     up: Literal["top", "baseline", "bottom"] = next((UP[c] for c in mark.anchor if c in UP), "baseline")
     y = mark.y + (CAPITALS * mark.size if up == "baseline" else 0.0)
     return FigureText(
-        mark.x, y, mark.text, color=mark.colour, fontsize=mark.size * POINT, fontweight="bold",
+        mark.x, y, mark.text, color=mark.colour, fontsize=mark.size * POINT,
         horizontalalignment=across, verticalalignment=up,
     )  # fmt: skip
 
