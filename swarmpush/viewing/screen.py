@@ -37,7 +37,7 @@ ARROWS = {  # the way they point, x to the right, y downward
 ARROW_SIZE = 0.35  # of the unit, from its middle to its tip
 
 
-def line(text: str, place: Rect, size: float, measure: Measure, colour: str = INK, align: Align = "left") -> list[Text]:
+def line(text: str, place: Rect, size: float, measure: Measure, colour: str = INK, align: Align = "left") -> list[Mark]:
     """A line of text in the middle of a place's height; too wide, it is written smaller, and then cut."""
     if not text:
         return []
