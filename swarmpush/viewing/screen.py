@@ -78,10 +78,12 @@ def _arrow(cell: Rect, right: int, down: int, size: float) -> Polygon:
 
 
 def message(said: str, aside: str, layout: Layout, measure: Measure) -> list[Mark]:
-    """What was said last, and on the right something about the film."""
+    """What was said last, and on the right something about the film, unless what was said needs the whole line."""
     place, unit = layout.message, layout.unit
     side = min(SIDE_UNITS * unit, place.width // 2)
     left = place._replace(width=place.width - side - unit)
+    if measure(said, unit) > left.width:
+        return line(said, place, unit, measure)
     right = Rect(place.x + place.width - side, place.y, side, place.height)
     return [*line(said, left, unit, measure), *line(aside, right, unit, measure, AXIS, "right")]
 

@@ -34,7 +34,7 @@ def server():
             pytest.fail(sentence)
         pytest.skip(sentence)
     read, write = os.pipe()
-    command = [program, "-displayfd", str(write), "-screen", "0", "3840x2160x24", "-nolisten", "tcp"]
+    command = [program, "-displayfd", str(write), "-screen", "0", "3840x2160x24", "-nolisten", "tcp", "-noreset"]
     process = subprocess.Popen(command, pass_fds=[write], stderr=subprocess.DEVNULL)
     os.close(write)
     with os.fdopen(read) as told:
