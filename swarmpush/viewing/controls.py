@@ -12,8 +12,9 @@ from typing import Literal
 
 import numpy as np
 
-from swarmpush.reporting.wording import CAUSES
+from swarmpush.reporting.wording import CAUSES, TELLS_LITTLE
 from swarmpush.scenario import Scenario
+from swarmpush.viewing.charts import span_s, timeline_time
 from swarmpush.viewing.commands import BY_KEY, Command
 from swarmpush.viewing.film import Film
 from swarmpush.viewing.layout import Layout
@@ -335,11 +336,6 @@ def speed_words(speed: float) -> str:
 # ---- time ------------------------------------------------------------------------------------------------------
 
 
-def span_of(film: Film) -> float:
-    """What the time line covers, s: a complete film, or all that a growing one may come to."""
-    return film.duration_s if film.is_complete else film.scenario.goal.time_limit
-
-
 def _skip(c: Controls, direction: int, film: Film) -> Controls:
     """A sample when paused, else what passes in a second."""
     if not c.is_paused:
@@ -360,7 +356,7 @@ def _skip(c: Controls, direction: int, film: Film) -> Controls:
 
 
 def _within(t_s: float, film: Film) -> float:
-    return min(max(t_s, 0.0), span_of(film))
+    return min(max(t_s, 0.0), span_s(film))
 
 
 def _to_strike(c: Controls, is_forward: bool, film: Film) -> Controls:
@@ -381,6 +377,7 @@ def _to_failure(c: Controls, is_forward: bool, film: Film) -> Controls:
     if not film.is_complete:
         return replace(c, message="Failures are named once the run is over.")
     spells = film.spells()
+    spells = spells[~spells["cause"].isin(TELLS_LITTLE)]  # as on the time line
     begins = spells["t_first_s"].to_numpy(dtype=np.float64)
     rows = np.flatnonzero(begins > c.t_s if is_forward else begins < c.t_s - (0.0 if c.is_paused else 0.5 * c.speed))
     if not len(rows):
@@ -490,6 +487,4 @@ def _release(c: Controls, x: float, y: float, film: Film, layout: Layout) -> Con
 
 def _scrub(c: Controls, x: float, film: Film, layout: Layout) -> Controls:
     """To the time under the pointer; a growing film is shown at most to its end so far."""
-    bar = layout.timeline
-    share = min(max((x - bar.x) / bar.width, 0.0), 1.0)
-    return replace(c, t_s=min(share * span_of(film), film.duration_s), message="")
+    return replace(c, t_s=min(timeline_time(film, layout.timeline, x), film.duration_s), message="")

@@ -10,7 +10,8 @@ from swarmpush.viewing.commands import BINDINGS, Binding, Command
 LEAST_SIZE = (640, 400)  # px; a smaller window is laid out as if it were this large
 HELP_COLUMNS = 3
 KEYS_UNITS = 6.5  # of a column of the list, for the keys
-CHARTS_SHARE = 0.27  # of the window's height
+CHARTS_SHARE = {1: 0.27, 2: 0.2}  # of the window's height, by the number of rigs
+STRIPS_UNITS = 8  # of a rig's picture, above and below the channel
 
 
 class Rect(NamedTuple):
@@ -35,14 +36,16 @@ class Layout:
     """The parts of the window.
 
     unit: height of a line of text, from which everything else follows. rigs: the body world's picture and, beside it,
-    the point world's if that is shown. cells: what can be clicked in the status line, by command. speed_cell,
-    seed_cell, value_cell: texts between them. help_box, help_cells: the list of commands, laid over the rest.
+    the point world's if that is shown. heads: for their names, where they need some. cells: what can be clicked in the
+    status line, by command. speed_cell, seed_cell, value_cell: texts between them. help_box, help_cells: the list of
+    commands, laid over the rest.
     """
 
     width: int
     height: int
     unit: int
     rigs: tuple[Rect, ...]
+    heads: tuple[Rect, ...]
     charts: Rect
     cells: dict[Command, Rect]
     speed_cell: Rect
@@ -67,31 +70,44 @@ def lay_out(width: int, height: int, *, n_rigs: int = 1, rig_aspect: float = 4.0
     timeline = Rect(gap, height - gap - 3 * unit, width - 2 * gap, 3 * unit)
     message = Rect(gap, timeline.y - gap - unit - gap, width - 2 * gap, unit + gap)
     status = Rect(gap, message.y - 2 * unit, width - 2 * gap, 2 * unit)
-    charts_height = round(CHARTS_SHARE * height)
+    charts_height = round(CHARTS_SHARE[n_rigs] * height)
     charts = Rect(gap, status.y - gap - charts_height, width - 2 * gap, charts_height)
     place = Rect(0, 0, width, charts.y - gap)
+    rigs, heads = _rigs(place, n_rigs, rig_aspect, unit)
+    cells, speed_cell, seed_cell, value_cell = _status_cells(status, unit)
+    help_box, help_cells = _help(width, height, unit)
     return Layout(
-        width,
-        height,
-        unit,
-        _rigs(place, n_rigs, rig_aspect),
-        charts,
-        *_status_cells(status, unit),
-        message,
-        timeline,
-        *_help(width, height, unit),
+        width=width,
+        height=height,
+        unit=unit,
+        rigs=rigs,
+        heads=heads,
+        charts=charts,
+        cells=cells,
+        speed_cell=speed_cell,
+        seed_cell=seed_cell,
+        value_cell=value_cell,
+        message=message,
+        timeline=timeline,
+        help_box=help_box,
+        help_cells=help_cells,
     )
 
 
-def _rigs(place: Rect, n: int, aspect: float) -> tuple[Rect, ...]:
+def _rigs(place: Rect, n: int, aspect: float, unit: int) -> tuple[tuple[Rect, ...], tuple[Rect, ...]]:
+    """Places for the channels' pictures, two so that the channels become as large as can be; places for their names.
+
+    Side by side, the pictures are too narrow to say by themselves which is which.
+    """
     if n == 1:
-        return (place,)
-    half_width, half_height = place.width // 2, place.height // 2
-    if min(half_width, aspect * place.height) > min(place.width, aspect * half_height):
-        left = place._replace(width=half_width)
-        return left, Rect(half_width, 0, place.width - half_width, place.height)
+        return (place,), ()
+    head = 2 * unit
+    half_width, half_height, strips = place.width // 2, place.height // 2, STRIPS_UNITS * unit
+    if min(half_width, aspect * (place.height - strips - head)) > min(place.width, aspect * (half_height - strips)):
+        heads = (Rect(0, 0, half_width, head), Rect(half_width, 0, place.width - half_width, head))
+        return tuple(each._replace(y=head, height=place.height - head) for each in heads), heads
     upper = place._replace(height=half_height)
-    return upper, Rect(0, half_height, place.width, place.height - half_height)
+    return (upper, Rect(0, half_height, place.width, place.height - half_height)), ()
 
 
 def _status_cells(place: Rect, unit: int) -> tuple[dict[Command, Rect], Rect, Rect, Rect]:

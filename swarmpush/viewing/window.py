@@ -6,6 +6,7 @@ import io
 import os
 import re
 import sys
+import time
 from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import replace
 from pathlib import Path
@@ -16,7 +17,7 @@ from swarmpush.output import OutputError, write_bytes
 from swarmpush.reporting.palette import PAPER
 from swarmpush.viewing import controls as state
 from swarmpush.viewing.app import ViewingError
-from swarmpush.viewing.charts import strip_charts, timeline
+from swarmpush.viewing.charts import charts_cursor, charts_ground, timeline_cursor, timeline_ground
 from swarmpush.viewing.commands import BY_KEY, REPEATING
 from swarmpush.viewing.controls import (
     Action,
@@ -45,6 +46,9 @@ ATTAINED_SHARE = 0.05  # of the newest frame in the mean speed
 BEHIND = 0.8  # of the speed asked for: the run cannot keep up
 REMEDY = "save pictures or a film instead, which needs none, or start a virtual X server, for example with xvfb-run"
 DISPLAY_NAMES = ("DISPLAY", "WAYLAND_DISPLAY", "SDL_VIDEODRIVER")
+GROUND_EVERY_S = 0.2  # a growing film's charts are drawn anew
+CHARTS_TYPE = 0.8  # of the unit
+WORLDS = ("body world", "point world")
 HEADLESS = ("dummy", "offscreen")  # video drivers that show nothing
 
 
@@ -100,6 +104,10 @@ class Window:
         self._held: set[int] = set()
         self._attained = self.controls.speed  # mean over the last frames
         self._pieces: list[tuple[Rect, list[Mark]]] = []
+        self._ground_pieces: list[tuple[Rect, list[Mark]]] = []
+        self._ground_of: object = None
+        self._ground_at_s = 0.0
+        self._ground = self._surface
         self._name()
 
     @property
@@ -212,42 +220,63 @@ class Window:
 
     @property
     def texts(self) -> list[tuple[str, Rect]]:
-        """Each text of the last picture with the rectangle it fills."""
-        return [
-            (mark.text, _text_box(mark, place))
+        """Each text of the last picture with the rectangle it fills, as far as there is something of it to be seen."""
+        boxes = [
+            (mark.text, place, _text_box(mark, place))
             for place, marks in self._pieces
             for mark in marks
             if isinstance(mark, Text)
         ]
+        return [(text, box) for text, place, box in boxes if _overlap(place, box)]
 
     def draw(self) -> None:
         """Draw everything."""
-        surface = self._surface
-        surface.fill(PAPER)
-        self._pieces = self._picture(self.layout)
+        surface, layout = self._surface, self.layout
+        if self.controls.shows_help:
+            self._pieces = [(Rect(0, 0, layout.width, layout.height), help_list(layout, _width))]
+        else:
+            self._draw_ground(layout)
+            surface.blit(self._ground, (0, 0))
+            self._pieces = self._moving(layout)
         for place, marks in self._pieces:
             paint(surface, marks, (place.x, place.y), (place.width, place.height))
+        if not self.controls.shows_help:
+            self._pieces += self._ground_pieces
 
-    def _picture(self, layout: Layout) -> list[tuple[Rect, list[Mark]]]:
-        """What is drawn where; places of marks count from the corners of their rectangles."""
-        c, film = self.controls, self.film
+    def _draw_ground(self, layout: Layout) -> None:
+        """What stays the same from frame to frame, or at least for a fraction of a second, is kept as a picture."""
+        film, now = self.film, time.perf_counter()
+        drawn = (id(film), film.is_complete, layout)
+        if self._ground_of == drawn and (film.is_complete or now - self._ground_at_s < GROUND_EVERY_S):
+            return
+        self._ground_of, self._ground_at_s = drawn, now
         window = Rect(0, 0, layout.width, layout.height)
-        if c.shows_help:
-            return [(window, help_list(layout, _width))]
+        marks = [
+            *charts_ground(film, layout.charts, type_px=CHARTS_TYPE * layout.unit),
+            *timeline_ground(film, layout.timeline, type_px=layout.unit),
+        ]
+        self._ground_pieces = [(window, marks)]
+        self._ground = pygame.Surface((layout.width, layout.height)).convert(self._surface)
+        self._ground.fill(PAPER)
+        paint(self._ground, marks)
+
+    def _moving(self, layout: Layout) -> list[tuple[Rect, list[Mark]]]:
+        """What is drawn upon that, and where; places of marks count from the corners of their rectangles."""
+        c, film = self.controls, self.film
         shown = [film]
         if c.has_point_world and self._point and self._point.done():
             shown.append(self._point.result())
-        rigs = [
-            (layout.rigs[k], scene(other, c.t_s, state.view_of(c, other, layout, k))) for k, other in enumerate(shown)
+        rigs = [(layout.rigs[k], scene(of, c.t_s, state.view_of(c, of, layout, k))) for k, of in enumerate(shown)]
+        cursors = [
+            *charts_cursor(film, c.t_s, layout.charts, type_px=CHARTS_TYPE * layout.unit),
+            *timeline_cursor(film, c.t_s, layout.timeline),
         ]
-        chart, bar = (place._replace(x=0, y=0) for place in (layout.charts, layout.timeline))
         said = c.message or "H lists all keys and what they do."
-        return [
-            *rigs,
-            (layout.charts, strip_charts(film, c.t_s, chart)),
-            (layout.timeline, timeline(film, c.t_s, bar)),
-            (window, [*status(c, film, layout, _width), *message(said, self._aside(), layout, _width)]),
+        lines = [
+            mark for name, place in zip(WORLDS, layout.heads, strict=False) for mark in _heading(name, place, layout)
         ]
+        lines += [*status(c, film, layout, _width), *message(said, self._aside(), layout, _width)]
+        return [*rigs, (Rect(0, 0, layout.width, layout.height), [*cursors, *lines])]
 
     def _aside(self) -> str:
         """What kind of film is shown."""
@@ -256,6 +285,10 @@ class Window:
         if self._attained < BEHIND * self.controls.speed and not self.controls.is_paused:
             return f"live, no faster than {self._attained:.2g} x here"
         return "live: states are told at the end"
+
+
+def _heading(name: str, place: Rect, layout: Layout) -> list[Text]:
+    return line(name, place, layout.unit, _width, align="middle")
 
 
 def _width(text: str, size: float) -> float:
@@ -268,6 +301,10 @@ def _text_box(mark: Text, place: Rect) -> Rect:
     x = mark.x - (width if "e" in mark.anchor else 0 if "w" in mark.anchor else width / 2)
     y = mark.y - (height if "s" in mark.anchor else 0 if "n" in mark.anchor else height / 2)
     return Rect(round(place.x + x), round(place.y + y), width, height)
+
+
+def _overlap(a: Rect, b: Rect) -> bool:
+    return a.x < b.x + b.width and b.x < a.x + a.width and a.y < b.y + b.height and b.y < a.y + a.height
 
 
 def translated(event: pygame.event.Event) -> Event | None:
