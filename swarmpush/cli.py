@@ -27,6 +27,7 @@ if TYPE_CHECKING:
     from swarmpush.kinematics.planning import Plan
     from swarmpush.scenario import Scenario
     from swarmpush.studies.study import Study
+    from swarmpush.viewing.film import Film
 
 BAD_INPUT, NOT_MET, INTERRUPTED = 2, 3, 130
 RESULTS = Path("results")  # where results of many runs go when no folder is named
@@ -63,6 +64,13 @@ Workers = Annotated[
 Cluster = Annotated[
     str | None,
     typer.Option("--cluster", metavar="ADDRESS", help="a Dask scheduler, e.g. tcp://10.0.0.1:8786, whose workers run"),
+]
+FromStudy = Annotated[
+    Path | None, typer.Option("--from-study", metavar="FOLDER", help="a run of a study again, bit for bit")
+]
+Point = Annotated[int | None, typer.Option(min=0, help="with --from-study: its point, from 0")]
+Replicate = Annotated[
+    int | None, typer.Option(min=0, help="with --from-study: its number at that point, from 0; default: 0")
 ]
 ScenarioArgument = Annotated[
     str, typer.Argument(metavar="SCENARIO", help="a scenario file (.toml), or the name of a demo scenario")
@@ -152,13 +160,9 @@ def run(
         str | None,
         typer.Argument(metavar="SCENARIO", help="a scenario file (.toml), or the name of a demo; or --from-study"),
     ] = None,
-    from_study: Annotated[
-        Path | None, typer.Option("--from-study", metavar="FOLDER", help="make a run of a study again, bit for bit")
-    ] = None,
-    point: Annotated[int | None, typer.Option(min=0, help="with --from-study: its point, from 0")] = None,
-    replicate: Annotated[
-        int | None, typer.Option(min=0, help="with --from-study: its number at that point, from 0; default: 0")
-    ] = None,
+    from_study: FromStudy = None,
+    point: Point = None,
+    replicate: Replicate = None,
     seed: Seed = None,
     converging: Annotated[
         bool,
@@ -395,6 +399,66 @@ def study_rerun_failed(
     _run_study(s, folder, workers, cluster, as_json, force=False)
 
 
+@app.command(short_help="look at a run: in a window, or as a picture or film")
+def watch(
+    source: Annotated[
+        str | None,
+        typer.Argument(metavar="SOURCE", help="a scenario file or demo, or a folder with a saved run; or --from-study"),
+    ] = None,
+    from_study: FromStudy = None,
+    point: Point = None,
+    replicate: Replicate = None,
+    seed: Seed = None,
+    export: Annotated[
+        Path | None,
+        typer.Option(
+            "--export",
+            metavar="FILE",
+            help="open no window, but write a picture (.png, .svg) or a film (.gif, .mp4) of the run",
+        ),
+    ] = None,
+    size: Annotated[
+        str | None,
+        typer.Option("--size", metavar="WxH", help="of window, picture or film; default: 1280x720, of a GIF 800x300"),
+    ] = None,
+    at: Annotated[float | None, typer.Option(min=0.0, help="model time of a picture, s; default: the end")] = None,
+    span: Annotated[
+        str | None, typer.Option("--span", metavar="A:B", help="model times of a film, s; default: the whole run")
+    ] = None,
+    fps: Annotated[int, typer.Option("--fps", min=1, max=120, help="frames per second of a film")] = 25,
+    speed: Annotated[
+        float | None,
+        typer.Option(
+            "--speed",
+            min=1e-3,
+            max=1e4,
+            help="model time over time on the clock; default: a run passes in a minute, a film is of 10 s",
+        ),
+    ] = None,
+    as_json: AsJson = False,
+    force: Annotated[bool, typer.Option("--force", help="replace the file if it is there")] = False,
+) -> None:
+    """Look at a run in a window, live or replayed, in which F1 lists the keys; or write a picture or a film of it."""
+    picture, times = _size(size), _span(span)
+    if export is None and (as_json or at is not None or span is not None):
+        raise _Refusal("--json, --at and --span go with --export")
+    shown, seed = _to_watch(source, from_study, point, replicate, seed)
+    if export is None:
+        from swarmpush.viewing.app import watch as open_window
+
+        open_window(shown, seed=seed, size=picture or (1280, 720), speed=speed)
+        return
+    from swarmpush.viewing.to_file import export_film
+
+    _refuse_existing(export, force)
+    with _preparing(as_json) as bar:
+        export_film(
+            shown, export, seed=seed, size=picture, at_s=at, span_s=times, fps=fps, speed=speed,
+            progress=lambda done, total: bar(done, total, "drawing"),
+        )  # fmt: skip
+    _print_place("film" if export.suffix.lower() in (".gif", ".mp4") else "picture", export, as_json)
+
+
 @app.command(short_help="JSON Schema of scenario files, for editors")
 def schema(
     of_studies: Annotated[bool, typer.Option("--study", help="that of study files instead")] = False,
@@ -510,6 +574,50 @@ def _of_study(folder: Path, point: int | None, replicate: int | None, seed: int 
         return run_of_study(folder, point, replicate or 0)
     except IndexError as error:
         raise _Refusal(f"--point: {error}") from None
+
+
+def _to_watch(
+    source: str | None, from_study: Path | None, point: int | None, replicate: int | None, seed: int | None
+) -> tuple[Scenario | Film, int | None]:
+    """What is to be watched, and its seed."""
+    if (source is None) == (from_study is None):
+        raise _Refusal("name a scenario or a folder with a run, or a study's folder with --from-study and --point")
+    if from_study is not None:
+        return _of_study(from_study, point, replicate, seed)
+    if point is not None or replicate is not None:
+        raise _Refusal("--point and --replicate go with --from-study")
+    assert source is not None
+    if not (Path(source) / "run.json").is_file():
+        return _load(source), seed
+    if seed is not None:
+        raise _Refusal("a saved run has its seed; --seed goes with a scenario")
+    from swarmpush.viewing.film import film_of
+
+    try:
+        return film_of(Path(source)), None
+    except ValueError as error:
+        raise _Refusal(str(error)) from None
+
+
+def _size(text: str | None) -> tuple[int, int] | None:
+    """Width and height from text such as 1280x720."""
+    if text is None:
+        return None
+    width, _, height = text.lower().partition("x")
+    if not (width.isdecimal() and height.isdecimal() and len(width) < 6 and len(height) < 6):
+        raise _Refusal(f"--size {text}: write width and height in pixels, for example 1280x720")
+    return int(width), int(height)
+
+
+def _span(text: str | None) -> tuple[float, float] | None:
+    """Begin and end from text such as 10:25."""
+    if text is None:
+        return None
+    try:
+        begin, end = (float(part) for part in text.split(":"))
+    except ValueError:
+        raise _Refusal(f"--span {text}: write begin and end in seconds of model time, for example 10:25") from None
+    return begin, end
 
 
 def _load_study(name: str) -> Study:

@@ -5,11 +5,12 @@ from __future__ import annotations
 import os
 from pathlib import Path
 
+from swarmpush.output import OutputError
 from swarmpush.scenario import Scenario
 from swarmpush.viewing.film import Film, LiveFilm
 
 
-class ViewingError(Exception):
+class ViewingError(OutputError):
     """The window cannot be opened; the message says what to do."""
 
 
