@@ -143,8 +143,8 @@ def start(s: Scenario, duration_s: float | None = None, speed: float | None = No
     """The state in which a window opens.
 
     Arguments:
-        s: the scenario. duration_s: of the film, if it is complete. speed: of the start, brought within the limits; left
-            out: the power of 2 at which a whole run passes in about a minute.
+        s: the scenario. duration_s: of the film, if it is complete. speed: of the start, brought within the limits;
+            left out: the power of 2 at which a whole run passes in about a minute.
     """
     if speed is None:
         speed = 2.0 ** round(math.log2((duration_s or s.goal.time_limit) / WATCHED_S))

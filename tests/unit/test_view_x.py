@@ -109,7 +109,7 @@ def overlap(a, b):
 
 def test_a_live_run_fits(size, scenario, plan, tmp_path):
     window = Window(LiveFilm(scenario, 1, plan), folder=tmp_path)
-    for _ in range(60):
+    for _ in range(20):
         window.turn(0.1)
     assert_fits(window, size)
     for key, sign in [(pygame.K_t, "t"), (pygame.K_y, "y"), (pygame.K_f, "f"), (pygame.K_s, "s"), (pygame.K_e, "e")]:
