@@ -312,8 +312,9 @@ def _spells(film: Film, place: Place, letters: float) -> list[Mark]:
     begins = x + spells["t_first_s"].to_numpy(dtype=np.float64) / span_s(film) * width
     small, size = min(0.85 * letters, 0.8 * height), 0.22 * height
     names = [str(cause).replace("_", " ") for cause in spells["cause"]]
+    ends = np.append(begins, x + width)[1:].tolist()  # of each name's room
     marks: list[Mark] = []
-    for at, following, name in zip(begins.tolist(), [*begins.tolist(), x + width][1:], names, strict=True):
+    for at, following, name in zip(begins.tolist(), ends, names, strict=True):
         low = y + height
         pointer = np.array([(at, low), (at - size, low - 1.6 * size), (at + size, low - 1.6 * size)])
         marks.append(Polygon(pointer, PLANNED, z=CURVE))

@@ -82,11 +82,11 @@ def save_gif(
             image.putpalette(colours)
             yield image
 
-    with written_whole(path) as part:
+    with written_whole(path) as part, part.open("wb") as file:
         first, *rest = [10 * (b - a) for a, b in pairwise(hundredths)]
         frames = images()
         next(frames).save(
-            part,
+            file,
             format="GIF",
             save_all=True,
             append_images=frames,

@@ -104,7 +104,7 @@ def _line(surface: pygame.Surface, points: FloatArray, colour: str, width: float
 
 
 def _stroke(surface: pygame.Surface, ends: list[list[float]], colour: str, width: float) -> None:
-    """A straight line of a few pixels: a bar where it runs along the picture's sides, else smooth lines beside each other.
+    """A straight line of a few pixels: a bar along the picture's sides, else smooth lines side by side.
 
     Most lines are of this kind, and there are many; plain arithmetic is faster here than arrays.
     """
