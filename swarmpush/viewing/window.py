@@ -261,7 +261,7 @@ class Window:
             *timeline_ground(film, layout.timeline, type_px=layout.unit),
         ]
         self._ground_pieces = [(window, marks)]
-        self._ground = pygame.Surface((layout.width, layout.height)).convert(self._surface)
+        self._ground = pygame.Surface((layout.width, layout.height))
         self._ground.fill(PAPER)
         paint(self._ground, marks)
 
