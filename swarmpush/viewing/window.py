@@ -47,7 +47,7 @@ BEHIND = 0.8  # of the speed asked for: the run cannot keep up
 REMEDY = "save pictures or a film instead, which needs none, or start a virtual X server, for example with xvfb-run"
 DISPLAY_NAMES = ("DISPLAY", "WAYLAND_DISPLAY", "SDL_VIDEODRIVER")
 GROUND_EVERY_S = 0.2  # a growing film's charts are drawn anew
-CHARTS_TYPE = 0.8  # of the unit
+CHARTS_TYPE = 0.9  # of the unit
 WORLDS = ("body world", "point world")
 HEADLESS = ("dummy", "offscreen")  # video drivers that show nothing
 
@@ -263,18 +263,19 @@ class Window:
     def _moving(self, layout: Layout) -> list[tuple[Rect, list[Mark]]]:
         """What is drawn upon that, and where; places of marks count from the corners of their rectangles."""
         c, film = self.controls, self.film
-        shown = [film]
+        shown, lines = [film], list[Mark]()
         if c.has_point_world and self._point and self._point.done():
             shown.append(self._point.result())
+        elif c.has_point_world:
+            lines += line("Working out the point world ...", layout.rigs[1], layout.unit, _width, align="middle")
         rigs = [(layout.rigs[k], scene(of, c.t_s, state.view_of(c, of, layout, k))) for k, of in enumerate(shown)]
         cursors = [
             *charts_cursor(film, c.t_s, layout.charts, type_px=CHARTS_TYPE * layout.unit),
             *timeline_cursor(film, c.t_s, layout.timeline),
         ]
         said = c.message or "H lists all keys and what they do."
-        lines = [
-            mark for name, place in zip(WORLDS, layout.heads, strict=False) for mark in _heading(name, place, layout)
-        ]
+        for name, place in zip(WORLDS, layout.heads, strict=False):
+            lines += line(name, place, layout.unit, _width, align="middle")
         lines += [*status(c, film, layout, _width), *message(said, self._aside(), layout, _width)]
         return [*rigs, (Rect(0, 0, layout.width, layout.height), [*cursors, *lines])]
 
@@ -285,10 +286,6 @@ class Window:
         if self._attained < BEHIND * self.controls.speed and not self.controls.is_paused:
             return f"live, no faster than {self._attained:.2g} x here"
         return "live: states are told at the end"
-
-
-def _heading(name: str, place: Rect, layout: Layout) -> list[Text]:
-    return line(name, place, layout.unit, _width, align="middle")
 
 
 def _width(text: str, size: float) -> float:

@@ -265,7 +265,8 @@ def test_what_cannot_be_prepared_is_said(window, monkeypatch):
 
 def test_the_point_world_comes_beside_the_body_world(window):
     press(window, "d")
-    wait(window, lambda: any("point world" in text for text in texts(window)))
+    wait(window, lambda: "Working out the point world ..." not in texts(window))
+    assert any("point world" in text for text in texts(window))
     assert len(window.layout.rigs) == 2
     press(window, "d")
     assert len(window.layout.rigs) == 1
