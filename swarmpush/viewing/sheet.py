@@ -76,6 +76,8 @@ def sheet(scenario: Scenario, size: tuple[int, int], *, has_charts: bool = True,
     letters = look.get("type_px") or type_size(width, height)
     below = (CHARTS + TIMELINE + 3 * GAP) * letters
     needs = sum(strips(width, letters)) + (width - 2 * letters) / aspect_of(scenario) + ROUND_RIG * letters
+    if "px_per_m" in look:
+        needs = 0.0  # part of a channel fits into any height
     has_charts = has_charts and height - below >= LEAST_RIG * needs
     rig = round(min(needs, max(RIG_SHARE * height, height - 4 * below), height - below)) if has_charts else height
     view = replace(whole(scenario, width, rig, type_px=letters), **look)
