@@ -31,6 +31,7 @@ PROJECT = Path(__file__).resolve().parent.parent
 PICTURES = PROJECT / "tools" / "pictures"
 DEMO = "scenarios/service_passage.toml"
 WIDTH = "100"  # columns of the quoted console output
+FILM_S = 16.0  # of model time: some three laps
 
 
 def main(arguments: list[str]) -> int:
@@ -72,7 +73,7 @@ def demo_output(results: Path) -> str:
 
 
 def draw_pictures(results: Path) -> None:
-    """The two pictures of the README."""
+    """The pictures of the README, and its film."""
     from swarmpush.auditing.audit import load_audit
     from swarmpush.reporting.audit_drawing import ladder
     from swarmpush.reporting.drawing import as_png
@@ -82,6 +83,19 @@ def draw_pictures(results: Path) -> None:
     PICTURES.mkdir(exist_ok=True)
     (PICTURES / "lap.png").write_bytes(as_png(lap_over_runs, audit.plan, audit.sample, dpi=110))
     (PICTURES / "ladder.png").write_bytes(as_png(ladder, audit, dpi=110))
+    _film(audit.scenario, audit.sample.seed, audit.sample.strikes["t_on_s"].median())
+
+
+def _film(s: Scenario, seed: int, about_s: float) -> None:
+    """The window's picture just after a strike, and a short film round it."""
+    from swarmpush.viewing.film import record
+    from swarmpush.viewing.to_file import export_film
+
+    film = record(s, seed)
+    strike_s = float(film.strikes(about_s, film.duration_s)["t_on_s"].iloc[0])
+    export_film(film, PICTURES / "watch.png", size=(1100, 620), at_s=strike_s + 0.05)
+    span = (strike_s - FILM_S / 2, strike_s + FILM_S / 2)
+    export_film(film, PICTURES / "watch.gif", size=(640, 240), span_s=span, fps=12, speed=2.0)
 
 
 def reference() -> str:
