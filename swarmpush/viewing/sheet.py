@@ -76,6 +76,8 @@ def sheet(scenario: Scenario, size: tuple[int, int], *, has_charts: bool = True,
     letters = look.get("type_px") or type_size(width, height)
     below = (CHARTS + TIMELINE + 3 * GAP) * letters
     channel = (width - 2 * letters) / aspect_of(scenario)
+    if "px_per_m" in look:
+        channel = 0.0  # part of a channel fits into any height
     needs = sum(strips(width, letters)) + channel + ROUND_RIG * letters
     has_charts = has_charts and height - below >= needs - (1.0 - LEAST_RIG) * channel
     rig = round(min(needs, max(RIG_SHARE * height, height - 4 * below), height - below)) if has_charts else height
