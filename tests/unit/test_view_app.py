@@ -355,3 +355,15 @@ def test_app_needs_no_pygame_to_be_imported():
     """The command line imports it before it knows whether a window is wanted."""
     source = f"import sys; sys.modules['pygame'] = None; import {app.__name__}"
     subprocess.run([sys.executable, "-c", source], check=True)
+
+
+@pytest.mark.parametrize("size", [(0, 0), (-5, 400), (300, 400), (1280, 100_000)])
+def test_a_size_without_a_window_is_refused(scenario, size):
+    with pytest.raises(ViewingError, match="choose a size from 640x400 to 8192x8192"):
+        watch(scenario, size=size)
+
+
+def test_a_window_made_tiny_goes_on(window):
+    pygame.display.set_mode((90, 60), pygame.RESIZABLE)
+    press(window, "d", "h", "h", "p")
+    assert window.is_open
