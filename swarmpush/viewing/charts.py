@@ -168,7 +168,7 @@ def _panel(film: Film, t_s: FloatArray, panel: _Panel, part: Place, letters: flo
     if 0.0 < panel.level <= axes.top:
         marks += dashed(axes.level(panel.level), 0.25 * letters, panel.level_colour, 1.3 * edge, CURVE)
         labels.append((panel.level_name, panel.level_colour))
-    at = part[0] + text_width(panel.name, letters) + 0.5 * letters
+    at = part[0] + text_width(panel.name, letters) + 0.9 * letters
     for text, colour in labels:
         room = 1.85 * letters + text_width(text, 0.8 * letters)
         if at + room + text_width(WIDEST_VALUE, letters) > part[0] + part[2]:

@@ -16,7 +16,7 @@ from swarmpush.viewing.scene import View, aspect_of, scene, strips, whole
 SMALLEST, LARGEST = (320, 160), (7680, 4320)  # px
 GAP = 0.8  # between parts and round them, in sizes of type, as all below
 TIMELINE, CHARTS = 2.6, 7.5  # heights: of the time line, and the least of strip charts
-LEAST_RIG = 0.5  # of the height at which the channel takes the whole width: with less beside charts, these are left out
+LEAST_RIG = 0.5  # of the height of a channel that takes the whole width: with less beside charts, these are left out
 ROUND_RIG = 3.6  # free height about the channel
 RIG_SHARE = 0.62  # of the picture's height, at most, for the rig beside charts
 
@@ -75,8 +75,11 @@ def sheet(scenario: Scenario, size: tuple[int, int], *, has_charts: bool = True,
         raise OutputError(f"a picture of {width}x{height} pixels cannot be drawn; choose a size from {low} to {high}")
     letters = look.get("type_px") or type_size(width, height)
     below = (CHARTS + TIMELINE + 3 * GAP) * letters
-    needs = sum(strips(width, letters)) + (width - 2 * letters) / aspect_of(scenario) + ROUND_RIG * letters
-    has_charts = has_charts and height - below >= LEAST_RIG * needs
+    channel = (width - 2 * letters) / aspect_of(scenario)
+    if "px_per_m" in look:
+        channel = 0.0  # part of a channel fits into any height
+    needs = sum(strips(width, letters)) + channel + ROUND_RIG * letters
+    has_charts = has_charts and height - below >= needs - (1.0 - LEAST_RIG) * channel
     rig = round(min(needs, max(RIG_SHARE * height, height - 4 * below), height - below)) if has_charts else height
     view = replace(whole(scenario, width, rig, type_px=letters), **look)
     if not has_charts:
