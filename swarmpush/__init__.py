@@ -34,12 +34,16 @@ if TYPE_CHECKING:
     from swarmpush.studies.study_file import load_study
     from swarmpush.studies.sweep import StudyResult, load_sweep, sweep
     from swarmpush.vary import with_value
+    from swarmpush.viewing.app import watch
+    from swarmpush.viewing.film import Film, record
+    from swarmpush.viewing.to_file import export_film
 
 __all__ = [
     "Audit",
     "Convergence",
     "Crew",
     "Drive",
+    "Film",
     "Plan",
     "Run",
     "Scenario",
@@ -53,15 +57,18 @@ __all__ = [
     "converge",
     "cycle_map",
     "demo",
+    "export_film",
     "load",
     "load_study",
     "load_sweep",
     "loads",
     "plan",
+    "record",
     "report",
     "simulate",
     "study_demo",
     "sweep",
+    "watch",
     "with_value",
 ]
 
@@ -92,6 +99,10 @@ _HOME = {
     "load_sweep": "swarmpush.studies.sweep",
     "study_demo": "swarmpush.demos",
     "sweep": "swarmpush.studies.sweep",
+    "Film": "swarmpush.viewing.film",
+    "export_film": "swarmpush.viewing.to_file",
+    "record": "swarmpush.viewing.film",
+    "watch": "swarmpush.viewing.app",
     "with_value": "swarmpush.vary",
 }
 
