@@ -61,7 +61,8 @@ LEAN_ROOM = (
 )
 STRIKE_SIZE = 0.62  # of a large strike's disc, radius over type size
 SYMBOL_FROM = 5.0  # px: half the width of the smallest pusher in which a symbol can be made out
-CORNER_POINTS = 6  # of a bar's rounded corner
+CORNER_POINTS = (3, 6)  # of a bar's rounded corner: small and large
+ROUND_FROM = 4.0  # px: radius of the smallest corner that is large
 ARROW_FROM = 8.0  # sizes of an arrow: a shorter leg of the lap has none
 MARGIN = 60.0  # px round the picture within which outlines are cut off, so that their cut edges are not seen
 LONGEST_UNIT = "this size: 500 mN s"  # for the room that the key takes
@@ -374,8 +375,9 @@ _OUTLINES = {  # of the symbols, size 1, heading to the right; and whether they 
 
 def _rounded(ahead: float, aside: float, radius: float) -> FloatArray:
     """Outline of a bar about its centre with its corners rounded, heading to the right."""
-    corners = np.repeat([(ahead, aside), (-ahead, aside), (-ahead, -aside), (ahead, -aside)], CORNER_POINTS, axis=0)
-    angles = np.concatenate([np.linspace(k, k + 1, CORNER_POINTS) for k in range(4)]) * math.pi / 2
+    n = CORNER_POINTS[radius >= ROUND_FROM]
+    corners = np.repeat([(ahead, aside), (-ahead, aside), (-ahead, -aside), (ahead, -aside)], n, axis=0)
+    angles = np.concatenate([np.linspace(k, k + 1, n) for k in range(4)]) * math.pi / 2
     return np.asarray(corners + radius * np.column_stack([np.cos(angles), np.sin(angles)]))
 
 

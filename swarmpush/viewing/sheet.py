@@ -39,11 +39,16 @@ class Sheet:
     charts: Place | None
     timeline: Place | None
 
+    @property
+    def charts_px(self) -> float:
+        """Size of type in charts, px: three titles stand side by side."""
+        return max(10.0, min(self.type_px, self.width / 64))
+
     def ground(self, film: Film) -> Layer:
         """What stays the same while the film does."""
         marks: list[Mark] = []
         if self.charts is not None:
-            marks += charts_ground(film, self.charts, type_px=self.type_px)
+            marks += charts_ground(film, self.charts, type_px=self.charts_px)
         if self.timeline is not None:
             marks += timeline_ground(film, self.timeline, type_px=self.type_px)
         return Layer(marks, None)
@@ -53,7 +58,7 @@ class Sheet:
         yield Layer(scene(film, t_s, self.view), (self.view.width, self.view.height))
         marks: list[Mark] = []
         if self.charts is not None:
-            marks += charts_cursor(film, t_s, self.charts, type_px=self.type_px)
+            marks += charts_cursor(film, t_s, self.charts, type_px=self.charts_px)
         if self.timeline is not None:
             marks += timeline_cursor(film, t_s, self.timeline)
         yield Layer(marks, None)
