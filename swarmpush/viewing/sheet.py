@@ -18,6 +18,7 @@ GAP = 0.8  # between parts and round them, in sizes of type, as all below
 TIMELINE, CHARTS = 2.6, 7.5  # heights: of the time line, and the least of strip charts
 LEAST_RIG = 0.5  # of the height at which the channel takes the whole width: with less beside charts, these are left out
 ROUND_RIG = 3.6  # free height about the channel
+LOW = 30  # of a picture that has no room for the time line
 RIG_SHARE = 0.62  # of the picture's height, at most, for the rig beside charts
 
 
@@ -79,16 +80,17 @@ def sheet(scenario: Scenario, size: tuple[int, int], *, has_charts: bool = True,
         low, high = ("x".join(map(str, limit)) for limit in (SMALLEST, LARGEST))
         raise OutputError(f"a picture of {width}x{height} pixels cannot be drawn; choose a size from {low} to {high}")
     letters = look.get("type_px") or type_size(width, height)
-    below = (CHARTS + TIMELINE + 3 * GAP) * letters
+    timeline_px = (TIMELINE + GAP) * letters if height >= LOW * letters else 0.0
+    below = (CHARTS + 2 * GAP) * letters + timeline_px
     needs = sum(strips(width, letters)) + (width - 2 * letters) / aspect_of(scenario) + ROUND_RIG * letters
     if "px_per_m" in look:
-        needs = 0.0  # part of a channel fits into any height
+        needs = RIG_SHARE * height  # a part of the channel fits into any height
     has_charts = has_charts and height - below >= LEAST_RIG * needs
     rig = round(min(needs, max(RIG_SHARE * height, height - 4 * below), height - below)) if has_charts else height
     view = replace(whole(scenario, width, rig, type_px=letters), **look)
     if not has_charts:
         return Sheet(width, height, letters, view, None, None)
     gap = GAP * letters
-    timeline = (gap, height - gap - TIMELINE * letters, width - 2 * gap, TIMELINE * letters)
-    charts = (gap, rig + gap, width - 2 * gap, timeline[1] - gap - rig - gap)
+    charts = (gap, rig + gap, width - 2 * gap, height - timeline_px - rig - 2 * gap)
+    timeline = (gap, height - timeline_px, width - 2 * gap, timeline_px - gap) if timeline_px else None
     return Sheet(width, height, letters, view, charts, timeline)
