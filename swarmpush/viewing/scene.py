@@ -63,6 +63,7 @@ STRIKE_SIZE = 0.62  # of a large strike's disc, radius over type size
 SYMBOL_FROM = 5.0  # px: half the width of the smallest pusher in which a symbol can be made out
 CORNER_POINTS = (3, 6)  # of a bar's rounded corner: small and large
 ROUND_FROM = 4.0  # px: radius of the smallest corner that is large
+ARROW_AT = 0.62  # of a leg: legs there and back cross in their middles
 ARROW_FROM = 8.0  # sizes of an arrow: a shorter leg of the lap has none
 MARGIN = 60.0  # px round the picture within which outlines are cut off, so that their cut edges are not seen
 LONGEST_UNIT = "this size: 500 mN s"  # for the room that the key takes
@@ -265,7 +266,7 @@ def _lap(film: Film, travel_m: float, view: View) -> list[Mark]:
         if length > ARROW_FROM * size:
             ahead = way / length
             aside = np.array([-ahead[1], ahead[0]])
-            tip = (a + b) / 2 + size * ahead
+            tip = a + ARROW_AT * way + size * ahead
             tail = tip - 2 * size * ahead
             marks.append(Polygon(np.array([tip, tail + 0.7 * size * aside, tail - 0.7 * size * aside]), PLANNED, z=LAP))
     return marks
@@ -390,6 +391,8 @@ def large_strike_Ns(film: Film) -> float:
     That of a large impact so far or of the plan's, whichever is more; more than that where leaning would be drawn too
     large. 0 where there are neither.
     """
+    if film.is_point_world:  # which knows no masses
+        return 0.0
     planned = film.plan.travel.strike_impulse_Ns
     strikes = film.strikes(-1.0, film.duration_s)
     impact, lean = (_large(strikes[column].to_numpy()) for column in ("impact_Ns", "lean_Ns"))
