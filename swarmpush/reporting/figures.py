@@ -43,7 +43,7 @@ def run_exhibits(run: Run, plan: Plan, ends: pd.DataFrame | None = None) -> dict
     draw, data = run_drawing, figure_data
     found = (
         exhibit("lap", _lap_alt(plan, run), data.lap_data(plan, run), draw.lap_over_runs, plan, run),
-        exhibit("end", _end_alt(run), data.end_data(run), draw.end_of_run, run),
+        exhibit("end", _end_alt(run), data.end_data(run), draw.end_of_run, run, plan),
         exhibit("path", _path_alt(run, ends), data.path_data(run, speed, ends), draw.block_path, run, speed, ends),
         exhibit("impulses", _impulse_alt(run), data.impulse_data(run), draw.impulses, run, impact),
         exhibit("books", _account_alt("impulse on the block", draw.book_entries(run), "N s"), data.book_data(run),

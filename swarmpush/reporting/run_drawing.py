@@ -10,20 +10,23 @@ import matplotlib.pyplot as plt
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
-from matplotlib.patches import Polygon
 from matplotlib.ticker import MaxNLocator
 
 from swarmpush.dynamics.run import Run
-from swarmpush.geometry import block_corners, channel_corners, post_corners
+from swarmpush.geometry import channel_corners
 from swarmpush.kinematics.forecast import push_force
 from swarmpush.kinematics.planning import Plan
 from swarmpush.quantities import prefix_for
-from swarmpush.reporting.drawing import draw_block, draw_rig, pusher_shape, turned
+from swarmpush.reporting.drawing import draw_rig
 from swarmpush.reporting.palette import BAD, GOOD, INK, MEASURED, PLANNED, QUIET, STATE_COLOURS
 from swarmpush.reporting.run_words import energy_parts, state_shares
 from swarmpush.reporting.wording import STATE_WORDS
+from swarmpush.viewing.film import film_of_path
+from swarmpush.viewing.still import figure_of
 
 BINS = 80  # of a run's time in which shares of states are averaged for the picture
+END_SIZE, END_HEIGHT = (840, 130), 260  # px: of the picture of a run's end without its channel, and of that at most
+END_EDGE, END_LOWER, END_TYPE = 20, 14, 14.0  # px: beside the channel, lower than the middle, size of type
 MAX_LEGS = 150  # runs from bump to bump drawn behind the lap
 
 
@@ -86,47 +89,24 @@ def _draw_legs(axes: Axes, run: Run, scale: float) -> None:
             axes.plot(*points.T, color=(QUIET, MEASURED)[k], lw=(0.5, 0.7)[k], alpha=0.8, zorder=1 + k, label=name)
 
 
-def end_of_run(run: Run) -> Figure:
-    """Where blocks and pushers were when the run ended, to scale; the blocks' starting places are dashed.
+def end_of_run(run: Run, plan: Plan) -> Figure:
+    """Where blocks and pushers were when the run ended, and what they were about, drawn as in the window.
 
     Of a long channel only the stretch from the hindmost body to the foremost is shown, and some way beyond.
     """
-    s = run.scenario
-    scale, prefix = prefix_for(s.channel.width)
-    figure, axes = plt.subplots(figsize=(8.4, 3.4))
-    for fixed in (channel_corners(s), *post_corners(s)):
-        face = "none" if fixed == channel_corners(s) else QUIET
-        axes.add_patch(Polygon(np.array(fixed) / scale, facecolor=face, edgecolor=INK, lw=2.0, zorder=1))
-    first, last = run.block.iloc[0], run.block.iloc[-1]
-    for k, block in enumerate(s.blocks):
-        tail = f"_{k + 1}" if k else ""
-        at, to = (np.array([row[f"x{tail}_m"], row[f"y{tail}_m"]]) for row in (first, last))
-        corners = np.array(block_corners(s, block))
-        axes.add_patch(Polygon(corners / scale, fill=False, edgecolor=QUIET, lw=1.0, ls="--", zorder=2))
-        name = str(k + 1) if s.train else "block"
-        draw_block(axes, (turned(corners - at, float(last[f"yaw{tail}_rad"])) + to) / scale, name)
-    crew = run.pushers.iloc[-s.pushers.count :]
-    for x, y, heading, mode in zip(crew["x_m"], crew["y_m"], crew["heading_rad"], crew["mode"], strict=True):
-        outline = (pusher_shape(s.pushers, heading) + np.array([x, y])) / scale
-        colour = INK if mode in ("stop", "failed") else MEASURED
-        axes.add_patch(Polygon(outline, facecolor="white", edgecolor=colour, lw=1.0, zorder=4))
-        tip = s.pushers.trunk / 2 + 0.8 * s.pushers.radius
-        ahead = tip * np.array([math.cos(heading), math.sin(heading)])
-        axes.plot(*np.array([(x, y), (x + ahead[0], y + ahead[1])]).T / scale, color=colour, lw=1.0, zorder=5)
-    corners = np.array(channel_corners(s)) / scale
-    margin = 0.04 * s.channel.width / scale
-    outlines = [patch for patch in axes.patches if isinstance(patch, Polygon) and patch.get_zorder() > 1.5]
-    bodies = np.vstack([patch.get_xy() for patch in outlines])
-    around = s.channel.width / scale
-    axes.set_xlim(
-        max(corners[:, 0].min() - margin, bodies[:, 0].min() - around),
-        min(corners[:, 0].max() + margin, bodies[:, 0].max() + around),
-    )
-    axes.set_ylim(corners[:, 1].min() - margin, corners[:, 1].max() + margin)
-    axes.set_aspect("equal")
-    axes.set_xlabel(f"along the channel, {prefix}m")
-    axes.set_ylabel(f"across, {prefix}m")
-    return figure
+    film, channel = film_of_path(run, plan), np.array(channel_corners(run.scenario))
+    end = film.frame(film.duration_s)
+    places = np.vstack([end.blocks, end.pushers])[:, 0]
+    around = run.scenario.channel.width + max(block.length for block in run.scenario.blocks)
+    (low, bottom), (high, top) = channel.min(axis=0), channel.max(axis=0)
+    low, high = max(low, places.min() - around), min(high, places.max() + around)
+    width = END_SIZE[0] - 2 * END_EDGE
+    scale = min(width / (high - low), END_HEIGHT / (top - bottom))
+    size = (END_SIZE[0], round(END_SIZE[1] + scale * (top - bottom)))
+    # the key below the rig is higher than the strip above it
+    middle = 0.5 * (bottom + top) - END_LOWER / scale
+    look = {"centre": (0.5 * (low + high), middle), "px_per_m": scale, "has_lap": False, "type_px": END_TYPE}
+    return figure_of(film, film.duration_s, size, has_charts=False, **look)
 
 
 def impulses(run: Run, planned_Ns: float | None = None) -> Figure:

@@ -34,7 +34,7 @@ def watch(
         folder: where pictures are saved; left out: the current one.
 
     Raises:
-        ViewingError: when pygame is missing, or there is no display.
+        ViewingError: when pygame is missing, there is no display, or the size makes no window.
     """
     require_pygame()
     from swarmpush.viewing.window import Window, close_display, open_display

@@ -34,7 +34,7 @@ MOST_ABOVE = 2.5  # a plan's line is shown in full up to so many times what was 
 BAR_FROM = 0.4  # share of the time line's height above the bar, for what went wrong
 STACK = ("locked", "lost", "held at a wall", "ahead", "idle")  # what serves the purpose lies at the bottom
 WIDEST_VALUE = "48.4 mm"  # beside a panel's name
-NARROW = 0.88  # of the most that a text can take: short words and numbers
+NARROW = 0.84  # of the most that a text can take: short words and numbers
 GROUND, CURVE, LETTERS, CURSOR = range(4)
 
 

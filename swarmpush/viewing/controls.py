@@ -21,7 +21,7 @@ from swarmpush.viewing.layout import Layout
 from swarmpush.viewing.parameters import parameters, stepped
 from swarmpush.viewing.scene import View, whole
 
-SPEEDS = tuple(2.0**k for k in range(-3, 7))  # model time over time on the clock
+SLOWEST, FASTEST = 0.125, 64.0  # model time over time on the clock
 WATCHED_S = 60.0  # in which a whole run should pass at the speed of the start
 TRAILS = (("none", 0.0), ("short", 0.25), ("long", 1.0))  # in times that a pusher takes along the channel
 YAW_FACTORS = (1.0, 5.0, 20.0)
@@ -143,11 +143,16 @@ def start(s: Scenario, duration_s: float | None = None, speed: float | None = No
     """The state in which a window opens.
 
     Arguments:
-        s: the scenario. duration_s: of the film, if it is complete. speed: of the start, brought to the nearest of
-            `SPEEDS`; left out: a whole run passes in about a minute.
+        s: the scenario. duration_s: of the film, if it is complete. speed: of the start, brought within the limits;
+            left out: the power of 2 at which a whole run passes in about a minute.
     """
-    wanted = speed if speed is not None else (duration_s or s.goal.time_limit) / WATCHED_S
-    return Controls(speed=min(SPEEDS, key=lambda known: abs(math.log(known / max(wanted, SPEEDS[0])))))
+    if speed is None:
+        speed = 2.0 ** round(math.log2((duration_s or s.goal.time_limit) / WATCHED_S))
+    return Controls(speed=_allowed(speed))
+
+
+def _allowed(speed: float) -> float:
+    return min(max(speed, SLOWEST), FASTEST)
 
 
 def view_of(controls: Controls, film: Film, layout: Layout, rig: int = 0) -> View:
@@ -273,10 +278,8 @@ def _perform_here(c: Controls, command: Command, film: Film, layout: Layout) -> 
         case Command.TO_END:
             return replace(c, t_s=film.duration_s)
         case Command.SLOWER | Command.FASTER:
-            at = SPEEDS.index(c.speed) + (1 if command is Command.FASTER else -1)
-            if not 0 <= at < len(SPEEDS):
-                return replace(c, message=f"{speed_words(c.speed)} is the limit.")
-            return replace(c, speed=SPEEDS[at])
+            speed = _allowed(c.speed * (2.0 if command is Command.FASTER else 0.5))
+            return replace(c, speed=speed, message=f"{speed_words(speed)} is the limit." if speed == c.speed else "")
         case Command.NEXT_STRIKE | Command.PREVIOUS_STRIKE:
             return _to_strike(c, command is Command.NEXT_STRIKE, film)
         case Command.NEXT_FAILURE | Command.PREVIOUS_FAILURE:
@@ -327,10 +330,11 @@ def _look(c: Controls, command: Command, film: Film, layout: Layout) -> Controls
 def speed_words(speed: float) -> str:
     """A speed for people.
 
-    >>> speed_words(0.25), speed_words(8.0)
-    ('1/4 x', '8 x')
+    >>> speed_words(0.25), speed_words(8.0), speed_words(0.3)
+    ('1/4 x', '8 x', '0.3 x')
     """
-    return f"{speed:g} x" if speed >= 1.0 else f"1/{1 / speed:g} x"
+    is_unit_fraction = speed < 1.0 and (1.0 / speed).is_integer()
+    return f"1/{1.0 / speed:.0f} x" if is_unit_fraction else f"{speed:.3g} x"
 
 
 # ---- time ------------------------------------------------------------------------------------------------------

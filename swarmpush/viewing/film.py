@@ -262,6 +262,18 @@ def record(scenario: Scenario, seed: int | None = None, planned: Plan | None = N
     return film
 
 
+def film_of_path(run: Run, planned: Plan) -> Film:
+    """A film of a run's own path, whose frames lie as far apart as the rows of that."""
+    s, path = run.scenario, run.block
+    columns = [[f"{name}{tail}_{unit}" for name, unit in (("x", "m"), ("y", "m"), ("yaw", "rad"))]
+               for tail in ("", *(f"_{k}" for k in range(2, len(s.blocks) + 1)))]  # fmt: skip
+    blocks = np.stack([path[names].to_numpy(dtype=np.float64) for names in columns], axis=1)
+    crew = run.pushers[["x_m", "y_m", "heading_rad"]].to_numpy(dtype=np.float64, copy=True)
+    pushers = crew.reshape(len(path), s.pushers.count, 3)
+    pushers[:, :, 2] = np.unwrap(pushers[:, :, 2], axis=0)
+    return Film(s, run.seed, planned, path["t_s"].to_numpy(), blocks, pushers, np.zeros(len(path)), run)
+
+
 def film_of(folder: Path) -> Film:
     """A film of a saved run, which is made again for that.
 

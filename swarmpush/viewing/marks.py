@@ -14,7 +14,7 @@ Place = tuple[float, float, float, float]  # of a part of a picture: x, y of its
 Anchor = Literal["nw", "n", "ne", "w", "c", "e", "sw", "s", "se"]  # which point of a text is at its x, y
 
 LETTER = 0.62  # widest mean width of a letter over the size of its type, among the fonts that are used
-BROAD = 0.4  # by how much more room m and w take
+WIDER = 0.6  # widths more that broad letters take
 
 
 class Polygon(NamedTuple):
@@ -70,7 +70,7 @@ def type_size(width: float, height: float) -> float:
 
 def text_width(text: str, size: float) -> float:
     """Room that a text takes at most, px; what is drawn is mostly narrower."""
-    return LETTER * size * (len(text) + BROAD * sum(text.count(letter) for letter in "mwMW"))
+    return LETTER * size * (len(text) + WIDER * sum(text.count(letter) for letter in "mwMW@%"))
 
 
 def box(place: Place) -> FloatArray:

@@ -376,7 +376,7 @@ _OUTLINES = {  # of the symbols, size 1, heading to the right; and whether they 
 
 def _rounded(ahead: float, aside: float, radius: float) -> FloatArray:
     """Outline of a bar about its centre with its corners rounded, heading to the right."""
-    n = CORNER_POINTS[radius >= ROUND_FROM]
+    n = CORNER_POINTS[1 if radius >= ROUND_FROM else 0]
     corners = np.repeat([(ahead, aside), (-ahead, aside), (-ahead, -aside), (ahead, -aside)], n, axis=0)
     angles = np.concatenate([np.linspace(k, k + 1, n) for k in range(4)]) * math.pi / 2
     return np.asarray(corners + radius * np.column_stack([np.cos(angles), np.sin(angles)]))

@@ -37,7 +37,7 @@ ARROWS = {  # the way they point, x to the right, y downward
 ARROW_SIZE = 0.35  # of the unit, from its middle to its tip
 
 
-def line(text: str, place: Rect, size: float, measure: Measure, colour: str = INK, align: Align = "left") -> list[Text]:
+def line(text: str, place: Rect, size: float, measure: Measure, colour: str = INK, align: Align = "left") -> list[Mark]:
     """A line of text in the middle of a place's height; too wide, it is written smaller, and then cut."""
     if not text:
         return []
@@ -78,10 +78,12 @@ def _arrow(cell: Rect, right: int, down: int, size: float) -> Polygon:
 
 
 def message(said: str, aside: str, layout: Layout, measure: Measure) -> list[Mark]:
-    """What was said last, and on the right something about the film."""
+    """What was said last, and on the right something about the film, unless what was said needs the whole line."""
     place, unit = layout.message, layout.unit
     side = min(SIDE_UNITS * unit, place.width // 2)
     left = place._replace(width=place.width - side - unit)
+    if measure(said, unit) > left.width:
+        return line(said, place, unit, measure)
     right = Rect(place.x + place.width - side, place.y, side, place.height)
     return [*line(said, left, unit, measure), *line(aside, right, unit, measure, AXIS, "right")]
 

@@ -16,7 +16,7 @@ from swarmpush.viewing.scene import View, aspect_of, scene, strips, whole
 SMALLEST, LARGEST = (320, 160), (7680, 4320)  # px
 GAP = 0.8  # between parts and round them, in sizes of type, as all below
 TIMELINE, CHARTS = 2.6, 7.5  # heights: of the time line, and the least of strip charts
-LEAST_RIG = 0.5  # of the height at which the channel takes the whole width: with less beside charts, these are left out
+LEAST_RIG = 0.5  # of the height of a channel that takes the whole width: with less beside charts, these are left out
 ROUND_RIG = 3.6  # free height about the channel
 LOW = 30  # of a picture that has no room for the time line
 RIG_SHARE = 0.62  # of the picture's height, at most, for the rig beside charts
@@ -82,10 +82,11 @@ def sheet(scenario: Scenario, size: tuple[int, int], *, has_charts: bool = True,
     letters = look.get("type_px") or type_size(width, height)
     timeline_px = (TIMELINE + GAP) * letters if height >= LOW * letters else 0.0
     below = (CHARTS + 2 * GAP) * letters + timeline_px
-    needs = sum(strips(width, letters)) + (width - 2 * letters) / aspect_of(scenario) + ROUND_RIG * letters
+    channel = (width - 2 * letters) / aspect_of(scenario)
+    needs = sum(strips(width, letters)) + channel + ROUND_RIG * letters
     if "px_per_m" in look:
-        needs = RIG_SHARE * height  # a part of the channel fits into any height
-    has_charts = has_charts and height - below >= LEAST_RIG * needs
+        channel = needs = RIG_SHARE * height  # a part of the channel fits into any height
+    has_charts = has_charts and height - below >= needs - (1.0 - LEAST_RIG) * channel
     rig = round(min(needs, max(RIG_SHARE * height, height - 4 * below), height - below)) if has_charts else height
     view = replace(whole(scenario, width, rig, type_px=letters), **look)
     if not has_charts:

@@ -46,17 +46,23 @@ def save_png(film: Film, t_s: float, path: Path, size: tuple[int, int] = (1024, 
     write_bytes(path, _as_bytes(film, t_s, size, "png", options))
 
 
-def _as_bytes(film: Film, t_s: float, size: tuple[int, int], kind: str, options: dict[str, Any]) -> bytes:
+def figure_of(film: Film, t_s: float, size: tuple[int, int], **options: Any) -> Figure:
+    """A moment of a film as a figure; see `save_svg`."""
     parts = sheet(film.scenario, size, **options)
     width, height = size
+    figure = Figure(figsize=(width / DPI, height / DPI), dpi=DPI, facecolor=PAPER)
+    axes = figure.add_axes((0.0, 0.0, 1.0, 1.0))
+    axes.set_axis_off()
+    axes.set_xlim(0.0, width)
+    axes.set_ylim(height, 0.0)
+    for layer in (parts.ground(film), *parts.moving(film, t_s)):
+        _draw(axes, layer.marks, layer.size)
+    return figure
+
+
+def _as_bytes(film: Film, t_s: float, size: tuple[int, int], kind: str, options: dict[str, Any]) -> bytes:
     with rc_context(STYLE):
-        figure = Figure(figsize=(width / DPI, height / DPI), dpi=DPI, facecolor=PAPER)
-        axes = figure.add_axes((0.0, 0.0, 1.0, 1.0))
-        axes.set_axis_off()
-        axes.set_xlim(0.0, width)
-        axes.set_ylim(height, 0.0)
-        for layer in (parts.ground(film), *parts.moving(film, t_s)):
-            _draw(axes, layer.marks, layer.size)
+        figure = figure_of(film, t_s, size, **options)
         data = io.BytesIO()
         title = f"{film.scenario.about.name}, seed {film.seed}"
         figure.savefig(

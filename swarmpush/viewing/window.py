@@ -32,7 +32,7 @@ from swarmpush.viewing.controls import (
     Wheel,
 )
 from swarmpush.viewing.film import Film, LiveFilm, point_film
-from swarmpush.viewing.layout import Layout, Rect, lay_out
+from swarmpush.viewing.layout import LEAST_SIZE, Layout, Rect, lay_out
 from swarmpush.viewing.marks import Mark, Text
 from swarmpush.viewing.scene import scene
 from swarmpush.viewing.screen import help_list, line, message, status
@@ -47,8 +47,9 @@ BEHIND = 0.8  # of the speed asked for: the run cannot keep up
 REMEDY = "save pictures or a film instead, which needs none, or start a virtual X server, for example with xvfb-run"
 DISPLAY_NAMES = ("DISPLAY", "WAYLAND_DISPLAY", "SDL_VIDEODRIVER")
 GROUND_EVERY_S = 0.2  # a growing film's charts are drawn anew
-CHARTS_TYPE = 0.8  # of the unit
+CHARTS_TYPE = 0.9  # of the unit
 WORLDS = ("body world", "point world")
+LARGEST_SIDE = 8192  # px
 HEADLESS = ("dummy", "offscreen")  # video drivers that show nothing
 
 
@@ -56,8 +57,11 @@ def open_display(size: tuple[int, int]) -> None:
     """Open the window, still empty but for a word that something comes.
 
     Raises:
-        ViewingError: when there is no display.
+        ViewingError: when there is no display, or the size makes no window.
     """
+    if not all(least <= side <= LARGEST_SIDE for least, side in zip(LEAST_SIZE, size, strict=True)):
+        low, high = f"{LEAST_SIZE[0]}x{LEAST_SIZE[1]}", f"{LARGEST_SIDE}x{LARGEST_SIDE}"
+        raise ViewingError(f"a window of {size[0]}x{size[1]} pixels cannot be used; choose a size from {low} to {high}")
     if sys.platform == "linux" and not any(os.environ.get(name) for name in DISPLAY_NAMES):
         raise ViewingError(f"no display to open a window on; {REMEDY}")  # which SDL would look for, and complain
     try:
@@ -105,7 +109,8 @@ class Window:
         self._attained = self.controls.speed  # mean over the last frames
         self._pieces: list[tuple[Rect, list[Mark]]] = []
         self._ground_pieces: list[tuple[Rect, list[Mark]]] = []
-        self._ground_of: object = None
+        self._ground_film: Film | None = None
+        self._ground_of: tuple[bool, Layout] | None = None
         self._ground_at_s = 0.0
         self._ground = self._surface
         self._name()
@@ -246,35 +251,36 @@ class Window:
     def _draw_ground(self, layout: Layout) -> None:
         """What stays the same from frame to frame, or at least for a fraction of a second, is kept as a picture."""
         film, now = self.film, time.perf_counter()
-        drawn = (id(film), film.is_complete, layout)
-        if self._ground_of == drawn and (film.is_complete or now - self._ground_at_s < GROUND_EVERY_S):
+        is_same = self._ground_film is film and self._ground_of == (film.is_complete, layout)
+        if is_same and (film.is_complete or now - self._ground_at_s < GROUND_EVERY_S):
             return
-        self._ground_of, self._ground_at_s = drawn, now
+        self._ground_film, self._ground_of, self._ground_at_s = film, (film.is_complete, layout), now
         window = Rect(0, 0, layout.width, layout.height)
         marks = [
             *charts_ground(film, layout.charts, type_px=CHARTS_TYPE * layout.unit),
             *timeline_ground(film, layout.timeline, type_px=layout.unit),
         ]
         self._ground_pieces = [(window, marks)]
-        self._ground = pygame.Surface((layout.width, layout.height)).convert(self._surface)
+        self._ground = pygame.Surface((layout.width, layout.height))
         self._ground.fill(PAPER)
         paint(self._ground, marks)
 
     def _moving(self, layout: Layout) -> list[tuple[Rect, list[Mark]]]:
         """What is drawn upon that, and where; places of marks count from the corners of their rectangles."""
         c, film = self.controls, self.film
-        shown = [film]
+        shown, lines = [film], list[Mark]()
         if c.has_point_world and self._point and self._point.done():
             shown.append(self._point.result())
+        elif c.has_point_world:
+            lines += line("Working out the point world ...", layout.rigs[1], layout.unit, _width, align="middle")
         rigs = [(layout.rigs[k], scene(of, c.t_s, state.view_of(c, of, layout, k))) for k, of in enumerate(shown)]
         cursors = [
             *charts_cursor(film, c.t_s, layout.charts, type_px=CHARTS_TYPE * layout.unit),
             *timeline_cursor(film, c.t_s, layout.timeline),
         ]
         said = c.message or "H lists all keys and what they do."
-        lines = [
-            mark for name, place in zip(WORLDS, layout.heads, strict=False) for mark in _heading(name, place, layout)
-        ]
+        for name, place in zip(WORLDS, layout.heads, strict=False):
+            lines += line(name, place, layout.unit, _width, align="middle")
         lines += [*status(c, film, layout, _width), *message(said, self._aside(), layout, _width)]
         return [*rigs, (Rect(0, 0, layout.width, layout.height), [*cursors, *lines])]
 
@@ -285,10 +291,6 @@ class Window:
         if self._attained < BEHIND * self.controls.speed and not self.controls.is_paused:
             return f"live, no faster than {self._attained:.2g} x here"
         return "live: states are told at the end"
-
-
-def _heading(name: str, place: Rect, layout: Layout) -> list[Text]:
-    return line(name, place, layout.unit, _width, align="middle")
 
 
 def _width(text: str, size: float) -> float:

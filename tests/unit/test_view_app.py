@@ -265,7 +265,8 @@ def test_what_cannot_be_prepared_is_said(window, monkeypatch):
 
 def test_the_point_world_comes_beside_the_body_world(window):
     press(window, "d")
-    wait(window, lambda: any("point world" in text for text in texts(window)))
+    wait(window, lambda: "Working out the point world ..." not in texts(window))
+    assert any("point world" in text for text in texts(window))
     assert len(window.layout.rigs) == 2
     press(window, "d")
     assert len(window.layout.rigs) == 1
@@ -354,3 +355,15 @@ def test_app_needs_no_pygame_to_be_imported():
     """The command line imports it before it knows whether a window is wanted."""
     source = f"import sys; sys.modules['pygame'] = None; import {app.__name__}"
     subprocess.run([sys.executable, "-c", source], check=True)
+
+
+@pytest.mark.parametrize("size", [(0, 0), (-5, 400), (300, 400), (1280, 100_000)])
+def test_a_size_without_a_window_is_refused(scenario, size):
+    with pytest.raises(ViewingError, match="choose a size from 640x400 to 8192x8192"):
+        watch(scenario, size=size)
+
+
+def test_a_window_made_tiny_goes_on(window):
+    pygame.display.set_mode((90, 60), pygame.RESIZABLE)
+    press(window, "d", "h", "h", "p")
+    assert window.is_open
