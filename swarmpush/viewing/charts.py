@@ -34,6 +34,7 @@ MOST_ABOVE = 2.5  # a plan's line is shown in full up to so many times what was 
 BAR_FROM = 0.4  # share of the time line's height above the bar, for what went wrong
 STACK = ("locked", "lost", "held at a wall", "ahead", "idle")  # what serves the purpose lies at the bottom
 WIDEST_VALUE = "48.4 mm"  # beside a panel's name
+NARROW = 0.84  # of the most that a text can take: short words and numbers
 GROUND, CURVE, LETTERS, CURSOR = range(4)
 
 
@@ -168,10 +169,10 @@ def _panel(film: Film, t_s: FloatArray, panel: _Panel, part: Place, letters: flo
     if 0.0 < panel.level <= axes.top:
         marks += dashed(axes.level(panel.level), 0.25 * letters, panel.level_colour, 1.3 * edge, CURVE)
         labels.append((panel.level_name, panel.level_colour))
-    at = part[0] + text_width(panel.name, letters) + 0.9 * letters
+    at = part[0] + text_width(panel.name, letters) + 0.6 * letters
     for text, colour in labels:
-        room = 1.85 * letters + text_width(text, 0.8 * letters)
-        if at + room + text_width(WIDEST_VALUE, letters) > part[0] + part[2]:
+        room = 1.85 * letters + NARROW * text_width(text, 0.8 * letters)
+        if at + room + NARROW * text_width(WIDEST_VALUE, letters) > part[0] + part[2]:
             break
         sample = np.array([(at, title), (at + 1.1 * letters, title)])
         marks += dashed(sample, 0.22 * letters, colour, 1.3 * edge, LETTERS)

@@ -61,7 +61,9 @@ LEAN_ROOM = (
 )
 STRIKE_SIZE = 0.62  # of a large strike's disc, radius over type size
 SYMBOL_FROM = 5.0  # px: half the width of the smallest pusher in which a symbol can be made out
-CORNER_POINTS = 6  # of a bar's rounded corner
+CORNER_POINTS = (3, 6)  # of a bar's rounded corner: small and large
+ROUND_FROM = 4.0  # px: radius of the smallest corner that is large
+ARROW_AT = 0.62  # of a leg: legs there and back cross in their middles
 ARROW_FROM = 8.0  # sizes of an arrow: a shorter leg of the lap has none
 MARGIN = 60.0  # px round the picture within which outlines are cut off, so that their cut edges are not seen
 LONGEST_UNIT = "this size: 500 mN s"  # for the room that the key takes
@@ -264,7 +266,7 @@ def _lap(film: Film, travel_m: float, view: View) -> list[Mark]:
         if length > ARROW_FROM * size:
             ahead = way / length
             aside = np.array([-ahead[1], ahead[0]])
-            tip = (a + b) / 2 + size * ahead
+            tip = a + ARROW_AT * way + size * ahead
             tail = tip - 2 * size * ahead
             marks.append(Polygon(np.array([tip, tail + 0.7 * size * aside, tail - 0.7 * size * aside]), PLANNED, z=LAP))
     return marks
@@ -374,8 +376,9 @@ _OUTLINES = {  # of the symbols, size 1, heading to the right; and whether they 
 
 def _rounded(ahead: float, aside: float, radius: float) -> FloatArray:
     """Outline of a bar about its centre with its corners rounded, heading to the right."""
-    corners = np.repeat([(ahead, aside), (-ahead, aside), (-ahead, -aside), (ahead, -aside)], CORNER_POINTS, axis=0)
-    angles = np.concatenate([np.linspace(k, k + 1, CORNER_POINTS) for k in range(4)]) * math.pi / 2
+    n = CORNER_POINTS[1 if radius >= ROUND_FROM else 0]
+    corners = np.repeat([(ahead, aside), (-ahead, aside), (-ahead, -aside), (ahead, -aside)], n, axis=0)
+    angles = np.concatenate([np.linspace(k, k + 1, n) for k in range(4)]) * math.pi / 2
     return np.asarray(corners + radius * np.column_stack([np.cos(angles), np.sin(angles)]))
 
 
@@ -388,6 +391,8 @@ def large_strike_Ns(film: Film) -> float:
     That of a large impact so far or of the plan's, whichever is more; more than that where leaning would be drawn too
     large. 0 where there are neither.
     """
+    if film.is_point_world:  # which knows no masses
+        return 0.0
     planned = film.plan.travel.strike_impulse_Ns
     strikes = film.strikes(-1.0, film.duration_s)
     impact, lean = (_large(strikes[column].to_numpy()) for column in ("impact_Ns", "lean_Ns"))

@@ -18,6 +18,7 @@ GAP = 0.8  # between parts and round them, in sizes of type, as all below
 TIMELINE, CHARTS = 2.6, 7.5  # heights: of the time line, and the least of strip charts
 LEAST_RIG = 0.5  # of the height of a channel that takes the whole width: with less beside charts, these are left out
 ROUND_RIG = 3.6  # free height about the channel
+LOW = 30  # of a picture that has no room for the time line
 RIG_SHARE = 0.62  # of the picture's height, at most, for the rig beside charts
 
 
@@ -39,11 +40,16 @@ class Sheet:
     charts: Place | None
     timeline: Place | None
 
+    @property
+    def charts_px(self) -> float:
+        """Size of type in charts, px: three titles stand side by side."""
+        return max(10.0, min(self.type_px, self.width / 64))
+
     def ground(self, film: Film) -> Layer:
         """What stays the same while the film does."""
         marks: list[Mark] = []
         if self.charts is not None:
-            marks += charts_ground(film, self.charts, type_px=self.type_px)
+            marks += charts_ground(film, self.charts, type_px=self.charts_px)
         if self.timeline is not None:
             marks += timeline_ground(film, self.timeline, type_px=self.type_px)
         return Layer(marks, None)
@@ -53,7 +59,7 @@ class Sheet:
         yield Layer(scene(film, t_s, self.view), (self.view.width, self.view.height))
         marks: list[Mark] = []
         if self.charts is not None:
-            marks += charts_cursor(film, t_s, self.charts, type_px=self.type_px)
+            marks += charts_cursor(film, t_s, self.charts, type_px=self.charts_px)
         if self.timeline is not None:
             marks += timeline_cursor(film, t_s, self.timeline)
         yield Layer(marks, None)
@@ -74,17 +80,18 @@ def sheet(scenario: Scenario, size: tuple[int, int], *, has_charts: bool = True,
         low, high = ("x".join(map(str, limit)) for limit in (SMALLEST, LARGEST))
         raise OutputError(f"a picture of {width}x{height} pixels cannot be drawn; choose a size from {low} to {high}")
     letters = look.get("type_px") or type_size(width, height)
-    below = (CHARTS + TIMELINE + 3 * GAP) * letters
+    timeline_px = (TIMELINE + GAP) * letters if height >= LOW * letters else 0.0
+    below = (CHARTS + 2 * GAP) * letters + timeline_px
     channel = (width - 2 * letters) / aspect_of(scenario)
-    if "px_per_m" in look:
-        channel = 0.0  # part of a channel fits into any height
     needs = sum(strips(width, letters)) + channel + ROUND_RIG * letters
+    if "px_per_m" in look:
+        channel = needs = RIG_SHARE * height  # a part of the channel fits into any height
     has_charts = has_charts and height - below >= needs - (1.0 - LEAST_RIG) * channel
     rig = round(min(needs, max(RIG_SHARE * height, height - 4 * below), height - below)) if has_charts else height
     view = replace(whole(scenario, width, rig, type_px=letters), **look)
     if not has_charts:
         return Sheet(width, height, letters, view, None, None)
     gap = GAP * letters
-    timeline = (gap, height - gap - TIMELINE * letters, width - 2 * gap, TIMELINE * letters)
-    charts = (gap, rig + gap, width - 2 * gap, timeline[1] - gap - rig - gap)
+    charts = (gap, rig + gap, width - 2 * gap, height - timeline_px - rig - 2 * gap)
+    timeline = (gap, height - timeline_px, width - 2 * gap, timeline_px - gap) if timeline_px else None
     return Sheet(width, height, letters, view, charts, timeline)

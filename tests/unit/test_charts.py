@@ -18,6 +18,7 @@ from swarmpush.reporting.palette import GREEN, INK, MEASURED, PAPER, PLANNED, QU
 from swarmpush.viewing import charts as ch
 from swarmpush.viewing.film import Film, LiveFilm, record
 from swarmpush.viewing.marks import Line, Mark, Polygon, Text
+from swarmpush.viewing.sheet import sheet
 
 pygame = pytest.importorskip("pygame")
 
@@ -129,6 +130,15 @@ def test_short_counts_are_not_lost() -> None:
     means = ch._averaged(edges, t, values)
     assert (means * np.diff(edges)).sum() == pytest.approx(np.trapezoid(values, t))
     assert means.max() > 0.0
+
+
+@pytest.mark.parametrize("size", [(1024, 640), (1100, 620), (1280, 720), (3840, 2160), (800, 300), (640, 480)])
+def test_every_line_is_named(film: Film, passage: Film, size: tuple[int, int]) -> None:
+    """In pictures of all sizes the panels' titles have room for what their dashes mean."""
+    for shown, wanted in ((film, {"plan", "goal", "needed"}), (passage, {"plan", "needed", "plan: impacts"})):
+        parts = sheet(shown.scenario, size)
+        marks = parts.ground(shown).marks
+        assert wanted <= {mark.text for mark in marks if isinstance(mark, Text)}
 
 
 @pytest.mark.parametrize("size", [(1000.0, 180.0), (780.0, 90.0), (3800.0, 700.0)])

@@ -319,6 +319,7 @@ def test_the_point_world_says_so(film: Film, view: View) -> None:
     marks = scene(points, 3.0, view)
     assert any("point world" in text for text in texts(marks))
     assert "t = 3.0 s" in texts(marks)
+    assert "impact" not in texts(marks)
     assert not [mark for mark in marks if mark.z == sc.FLASH]
 
 

@@ -12,6 +12,7 @@ import pytest
 
 from swarmpush.demos import DEMOS, demo
 from swarmpush.dynamics.states import STATES
+from swarmpush.geometry import channel_corners
 from swarmpush.kinematics.planning import plan
 from swarmpush.loading import load
 from swarmpush.output import OutputError
@@ -134,6 +135,15 @@ def test_png_has_its_size_and_the_films_look(film: Film, tmp_path: Path, size: t
 def test_charts_are_left_out_of_low_pictures(film: Film) -> None:
     """Or where they are not wanted; parts never overlap and stay in the picture."""
     assert sheet(film.scenario, (640, 160)).charts is None
+    low = sheet(film.scenario, (800, 300))
+    assert low.charts is not None
+    assert low.timeline is None
+    corners = low.view.points(channel_corners(film.scenario))
+    assert np.ptp(corners[:, 0]) > 0.95 * 800
+    near = sheet(film.scenario, (1024, 640), px_per_m=2000.0, centre=(1.2, 0.16))
+    assert near.charts is not None
+    assert near.view.height > 0.5 * 640
+    assert near.view.to_px(1.2, 0.16) == (512.0, near.view.height / 2)
     assert sheet(film.scenario, (1024, 640), has_charts=False).timeline is None
     for name in DEMOS:
         for size in ((1024, 640), (3840, 2160), (1280, 720), (1080, 1920)):
