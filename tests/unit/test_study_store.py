@@ -24,7 +24,6 @@ from swarmpush.studies.store import Store, forget_failures, read_failures, read_
 from swarmpush.studies.work import WHOLE_POINT, Failure, Row
 
 MANY_POINTS = 100_000
-MOST_SUMMARY_S = 0.5  # "well under a second", on a machine that others use as well
 
 
 def row(point: int, replicate: int, speed: float = 0.5) -> Row:
@@ -292,7 +291,7 @@ def test_much_is_written_at_once(tmp_path: Path) -> None:
 
 
 def test_the_summary_of_a_large_study_is_quick(tmp_path: Path) -> None:
-    """With a hundred thousand points and a million runs the counts come at once."""
+    """With a hundred thousand points the counts come sooner than the points themselves could be listed."""
     study = small_study(counts=[1 + k % 9 for k in range(MANY_POINTS)], replicates=10)
     with Store(tmp_path, study) as opened:
         with opened._journal as journal:
@@ -300,7 +299,11 @@ def test_the_summary_of_a_large_study_is_quick(tmp_path: Path) -> None:
             journal.executemany(
                 "insert into failure values (?, 0, 1, 'ValueError', 'broken')", ((k,) for k in range(1000))
             )
+            begin = time.perf_counter()
+            listed = [tuple(row) for row in journal.execute("select * from point")]
+            listing_s = time.perf_counter() - begin
+        assert len(listed) == MANY_POINTS
         begin = time.perf_counter()
         summary = read_summary(tmp_path)
-        assert time.perf_counter() - begin < MOST_SUMMARY_S
+        assert time.perf_counter() - begin < listing_s
     assert (summary.n_points, summary.n_points_done, summary.n_runs_done) == (MANY_POINTS, 50_000, 500_000)
