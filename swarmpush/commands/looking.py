@@ -92,7 +92,9 @@ def _to_watch(
     if (source is None) == (from_study is None):
         raise Refusal("name a scenario or a folder with a run, or a study's folder with --from-study and --point")
     if from_study is not None:
-        return scenario_of_study(from_study, point, replicate, seed)
+        from swarmpush.viewing.film import record
+
+        return record(*scenario_of_study(from_study, point, replicate, seed)), None
     if point is not None or replicate is not None:
         raise Refusal("--point and --replicate go with --from-study")
     assert source is not None
