@@ -278,7 +278,7 @@ class Window:
             *charts_cursor(film, c.t_s, layout.charts, type_px=CHARTS_TYPE * layout.unit),
             *timeline_cursor(film, c.t_s, layout.timeline),
         ]
-        said = c.message or "H lists all keys and what they do."
+        said = c.message or "H lists all keys. A prediction of a model, no safety proof."
         for name, place in zip(WORLDS, layout.heads, strict=False):
             lines += line(name, place, layout.unit, _width, align="middle")
         lines += [*status(c, film, layout, _width), *message(said, self._aside(), layout, _width)]
