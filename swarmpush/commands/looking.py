@@ -68,6 +68,8 @@ def watch(
     picture, times = _size(size), _span(span)
     if export is None and (as_json or at is not None or span is not None):
         raise Refusal("--json, --at and --span go with --export")
+    if export is not None:
+        refuse_existing(export, force)
     shown, seed = _to_watch(source, from_study, point, replicate, seed)
     if export is None:
         from swarmpush.viewing.app import watch as open_window
@@ -76,7 +78,6 @@ def watch(
         return
     from swarmpush.viewing.to_file import export_film
 
-    refuse_existing(export, force)
     with preparing(as_json) as bar:
         export_film(
             shown, export, seed=seed, size=picture, at_s=at, span_s=times, fps=fps, speed=speed,

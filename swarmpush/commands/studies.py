@@ -56,13 +56,14 @@ def sweep(
 
     s = _load_study(study)
     folder = out or RESULTS / f"{stem_of(study)}-study"
-    if dry_run or force or not (folder / DEFINITION).exists():
+    is_new = force or not (folder / DEFINITION).exists()
+    if dry_run or (is_new and not as_json):
         told = warnings(s)
         with preparing(as_json):
             cost = estimate(s, workers)
         if not as_json:
             study_console.show_cost(s, cost, told)
-        elif dry_run:
+        else:
             print_json({"study": s.name, "design": s.design, "cost": cost, "warnings": told})
         if dry_run:
             return

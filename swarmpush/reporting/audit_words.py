@@ -91,16 +91,16 @@ def crew_words(audit: Audit) -> str:
     best = max(sizes, key=lambda size: size.block_speed_m_s.mean)
     if useful:
         which = (
-            f"those of {useful[0]} to {useful[-1]} arrive" if len(useful) > 1 else f"only that of {useful[0]} arrives"
+            f"those of {', '.join(map(str, useful))} arrive" if len(useful) > 1 else f"only that of {useful[0]} arrives"
         )
-        lead = f"Of crews of {tried}, {which} in most runs for certain"
+        lead = f"Of crews of {tried}, {which} in most runs, its whole {audit.percent} interval above half"
     else:
-        lead = f"None of the crews tried, of {tried}, arrives in most runs for certain"
+        lead = f"No crew tried, of {tried}, has its whole {audit.percent} interval of arrivals above half"
     speed = f"{number(best.block_speed_m_s.mean, 'm/s')} ({interval(best.block_speed_m_s, 'm/s')})"
     text = f"{lead}. The block is fastest with {best.count}: {speed}"
     larger = [size for size in sizes if size.count > best.count]
     if crowded := [size for size in larger if size.gain_m_s and size.gain_m_s.high < 0.0]:
-        text += f"; with {crowded[0].count} the crowd costs more than the hands add"
+        text += f"; with {crowded[0].count} crowding costs more than further pushers add"
     elif not larger:
         text += ", the largest crew tried"
     if missing := untried_crews(s):

@@ -12,6 +12,7 @@ import pandas as pd
 
 from swarmpush.auditing.claims import ARRIVAL, MEASURES
 from swarmpush.auditing.demands import check_demands, read_demand
+from swarmpush.auditing.looks import confidence_at
 from swarmpush.auditing.statistics import Estimate, mean_interval, share_interval
 from swarmpush.auditing.survival import SurvivalCurve, survival_curve
 from swarmpush.output import provenance, write_table, write_text
@@ -42,8 +43,8 @@ class StudyResult:
 
     @property
     def confidence(self) -> float:
-        """Confidence of each interval: that of the base scenario's trial."""
-        return self.study.base.trial.confidence
+        """Confidence of each interval: that of the base's trial, or more where a stop rule looks several times."""
+        return confidence_at(0, len(self.study.counts), self.study.base.trial.confidence)
 
     @cached_property
     def table(self) -> pd.DataFrame:
@@ -114,7 +115,7 @@ class StudyResult:
             others = f", and at {len(highest) - 1} more" if len(highest) > 1 else ""
             text += f". {output[:1].upper()}{output[1:]} is highest at {self.study.values_at(int(highest[0]))}{others}"
         if met := self.meets_demand():
-            text += f". The demand {self.study.demand} is met for certain at {sum(map(bool, met))} points"
+            text += f". The demand {self.study.demand} is met at the doubtful end of the interval at {sum(map(bool, met))} points"
         return f"{text}."
 
     def _repr_html_(self) -> str:

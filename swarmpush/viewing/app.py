@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-import os
 from pathlib import Path
 
 from swarmpush.output import OutputError
 from swarmpush.scenario import Scenario
+from swarmpush.viewing.extras import require
 from swarmpush.viewing.film import Film, LiveFilm
 
 
@@ -34,9 +34,9 @@ def watch(
         folder: where pictures are saved; left out: the current one.
 
     Raises:
-        ViewingError: when pygame is missing, there is no display, or the size makes no window.
+        ViewingError: when there is no display, or the size makes no window. OutputError: when pygame is missing.
     """
-    require_pygame()
+    require("pygame")
     from swarmpush.viewing.window import Window, close_display, open_display
 
     open_display(size)
@@ -45,16 +45,3 @@ def watch(
         Window(film, speed=speed, folder=folder).run()
     finally:
         close_display()
-
-
-def require_pygame() -> None:
-    """Import pygame, without its greeting.
-
-    Raises:
-        ViewingError: when it is missing.
-    """
-    os.environ.setdefault("PYGAME_HIDE_SUPPORT_PROMPT", "1")
-    try:
-        import pygame  # noqa: F401
-    except ImportError:
-        raise ViewingError("the window needs pygame; install it with: pip install swarmpush[view]") from None

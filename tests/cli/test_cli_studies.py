@@ -114,7 +114,7 @@ def test_results_read_back(swept: Saved) -> None:
     assert result.study.digest() == swept.outcome.json()["provenance"]["study_hash"]
     assert result.summary.is_finished
     assert result.meets_demand() == (result.table["block_speed_m_s_low"] >= 0.0).tolist()
-    assert "demand block_speed>=0 m/s is met for certain at" in result.answer
+    assert "demand block_speed>=0 m/s is met at the doubtful end of the interval at" in result.answer
 
 
 def test_a_changed_study_is_refused(swept: Saved, tmp_path: Path) -> None:

@@ -114,6 +114,17 @@ def test_the_demand_is_met_at_the_doubtful_end(grid: StudyResult) -> None:
     assert made_up(loads_study(GRID.replace('demand = "arrival>=0.4"', ""))).meets_demand() == []
 
 
+def test_intervals_after_several_looks_are_surer() -> None:
+    """Where a stop rule looks several times, the intervals shown are the ones it judged by (Bonferroni)."""
+    stop = '[stop]\noutput = "block speed"\nrelative_width = 0.2\nmost = 16\n'
+    assert made_up(loads_study(GRID)).confidence == pytest.approx(0.95)
+    result = made_up(loads_study(GRID + stop))
+    assert len(result.study.counts) == 3
+    assert result.confidence == pytest.approx(1.0 - 0.05 / 3)
+    speed = mean_interval(result.runs[result.runs["point"] == 2]["block_speed_m_s"], result.confidence)
+    assert result.table["block_speed_m_s_high"].iloc[2] == speed.high
+
+
 def test_a_curve_of_arrivals_has_censored_runs(grid: StudyResult) -> None:
     """Runs that have not arrived count as under way until their end."""
     runs = grid.runs[grid.runs["point"] == 5]
