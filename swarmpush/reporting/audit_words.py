@@ -90,10 +90,8 @@ def crew_words(audit: Audit) -> str:
     useful = [size.count for size in sizes if size.arrival.low > MOSTLY]
     best = max(sizes, key=lambda size: size.block_speed_m_s.mean)
     if useful:
-        which = (
-            f"those of {', '.join(map(str, useful))} arrive" if len(useful) > 1 else f"only that of {useful[0]} arrives"
-        )
-        lead = f"Of crews of {tried}, {which} in most runs, its whole {audit.percent} interval above half"
+        names = ", ".join(map(str, useful))
+        lead = f"Of crews of {tried}, {names} arrive in most runs (whole {audit.percent} interval above half)"
     else:
         lead = f"No crew tried, of {tried}, has its whole {audit.percent} interval of arrivals above half"
     speed = f"{number(best.block_speed_m_s.mean, 'm/s')} ({interval(best.block_speed_m_s, 'm/s')})"

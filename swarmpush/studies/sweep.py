@@ -115,7 +115,8 @@ class StudyResult:
             others = f", and at {len(highest) - 1} more" if len(highest) > 1 else ""
             text += f". {output[:1].upper()}{output[1:]} is highest at {self.study.values_at(int(highest[0]))}{others}"
         if met := self.meets_demand():
-            text += f". The demand {self.study.demand} is met at the doubtful end of the interval at {sum(map(bool, met))} points"
+            n_met = sum(map(bool, met))
+            text += f". The demand {self.study.demand} is met at the doubtful end of the interval at {n_met} points"
         return f"{text}."
 
     def _repr_html_(self) -> str:
