@@ -11,7 +11,7 @@ import numpy as np
 
 from swarmpush.dynamics.steps import choose_step
 from swarmpush.dynamics.world import simulate
-from swarmpush.kinematics.planning import plan
+from swarmpush.kinematics.laps import find_laps
 from swarmpush.problems import Problem, ScenarioError
 from swarmpush.scenario import Scenario
 from swarmpush.studies.study import Study
@@ -39,7 +39,7 @@ class Size:
 class Cost:
     """What a study will take.
 
-    size: its runs. run_s, plan_s: mean time of a run, and of the plan of a point, over the points timed.
+    size: its runs. run_s, plan_s: mean time of a run, and of finding a point's laps, over the points timed.
     slowest_s: the longest run among them. least_s, most_s: of the whole study on so many workers.
     least_bytes, most_bytes: of its results. workers: that share the work.
     """
@@ -75,14 +75,15 @@ def estimate(study: Study, workers: int | None = None) -> Cost:
     scenarios = _some_scenarios(study)
     first = scenarios[0]
     simulate(first.replace(goal={"time_limit": min(first.goal.time_limit, WARM_UP * choose_step(first).dt_s)}))
-    plan(first)
+    find_laps(first)
     run_times, plan_times = [], []
     n_values = KEY_COLUMNS
     for s in scenarios:
         start = time.perf_counter()
-        lap = plan(s).main_lap
+        laps = find_laps(s)[0]
         planned = time.perf_counter()
-        summary = simulate(s, seed=study.seed).summary(lap)
+        run = simulate(s, seed=study.seed, cycles=tuple(lap.surfaces for lap in laps))
+        summary = run.summary(laps[0] if laps else None)
         run_times.append(time.perf_counter() - planned)
         plan_times.append(planned - start)
         n_values = KEY_COLUMNS + len(summary)
